@@ -1,0 +1,245 @@
+"""The settings file: one TOML file a link, validated once, with errors that a person can act on."""
+
+import difflib
+import tomllib
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+
+
+class SettingsError(Exception):
+    """The settings cannot be used; the message is one line for the user."""
+
+
+Positive = Annotated[int, Field(ge=1)]
+PositiveFloat = Annotated[float, Field(gt=0, allow_inf_nan=False)]
+Endpoint = Annotated[str, Field(pattern=r"^(tcp|ipc|inproc)://\S+$")]
+
+
+class Table(BaseModel):
+    """A table of the file: unknown keys are errors, values are not guessed from other types."""
+
+    model_config = ConfigDict(extra="forbid", strict=True, frozen=True)
+
+
+class Link(Table):
+    """Which link this is."""
+
+    name: Annotated[str, Field(pattern=r"^[a-z0-9-]{1,32}$")]
+    receivers: Annotated[int, Field(ge=1, le=64)] = 1
+    clock_skew_s: PositiveFloat = 60.0
+
+
+class Panel(Table):
+    """The reflecting surface: element i is column i // rows, row i % rows."""
+
+    columns: Annotated[int, Field(ge=1, le=4096)]
+    rows: Annotated[int, Field(ge=1, le=4096)]
+    stuck: dict[Literal["plus", "minus"], list[Annotated[int, Field(ge=0)]]] = Field(default_factory=dict)
+    tied: list[Annotated[list[Annotated[int, Field(ge=0)]], Field(min_length=2)]] = Field(default_factory=list)
+
+    @property
+    def elements(self) -> int:
+        """N, elements on the panel."""
+        return self.columns * self.rows
+
+    @model_validator(mode="after")
+    def _elements_exist(self) -> "Panel":
+        plus, minus = self.stuck.get("plus", []), self.stuck.get("minus", [])
+        tied = [element for group in self.tied for element in group]
+        for element in (*plus, *minus, *tied):
+            if element >= self.elements:
+                raise ValueError(f"element {element} does not exist, the panel has 0 to {self.elements - 1}")
+        if both := set(plus) & set(minus):
+            raise ValueError(f"element {min(both)} is given as stuck in both states")
+        if len(set(tied)) != len(tied):
+            raise ValueError("an element may stand in one tied group only, once")
+        if self.elements > 16384:
+            raise ValueError(f"{self.elements} elements, at most 16384 are supported")
+        return self
+
+
+class Tones(Table):
+    """The pilot tones: `count` neighbours from index `first`; fft // 2 is the carrier."""
+
+    fft: Annotated[int, Field(ge=2, le=65536)]
+    first: Annotated[int, Field(ge=0)]
+    count: Annotated[int, Field(ge=1, le=8192)]
+    spacing_khz: PositiveFloat
+
+    @model_validator(mode="after")
+    def _inside_band(self) -> "Tones":
+        if self.first + self.count > self.fft:
+            raise ValueError(f"first + count = {self.first + self.count} is beyond fft = {self.fft}")
+        return self
+
+
+class Delay(Table):
+    """How long the channel lasts, in samples of 1 / (fft · spacing)."""
+
+    taps: Annotated[int, Field(ge=1, le=1024)] = 16
+    before: Annotated[int, Field(ge=0, le=1024)] = 1
+
+
+class Aperture(Table):
+    """In what basis the element responses are estimated."""
+
+    basis: Literal["elements", "tiles", "learned", "region"] = "elements"
+    file: str | None = None
+    size: Positive = 64
+    tile_columns: Positive = 2
+    tile_rows: Positive = 2
+
+
+class Estimator(Table):
+    """How the estimate forgets."""
+
+    forgetting: Literal["resetting", "exponential"] = "resetting"
+    time_constant_ms: PositiveFloat = 500.0
+
+
+class Follow(Table):
+    """Whether phase is followed."""
+
+    phase: bool = False
+
+
+class Drift(Table):
+    """How rarely the drift alarm may cry wolf."""
+
+    false_alarm_hours: PositiveFloat = 10.0
+
+
+class Refresh(Table):
+    """When a refreshed pattern is worked out and published."""
+
+    budget_ms: PositiveFloat = 5.0
+    every_bursts: Positive = 1
+    least_gain: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 0.01
+    most_steps: Positive = 400
+    most_changes: Positive | None = None
+
+
+class Sockets(Table):
+    """Where bursts come from and patterns go to."""
+
+    pilots: Endpoint = "tcp://127.0.0.1:5600"
+    publish: Endpoint = "tcp://127.0.0.1:5601"
+    control: Endpoint = "tcp://127.0.0.1:5602"
+    queue_s: PositiveFloat = 5.0
+    queue_mb: PositiveFloat = 512.0
+
+
+class Journal(Table):
+    """Where everything is recorded."""
+
+    folder: str = "journal"
+    rotate_mb: PositiveFloat = 1024.0
+
+
+class Settings(Table):
+    """All settings of one link."""
+
+    link: Link
+    panel: Panel
+    tones: Tones
+    delay: Delay = Delay()
+    aperture: Aperture = Aperture()
+    estimator: Estimator = Estimator()
+    follow: Follow = Follow()
+    drift: Drift = Drift()
+    refresh: Refresh = Refresh()
+    sockets: Sockets = Sockets()
+    journal: Journal = Journal()
+
+    @model_validator(mode="after")
+    def _fit_together(self) -> "Settings":
+        if self.delay.before >= self.delay.taps:
+            raise ValueError(f"delay.before = {self.delay.before} must be below delay.taps = {self.delay.taps}")
+        if self.aperture.basis == "learned" and self.aperture.file is None:
+            raise ValueError('aperture.file is missing, basis = "learned" needs the file that `ris-tracker learn` wrote')
+        return self
+
+
+def load(path: Path) -> Settings:
+    """Read a settings file.
+
+    Raises
+    ------
+    SettingsError
+        One line: the file, the key, what was found, what is allowed.
+    """
+    try:
+        text = path.read_text(encoding="utf-8")
+    except FileNotFoundError:
+        raise SettingsError(f"{path}: there is no such file") from None
+    except (OSError, UnicodeDecodeError) as error:
+        raise SettingsError(f"{path}: cannot be read: {error}") from None
+    return parse(text, str(path))
+
+
+def parse(text: str, name: str = "settings.toml") -> Settings:
+    """Parse and validate the text of a settings file.
+
+    Parameters
+    ----------
+    text : str
+    name : str
+        What to call the file in an error.
+
+    Raises
+    ------
+    SettingsError
+        One line: the file, the key, what was found, what is allowed.
+    """
+    try:
+        raw = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise SettingsError(f"{name}: not valid TOML: {error}") from None
+    try:
+        return Settings.model_validate(raw)
+    except ValidationError as error:
+        first = error.errors(include_url=False)[0]
+        more = error.error_count() - 1
+        tail = f" (and {more} more)" if more else ""
+        raise SettingsError(f"{name}: {_sentence(dict(first), raw)}{tail}") from None
+
+
+def _sentence(problem: dict[str, Any], raw: dict[str, Any]) -> str:
+    """Turn one validation error into one sentence: key, what was found, what is allowed."""
+    where = [part for part in problem["loc"] if part != "[key]"]
+    key = ".".join(str(part) for part in where)
+    if problem["type"] == "extra_forbidden":
+        known = _known_keys([str(part) for part in where[:-1]])
+        near = difflib.get_close_matches(str(where[-1]), known, n=1, cutoff=0.0)
+        hint = f"did you mean {near[0]}? " if near else ""
+        return f"{key}: unknown key; {hint}known here: {', '.join(known)}"
+    if problem["type"] == "missing":
+        kind = "table" if len(where) == 1 else "key"
+        return f"{key}: this {kind} is missing and has no default"
+    if problem["type"] == "value_error":
+        text = str(problem["msg"]).removeprefix("Value error, ")
+        return f"{key}: {text}" if key else text
+    allowed = str(problem["msg"]).removeprefix("Input should be ").removeprefix("a valid ")
+    return f"{key}: found {_found(raw, where)}, allowed is: {allowed}"
+
+
+def _known_keys(where: list[str]) -> list[str]:
+    """List the keys allowed in the table at `where`, in the order of the file."""
+    model: type[BaseModel] = Settings
+    for part in where:
+        field = model.model_fields.get(part)
+        if field is None or not (isinstance(field.annotation, type) and issubclass(field.annotation, BaseModel)):
+            return []
+        model = field.annotation
+    return list(model.model_fields)
+
+
+def _found(raw: Any, where: list[Any]) -> str:
+    for part in where:
+        try:
+            raw = raw[part]
+        except (KeyError, IndexError, TypeError):
+            break
+    return repr(raw)
