@@ -1,0 +1,1 @@
+"""Measurements of speed and quality; each module here yields rows for the table of `tools/bench`."""
