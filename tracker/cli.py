@@ -1,0 +1,287 @@
+"""The command line: reads arguments, hands them to the part that does the work, turns failures into one line.
+
+Exit status: 0 done, 1 our fault (the traceback goes into a file), 2 the user's mistake, 130 interrupted.
+Each command imports its part only when it is called, so that `--help` and mistakes answer at once.
+"""
+# ruff: noqa: PLC0415 - late imports are meant, see above
+
+import argparse
+import os
+import sys
+import tempfile
+import traceback
+from collections.abc import Sequence
+from pathlib import Path
+from typing import NoReturn
+
+from tracker import __version__
+from tracker.settings import SettingsError, load
+
+CAUTION = """\
+caution:
+  A reflecting surface concentrates radiated power: a pattern that this program publishes can raise the field
+  at places where people are, and moves that place while it runs. Limits of exposure (ICNIRP 2020, Health
+  Physics 118, or what your country sets) hold at the focus of the surface, not only at the antenna. Transmit
+  only under a licence or an exemption that covers the site. Local rules and licensed practice come first.
+"""
+
+EXIT_STATUS = """\
+exit status:
+  0  done
+  1  a fault of this program or of the machine; the last line says where the details are
+  2  a mistake in arguments, settings or files; one line says what, where and what to do
+  130  interrupted with Ctrl-C
+"""
+
+
+class _Parser(argparse.ArgumentParser):
+    """Reports a mistake as one line, without the usage in front of it."""
+
+    def error(self, message: str) -> NoReturn:
+        self.exit(2, f"{self.prog}: {message}; see {self.prog} --help\n")
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = _Parser(
+        prog="ris-tracker",
+        description="Keeps the pattern of a one-bit reconfigurable intelligent surface right while the channel moves.",
+        epilog=f"""\
+examples:
+  ris-tracker check yard.toml            what these settings mean, before anything runs
+  ris-tracker serve yard.toml            take bursts of pilot frames, publish refreshed patterns
+  ris-tracker watch yard.toml            see how a running service does
+  ris-tracker replay journal/*.mcap      work off recorded bursts again, with the same result bit by bit
+
+{EXIT_STATUS}
+{CAUTION}""",
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        allow_abbrev=False,
+    )
+    parser.add_argument("--version", action="version", version=f"ris-tracker {__version__}")
+    commands = parser.add_subparsers(dest="command", metavar="COMMAND", required=True, title="commands")
+
+    def command(name: str, summary: str, description: str, examples: str) -> argparse.ArgumentParser:
+        return commands.add_parser(
+            name,
+            help=summary,
+            description=description,
+            epilog=f"examples:\n{examples}\n\n{EXIT_STATUS}\n{CAUTION}",
+            formatter_class=argparse.RawDescriptionHelpFormatter,
+            allow_abbrev=False,
+        )
+
+    serve = command(
+        "serve",
+        "run the service for one link",
+        "Takes bursts of pilot frames from the testbed controller, keeps the channel estimate, and publishes\n"
+        "refreshed patterns, the state and alarms. Runs until it is told to stop (Ctrl-C, SIGTERM or the control\n"
+        "socket) and goes on from its last checkpoint when it is started again.",
+        "  ris-tracker serve yard.toml",
+    )
+    _settings(serve)
+
+    replay = command(
+        "replay",
+        "work off recorded logs as the service would",
+        "Feeds recorded bursts to the same engine as the service does. The same log under the same settings gives\n"
+        "the same patterns bit by bit; under other settings it shows what these would have done.",
+        "  ris-tracker replay journal/yard-0001.mcap\n"
+        "  ris-tracker replay journal/*.mcap --settings slower.toml --out slower.mcap --json slower.json",
+    )
+    _logs(replay)
+    replay.add_argument(
+        "--settings", metavar="SETTINGS", type=Path, help="use these settings (default: those recorded in the log)"
+    )
+    replay.add_argument("--out", metavar="OUT.mcap", type=Path, help="write what would have been published, as a log")
+    replay.add_argument("--json", metavar="SUMMARY.json", type=Path, help="write the summary as JSON")
+    replay.add_argument("--quiet", action="store_true", help="show no progress")
+
+    check = command(
+        "check",
+        "say what settings mean, and whether they can be used",
+        "Reads settings as the service would and prints what they amount to: unknowns, memory, work a frame.\n"
+        "Opens no socket and writes nothing.",
+        "  ris-tracker check yard.toml",
+    )
+    _settings(check)
+
+    watch = command(
+        "watch",
+        "see a running service in the terminal",
+        "Subscribes to what the service publishes and shows it: mode, rate, noise, drift, latency, the pattern in\n"
+        "use, alarms. It only listens; any number may watch, from any machine that reaches the endpoint.",
+        "  ris-tracker watch yard.toml\n"
+        "  ris-tracker watch --publish tcp://192.0.2.7:5601 --link yard\n"
+        "  ris-tracker watch yard.toml --plain --seconds 60 >> yard.log",
+    )
+    watch.add_argument(
+        "settings", metavar="SETTINGS", type=Path, nargs="?", help="settings of the service: endpoint, link and panel"
+    )
+    watch.add_argument("--publish", metavar="ENDPOINT", help="where the service publishes, as tcp://HOST:PORT")
+    watch.add_argument("--link", metavar="NAME", help="name of the link")
+    watch.add_argument("--plain", action="store_true", help="one line a second instead of a screen, for logs")
+    watch.add_argument("--seconds", metavar="S", type=_positive, help="end after this many seconds")
+
+    inspect = command(
+        "inspect",
+        "say what recorded logs hold",
+        "Reads logs and tells what lies in them: links, runs, bursts, frames, gaps, damage, patterns, alarms.",
+        "  ris-tracker inspect journal/*.mcap",
+    )
+    _logs(inspect)
+
+    suggest = command(
+        "suggest",
+        "suggest settings from a recorded log",
+        "Estimates from a log what fits it, such as the length of the channel and how fast it moves, and prints\n"
+        "settings to start from.",
+        "  ris-tracker suggest journal/yard-0001.mcap > yard.toml",
+    )
+    suggest.add_argument("log", metavar="LOG", type=_existing, help="a log, as the service records it")
+    return parser
+
+
+def _settings(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("settings", metavar="SETTINGS", type=Path, help="settings of the link, a TOML file")
+
+
+def _logs(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("logs", metavar="LOG", type=_existing, nargs="+", help="logs in the order of recording")
+
+
+def _existing(text: str) -> Path:
+    path = Path(text)
+    if not path.exists():
+        raise argparse.ArgumentTypeError(f"{path}: there is no such file")
+    if path.is_dir():
+        raise argparse.ArgumentTypeError(f"{path}: is a folder, name the logs in it")
+    return path
+
+
+def _positive(text: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        value = 0.0
+    if not 0 < value < float("inf"):
+        raise argparse.ArgumentTypeError(f"found {text!r}, allowed is: a number above 0")
+    return value
+
+
+def _serve(asked: argparse.Namespace) -> int:
+    from tracker.service.serve import serve
+
+    blas = _one_blas_thread()
+    print(f"ris-tracker {__version__}: serving {asked.settings}; {blas}, one thread", file=sys.stderr, flush=True)
+    return serve(asked.settings)
+
+
+def _replay(asked: argparse.Namespace) -> int:
+    from tracker.offline.replay import replay
+
+    _one_blas_thread()
+    return replay(asked.logs, asked.settings, asked.out, asked.json, not asked.quiet)
+
+
+def _check(asked: argparse.Namespace) -> int:
+    from tracker.view.summary import summary
+
+    settings = load(asked.settings)
+    _one_blas_thread()
+    print(summary(settings, asked.settings.parent))
+    return 0
+
+
+def _watch(asked: argparse.Namespace) -> int:
+    from tracker.view.watch import watch
+
+    settings = load(asked.settings) if asked.settings is not None else None
+    endpoint = asked.publish or (settings.sockets.publish if settings else None)
+    link = asked.link or (settings.link.name if settings else None)
+    if endpoint is None or link is None:
+        raise SettingsError("watch: name SETTINGS, or both --publish ENDPOINT and --link NAME")
+    shape = (settings.panel.columns, settings.panel.rows) if settings else None
+    return watch(endpoint, link, shape, plain=asked.plain, seconds=asked.seconds)
+
+
+def _inspect(asked: argparse.Namespace) -> int:
+    from tracker.offline.inspect import inspect
+
+    return inspect(asked.logs)
+
+
+def _suggest(asked: argparse.Namespace) -> int:
+    from tracker.offline.suggest import suggest
+
+    _one_blas_thread()
+    return suggest(asked.log)
+
+
+COMMANDS = {
+    "serve": _serve,
+    "replay": _replay,
+    "check": _check,
+    "watch": _watch,
+    "inspect": _inspect,
+    "suggest": _suggest,
+}
+
+
+def _one_blas_thread() -> str:
+    """Pin BLAS to one thread for good, and name the libraries: two threads stall for ~10 ms on small matrices."""
+    import numpy as np  # noqa: F401 - threadpoolctl reaches only libraries that are loaded
+    import scipy.linalg  # noqa: F401
+    from threadpoolctl import threadpool_info, threadpool_limits
+
+    threadpool_limits(limits=1, user_api="blas")
+    return " and ".join(
+        sorted({f"{lib['internal_api']} {lib['version']}" for lib in threadpool_info() if lib["user_api"] == "blas"})
+    )
+
+
+def entry(arguments: Sequence[str] | None = None) -> int:
+    """Run one command.
+
+    Parameters
+    ----------
+    arguments : sequence of str, optional
+        The command line without the program's name; `sys.argv` by default.
+
+    Returns
+    -------
+    int
+        Exit status. Mistakes in the arguments themselves leave by SystemExit(2), help and version by SystemExit(0).
+    """
+    asked = _parser().parse_args(arguments)
+    try:
+        status = COMMANDS[asked.command](asked)
+        sys.stdout.flush()
+    except SettingsError as mistake:
+        print(f"ris-tracker: {mistake}", file=sys.stderr)
+        return 2
+    except KeyboardInterrupt:
+        print(f"ris-tracker {asked.command}: interrupted", file=sys.stderr)
+        return 130
+    except BrokenPipeError:
+        # The reader of our output went away (`| head`); Python must not complain again when it closes the stream.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except Exception as fault:  # noqa: BLE001 - the outermost door: whatever it is, the user gets one line
+        print(f"ris-tracker {asked.command}: {_our_fault(fault)}", file=sys.stderr)
+        return 1
+    return status
+
+
+def _our_fault(fault: Exception) -> str:
+    """Describe a fault of ours in one line and put the traceback where it can be sent from."""
+    said = " ".join(f"{type(fault).__name__}: {fault}".split())
+    text = "".join(traceback.format_exception(fault))
+    try:
+        with tempfile.NamedTemporaryFile(
+            "w", prefix="ris-tracker-fault-", suffix=".txt", delete=False, encoding="utf-8"
+        ) as file:
+            file.write(f"ris-tracker {__version__}, Python {sys.version}\n{' '.join(sys.argv)}\n\n{text}")
+    except OSError:
+        print(text, file=sys.stderr)
+        return f"internal fault: {said} (traceback above; please report it)"
+    return f"internal fault: {said} (traceback in {file.name}; please report it)"
