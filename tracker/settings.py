@@ -127,7 +127,6 @@ class Sockets(Table):
     pilots: Endpoint = "tcp://127.0.0.1:5600"
     publish: Endpoint = "tcp://127.0.0.1:5601"
     control: Endpoint = "tcp://127.0.0.1:5602"
-    queue_s: PositiveFloat = 5.0
     queue_mb: PositiveFloat = 512.0
 
 
@@ -136,6 +135,7 @@ class Journal(Table):
 
     folder: str = "journal"
     rotate_mb: PositiveFloat = 1024.0
+    required: bool = True
 
 
 class Settings(Table):

@@ -1,0 +1,84 @@
+"""Aperture basis: in which r directions over the N elements the responses are estimated.
+
+A pattern s enters the model as z(s) = [1, Uᵀs]: the direct path, then the surface through U (N × r, orthonormal
+columns). Fewer columns are fewer unknowns, as long as the true responses lie in their span.
+"""
+
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+
+
+class ApertureBasis(Protocol):
+    """What the estimator needs of a basis."""
+
+    @property
+    def elements(self) -> int:
+        """N."""
+
+    @property
+    def size(self) -> int:
+        """r, columns of U."""
+
+    def regressors(self, states: Array) -> Array:
+        """Turn states (B, N) into z (B, r + 1), the direct path first."""
+
+    def surface(self, coefficients: Complex) -> Complex:
+        """Turn coefficients (r, D) into element responses (N, D)."""
+
+
+class Elements:
+    """Every element for itself: U is the identity. Any surface, nothing known beforehand."""
+
+    def __init__(self, elements: int) -> None:
+        self.elements = elements
+        self.size = elements
+
+    def regressors(self, states: Array) -> Array:
+        """See `ApertureBasis`."""
+        z = np.empty((states.shape[0], self.size + 1))
+        z[:, 0] = 1.0
+        z[:, 1:] = states
+        return z
+
+    def surface(self, coefficients: Complex) -> Complex:
+        """See `ApertureBasis`."""
+        return coefficients
+
+
+class Tiles:
+    """Neighbouring elements share one response: U has one column a tile, constant on it.
+
+    Parameters
+    ----------
+    columns, rows : int
+        Of the panel; element i is column i // rows, row i % rows.
+    tile_columns, tile_rows : int
+        Of a tile; tiles at the far edges may be smaller.
+    """
+
+    def __init__(self, columns: int, rows: int, tile_columns: int, tile_rows: int) -> None:
+        self.elements = columns * rows
+        element = np.arange(self.elements)
+        down = -(-rows // tile_rows)
+        self._tile = (element // rows) // tile_columns * down + (element % rows) // tile_rows
+        self.size = int(self._tile.max()) + 1
+        # Each column has unit length, so that unit patterns excite all columns alike.
+        self._weight = 1.0 / np.sqrt(np.bincount(self._tile))
+        self._columns = np.zeros((self.elements, self.size))
+        self._columns[element, self._tile] = self._weight[self._tile]
+
+    def regressors(self, states: Array) -> Array:
+        """See `ApertureBasis`."""
+        z = np.empty((states.shape[0], self.size + 1))
+        z[:, 0] = 1.0
+        z[:, 1:] = states @ self._columns
+        return z
+
+    def surface(self, coefficients: Complex) -> Complex:
+        """See `ApertureBasis`."""
+        return (coefficients * self._weight[:, None])[self._tile]

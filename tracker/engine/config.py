@@ -1,0 +1,58 @@
+"""What an engine is built from: everything that stays as it is while the tracker runs."""
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .aperture import ApertureBasis
+from .panel import Limits
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Config:
+    """Settings of the engine, in its own terms.
+
+    Parameters
+    ----------
+    receivers : int
+        R.
+    delay : ndarray of complex, shape (K, Q)
+        Delay basis.
+    aperture : ApertureBasis
+    forgetting : str
+        ``resetting`` or ``exponential``.
+    time_constant_s : float
+        Of forgetting.
+    false_alarm_s : float
+        Wanted mean time between false drift alarms.
+    every_bursts : int
+        A refresh is considered once in so many bursts.
+    least_gain : float
+        Predicted gain below which the pattern in use stays, bit/s/Hz.
+    clock_skew_ns : int
+        Largest difference allowed between a burst's time and its arrival.
+    limits : Limits
+        What the panel cannot do.
+    """
+
+    receivers: int
+    delay: NDArray[np.complex128]
+    aperture: ApertureBasis
+    forgetting: str = "resetting"
+    time_constant_s: float = 0.5
+    false_alarm_s: float = 36_000.0
+    every_bursts: int = 1
+    least_gain: float = 0.01
+    clock_skew_ns: int = 60_000_000_000
+    limits: Limits = field(default_factory=Limits)
+
+    @property
+    def elements(self) -> int:
+        """N."""
+        return self.aperture.elements
+
+    @property
+    def tones(self) -> int:
+        """K."""
+        return int(self.delay.shape[0])

@@ -1,0 +1,187 @@
+"""When a refreshed pattern is worked out, and whether it is worth publishing."""
+
+import math
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from . import panel
+from .budget import Budget
+from .channel import Channel
+from .config import Config
+from .events import Cause, Pattern
+from .flips import optimize
+from .one_carrier import rate_bound
+from .rate import rate, response
+from .report import Stand
+
+# Published patterns kept, to know what the controller shows when it names an id.
+REMEMBERED = 256
+# A search from many starts costs more than a climb; after the first, it is made again once in so many refreshes.
+THOROUGH_EVERY = 64
+# One-sided 95 % point of the normal distribution.
+QUANTILE_95 = 1.6449
+
+
+class Refresher:
+    """The patterns published, and the choice of the next.
+
+    Parameters
+    ----------
+    config : Config
+    first_id : int
+        Id of the first pattern that this tracker publishes.
+    """
+
+    def __init__(self, config: Config, first_id: int) -> None:
+        self._config = config
+        self._next_id = first_id
+        self._published: dict[int, NDArray[np.int8]] = {}
+        self._since_considered = 0
+        self._since_thorough = 0
+        self._next_thorough = 0
+
+    @property
+    def next_id(self) -> int:
+        """Id that the next pattern will have."""
+        return self._next_id
+
+    @property
+    def latest(self) -> int | None:
+        """Id of the pattern published last."""
+        return self._next_id - 1 if self._next_id - 1 in self._published else None
+
+    def states(self, pattern_id: int | None) -> NDArray[np.int8] | None:
+        """States of a pattern published lately; None when it is not known."""
+        return self._published.get(pattern_id) if pattern_id is not None else None
+
+    def due(self, bursts: int) -> bool:
+        """Count bursts; say whether a refresh is to be considered now."""
+        self._since_considered += bursts
+        if self._since_considered < self._config.every_bursts and self._published:
+            return False
+        self._since_considered = 0
+        return True
+
+    def begin_afresh(self) -> None:
+        """Search thoroughly next, and often again while the estimate forms."""
+        self._since_thorough = self._next_thorough = 0
+
+    def choose(
+        self, channel: Channel, cause: Cause, budget: Budget, stand: Stand
+    ) -> tuple[Pattern | None, int]:
+        """Work out a refreshed pattern.
+
+        Parameters
+        ----------
+        channel : Channel
+        cause : Cause
+            ``first`` and ``operator`` publish whatever comes out; the others only what gains enough.
+        budget : Budget
+        stand : Stand
+            The last burst that it rests on.
+
+        Returns
+        -------
+        pattern : Pattern or None
+            With `rate_low` still equal to `rate`; None when the pattern in use stays.
+        steps : int
+            Optimizer steps taken.
+        """
+        in_use = self.states(self.latest)
+        found = optimize(channel, in_use, self._config.limits, budget, thorough=self._thorough())
+        before = rate(channel, in_use) if in_use is not None else 0.0
+        forced = cause in (Cause.FIRST, Cause.OPERATOR)
+        same = in_use is not None and np.array_equal(found.states, in_use)
+        if not forced and (same or found.rate - before < self._config.least_gain):
+            return None, found.steps
+        return self._publish(channel, found.states, before, cause, stand, found.steps), found.steps
+
+    def adopt(self, channel: Channel, states: NDArray[np.int8], stand: Stand) -> Pattern:
+        """Publish a pattern that the operator chose."""
+        in_use = self.states(self.latest)
+        before = rate(channel, in_use) if in_use is not None else 0.0
+        return self._publish(channel, states, before, Cause.OPERATOR, stand, 0)
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state."""
+        return {
+            "next_id": self._next_id,
+            "published": {str(key): panel.pack(states) for key, states in self._published.items()},
+            "since_considered": self._since_considered,
+            "since_thorough": self._since_thorough,
+            "next_thorough": self._next_thorough,
+        }
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot."""
+        self._next_id = int(snapshot["next_id"])
+        elements = self._config.elements
+        self._published = {
+            int(key): panel.unpack(np.asarray(bits, dtype=np.uint8), elements).astype(np.int8)
+            for key, bits in snapshot["published"].items()
+        }
+        self._since_considered = int(snapshot["since_considered"])
+        self._since_thorough = int(snapshot["since_thorough"])
+        self._next_thorough = int(snapshot["next_thorough"])
+
+    def _thorough(self) -> bool:
+        """Search thoroughly at refreshes 1, 2, 4, 8 … after a fresh start, then at regular distances."""
+        self._since_thorough += 1
+        if self._since_thorough < self._next_thorough:
+            return False
+        self._next_thorough = min(max(2 * self._next_thorough, 1), THOROUGH_EVERY)
+        self._since_thorough = 0
+        return True
+
+    def _publish(
+        self,
+        channel: Channel,
+        states: NDArray[np.int8],
+        before: float,
+        cause: Cause,
+        stand: Stand,
+        steps: int,
+    ) -> Pattern:
+        predicted = rate(channel, states)
+        pattern = Pattern(
+            id=self._next_id,
+            run=stand.run,
+            seq=stand.seq,
+            t_ns=stand.t_ns,
+            states=states,
+            rate=predicted,
+            rate_low=predicted,
+            rate_before=before,
+            rate_bound=max(rate_bound(channel), predicted),
+            cause=cause,
+            steps=steps,
+        )
+        self._published[pattern.id] = states
+        self._published.pop(pattern.id - REMEMBERED, None)
+        self._next_id += 1
+        return pattern
+
+
+def rate_spread(channel: Channel, states: NDArray[np.int8], variance: float) -> float:
+    """Standard deviation of the rate under a pattern, from the variance of its delay coefficients (first order).
+
+    Parameters
+    ----------
+    channel : Channel
+    states : ndarray, shape (N,)
+    variance : float
+        Of each complex delay coefficient of the response, in units of the noise.
+    """
+    tones = response(channel, states)
+    weight = tones.conj() / (1.0 + np.abs(tones) ** 2)
+    slope = (weight @ channel.basis) * (2.0 / (math.log(2.0) * tones.size))
+    # A complex error of variance v moves the rate through one of its two real dimensions: v / 2.
+    return math.sqrt(0.5 * variance * float((np.abs(slope) ** 2).sum()))
+
+
+def rate_low(pattern_rate: float, spread: float) -> float:
+    """Rate expected to be met with probability 0.95."""
+    return max(pattern_rate - QUANTILE_95 * spread, 0.0)

@@ -1,0 +1,127 @@
+"""Wording of what the engine says: alarms, and one state a burst."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from .burst import Burst
+from .cusum import Change
+from .drift import DriftMonitor
+from .estimator import Fit
+from .events import Alarm, Mode, State
+
+
+@dataclass(frozen=True, slots=True)
+class Stand:
+    """The last burst that something rests on.
+
+    Parameters
+    ----------
+    run, seq : int
+    t_ns : int
+        Time of its last frame.
+    """
+
+    run: int
+    seq: int
+    t_ns: int
+
+
+@dataclass(slots=True)
+class Counts:
+    """What was taken and what was not, since start."""
+
+    bursts: int = 0
+    frames: int = 0
+    lost: int = 0
+    duplicate: int = 0
+    refused: int = 0
+    dropped_frames: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Link:
+    """How the pattern in use does.
+
+    Parameters
+    ----------
+    pattern : int or None
+        Its id.
+    measured, predicted : float or None
+        Rates, bit/s/Hz.
+    """
+
+    pattern: int | None
+    measured: float | None
+    predicted: float | None
+
+
+def drift_alarm(change: Change, elapsed_s: float, stand: Stand) -> Alarm:
+    """Innovations left their baseline: upward the channel is not what it was, downward the baseline was wrong."""
+    return Alarm(
+        run=stand.run,
+        seq=stand.seq,
+        t_ns=stand.t_ns,
+        since_ns=stand.t_ns - round(change.since * elapsed_s * 1e9),
+        kind="channel" if change.up else "unclear",
+        receiver=None,
+        statistic=change.statistic,
+        threshold=change.threshold,
+        next_kind="unclear" if change.up else "",
+        action="reacquire" if change.up else "new baseline",
+    )
+
+
+def gap_alarm(lost: int, since_ns: int, stand: Stand) -> Alarm:
+    """Bursts were lost on the way; the estimate ages by the time they took."""
+    return Alarm(
+        run=stand.run,
+        seq=stand.seq,
+        t_ns=stand.t_ns,
+        since_ns=since_ns,
+        kind="gap",
+        receiver=None,
+        statistic=float(lost),
+        threshold=1.0,
+        next_kind="",
+        action="none",
+    )
+
+
+def states(
+    bursts: Sequence[Burst],
+    mode: Mode,
+    counts: Counts,
+    noise: Sequence[float],
+    fit: Fit,
+    link: Link,
+    time_constant_s: float,
+    drift: DriftMonitor,
+) -> list[State]:
+    """One state for each burst of a block; they differ in what names the burst alone."""
+    return [
+        State(
+            run=burst.run,
+            seq=burst.seq,
+            t_ns=burst.end_ns,
+            mode=mode,
+            bursts=counts.bursts,
+            frames=counts.frames,
+            lost=counts.lost,
+            duplicate=counts.duplicate,
+            refused=counts.refused,
+            dropped_frames=counts.dropped_frames,
+            noise=tuple(float(power) for power in noise),
+            innovation=tuple(float(ratio) for ratio in fit.ratio),
+            rate_measured=link.measured,
+            rate_predicted=link.predicted,
+            offset_hz=0.0,
+            phase_rad=(0.0, 0.0),
+            time_constant_ms=time_constant_s * 1e3,
+            pattern=link.pattern,
+            faults=(),
+            together=len(bursts),
+            statistic=drift.statistic,
+            threshold=drift.threshold,
+        )
+        for burst in bursts
+    ]

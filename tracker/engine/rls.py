@@ -1,0 +1,202 @@
+"""Block recursive least squares with forgetting, on one triangle of the covariance, in place.
+
+Model: y = z C + unit noise, one row a frame; z (1 × n) is shared by all D outputs, so one covariance P serves all.
+For a block of B frames, with P⁻ the covariance after forgetting::
+
+    S  = I + Z P⁻ Zᴴ = L Lᴴ
+    X  = L⁻¹ Z P⁻
+    C += Xᴴ L⁻¹ (Y − Z C)
+    P  = P⁻ − Xᴴ X
+
+Both ways to forget are P⁻ = a P + b P₀ with P₀ diagonal, so they are remembered as two numbers and folded into the two
+BLAS calls of the next update: forgetting costs no pass over P.
+
+============  =======  ==============  =============================================================
+forgetting    a        b               equals
+============  =======  ==============  =============================================================
+exponential   1 / λ    0               exponentially weighted least squares (Sayed & Kailath 1994)
+resetting     λ        1 − λ           R ← λR + (1 − λ)R_∞ kept in covariance form (the idea of Salgado,
+                                       Goodwin & Middleton 1988): P never exceeds the prior
+============  =======  ==============  =============================================================
+
+Only the lower triangle is read and written (symm/hemm, syrk/herk). That is not only half the work: P is symmetric by
+construction, and updating both triangles drifts apart and blows up after a few thousand steps (Verhaegen 1989).
+"""
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import blas, lapack
+
+Complex = NDArray[np.complex128]
+
+
+class BlockRls:
+    """The estimator's state: coefficients C and covariance P.
+
+    Parameters
+    ----------
+    prior : ndarray of float, shape (n,)
+        Variance of each coefficient before any data, in units of the noise.
+    outputs : int
+        D, columns of C.
+    complex_regressors : bool
+        True when z is complex, which makes P complex Hermitian; real z keeps it real, at a quarter of the cost.
+    """
+
+    def __init__(self, prior: NDArray[np.float64], outputs: int, *, complex_regressors: bool = False) -> None:
+        self._prior = np.array(prior, dtype=np.float64)
+        self._complex = complex_regressors
+        self._dtype = np.complex128 if complex_regressors else np.float64
+        self._covariance = np.asfortranarray(np.diag(self._prior).astype(self._dtype))
+        self.coefficients: Complex = np.zeros((self.size, outputs), dtype=np.complex128)
+        self._pending = (1.0, 0.0)  # P is a · stored + b · prior, for the (a, b) gathered since the last update
+
+    @property
+    def size(self) -> int:
+        """n, coefficients an output."""
+        return self._prior.shape[0]
+
+    @property
+    def prior(self) -> NDArray[np.float64]:
+        """Variances before any data, shape (n,)."""
+        return self._prior.copy()
+
+    @property
+    def variances(self) -> NDArray[np.float64]:
+        """Variance of each coefficient now, in units of the noise, shape (n,)."""
+        a, b = self._pending
+        return np.asarray(a * self._covariance.diagonal().real + b * self._prior)
+
+    @property
+    def covariance(self) -> NDArray[Any]:
+        """P as a full (n, n) matrix, a copy; for checks, not for the hot path."""
+        a, b = self._pending
+        lower = np.tril(self._covariance)
+        return np.asarray(a * (lower + np.tril(lower, -1).conj().T) + np.diag(b * self._prior))
+
+    def predicted_variance(self, regressor: NDArray[Any]) -> float:
+        """Variance of z C for one regressor z of shape (n,): z P zᴴ, in units of the noise."""
+        column = self._times_covariance(np.ascontiguousarray(regressor, dtype=self._dtype)[None, :])
+        return float((regressor @ column[:, 0]).real)
+
+    def forget(self, a: float, b: float) -> None:
+        """Set P to a P + b P₀, to be carried out with the next update; see `forgetting`."""
+        before_a, before_b = self._pending
+        self._pending = (a * before_a, a * before_b + b)
+
+    def update(self, regressors: NDArray[Any], outputs: Complex) -> Complex:
+        """Take in a block of frames.
+
+        Parameters
+        ----------
+        regressors : ndarray, shape (B, n)
+            Z.
+        outputs : ndarray of complex, shape (B, D)
+            Y, divided by the noise amplitude.
+
+        Returns
+        -------
+        ndarray of complex, shape (B, D)
+            Whitened innovations L⁻¹(Y − Z C): unit variance each when the model holds.
+        """
+        z = np.ascontiguousarray(regressors, dtype=self._dtype)
+        gain = self._times_covariance(z)  # P⁻Zᴴ, (n, B)
+        spread = z @ gain
+        spread.flat[:: spread.shape[0] + 1] += 1.0
+        whitener = self._whitener(spread)
+        gain = self._times_adjoint(gain, whitener)  # Xᴴ = P⁻Zᴴ L⁻ᴴ
+        white = self._product(whitener, outputs - self._product(z, self.coefficients))
+        self.coefficients += self._product(gain, white)
+        self._downdate(gain)
+        return white
+
+    def rescale(self, coefficients: NDArray[np.float64], covariance: float) -> None:
+        """Change the unit of the noise: multiply columns of C, and P with its prior, by given factors."""
+        self.coefficients *= coefficients
+        self._prior *= covariance
+        a, b = self._pending
+        self._pending = (a * covariance, b)
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state, as copies; `restore` goes on from it bit by bit."""
+        return {
+            "prior": self._prior.copy(),
+            "covariance": self._covariance.copy(order="F"),
+            "coefficients": self.coefficients.copy(),
+            "pending": list(self._pending),
+        }
+
+    @classmethod
+    def restore(cls, snapshot: Mapping[str, Any]) -> "BlockRls":
+        """Rebuild from a snapshot."""
+        covariance = np.asarray(snapshot["covariance"])
+        coefficients = np.asarray(snapshot["coefficients"])
+        rls = cls(snapshot["prior"], coefficients.shape[1], complex_regressors=np.iscomplexobj(covariance))
+        rls._covariance[...] = covariance
+        rls.coefficients[...] = coefficients
+        rls._pending = (float(snapshot["pending"][0]), float(snapshot["pending"][1]))
+        return rls
+
+    def _times_covariance(self, z: NDArray[Any]) -> NDArray[Any]:
+        """Compute P⁻ Zᴴ, (n, B) in Fortran order."""
+        a, b = self._pending
+        multiply = blas.zhemm if self._complex else blas.dsymm
+        adjoint = z.conj().T if self._complex else z.T
+        if not b:
+            return np.asarray(multiply(a, self._covariance, adjoint, lower=1))
+        on_diagonal = (b * self._prior)[:, None] * adjoint
+        return np.asarray(multiply(a, self._covariance, adjoint, beta=1.0, c=on_diagonal, lower=1, overwrite_c=1))
+
+    def _whitener(self, spread: NDArray[Any]) -> NDArray[Any]:
+        """Compute L⁻¹ of S = L Lᴴ; B is small, and multiplying by the inverse is faster than solving n times."""
+        factor, invert = (lapack.zpotrf, lapack.ztrtri) if self._complex else (lapack.dpotrf, lapack.dtrtri)
+        lower, info = factor(spread, lower=1, clean=1)
+        if info:
+            raise FloatingPointError(f"innovation covariance is not positive definite (pivot {info})")
+        return np.asarray(invert(lower, lower=1, overwrite_c=1)[0])
+
+    def _times_adjoint(self, gain: NDArray[Any], whitener: NDArray[Any]) -> NDArray[Any]:
+        multiply, adjoint = (blas.ztrmm, 2) if self._complex else (blas.dtrmm, 1)
+        return np.asarray(multiply(1.0, whitener, gain, side=1, lower=1, trans_a=adjoint, overwrite_b=1))
+
+    def _downdate(self, gain: NDArray[Any]) -> None:
+        """Set P to P⁻ − Xᴴ X on the lower triangle, in place."""
+        a, b = self._pending
+        self._pending = (1.0, 0.0)
+        subtract = blas.zherk if self._complex else blas.dsyrk
+        self._covariance = subtract(-1.0, gain, beta=a, c=self._covariance, lower=1, overwrite_c=1)
+        if b:
+            self._covariance.flat[:: self.size + 1] += b * self._prior
+
+    def _product(self, left: NDArray[Any], right: Complex) -> Complex:
+        """Multiply a matrix that may be real with a complex one, at real cost when it is."""
+        if self._complex:
+            return np.asarray(left @ right)
+        return np.asarray(left @ right.view(np.float64)).view(np.complex128)
+
+
+def forgetting(kind: str, elapsed_s: float, time_constant_s: float) -> tuple[float, float]:
+    """Forgetting over an elapsed time, as the (a, b) of P⁻ = a P + b P₀.
+
+    Parameters
+    ----------
+    kind : str
+        ``exponential`` or ``resetting``.
+    elapsed_s, time_constant_s : float
+        Δt and τ; λ = exp(−2 Δt / τ): an amplitude loses its memory over τ, a power over τ / 2.
+
+    Raises
+    ------
+    ValueError
+        For an unknown kind.
+    """
+    decay = float(np.exp(-2.0 * elapsed_s / time_constant_s))
+    if kind == "exponential":
+        # A silence may be of any length; beyond this bound the old data count for nothing and P would overflow.
+        return 1.0 / max(decay, 1e-6), 0.0
+    if kind == "resetting":
+        return decay, 1.0 - decay
+    raise ValueError(f"unknown forgetting {kind!r}")

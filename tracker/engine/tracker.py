@@ -1,0 +1,264 @@
+"""The engine: bursts and times in, events out.
+
+A block is one burst, or several that waited together. For each block, in order: estimate, drift test, lifecycle,
+refresh. Whatever hangs on the clock of the machine comes in from outside (which bursts were taken together, how many
+optimizer steps there was time for), so the same input gives the same events bit by bit.
+"""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from . import panel
+from .admission import Admission
+from .budget import Budget
+from .burst import Burst
+from .config import Config
+from .cusum import Change
+from .drift import DriftMonitor
+from .estimator import Estimator, Fit
+from .channel import Channel
+from .events import Cause, Event, Mode, Pattern
+from .lifecycle import Happening, after
+from .rate import rate
+from .report import Counts, Link, Stand, drift_alarm, gap_alarm, states
+from .refresh import Refresher, rate_low, rate_spread
+from .refusal import Reason
+
+# On a drift alarm P goes this share of the way back to the prior: new frames then outweigh old ones within a sweep.
+LOOSEN_ON_CHANGE = 0.9
+# Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
+WORST_FIT = 3.0
+# A silence of this many time constants leaves nothing of the estimate to trust.
+SILENCE_TIME_CONSTANTS = 2.0
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What a block led to.
+
+    Parameters
+    ----------
+    events : list of Event
+        Alarms, then the pattern if one is published, then one state a burst.
+    steps : int
+        Optimizer steps taken, 0 when none was due; a replay passes them back as its budget.
+    """
+
+    events: list[Event]
+    steps: int
+
+
+class Tracker:
+    """Keeps the pattern of one link right.
+
+    Parameters
+    ----------
+    config : Config
+    first_id : int
+        Id of the first pattern to publish.
+    """
+
+    def __init__(self, config: Config, first_id: int = 1) -> None:
+        self._config = config
+        self._admission = Admission(config.clock_skew_ns)
+        self._estimator = Estimator(config)
+        self._drift = DriftMonitor(config.false_alarm_s)
+        self._refresher = Refresher(config, first_id)
+        self._counts = Counts()
+        self._mode = Mode.ACQUIRING
+        self._frames_since = 0
+        self._pending_cause: Cause | None = None
+        self._adopted: NDArray[np.int8] | None = None
+        self._gap: tuple[int, int] | None = None
+
+    @property
+    def mode(self) -> Mode:
+        """Where the tracker stands."""
+        return self._mode
+
+    @property
+    def next_id(self) -> int:
+        """Id that the next pattern will have."""
+        return self._refresher.next_id
+
+    def admit(self, burst: Burst, arrival_ns: int) -> None:
+        """Let a burst in, to be worked off by the next `advance`; count what was lost before it.
+
+        Raises
+        ------
+        Refused
+            The burst is not to be used; see `Admission.admit`. It is not counted here: call `refuse`.
+        """
+        lost = self._admission.admit(burst, arrival_ns)
+        if lost:
+            self._counts.lost += lost
+            self._gap = ((self._gap[0] if self._gap else 0) + lost, self._gap[1] if self._gap else burst.t_ns)
+
+    def refuse(self, reason: Reason) -> None:
+        """Count a burst that was refused, here or at the edge."""
+        if reason is Reason.DUPLICATE:
+            self._counts.duplicate += 1
+        else:
+            self._counts.refused += 1
+
+    def hold(self) -> None:
+        """Leave the pattern in use alone; go on estimating."""
+        self._mode = after(self._mode, Happening.HOLD)
+
+    def resume(self) -> None:
+        """Publish again after `hold`."""
+        self._mode = after(self._mode, Happening.RESUME)
+
+    def refresh(self) -> None:
+        """Search thoroughly and publish at the next block, whatever it gains."""
+        self._pending_cause = Cause.OPERATOR
+        self._refresher.begin_afresh()
+
+    def relearn(self) -> None:
+        """Throw the estimate away and begin again."""
+        self._mode = after(self._mode, Happening.RELEARN)
+        self._estimator.relearn()
+        self._start_over()
+
+    def adopt(self, states: NDArray[np.int8]) -> None:
+        """Publish this pattern at the next block.
+
+        Raises
+        ------
+        ValueError
+            When it is not of N elements.
+        """
+        if states.shape != (self._config.elements,):
+            raise ValueError(f"a pattern of {self._config.elements} elements is needed, not of shape {states.shape}")
+        self._adopted = np.where(states > 0, 1, -1).astype(np.int8)
+
+    def advance(self, bursts: Sequence[Burst], budget: Budget) -> Outcome:
+        """Work off admitted bursts as one block.
+
+        Parameters
+        ----------
+        bursts : sequence of Burst
+            One or more, in order.
+        budget : Budget
+            For the optimizer.
+        """
+        stand = Stand(bursts[-1].run, bursts[-1].seq, bursts[-1].end_ns)
+        patterns = np.concatenate([burst.patterns[burst.keep] for burst in bursts])
+        response = np.concatenate([burst.response[burst.keep] for burst in bursts])
+        fit = self._estimator.update(patterns, response, stand.t_ns - bursts[0].t_ns, stand.t_ns)
+        self._count(bursts)
+        events: list[Event] = []
+        if self._gap:
+            events.append(gap_alarm(*self._gap, stand))
+            self._gap = None
+        change = self._follow_drift(fit)
+        if change:
+            events.append(drift_alarm(change, fit.elapsed_s, stand))
+        channel = self._estimator.channel()
+        pattern, steps = self._consider(channel, len(bursts), budget, stand)
+        if pattern:
+            spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
+            events.append(replace(pattern, rate_low=rate_low(pattern.rate, spread)))
+        link = self._link(channel, bursts[-1].pattern_id, patterns, response)
+        noise, time_constant_s = self._estimator.noise_power.tolist(), self._config.time_constant_s
+        events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
+        return Outcome(events, steps)
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state as plain values and arrays; `load` goes on from it bit by bit."""
+        counts = self._counts
+        return {
+            "admission": self._admission.snapshot(),
+            "estimator": self._estimator.snapshot(),
+            "drift": self._drift.snapshot(),
+            "refresher": self._refresher.snapshot(),
+            "counts": [getattr(counts, name) for name in Counts.__slots__],
+            "mode": str(self._mode),
+            "frames_since": self._frames_since,
+            "pending_cause": str(self._pending_cause) if self._pending_cause else None,
+            "adopted": self._adopted.copy() if self._adopted is not None else None,
+            "gap": list(self._gap) if self._gap else None,
+        }
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot made under the same configuration."""
+        self._admission.load(snapshot["admission"])
+        self._estimator.load(snapshot["estimator"])
+        self._drift.load(snapshot["drift"])
+        self._refresher.load(snapshot["refresher"])
+        self._counts = Counts(*(int(count) for count in snapshot["counts"]))
+        self._mode = Mode(snapshot["mode"])
+        self._frames_since = int(snapshot["frames_since"])
+        cause, adopted, gap = snapshot["pending_cause"], snapshot["adopted"], snapshot["gap"]
+        self._pending_cause = Cause(cause) if cause else None
+        self._adopted = np.array(adopted, dtype=np.int8) if adopted is not None else None
+        self._gap = (int(gap[0]), int(gap[1])) if gap else None
+
+    def _start_over(self) -> None:
+        self._frames_since = 0
+        self._drift.reset()
+        self._refresher.begin_afresh()
+
+    def _count(self, bursts: Sequence[Burst]) -> None:
+        for burst in bursts:
+            kept = int(np.count_nonzero(burst.keep))
+            self._counts.bursts += 1
+            self._counts.frames += kept
+            self._counts.dropped_frames += burst.frames - kept
+            self._frames_since += kept
+
+    def _follow_drift(self, fit: Fit) -> Change | None:
+        """Move through the lifecycle; return a change that calls for an alarm."""
+        if fit.elapsed_s > SILENCE_TIME_CONSTANTS * self._config.time_constant_s and self._mode is Mode.TRACKING:
+            self._mode = after(self._mode, Happening.SILENCE)
+            self._start_over()
+        ratio = float(fit.ratio.mean())
+        if self._frames_since >= self._estimator.ready_after and ratio < WORST_FIT:
+            self._mode = after(self._mode, Happening.READY)
+        if self._mode is not Mode.TRACKING:
+            return None
+        change = self._drift.update(ratio, fit.degrees * fit.ratio.shape[0], fit.elapsed_s)
+        if change and change.up:
+            self._mode = after(self._mode, Happening.CHANGE)
+            self._estimator.loosen(LOOSEN_ON_CHANGE)
+            self._pending_cause = Cause.DRIFT
+        if change:
+            self._start_over()
+        return change
+
+    def _consider(
+        self, channel: Channel, bursts: int, budget: Budget, stand: Stand
+    ) -> tuple[Pattern | None, int]:
+        """Publish a pattern if one is due and worth it; also say how many optimizer steps were taken."""
+        if self._adopted is not None:
+            adopted, self._adopted = self._adopted, None
+            return self._refresher.adopt(channel, adopted, stand), 0
+        if self._mode is Mode.HELD or not (self._refresher.due(bursts) or self._pending_cause):
+            return None, 0
+        cause = self._pending_cause or Cause.REFRESH
+        if self._refresher.latest is None:
+            cause = Cause.FIRST
+        self._pending_cause = None
+        return self._refresher.choose(channel, cause, budget, stand)
+
+    def _link(
+        self,
+        channel: Channel,
+        told: int | None,
+        patterns: NDArray[np.uint8],
+        response: NDArray[np.complex64],
+    ) -> Link:
+        """How the pattern in use does: predicted, and measured on the frames that sounded it."""
+        in_use = told if told is not None else self._refresher.latest
+        chosen = self._refresher.states(in_use)
+        if chosen is None:
+            return Link(in_use, None, None)
+        same = np.flatnonzero((patterns == panel.pack(chosen)).all(axis=1))
+        measured = None
+        if same.size:
+            measured = float(np.log2(1.0 + self._estimator.powers(response[same])).mean())
+        return Link(in_use, measured, rate(channel, chosen))
