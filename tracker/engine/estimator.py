@@ -30,11 +30,15 @@ class Fit:
         Complex degrees of freedom behind each ratio: frames times delay directions.
     elapsed_s : float
         From the end of the block before to the end of this one, s.
+    error : float
+        Mean squared error of predicting the frames from the estimate before them, in units of the noise on a delay
+        direction; 1 is all that can be had. Unlike `ratio` it can be compared between settings.
     """
 
     ratio: NDArray[np.float64]
     degrees: int
     elapsed_s: float
+    error: float
 
 
 class Estimator:
@@ -87,12 +91,14 @@ class Estimator:
             self._rls.forget(*forgetting(self._config.forgetting, elapsed_s, self._config.time_constant_s))
         regressors = self._config.aperture.regressors(panel.unpack(patterns, self._config.elements))
         power = np.zeros(self._config.receivers)
+        error = 0.0
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
-            white = self._rls.update(regressors[part], outputs[part])
-            power += (np.abs(white) ** 2).reshape(-1, self._config.receivers, self._adjoint.shape[1]).sum(axis=(0, 2))
+            innovation, white = self._rls.update(regressors[part], outputs[part])
+            power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
+            error += float(_power(innovation).sum())
         degrees = frames * self._adjoint.shape[1]
-        return Fit(power / degrees, degrees, elapsed_s)
+        return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers))
 
     def channel(self) -> Channel:
         """Estimate as the optimizer takes it, in units of each receiver's noise.
@@ -170,3 +176,8 @@ class Estimator:
             ratio = before / self._noise.power
             amplitude = np.repeat(np.sqrt(ratio), self._adjoint.shape[1])
             self._rls.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
+
+
+def _power(values: NDArray[np.complex128]) -> NDArray[np.float64]:
+    """Sum of |values|² over the frames, shape (D,)."""
+    return np.asarray((values.real**2 + values.imag**2).sum(axis=0))

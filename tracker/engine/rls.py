@@ -87,7 +87,7 @@ class BlockRls:
         before_a, before_b = self._pending
         self._pending = (a * before_a, a * before_b + b)
 
-    def update(self, regressors: NDArray[Any], outputs: Complex) -> Complex:
+    def update(self, regressors: NDArray[Any], outputs: Complex) -> tuple[Complex, Complex]:
         """Take in a block of frames.
 
         Parameters
@@ -99,8 +99,10 @@ class BlockRls:
 
         Returns
         -------
-        ndarray of complex, shape (B, D)
-            Whitened innovations L⁻¹(Y − Z C): unit variance each when the model holds.
+        innovation : ndarray of complex, shape (B, D)
+            Y − Z C, with C as it was before.
+        white : ndarray of complex, shape (B, D)
+            L⁻¹(Y − Z C): unit variance each when the model holds.
         """
         z = np.ascontiguousarray(regressors, dtype=self._dtype)
         gain = self._times_covariance(z)  # P⁻Zᴴ, (n, B)
@@ -108,10 +110,11 @@ class BlockRls:
         spread.flat[:: spread.shape[0] + 1] += 1.0
         whitener = self._whitener(spread)
         gain = self._times_adjoint(gain, whitener)  # Xᴴ = P⁻Zᴴ L⁻ᴴ
-        white = self._product(whitener, outputs - self._product(z, self.coefficients))
+        innovation = outputs - self._product(z, self.coefficients)
+        white = self._product(whitener, innovation)
         self.coefficients += self._product(gain, white)
         self._downdate(gain)
-        return white
+        return innovation, white
 
     def rescale(self, coefficients: NDArray[np.float64], covariance: float) -> None:
         """Change the unit of the noise: multiply columns of C, and P with its prior, by given factors."""

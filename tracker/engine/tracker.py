@@ -46,10 +46,13 @@ class Outcome:
         Alarms, then the pattern if one is published, then one state a burst.
     steps : int
         Optimizer steps taken, 0 when none was due; a replay passes them back as its budget.
+    error : float
+        Mean squared prediction error of the block, see `Fit`.
     """
 
     events: list[Event]
     steps: int
+    error: float
 
 
 class Tracker:
@@ -79,6 +82,11 @@ class Tracker:
     def mode(self) -> Mode:
         """Where the tracker stands."""
         return self._mode
+
+    @property
+    def counts(self) -> Counts:
+        """What was taken and what was not, since start."""
+        return replace(self._counts)
 
     @property
     def next_id(self) -> int:
@@ -166,7 +174,7 @@ class Tracker:
         link = self._link(channel, bursts[-1].pattern_id, patterns, response)
         noise, time_constant_s = self._estimator.noise_power.tolist(), self._config.time_constant_s
         events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
-        return Outcome(events, steps)
+        return Outcome(events, steps, fit.error)
 
     def snapshot(self) -> dict[str, Any]:
         """All state as plain values and arrays; `load` goes on from it bit by bit."""

@@ -1,0 +1,1 @@
+"""The offline shell: the same engine over recorded logs."""

@@ -1,0 +1,120 @@
+"""What a replay has to say: how the log went, how the replay went, and whether they are the same."""
+
+from collections import Counter
+from collections.abc import Iterable
+from dataclasses import dataclass, field, fields
+from typing import Any
+
+import numpy as np
+
+from tracker.engine.events import Alarm, Event, Pattern, State
+from tracker.messages import decode_alarm, decode_pattern, decode_state
+
+from .blocks import Said
+
+
+@dataclass(slots=True)
+class Account:
+    """One side's account: the log's own, or the replay's.
+
+    Parameters
+    ----------
+    patterns, alarms : int, Counter
+        Refreshes published, alarms by kind.
+    predicted, measured, innovation, error : list of float
+        A value a burst, where there is one.
+    """
+
+    patterns: int = 0
+    alarms: Counter[str] = field(default_factory=Counter)
+    predicted: list[float] = field(default_factory=list)
+    measured: list[float] = field(default_factory=list)
+    innovation: list[float] = field(default_factory=list)
+    error: list[float] = field(default_factory=list)
+
+    def take(self, event: Event) -> None:
+        """Take in one event."""
+        if isinstance(event, Pattern):
+            self.patterns += 1
+        elif isinstance(event, Alarm):
+            self.alarms[event.kind] += 1
+        else:
+            self._take_state(event)
+
+    def _take_state(self, state: State) -> None:
+        if state.rate_predicted is not None:
+            self.predicted.append(state.rate_predicted)
+        if state.rate_measured is not None:
+            self.measured.append(state.rate_measured)
+        self.innovation.append(float(np.mean(state.innovation)))
+
+    def as_dict(self) -> dict[str, Any]:
+        """Summarise as plain values."""
+        return {
+            "patterns": self.patterns,
+            "alarms": dict(self.alarms),
+            "rate_predicted": _mean(self.predicted),
+            "rate_measured": _mean(self.measured),
+            "innovation": _mean(self.innovation),
+            "prediction_error": _mean(self.error),
+        }
+
+
+class Comparison:
+    """Holds the patterns of a replay against those that the log says were published, one after another."""
+
+    def __init__(self) -> None:
+        self._logged: list[Pattern] = []
+        self._replayed: list[Pattern] = []
+        self.same = 0
+        self.first_difference: str | None = None
+
+    def logged(self, pattern: Pattern) -> None:
+        """Take a pattern from the log."""
+        self._logged.append(pattern)
+        self._settle()
+
+    def replayed(self, pattern: Pattern) -> None:
+        """Take a pattern from the replay."""
+        self._replayed.append(pattern)
+        self._settle()
+
+    @property
+    def unmatched(self) -> tuple[int, int]:
+        """Patterns that only the log, and that only the replay has."""
+        return len(self._logged), len(self._replayed)
+
+    def _settle(self) -> None:
+        while self._logged and self._replayed:
+            logged, replayed = self._logged.pop(0), self._replayed.pop(0)
+            different = [name for name in _names() if not _equal(getattr(logged, name), getattr(replayed, name))]
+            if not different:
+                self.same += 1
+            elif self.first_difference is None:
+                self.first_difference = f"pattern {logged.id} differs in {', '.join(different)}"
+
+
+def decode_said(said: Said) -> Event:
+    """Decode what the tracker had said.
+
+    Raises
+    ------
+    Refused
+    """
+    if said.kind == "pattern":
+        return decode_pattern(said.body).event
+    if said.kind == "alarm":
+        return decode_alarm(said.body).event
+    return decode_state(said.body).event
+
+
+def _names() -> Iterable[str]:
+    return (field.name for field in fields(Pattern))
+
+
+def _equal(a: Any, b: Any) -> bool:
+    return bool(np.array_equal(a, b))
+
+
+def _mean(values: list[float]) -> float | None:
+    return float(np.mean(values)) if values else None

@@ -1,0 +1,1 @@
+"""The live shell: sockets, journal and clock around the engine."""
