@@ -79,6 +79,13 @@ examples:
         "  ris-tracker serve yard.toml",
     )
     _settings(serve)
+    serve.add_argument(
+        "--log",
+        metavar="LEVEL",
+        choices=("debug", "info", "warning", "error"),
+        default="info",
+        help="what to log on standard error: debug, info, warning or error (default: info)",
+    )
 
     replay = command(
         "replay",
@@ -171,9 +178,8 @@ def _positive(text: str) -> float:
 def _serve(asked: argparse.Namespace) -> int:
     from tracker.service.serve import serve
 
-    blas = _one_blas_thread()
-    print(f"ris-tracker {__version__}: serving {asked.settings}; {blas}, one thread", file=sys.stderr, flush=True)
-    return serve(asked.settings)
+    _one_blas_thread()
+    return serve(asked.settings, asked.log)
 
 
 def _replay(asked: argparse.Namespace) -> int:
@@ -184,11 +190,13 @@ def _replay(asked: argparse.Namespace) -> int:
 
 
 def _check(asked: argparse.Namespace) -> int:
+    from tracker.assembly import configure
+    from tracker.service.sockets import receive_queue
     from tracker.view.summary import summary
 
     settings = load(asked.settings)
     _one_blas_thread()
-    print(summary(settings, asked.settings.parent))
+    print(summary(settings, configure(settings, asked.settings.parent), receive_queue(settings)))
     return 0
 
 
@@ -199,7 +207,7 @@ def _watch(asked: argparse.Namespace) -> int:
     endpoint = asked.publish or (settings.sockets.publish if settings else None)
     link = asked.link or (settings.link.name if settings else None)
     if endpoint is None or link is None:
-        raise SettingsError("watch: name SETTINGS, or both --publish ENDPOINT and --link NAME")
+        raise SettingsError("name SETTINGS, or both --publish ENDPOINT and --link NAME")
     shape = (settings.panel.columns, settings.panel.rows) if settings else None
     return watch(endpoint, link, shape, plain=asked.plain, seconds=asked.seconds)
 
@@ -227,16 +235,20 @@ COMMANDS = {
 }
 
 
-def _one_blas_thread() -> str:
-    """Pin BLAS to one thread for good, and name the libraries: two threads stall for ~10 ms on small matrices."""
-    import numpy as np  # noqa: F401 - threadpoolctl reaches only libraries that are loaded
-    import scipy.linalg  # noqa: F401
-    from threadpoolctl import threadpool_info, threadpool_limits
+def _one_blas_thread() -> None:
+    """Pin BLAS to one thread for good: with two it stalls for ~10 ms on small matrices."""
+    import scipy.linalg  # noqa: F401 - threadpoolctl reaches only libraries that are loaded, NumPy's and SciPy's own
+    from threadpoolctl import threadpool_limits
 
     threadpool_limits(limits=1, user_api="blas")
-    return " and ".join(
-        sorted({f"{lib['internal_api']} {lib['version']}" for lib in threadpool_info() if lib["user_api"] == "blas"})
-    )
+
+
+def _is_mistake(error: Exception) -> bool:
+    """Tell errors whose message is one line for the user from faults of ours."""
+    from tracker.logs.errors import LogError
+    from tracker.service.errors import ServiceError
+
+    return isinstance(error, (SettingsError, LogError, ServiceError))
 
 
 def entry(arguments: Sequence[str] | None = None) -> int:
@@ -256,9 +268,6 @@ def entry(arguments: Sequence[str] | None = None) -> int:
     try:
         status = COMMANDS[asked.command](asked)
         sys.stdout.flush()
-    except SettingsError as mistake:
-        print(f"ris-tracker: {mistake}", file=sys.stderr)
-        return 2
     except KeyboardInterrupt:
         print(f"ris-tracker {asked.command}: interrupted", file=sys.stderr)
         return 130
@@ -267,6 +276,9 @@ def entry(arguments: Sequence[str] | None = None) -> int:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
     except Exception as fault:  # noqa: BLE001 - the outermost door: whatever it is, the user gets one line
+        if _is_mistake(fault):
+            print(f"ris-tracker {asked.command}: {fault}", file=sys.stderr)
+            return 2
         print(f"ris-tracker {asked.command}: {_our_fault(fault)}", file=sys.stderr)
         return 1
     return status

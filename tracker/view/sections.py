@@ -214,10 +214,14 @@ def figures(scene: Scene) -> Table:
     """List what has no trace of its own: receivers, latency, counts, phase, faults."""
     model, state = scene.model, scene.model.state
     grid = Table.grid(padding=(0, 1))
-    grid.add_column(style=QUIET, no_wrap=True, width=11)
+    grid.add_column(style=QUIET, no_wrap=True, width=13)
     grid.add_column(no_wrap=True, overflow="ellipsis")
     if state is None:
         return grid
+    if state.faults:
+        named = ", ".join(f"{element} {fault}" for element, fault, _ in state.faults[:2])
+        more = f" and {len(state.faults) - 2} more" if len(state.faults) > 2 else ""
+        grid.add_row("faults", Text(f"x {named}{more}", BAD))
     for receiver, (noise, ratio) in _receivers(state.noise, state.innovation):
         decibel = f"{10.0 * math.log10(noise):.1f} dB" if noise > 0 else "not known yet"
         grid.add_row(f"receiver {receiver}", f"noise {decibel}, innovation {ratio:.2f}")
@@ -233,12 +237,8 @@ def figures(scene: Scene) -> Table:
     if model.pattern is not None:
         gain = model.pattern.rate - model.pattern.rate_before
         grid.add_row("", f"the last gains {gain:.2f}, holds {model.pattern.rate_low:.2f}")
-    grid.add_row("memory", f"{state.time_constant_ms:,.0f} ms")
+    grid.add_row("time constant", f"{state.time_constant_ms:,.0f} ms")
     grid.add_row("offset", f"{state.offset_hz:+.1f} Hz")
-    if state.faults:
-        named = ", ".join(f"{element} {fault}" for element, fault, _ in state.faults[:2])
-        more = f" and {len(state.faults) - 2} more" if len(state.faults) > 2 else ""
-        grid.add_row("faults", Text(f"x {named}{more}", BAD))
     return grid
 
 

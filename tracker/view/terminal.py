@@ -57,9 +57,12 @@ def screen(scene: Scene, width: int, height: int) -> RenderableType:
             Layout(sections.notes(scene), size=max(3, height // 4)),
         )
         return layout
+    columns, rows = scene.shape or (0, 0)
+    below = max(5, height // 5)
     figures = sections.figures(scene)
-    columns = scene.shape[0] if scene.shape else 0
-    left, gap, right = Layout(ratio=1), Layout(" ", size=3), Layout(size=min(max(2 * columns + 2, 46), width // 2))
+    # The map needs a line for two rows of elements, a frame and a heading; the last figures matter least.
+    room = height - below - 3 - (-(-rows // 2) + 3)
+    left, gap, right = Layout(ratio=1), Layout(" ", size=3), Layout(size=min(max(2 * columns + 2, 48), width // 2))
     left.split_column(
         Layout(sections.rate(scene), ratio=1),
         Layout(" ", size=1),
@@ -67,8 +70,10 @@ def screen(scene: Scene, width: int, height: int) -> RenderableType:
         Layout(" ", size=1),
         Layout(sections.drift(scene), size=5),
     )
-    right.split_column(Layout(sections.surface(scene), ratio=1), Layout(figures, size=figures.row_count))
+    right.split_column(
+        Layout(sections.surface(scene), ratio=1), Layout(figures, size=min(figures.row_count, max(room, 6)))
+    )
     body = Layout(ratio=1)
     body.split_row(left, gap, right)
-    layout.split_column(head, body, Layout(" ", size=1), Layout(sections.notes(scene), size=max(5, height // 5)))
+    layout.split_column(head, body, Layout(" ", size=1), Layout(sections.notes(scene), size=below))
     return layout

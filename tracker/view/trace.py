@@ -86,7 +86,7 @@ class Line:
     glyph: str = ""
 
 
-def scale(lines: Sequence[Line], steps: int = 4) -> tuple[float, float]:
+def scale(lines: Sequence[Line], steps: int = 6) -> tuple[float, float]:
     """Limits of an axis that hold all values and fall on round numbers, so that the axis seldom moves."""
     values = [value for line in lines for value in line.values if value is not None]
     if not values:

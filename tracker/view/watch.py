@@ -40,7 +40,7 @@ def watch(
     try:
         stream = Stream(endpoint, link=link)
     except ValueError as error:
-        raise SettingsError(f"watch: {error}") from None
+        raise SettingsError(str(error)) from None
     console = Console()
 
     def running() -> bool:
