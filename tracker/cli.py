@@ -246,9 +246,10 @@ def _one_blas_thread() -> None:
 def _is_mistake(error: Exception) -> bool:
     """Tell errors whose message is one line for the user from faults of ours."""
     from tracker.logs.errors import LogError
+    from tracker.offline.errors import OfflineError
     from tracker.service.errors import ServiceError
 
-    return isinstance(error, (SettingsError, LogError, ServiceError))
+    return isinstance(error, (SettingsError, LogError, OfflineError, ServiceError))
 
 
 def entry(arguments: Sequence[str] | None = None) -> int:

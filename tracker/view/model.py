@@ -18,6 +18,11 @@ REMEMBERED_NOTES = 100
 LATENCY_SPAN_S = 60.0
 
 
+def clean(text: str) -> str:
+    """Replace control characters: what came over the network must not steer the terminal."""
+    return "".join(character if character.isprintable() else "?" for character in text)
+
+
 @dataclass(frozen=True, slots=True)
 class Truth:
     """What only a stand-in testbed can know, because it made the channel.
@@ -108,7 +113,7 @@ class LinkModel:
             self.note(now, "mode", str(state.mode), grave=state.mode is events.Mode.REACQUIRING)
         if before is not None and state.lost > before.lost:
             self.note(now, "lost", "bursts lost on the way in", grave=True)
-        self.state, self.stages_us = state, message.latency_us
+        self.state, self.stages_us = state, {clean(stage): us for stage, us in message.latency_us.items()}
         self.measured.add(now, state.rate_measured)
         self.predicted.add(now, state.rate_predicted)
         if state.innovation:
@@ -164,8 +169,7 @@ class LinkModel:
 
     def note(self, now: float, kind: str, text: str, *, grave: bool = False) -> None:
         """Keep a line for the list of events; one that says the same as the last is counted with it."""
-        # What came over the network must not steer the terminal.
-        text = "".join(character if character.isprintable() else "?" for character in text)
+        text = clean(text)
         last = self.notes[-1] if self.notes else None
         if last is not None and (last.kind, last.text) == (kind, text):
             self.notes[-1] = Note(now, kind, text, grave, last.count + 1)

@@ -13,7 +13,7 @@ from rich.table import Table
 from rich.text import Text
 
 from tracker.engine.events import Mode
-from tracker.view.model import LinkModel
+from tracker.view.model import LinkModel, clean
 from tracker.view.palette import BAD, CAUTION, FILL, GOOD, QUIET
 from tracker.view.plain import figure, silence
 from tracker.view.surface import panel_map, shape_guess
@@ -140,11 +140,19 @@ def title(scene: Scene) -> RenderableType:
         left.append(f"  burst {state.seq:,} of run {state.run & 0xFFFF:04x}", QUIET)
     if silent := silence(model, scene.now, scene.since):
         left.append(f"  ○ {silent}", f"bold {BAD}")
-    grid = Table.grid(expand=True, padding=(0, 1))
-    grid.add_column(ratio=1)
-    grid.add_column(justify="right", overflow="ellipsis")
-    grid.add_row(left, Text(f"ris-tracker  {scene.source}", QUIET, no_wrap=True))
-    return grid
+    return _Title(left, Text(f"ris-tracker  {scene.source}", QUIET, no_wrap=True))
+
+
+@dataclass(frozen=True, slots=True)
+class _Title:
+    """What matters on the left, and the rest on the right where there is room."""
+
+    left: Text
+    right: Text
+
+    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
+        room = options.max_width - self.left.cell_len - self.right.cell_len
+        yield Text.assemble(self.left, " " * room, self.right, no_wrap=True) if room >= 2 else self.left
 
 
 def rate(scene: Scene) -> RenderableType:
@@ -219,7 +227,7 @@ def figures(scene: Scene) -> Table:
     if state is None:
         return grid
     if state.faults:
-        named = ", ".join(f"{element} {fault}" for element, fault, _ in state.faults[:2])
+        named = ", ".join(f"{element} {clean(fault)}" for element, fault, _ in state.faults[:2])
         more = f" and {len(state.faults) - 2} more" if len(state.faults) > 2 else ""
         grid.add_row("faults", Text(f"x {named}{more}", BAD))
     for receiver, (noise, ratio) in _receivers(state.noise, state.innovation):

@@ -1,5 +1,6 @@
 """The live screen: what a link does now, and did over the last minute, laid out for the room there is."""
 
+import textwrap
 import time
 from collections.abc import Callable
 
@@ -44,7 +45,8 @@ def screen(scene: Scene, width: int, height: int) -> RenderableType:
     model = scene.model
     if width < NARROW or height < LOW:
         lines = [plain.line(model, scene.now, scene.since), *(str(note) for note in list(model.notes)[-1:])]
-        return Text("\n".join(lines)[: width * height])
+        wrapped = [part for line in lines for part in textwrap.wrap(line, width)]
+        return Text("\n".join(wrapped[:height]), end="")
     if model.heard_at is None:
         return sections.waiting(scene)
     layout = Layout()
