@@ -179,15 +179,10 @@ def _check_index(frame: Frame, before: int) -> None:
 
 
 def _attachment(frame: Frame) -> Attachment | None:
-    """Parse an attachment; None when it does not match its CRC (0 stands for none).
-
-    The CRC covers all of the content before it; some releases of the library took the head of the record in too.
-    """
+    """Parse an attachment; None when it does not match its CRC (0 stands for none)."""
     attachment = frame.parse(Attachment.read)
     crc = int.from_bytes(frame.content[-4:], "little")
-    head = HEAD.pack(frame.opcode, len(frame.content))
-    sums = (zlib.crc32(frame.content[:-4]), zlib.crc32(head + frame.content[:-4]), 0)
-    return attachment if crc in sums else None
+    return attachment if crc in (0, zlib.crc32(frame.content[:-4])) else None
 
 
 def _check_end(file: BinaryIO, end: Frame, messages: int, attachments: int, noted: list[str]) -> None:
