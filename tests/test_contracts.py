@@ -1,0 +1,123 @@
+"""The scripts in tools/: what they promise to whoever runs them on a fresh machine."""
+
+import json
+import os
+import shutil
+import stat
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+ROOT = Path(__file__).resolve().parent.parent
+SCRIPTS = [ROOT / name for name in ("tools/environment", "tools/test", "tools/bench", "tools/demo", ".ci/run")]
+
+BENCHMARK = """
+from collections.abc import Iterator
+
+from benchmarks.row import Row
+
+
+def rows(quick: bool) -> Iterator[Row]:
+    yield Row("a thing", 2.0 if quick else 1.0, "ms", "≤ 3", True, "for the test")
+"""
+
+
+def run(*command: str | Path, cwd: Path = ROOT, **environment: str) -> subprocess.CompletedProcess[str]:
+    """Run a command, away from the checkout when asked."""
+    return subprocess.run(
+        [str(part) for part in command],
+        cwd=cwd,
+        env={**os.environ, **environment},
+        capture_output=True,
+        text=True,
+        timeout=60,
+        check=False,
+    )
+
+
+@pytest.mark.parametrize("script", SCRIPTS, ids=lambda path: path.name)
+def test_scripts_can_be_run_as_they_are(script: Path) -> None:
+    """Executable, found through env, valid shell, and free of absolute paths."""
+    text = script.read_text(encoding="utf-8")
+    assert script.stat().st_mode & stat.S_IXUSR
+    assert text.startswith("#!/usr/bin/env bash\n")
+    assert run("bash", "-n", script).returncode == 0
+    for start in ("/home/", "/root/", "/work/", "/tmp/", "/opt/"):
+        assert start not in text
+
+
+@pytest.fixture
+def checkout(tmp_path: Path) -> Path:
+    """A checkout with nothing made in it yet."""
+    shutil.copytree(ROOT / "tools", tmp_path / "tools", ignore=shutil.ignore_patterns("__pycache__"))
+    shutil.copy(ROOT / "pyproject.toml", tmp_path)
+    for module in (tmp_path / "tools" / "benchmarks").glob("*.py"):
+        if module.name not in ("__init__.py", "row.py", "run.py"):
+            module.unlink()
+    return tmp_path
+
+
+def test_a_python_that_is_too_old_is_named_in_one_line(checkout: Path) -> None:
+    """One line says what is needed; nothing is made."""
+    old = checkout / "old-python"
+    old.write_text("#!/bin/sh\nexit 1\n")  # fails the question for 3.11 as an older one does
+    old.chmod(0o755)
+    done = run(checkout / "tools" / "environment", PYTHON=str(old))
+    assert done.returncode == 1
+    assert done.stdout == ""
+    assert done.stderr.count("\n") == 1
+    assert "3.11" in done.stderr
+    assert not (checkout / ".venv").exists()
+
+
+def test_a_python_without_venv_says_what_to_install(checkout: Path) -> None:
+    """Where the venv module is a package of its own, the line names it."""
+    bare = checkout / "bare-python"
+    bare.write_text(f'#!/bin/sh\ncase "$*" in *ensurepip*) exit 1;; esac\nexec "{sys.executable}" "$@"\n')
+    bare.chmod(0o755)
+    done = run(checkout / "tools" / "environment", PYTHON=str(bare))
+    assert done.returncode == 1
+    assert done.stderr.count("\n") == 1
+    major, minor = sys.version_info[:2]
+    assert f"python{major}.{minor}-venv" in done.stderr
+
+
+def bench(checkout: Path, *arguments: str) -> subprocess.CompletedProcess[str]:
+    """Run the benchmarks of a checkout from somewhere else."""
+    return run(sys.executable, checkout / "tools" / "benchmarks" / "run.py", *arguments, cwd=checkout.parent)
+
+
+def test_a_benchmark_that_fails_does_not_stop_the_others(checkout: Path) -> None:
+    """The failure shows in the table and in the exit status; the other values are there, in the file too."""
+    folder = checkout / "tools" / "benchmarks"
+    (folder / "broken.py").write_text(BENCHMARK + '    raise OSError("no such device")\n')
+    (folder / "sound.py").write_text(BENCHMARK)
+    (folder / "unimportable.py").write_text("import nothing_of_that_name\n")
+    (folder / "lends_a_hand.py").write_text('"""No benchmark."""\n')
+    done = bench(checkout, "--quick")
+    assert done.returncode == 1
+    assert "OSError: no such device" in done.stdout
+    kept = json.loads((checkout / "bench.json").read_text(encoding="utf-8"))
+    assert kept["quick"] is True
+    found = {each["name"]: (len(each["rows"]), each["error"]) for each in kept["benchmarks"]}
+    assert found["sound"] == (1, None)
+    assert found["broken"] == (1, "OSError: no such device")
+    assert found["unimportable"][0] == 0
+    assert "lends_a_hand" not in found
+    assert kept["benchmarks"][0]["rows"][0]["value"] == 2.0
+
+
+def test_one_benchmark_can_be_run_alone(checkout: Path) -> None:
+    """`--only` runs what it names, `--json` says where the figures go, and a wrong name lists the right ones."""
+    folder = checkout / "tools" / "benchmarks"
+    (folder / "one.py").write_text(BENCHMARK)
+    (folder / "two.py").write_text(BENCHMARK)
+    done = bench(checkout, "--only", "two", "--json", str(checkout / "two.json"))
+    assert done.returncode == 0
+    kept = json.loads((checkout / "two.json").read_text(encoding="utf-8"))
+    assert [(each["name"], each["rows"][0]["value"]) for each in kept["benchmarks"]] == [("two", 1.0)]
+    wrong = bench(checkout, "--only", "three")
+    assert wrong.returncode == 2
+    assert "there are: one, two" in wrong.stderr
