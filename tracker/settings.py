@@ -14,7 +14,13 @@ class SettingsError(Exception):
 
 Positive = Annotated[int, Field(ge=1)]
 PositiveFloat = Annotated[float, Field(gt=0, allow_inf_nan=False)]
-Endpoint = Annotated[str, Field(pattern=r"^(tcp|ipc|inproc)://\S+$")]
+_LINK = r"^[a-z0-9-]{1,32}$"
+_ENDPOINT = r"^(tcp|ipc|inproc)://\S+$"
+_PATTERNS = {
+    _LINK: "1 to 32 characters from a-z, 0-9 and -",
+    _ENDPOINT: "an endpoint such as tcp://127.0.0.1:5600 or ipc:///run/pilots",
+}
+Endpoint = Annotated[str, Field(pattern=_ENDPOINT)]
 
 
 class Table(BaseModel):
@@ -26,7 +32,7 @@ class Table(BaseModel):
 class Link(Table):
     """Which link this is."""
 
-    name: Annotated[str, Field(pattern=r"^[a-z0-9-]{1,32}$")]
+    name: Annotated[str, Field(pattern=_LINK)]
     receivers: Annotated[int, Field(ge=1, le=64)] = 1
     clock_skew_s: PositiveFloat = 60.0
 
@@ -129,6 +135,14 @@ class Sockets(Table):
     control: Endpoint = "tcp://127.0.0.1:5602"
     queue_mb: PositiveFloat = 512.0
 
+    @model_validator(mode="after")
+    def _apart(self) -> "Sockets":
+        # A port that the system chooses is another one each time.
+        fixed = [end for end in (self.pilots, self.publish, self.control) if not end.endswith((":*", ":0"))]
+        if len(set(fixed)) < len(fixed):
+            raise ValueError("pilots, publish and control must be three different endpoints")
+        return self
+
 
 class Journal(Table):
     """Where everything is recorded."""
@@ -157,8 +171,12 @@ class Settings(Table):
     def _fit_together(self) -> "Settings":
         if self.delay.before >= self.delay.taps:
             raise ValueError(f"delay.before = {self.delay.before} must be below delay.taps = {self.delay.taps}")
+        if self.delay.taps > self.tones.fft:
+            raise ValueError(f"delay.taps = {self.delay.taps} is longer than a symbol, tones.fft = {self.tones.fft}")
         if self.aperture.basis == "learned" and self.aperture.file is None:
-            raise ValueError('aperture.file is missing, basis = "learned" needs the file that `ris-tracker learn` wrote')
+            raise ValueError(
+                'aperture.file is missing, basis = "learned" needs the file that `ris-tracker learn` wrote'
+            )
         return self
 
 
@@ -174,8 +192,10 @@ def load(path: Path) -> Settings:
         text = path.read_text(encoding="utf-8")
     except FileNotFoundError:
         raise SettingsError(f"{path}: there is no such file") from None
-    except (OSError, UnicodeDecodeError) as error:
-        raise SettingsError(f"{path}: cannot be read: {error}") from None
+    except OSError as error:
+        raise SettingsError(f"{path}: cannot be read: {error.strerror}") from None
+    except UnicodeDecodeError as error:
+        raise SettingsError(f"{path}: not valid TOML: byte {error.start} is not UTF-8") from None
     return parse(text, str(path))
 
 
@@ -200,7 +220,8 @@ def parse(text: str, name: str = "settings.toml") -> Settings:
     try:
         return Settings.model_validate(raw)
     except ValidationError as error:
-        first = error.errors(include_url=False)[0]
+        # A misspelt table is also a missing one: what stands in the file comes first.
+        first = min(error.errors(include_url=False), key=lambda problem: problem["type"] != "extra_forbidden")
         more = error.error_count() - 1
         tail = f" (and {more} more)" if more else ""
         raise SettingsError(f"{name}: {_sentence(dict(first), raw)}{tail}") from None
@@ -212,7 +233,7 @@ def _sentence(problem: dict[str, Any], raw: dict[str, Any]) -> str:
     key = ".".join(str(part) for part in where)
     if problem["type"] == "extra_forbidden":
         known = _known_keys([str(part) for part in where[:-1]])
-        near = difflib.get_close_matches(str(where[-1]), known, n=1, cutoff=0.0)
+        near = difflib.get_close_matches(str(where[-1]), known, n=1)
         hint = f"did you mean {near[0]}? " if near else ""
         return f"{key}: unknown key; {hint}known here: {', '.join(known)}"
     if problem["type"] == "missing":
@@ -221,6 +242,10 @@ def _sentence(problem: dict[str, Any], raw: dict[str, Any]) -> str:
     if problem["type"] == "value_error":
         text = str(problem["msg"]).removeprefix("Value error, ")
         return f"{key}: {text}" if key else text
+    if problem["type"] == "string_pattern_mismatch":
+        return f"{key}: found {_found(raw, where)}, allowed is: {_PATTERNS[problem['ctx']['pattern']]}"
+    if problem["type"] == "too_short":
+        return f"{key}: found {_found(raw, where)}, allowed is: at least {problem['ctx']['min_length']} items"
     allowed = str(problem["msg"]).removeprefix("Input should be ").removeprefix("a valid ")
     return f"{key}: found {_found(raw, where)}, allowed is: {allowed}"
 
