@@ -81,4 +81,4 @@ class Tiles:
 
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""
-        return (coefficients * self._weight[:, None])[self._tile]
+        return np.asarray((coefficients * self._weight[:, None])[self._tile])

@@ -45,7 +45,7 @@ class Burst:
     @property
     def frames(self) -> int:
         """B, frames in the burst, those left out included."""
-        return self.patterns.shape[0]
+        return int(self.patterns.shape[0])
 
     @property
     def end_ns(self) -> int:

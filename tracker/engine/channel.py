@@ -48,19 +48,19 @@ class Channel:
     @property
     def tones(self) -> int:
         """K, pilot tones."""
-        return self.basis.shape[0]
+        return int(self.basis.shape[0])
 
     @property
     def delays(self) -> int:
         """Q, columns of the delay basis."""
-        return self.basis.shape[1]
+        return int(self.basis.shape[1])
 
     @property
     def receivers(self) -> int:
         """R, receivers."""
-        return self.direct.shape[0]
+        return int(self.direct.shape[0])
 
     @property
     def elements(self) -> int:
         """N, elements of the surface."""
-        return self.surface.shape[0]
+        return int(self.surface.shape[0])

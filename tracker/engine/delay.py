@@ -23,7 +23,7 @@ def frequencies(fft: int, first: int, count: int, spacing_khz: float) -> NDArray
     ndarray, shape (K,)
         Hz.
     """
-    return (np.arange(first, first + count) - fft // 2) * spacing_khz * 1e3
+    return np.asarray((np.arange(first, first + count) - fft // 2) * (spacing_khz * 1e3), dtype=np.float64)
 
 
 def delay_basis(fft: int, first: int, count: int, taps: int, before: int) -> NDArray[np.complex128]:

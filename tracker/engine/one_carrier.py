@@ -2,16 +2,16 @@
 
 The reachable sums Σ s_n h_n, s_n ∈ {−1, +1}, fill a set whose convex hull is a zonogon: a polygon with 2N corners,
 and |d + x| is largest at a corner. Walking round it, one element changes sign at a time, in the order of the angles
-of the h_n. So sorting N angles and adding up once finds the largest of 2N candidates among 2^N patterns. (Zhang, Shen et al.,
-arXiv 2112.02260, find optimal one-bit patterns in this way; the sweep over an angle φ with s_n = sign Re(h_n e^{−jφ}) is
-the same walk.)
+of the h_n. So sorting N angles and adding up once finds the largest of 2N candidates among 2^N patterns. Zhang,
+Shen et al., arXiv 2112.02260, find optimal one-bit patterns in this way; sweeping an angle φ and setting
+s_n = sign Re(h_n e^{−jφ}) is the same walk.
 """
 
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.channel import Channel
-from tracker.engine.rate import rate
+from .channel import Channel
+from .rate import rate
 
 BLOCK = 1 << 14
 """Responses worked off at once in `rate_bound`: small enough to stay in the cache."""
@@ -101,11 +101,10 @@ def _walk(real: NDArray[np.float64], imag: NDArray[np.float64]) -> NDArray[np.in
     place = order + np.arange(len(real))[:, None] * real.shape[1]
     for part in (real, imag):
         total = part.sum(axis=1, keepdims=True)
-        steps = part.reshape(-1).take(place)
         # corner j = Σ h − 2 (h_1 + … + h_j)
-        np.cumsum(steps, axis=1, out=part)
-        part *= -2.0
-        part += total
+        np.cumsum(part.reshape(-1).take(place), axis=1, out=part)
+        np.multiply(part, -2.0, out=part)
+        np.add(part, total, out=part)
     return order
 
 

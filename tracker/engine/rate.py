@@ -3,7 +3,7 @@
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.channel import Channel
+from .channel import Channel
 
 
 def response(channel: Channel, states: NDArray[np.generic]) -> NDArray[np.complex128]:

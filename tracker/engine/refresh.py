@@ -69,9 +69,7 @@ class Refresher:
         """Search thoroughly next, and often again while the estimate forms."""
         self._since_thorough = self._next_thorough = 0
 
-    def choose(
-        self, channel: Channel, cause: Cause, budget: Budget, stand: Stand
-    ) -> tuple[Pattern | None, int]:
+    def choose(self, channel: Channel, cause: Cause, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
         """Work out a refreshed pattern.
 
         Parameters
@@ -166,7 +164,7 @@ class Refresher:
 
 
 def rate_spread(channel: Channel, states: NDArray[np.int8], variance: float) -> float:
-    """Standard deviation of the rate under a pattern, from the variance of its delay coefficients (first order).
+    """Compute the standard deviation of the rate under a pattern, to first order.
 
     Parameters
     ----------

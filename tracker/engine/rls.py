@@ -11,18 +11,23 @@ For a block of B frames, with P⁻ the covariance after forgetting::
 Both ways to forget are P⁻ = a P + b P₀ with P₀ diagonal, so they are remembered as two numbers and folded into the two
 BLAS calls of the next update: forgetting costs no pass over P.
 
-============  =======  ==============  =============================================================
-forgetting    a        b               equals
-============  =======  ==============  =============================================================
-exponential   1 / λ    0               exponentially weighted least squares (Sayed & Kailath 1994)
-resetting     λ        1 − λ           R ← λR + (1 − λ)R_∞ kept in covariance form (the idea of Salgado,
-                                       Goodwin & Middleton 1988): P never exceeds the prior
-============  =======  ==============  =============================================================
+============  =====  =====  =====  ====================================================================
+forgetting    a      b      C ×    equals
+============  =====  =====  =====  ====================================================================
+exponential   1 / λ  0      1      exponentially weighted least squares (Sayed & Kailath 1994)
+resetting     λ      1 − λ  √λ     a Kalman filter whose coefficients are first-order Gauss-Markov: in
+                                   time they return to the prior, and P never exceeds it (the aim of
+                                   Salgado, Goodwin & Middleton 1988)
+============  =====  =====  =====  ====================================================================
+
+Letting C decay with its covariance keeps the estimate a posterior mean; without it the estimate holds more energy than
+is known to be there, and the optimizer promises rates that are not met.
 
 Only the lower triangle is read and written (symm/hemm, syrk/herk). That is not only half the work: P is symmetric by
 construction, and updating both triangles drifts apart and blows up after a few thousand steps (Verhaegen 1989).
 """
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -57,7 +62,7 @@ class BlockRls:
     @property
     def size(self) -> int:
         """n, coefficients an output."""
-        return self._prior.shape[0]
+        return int(self._prior.shape[0])
 
     @property
     def prior(self) -> NDArray[np.float64]:
@@ -82,10 +87,12 @@ class BlockRls:
         column = self._times_covariance(np.ascontiguousarray(regressor, dtype=self._dtype)[None, :])
         return float((regressor @ column[:, 0]).real)
 
-    def forget(self, a: float, b: float) -> None:
-        """Set P to a P + b P₀, to be carried out with the next update; see `forgetting`."""
+    def forget(self, a: float, b: float, decay: float = 1.0) -> None:
+        """Set P to a P + b P₀, to be carried out with the next update, and C to `decay` C; see `forgetting`."""
         before_a, before_b = self._pending
         self._pending = (a * before_a, a * before_b + b)
+        if decay != 1.0:
+            self.coefficients *= decay
 
     def update(self, regressors: NDArray[Any], outputs: Complex) -> tuple[Complex, Complex]:
         """Take in a block of frames.
@@ -181,8 +188,8 @@ class BlockRls:
         return np.asarray(left @ right.view(np.float64)).view(np.complex128)
 
 
-def forgetting(kind: str, elapsed_s: float, time_constant_s: float) -> tuple[float, float]:
-    """Forgetting over an elapsed time, as the (a, b) of P⁻ = a P + b P₀.
+def forgetting(kind: str, elapsed_s: float, time_constant_s: float) -> tuple[float, float, float]:
+    """Forgetting over an elapsed time, as the arguments of `BlockRls.forget`: a, b and decay.
 
     Parameters
     ----------
@@ -196,10 +203,10 @@ def forgetting(kind: str, elapsed_s: float, time_constant_s: float) -> tuple[flo
     ValueError
         For an unknown kind.
     """
-    decay = float(np.exp(-2.0 * elapsed_s / time_constant_s))
+    decay = math.exp(-2.0 * elapsed_s / time_constant_s)
     if kind == "exponential":
         # A silence may be of any length; beyond this bound the old data count for nothing and P would overflow.
-        return 1.0 / max(decay, 1e-6), 0.0
+        return 1.0 / max(decay, 1e-6), 0.0, 1.0
     if kind == "resetting":
-        return decay, 1.0 - decay
+        return decay, 1.0 - decay, math.sqrt(decay)
     raise ValueError(f"unknown forgetting {kind!r}")

@@ -51,6 +51,6 @@ def threshold_for(run_length: float, slack: float) -> float:
     """
     if not run_length >= 2.0:
         raise ValueError(f"a mean run length of {run_length} samples is not possible, the least is 2")
-    # Siegmund's approximation brackets the answer; beyond 1e11 samples (centuries) the linear system runs out of digits.
+    # Beyond 1e11 samples, centuries of bursts, the linear system runs out of digits.
     wanted = math.log(min(run_length, 1e11))
     return float(brentq(lambda h: math.log(two_sided(h, slack)) - wanted, 1e-6, 40.0 / (2.0 * slack), xtol=1e-6))

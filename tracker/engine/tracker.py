@@ -16,17 +16,17 @@ from . import panel
 from .admission import Admission
 from .budget import Budget
 from .burst import Burst
+from .channel import Channel
 from .config import Config
 from .cusum import Change
 from .drift import DriftMonitor
 from .estimator import Estimator, Fit
-from .channel import Channel
 from .events import Cause, Event, Mode, Pattern
 from .lifecycle import Happening, after
 from .rate import rate
-from .report import Counts, Link, Stand, drift_alarm, gap_alarm, states
 from .refresh import Refresher, rate_low, rate_spread
 from .refusal import Reason
+from .report import Counts, Link, Stand, drift_alarm, gap_alarm, states
 
 # On a drift alarm P goes this share of the way back to the prior: new frames then outweigh old ones within a sweep.
 LOOSEN_ON_CHANGE = 0.9
@@ -238,9 +238,7 @@ class Tracker:
             self._start_over()
         return change
 
-    def _consider(
-        self, channel: Channel, bursts: int, budget: Budget, stand: Stand
-    ) -> tuple[Pattern | None, int]:
+    def _consider(self, channel: Channel, bursts: int, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
         """Publish a pattern if one is due and worth it; also say how many optimizer steps were taken."""
         if self._adopted is not None:
             adopted, self._adopted = self._adopted, None

@@ -197,7 +197,9 @@ def replay(
     folder = settings_path.parent if settings_path else paths[0].parent
     writer = None
     if out is not None:
-        text = settings_path.read_bytes() if settings_path else LogReader(paths[0]).attachments.get("settings.toml", b"")
+        text = (
+            settings_path.read_bytes() if settings_path else LogReader(paths[0]).attachments.get("settings.toml", b"")
+        )
         # A fixed clock: the same replay twice writes the same file.
         writer = LogWriter(out, attachments={"settings.toml": text}, clock_ns=lambda: 0)
     work = Replay(settings, folder, writer)
@@ -242,8 +244,8 @@ def render(result: dict[str, Any]) -> str:
     """Write a summary as text for a person."""
     counts, logged, replayed = result["counts"], result["logged"], result["replayed"]
     lines = [
-        f"{counts.get('bursts', 0)} bursts, {counts.get('frames', 0)} frames over {result['span_s']:.3f} s, worked off in "
-        f"{result['took_s']:.2f} s ({result['times_real_time'] or 0:.1f} times real time)",
+        f"{counts.get('bursts', 0)} bursts, {counts.get('frames', 0)} frames over {result['span_s']:.3f} s, "
+        f"worked off in {result['took_s']:.2f} s ({result['times_real_time'] or 0:.1f} times real time)",
         f"lost {counts.get('lost', 0)}, refused {counts.get('refused', 0)}, frames left out "
         f"{counts.get('dropped_frames', 0)}",
         "",

@@ -60,5 +60,7 @@ class Control:
         bits = request.args.get("bits")
         wanted = -(-self._elements // 8)
         if not isinstance(bits, bytes) or len(bits) != wanted:
-            raise Refused(Reason.SIZES, f"adopt needs `bits`: {wanted} bytes, the packed pattern of {self._elements} elements")
+            raise Refused(
+                Reason.SIZES, f"adopt needs `bits`: {wanted} bytes, the packed pattern of {self._elements} elements"
+            )
         return bits

@@ -30,9 +30,13 @@ class IdFile:
             self.next_id = int(text) if text else 1
         except ValueError:
             os.close(self._file)
-            raise ServiceError(f"{path}: holds no pattern id; write the next id into it, or remove it to begin at 1") from None
+            raise ServiceError(
+                f"{path}: holds no pattern id; write the next id into it, or remove it to begin at 1"
+            ) from None
         except OSError as error:
-            raise ServiceError(f"{path}: {error.strerror}; journal.folder must be a folder that can be written") from None
+            raise ServiceError(
+                f"{path}: {error.strerror}; journal.folder must be a folder that can be written"
+            ) from None
 
     def keep(self, next_id: int) -> None:
         """Note the next id."""

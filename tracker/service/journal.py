@@ -8,6 +8,7 @@ import os
 import threading
 import time
 from collections.abc import Callable
+from contextlib import suppress
 from pathlib import Path
 
 from tracker.logs import LogError, LogWriter
@@ -64,7 +65,7 @@ class Journal:
         """
         if self._writer is None and not self._reopen():
             return False
-        assert self._writer is not None  # noqa: S101 - `_reopen` has just made it
+        assert self._writer is not None
         try:
             for topic, body, log_ns, publish_ns in records:
                 self._writer.add(topic, body, log_ns, publish_ns)
@@ -89,10 +90,8 @@ class Journal:
         """End the file in hand properly."""
         self._syncer.watch(None)
         if self._writer is not None:
-            try:
+            with suppress(OSError):  # what had been committed is on disk; the missing footer is read around
                 self._writer.close()
-            except OSError:
-                pass  # what had been committed is on disk; the missing footer is read around
             self._writer = None
 
     def close(self) -> None:

@@ -167,9 +167,7 @@ class Service:
         """Journal the block, then publish what came of it."""
         events: list[Event] = [*self._notices.take(arrivals[-1].burst), *outcome.events]
         now_ns = time.time_ns()
-        records = [
-            (f"pilots/{self._link}", arrival.body, arrival.wall_ns, arrival.burst.t_ns) for arrival in arrivals
-        ]
+        records = [(f"pilots/{self._link}", arrival.body, arrival.wall_ns, arrival.burst.t_ns) for arrival in arrivals]
         named = [(arrival.burst.run, arrival.burst.seq) for arrival in arrivals]
         records.append((f"{DECISION}/{self._link}", encode_decision(named, outcome.steps), now_ns, now_ns))
         out: list[tuple[str, bytes, bool]] = []
@@ -219,13 +217,11 @@ class Service:
         """Carry out a verb that changes the engine, and journal it where it stood in the order of things."""
         carry_out(command, self._tracker, self._settings.panel.elements)
         now_ns = time.time_ns()
-        self._notices.disk(
-            self._journal.write([(f"{COMMAND}/{self._link}", encode_command(command), now_ns, now_ns)])
-        )
+        self._notices.disk(self._journal.write([(f"{COMMAND}/{self._link}", encode_command(command), now_ns, now_ns)]))
         self._log.info("command", verb=command.verb)
 
     def totals(self) -> dict[str, Any]:
-        """Counts since start, for the last line of the log."""
+        """Return the counts since start, for the last line of the log."""
         status = self._status()
         return {key: status[key] for key in ("bursts", "frames", "lost", "refused", "pattern", "latency_us")}
 

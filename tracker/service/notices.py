@@ -1,4 +1,4 @@
-"""What the service itself has to say: overload, a failing disk, a clock that is wrong; each as an alarm, not too often."""
+"""What the service itself has to say: overload, a failing disk, a wrong clock; as alarms, and not too often."""
 
 import time
 from typing import Any

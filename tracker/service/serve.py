@@ -49,7 +49,7 @@ def serve(settings_path: Path, log_level: str = "info") -> int:
         tracker = Tracker(config, ids.next_id)
         resumed = checkpoint.resume(tracker)
         journal = Journal(
-            folder, settings.link.name, text, settings.journal.rotate_mb, lambda: pack_start(Start(tracker.next_id, tracker.snapshot() if tracker.counts.bursts else None))
+            folder, settings.link.name, text, settings.journal.rotate_mb, lambda: pack_start(_start(tracker))
         )
         service = Service(settings, text, tracker, sockets, journal, ids, log)
         previous = {
@@ -83,3 +83,8 @@ def serve(settings_path: Path, log_level: str = "info") -> int:
                 signal.signal(number, handler)
         log.info("stopped", journal=str(journal.path), **service.totals())
     return 0
+
+
+def _start(tracker: Tracker) -> Start:
+    """How the tracker stands at the beginning of a journal file."""
+    return Start(tracker.next_id, tracker.snapshot() if tracker.counts.bursts else None)

@@ -151,11 +151,12 @@ class Sounder:
 
     def _sounded(self, count: int) -> NDArray[np.int8]:
         if self._cycle is None:
-            coins = self._rng.integers(0, 2, (count, self._elements), dtype=np.int8)
+            coins = self._rng.integers(0, 2, (count, self._elements), dtype=np.bool_)
             return np.where(coins, np.int8(1), np.int8(-1))
         places = (self._place + np.arange(count)) % self._cycle.shape[0]
         self._place = (self._place + count) % self._cycle.shape[0]
-        return self._cycle[places]
+        patterns: NDArray[np.int8] = self._cycle[places]
+        return patterns
 
 
 def _prime(number: int) -> bool:

@@ -163,7 +163,7 @@ def rate(scene: Scene) -> RenderableType:
     lines = [(model.measured, ""), (model.predicted, PREDICTED)]
     if model.truth is not None:
         legend.append((f"{EXACT} in force {figure(model.truth.rate)}", ""))
-        legend.append((f"{BEST} best possible {figure(model.truth.best)}", ""))
+        legend.append((f"{BEST} best {figure(model.truth.best)}", ""))
         lines += [(model.exact, EXACT), (model.best, BEST)]
     details: list[str | tuple[str, str]] = [f"bit/s/Hz, last {SPAN_S:.0f} s"]
     if model.achieved is not None:

@@ -1,0 +1,67 @@
+"""At most so many changes: how far a pattern may move from the one in use."""
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .lines import Lines
+from .realform import Real
+
+
+class Allowance:
+    """Elements that may change against the pattern in use, line by line.
+
+    Parameters
+    ----------
+    lines : Lines
+    in_use : ndarray, shape (N,)
+        Pattern in use. A tied group shown in both states at once, which the panel cannot do, is repaired to the
+        state that most of its elements show.
+    most_changes : int or None
+        Elements that may change; None for any number. A repair counts; what is stuck does not. If repairs alone
+        need more, nothing else may change.
+
+    Attributes
+    ----------
+    base : ndarray of float64, shape (G,)
+        The pattern in use, repaired, as states of the lines.
+    limited : bool
+        Whether some pattern is out of reach.
+    """
+
+    def __init__(self, lines: Lines, in_use: NDArray[np.generic], most_changes: int | None) -> None:
+        votes = lines.votes(in_use)
+        self.base: Real = np.where(votes >= 0, 1.0, -1.0)
+        # Turning a line from `base` changes as many elements more as the majority outnumbered the minority.
+        self._weight = np.abs(votes)
+        repairs = int((lines.sizes() - self._weight).sum()) // 2
+        every = int(self._weight.sum())
+        self._most = every if most_changes is None else max(0, most_changes - repairs)
+        self.limited = self._most < every
+
+    def left(self, states: Real) -> int:
+        """Count the elements that may still change when the lines are in `states`, shape (G,)."""
+        return self._most - int(self._weight[states != self.base].sum())
+
+    def cost(self, states: Real) -> NDArray[np.int64]:
+        """Count what turning each line takes from what is left; negative where it gives back."""
+        return np.where(states == self.base, self._weight, -self._weight)
+
+    def nearest(self, wish: Real) -> Real:
+        """Turn the lines that matter most, as many as may be turned.
+
+        Parameters
+        ----------
+        wish : ndarray of float64, shape (n, G)
+            The sign is the state wished for, the size says how much it matters.
+
+        Returns
+        -------
+        ndarray of float64, shape (n, G)
+            Patterns within the allowance.
+        """
+        gain = np.where(wish * self.base < 0.0, np.abs(wish), 0.0)
+        order = np.argsort(-gain / np.maximum(self._weight, 0.5), axis=1, kind="stable")
+        spent = np.cumsum(self._weight[order], axis=1)
+        turned = np.empty(wish.shape, dtype=bool)
+        np.put_along_axis(turned, order, spent <= self._most, axis=1)
+        return np.where(turned & (gain > 0.0), -self.base, self.base)

@@ -1,0 +1,98 @@
+"""The channel in real numbers, laid out for the inner loops of the optimizer.
+
+States are real, so a complex coefficient is two real ones side by side: everything becomes products of real
+matrices, with half the work of complex ones. All matrices lie in memory that starts at a multiple of 64 bytes:
+some BLAS kernels treat the ends of misaligned vectors apart and then round differently, and a replay has to get the
+same bits wherever its memory happens to lie.
+"""
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+Real = NDArray[np.float64]
+
+_ALIGNMENT = 8  # float64 values, 64 bytes
+
+
+def aligned(*shape: int) -> Real:
+    """Allocate a float64 array, not initialised, that starts at a multiple of 64 bytes."""
+    size = math.prod(shape)
+    memory = np.empty(size + _ALIGNMENT)
+    first = -(memory.ctypes.data // memory.itemsize) % _ALIGNMENT
+    return memory[first : first + size].reshape(shape)
+
+
+class RealForm:
+    """A channel, its elements joined to lines, as real matrices.
+
+    Parameters
+    ----------
+    basis : ndarray of complex128, shape (K, Q)
+    direct : ndarray of complex128, shape (R, Q)
+    surface : ndarray of complex128, shape (G, R, Q)
+        What each of G lines adds in state +1.
+
+    Attributes
+    ----------
+    lines, receivers, tones, delays : int
+        G, R, K, Q.
+    width : int
+        L = 2RQ, real coefficients of a sum over lines.
+    direct : ndarray of float64, shape (L,)
+        Re and Im side by side.
+    surface : ndarray of float64, shape (G, L)
+    energy : ndarray of float64, shape (G,)
+        Σ_rk |basis · surface[g]|², equal to the squared norm of a row of `surface`, for the basis is orthonormal.
+    """
+
+    def __init__(
+        self, basis: NDArray[np.complex128], direct: NDArray[np.complex128], surface: NDArray[np.complex128]
+    ) -> None:
+        self.lines, self.receivers, self.delays = (int(n) for n in surface.shape)
+        self.tones = int(basis.shape[0])
+        self.width = 2 * self.receivers * self.delays
+        self.surface = aligned(self.lines, self.width)
+        self.surface.view(np.complex128).reshape(surface.shape)[...] = surface
+        self.direct = aligned(self.width)
+        self.direct.view(np.complex128).reshape(direct.shape)[...] = direct
+        squares = np.multiply(self.surface, self.surface, out=aligned(self.lines, self.width))
+        ones = aligned(self.width)
+        ones[:] = 1.0
+        self.energy = squares @ ones
+        # A row of coefficients (Re, Im, Re, Im …) times this is a row of responses (Re of all tones, Im of all tones).
+        tones = self.tones
+        self._to_tones = aligned(2 * self.delays, 2 * tones)
+        self._to_tones[0::2, :tones] = self._to_tones[1::2, tones:] = basis.real.T
+        self._to_tones[0::2, tones:] = basis.imag.T
+        np.negative(basis.imag.T, out=self._to_tones[1::2, :tones])
+        self._from_tones = self._to_tones.T
+
+    def heard(self, sums: Real) -> Real:
+        """Respond on the tones: coefficients (…, L) to responses (…, R, 2K), real parts first."""
+        rows = np.matmul(sums.reshape(-1, 2 * self.delays), self._to_tones)
+        return rows.reshape(*sums.shape[:-1], self.receivers, 2 * self.tones)
+
+    def back(self, heard: Real) -> Real:
+        """Apply the transpose of `heard`: (…, R, 2K) to (…, L)."""
+        rows = heard.reshape(-1, 2 * self.tones) @ self._from_tones
+        return rows.reshape(*heard.shape[:-2], self.width)
+
+    def load(self, heard: Real) -> Real:
+        """Give 1 + |H|², shape (…, R, K)."""
+        squared = heard * heard
+        load = squared[..., : self.tones] + squared[..., self.tones :]
+        load += 1.0
+        return load
+
+    def weigh(self, heard: Real, weight: Real) -> Real:
+        """Multiply responses (…, R, 2K) by real weights (…, R, K)."""
+        split = heard.reshape(*heard.shape[:-1], 2, self.tones)
+        return (split * weight[..., None, :]).reshape(heard.shape)
+
+
+def bits(load: Real) -> Real:
+    """Add up log2(load) over receivers and tones: (n, R, K) to (n,). Overwrites `load`."""
+    np.log2(load, out=load)
+    return np.asarray(load.reshape(len(load), -1).sum(axis=1))

@@ -1,0 +1,139 @@
+"""Where to begin climbing: many patterns worked out at once by matrix products.
+
+A direction is a set of delay coefficients that one would like the surface to answer with; the pattern *aligned* with
+it turns each line so that it adds to it: s_g = sign Re(conj(direction) · surface_g). Aligning with the slope of the
+rate itself, again and again, improves a pattern a little further each time, hundreds of patterns at a few
+microseconds each. That is too coarse to end on a local optimum, but tells good regions from bad ones: climbing from
+the best few of many patterns so *polished* is worth far more than climbing from any one.
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .allowance import Allowance
+from .one_carrier import one_carrier_optimum
+from .realform import Real, RealForm, bits
+
+Complex = NDArray[np.complex128]
+
+
+@dataclass(slots=True, eq=False)
+class Batch:
+    """Patterns and what they are worth.
+
+    Parameters
+    ----------
+    states : ndarray of float64, shape (n, G)
+    sums : ndarray of float64, shape (n, L)
+        Direct path and lines added up, in real form.
+    values : ndarray of float64, shape (n,)
+        Σ_rk log2(1 + |H|²).
+    """
+
+    states: Real
+    sums: Real
+    values: Real
+
+    def __len__(self) -> int:
+        return len(self.values)
+
+    def pick(self, rows: NDArray[np.intp]) -> "Batch":
+        """Give some of the patterns."""
+        return Batch(self.states[rows], self.sums[rows], self.values[rows])
+
+    def best(self, most: int, overlap: float = 1.0) -> "Batch":
+        """Give the best patterns, at most so many, no two of which agree too much.
+
+        Parameters
+        ----------
+        most : int
+        overlap : float
+            A pattern whose correlation with a better one exceeds this is left out; with 1 only equals are.
+        """
+        order = np.argsort(-self.values, kind="stable")
+        if overlap >= 1.0:
+            # Different patterns practically never have the same value to the last bit or two.
+            values = self.values[order]
+            fresh = np.ones(order.size, dtype=bool)
+            fresh[1:] = values[:-1] - values[1:] > 1e-12 * values[:-1]
+            return self.pick(order[fresh][:most])
+        order = order[: 4 * most]
+        states = self.states[order]
+        alike = states @ states.T > overlap * states.shape[1]
+        kept: list[int] = []
+        shut = np.zeros(order.size, dtype=bool)
+        for row in range(order.size):
+            if not shut[row] and len(kept) < most:
+                kept.append(row)
+                shut |= alike[row]
+        return self.pick(order[kept])
+
+
+def together(batches: list[Batch]) -> Batch:
+    """Join batches."""
+    return Batch(
+        np.concatenate([batch.states for batch in batches]),
+        np.concatenate([batch.sums for batch in batches]),
+        np.concatenate([batch.values for batch in batches]),
+    )
+
+
+def assess(form: RealForm, states: Real) -> Batch:
+    """Work out what patterns, shape (n, G), are worth."""
+    sums = states @ form.surface
+    sums += form.direct
+    return Batch(states, sums, bits(form.load(form.heard(sums))))
+
+
+def align(form: RealForm, directions: Real, allowance: Allowance | None) -> Real:
+    """Give the patterns, shape (n, G), aligned with directions, shape (n, L)."""
+    wish = directions @ form.surface.T
+    if allowance is not None:
+        return allowance.nearest(wish)
+    return np.copysign(1.0, wish, out=wish)
+
+
+def polish(form: RealForm, batch: Batch, allowance: Allowance | None) -> Batch:
+    """Align every pattern with the slope of the rate at it; keep what is better."""
+    heard = form.heard(batch.sums)
+    slope = form.back(form.weigh(heard, 1.0 / form.load(heard)))
+    fresh = assess(form, align(form, slope, allowance))
+    better = fresh.values > batch.values
+    return Batch(
+        np.where(better[:, None], fresh.states, batch.states),
+        np.where(better[:, None], fresh.sums, batch.sums),
+        np.where(better, fresh.values, batch.values),
+    )
+
+
+def either_sign(form: RealForm, states: Real) -> Batch:
+    """Work out what patterns, shape (n, G), are worth, and take their negatives where these are better."""
+    sums = states @ form.surface
+    ahead = bits(form.load(form.heard(form.direct + sums)))
+    behind = bits(form.load(form.heard(form.direct - sums)))
+    sign = np.where(ahead >= behind, 1.0, -1.0)[:, None]
+    return Batch(sign * states, sign * sums + form.direct, np.maximum(ahead, behind))
+
+
+def spread_directions(form: RealForm, first: int, count: int) -> Real:
+    """Give directions spread evenly over all phases of the delays, each delay as strong as the surface makes it.
+
+    Parameters
+    ----------
+    form : RealForm
+    first, count : int
+        Members `first` to `first + count` of an endless sequence. Its phases i (aq + bq²), in turns with irrational a
+        and b, fill the torus evenly (Weyl), so no random source is needed.
+
+    Returns
+    -------
+    ndarray of float64, shape (count, L)
+    """
+    delay = np.arange(form.width // 2)
+    turn = (math.sqrt(2.0) * (delay + 1) + math.sqrt(3.0) * (delay + 1) ** 2) % 1.0
+    phase = 2.0 * np.pi * (np.arange(first + 1, first + count + 1)[:, None] * turn % 1.0)
+    strength = np.sqrt((form.surface * form.surface).sum(axis=0).reshape(-1, 2).sum(axis=1))
+    return np.ascontiguousarray(strength * np.exp(1j * phase)).view(np.float64)
