@@ -105,7 +105,7 @@ class Contents:
         self.alarms: Counter[str] = Counter()
         self.alarm_ns: dict[str, int] = {}
         self.patterns: Counter[bytes] = Counter()
-        self.with_commonest: Counter[bytes] = Counter()
+        self.bursts_with: Counter[bytes] = Counter()
         self._settings: Settings | None = None
         self._levels: dict[tuple[object, ...], Levels] = {}
         self._before: Burst | None = None
@@ -144,13 +144,13 @@ class Contents:
 
     @property
     def commonest(self) -> tuple[bytes, float, float] | None:
-        """The commonest pattern, packed, its share of the frames, and of the bursts that hold it; None if none recurs."""
+        """The commonest pattern, packed, its share of the frames and of the bursts; None when none recurs."""
         if not self.patterns:
             return None
         pattern, count = self.patterns.most_common(1)[0]
         if count < 2:
             return None
-        return pattern, count / self.frames, self.with_commonest[pattern] / self.bursts
+        return pattern, count / self.frames, self.bursts_with[pattern] / self.bursts
 
     @property
     def levels(self) -> list[Level]:
@@ -199,9 +199,9 @@ class Contents:
     def _count_patterns(self, patterns: NDArray[np.uint8]) -> None:
         found = Counter(row.tobytes() for row in patterns)
         self.patterns.update(found)
-        self.with_commonest.update(found.keys())
+        self.bursts_with.update(found.keys())
         if len(self.patterns) > MOST_PATTERNS:
-            for counter in (self.patterns, self.with_commonest):
+            for counter in (self.patterns, self.bursts_with):
                 kept = {pattern: counter[pattern] for pattern, count in self.patterns.most_common(MOST_PATTERNS // 4)}
                 counter.clear()
                 counter.update(kept)

@@ -96,14 +96,14 @@ class Levels:
             difference = response[pairs[:, 1]] - response[pairs[:, 0]]
             self._repeats += _power(difference).mean(axis=2).sum(axis=0) / 2.0
             self.repeated += len(pairs)
-        if response.shape[2] >= LEAST_TONES:
+        if self._basis is None and response.shape[2] >= LEAST_TONES:
             self._delays += _power(np.fft.ifft(response * self._window, norm="forward", axis=2)).sum(axis=0)
 
     @property
     def profile(self) -> Floats:
         """Mean power by delay, shape (R, K): bin i is the delay i/K of the inverse of the tone spacing.
 
-        Scaled so that noise alone gives its power on a tone in every bin.
+        Scaled so that noise alone gives its power on a tone in every bin. Zeros where a basis was given.
         """
         return self._delays / max(self.frames, 1)
 
