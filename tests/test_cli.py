@@ -31,7 +31,7 @@ ARGUMENTS = {
     "replay": ["LOG", "--settings", "--out", "--json", "--quiet"],
     "check": ["SETTINGS"],
     "watch": ["SETTINGS", "--publish", "--link", "--plain", "--seconds"],
-    "inspect": ["LOG"],
+    "inspect": ["LOG", "--json", "--quiet"],
     "suggest": ["LOG"],
 }
 

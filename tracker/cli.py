@@ -100,8 +100,7 @@ examples:
         "--settings", metavar="SETTINGS", type=Path, help="use these settings (default: those recorded in the log)"
     )
     replay.add_argument("--out", metavar="OUT.mcap", type=Path, help="write what would have been published, as a log")
-    replay.add_argument("--json", metavar="SUMMARY.json", type=Path, help="write the summary as JSON")
-    replay.add_argument("--quiet", action="store_true", help="show no progress")
+    _told(replay)
 
     check = command(
         "check",
@@ -136,6 +135,7 @@ examples:
         "  ris-tracker inspect journal/*.mcap",
     )
     _logs(inspect)
+    _told(inspect)
 
     suggest = command(
         "suggest",
@@ -154,6 +154,11 @@ def _settings(parser: argparse.ArgumentParser) -> None:
 
 def _logs(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("logs", metavar="LOG", type=_existing, nargs="+", help="logs in the order of recording")
+
+
+def _told(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("--json", metavar="SUMMARY.json", type=Path, help="write the summary as JSON too")
+    parser.add_argument("--quiet", action="store_true", help="show no progress")
 
 
 def _existing(text: str) -> Path:
@@ -215,7 +220,7 @@ def _watch(asked: argparse.Namespace) -> int:
 def _inspect(asked: argparse.Namespace) -> int:
     from tracker.offline.inspect import inspect
 
-    return inspect(asked.logs)
+    return inspect(asked.logs, asked.json, not asked.quiet)
 
 
 def _suggest(asked: argparse.Namespace) -> int:

@@ -112,7 +112,7 @@ def test_the_screen_shows_the_numbers_that_were_published() -> None:
         "measured 5.21",
         "predicted 5.43",
         "in force 5.20",
-        "best possible 5.50",
+        "━ best 5.50",
         f"{100 * 5.2 / 5.5:.1f} % of the best possible",
         "1.31",  # the worst innovation
         "2.25 of 9.00",

@@ -15,7 +15,6 @@ from tracker.view.trace import History
 
 REMEMBERED_PATTERNS = 256
 REMEMBERED_NOTES = 100
-LATENCY_SPAN_S = 60.0
 
 
 def clean(text: str) -> str:
@@ -36,7 +35,7 @@ class Truth:
     best : float
         Best rate found with the channel known exactly, bit/s/Hz.
     event : str or None
-        What the testbed just did to the channel.
+        What happens to the channel now.
     """
 
     pattern: int | None
@@ -78,9 +77,12 @@ class LinkModel:
     Parameters
     ----------
     link : str
+    latency_span_s : float
+        How far back latencies are kept.
     """
 
     link: str
+    latency_span_s: float = 60.0
     heard_at: float | None = None
     state: events.State | None = None
     stages_us: dict[str, int] = field(default_factory=dict)
@@ -149,6 +151,8 @@ class LinkModel:
 
     def take_truth(self, truth: Truth, now: float) -> None:
         """Take in what the stand-in testbed knows."""
+        if truth.event and (self.truth is None or truth.event != self.truth.event):
+            self.note(now, "testbed", truth.event)
         self.heard_at = now
         self.truth = truth
         self.exact.add(now, truth.rate)
@@ -156,8 +160,6 @@ class LinkModel:
         if math.isfinite(truth.rate) and math.isfinite(truth.best):
             self.achieved_sum += truth.rate
             self.best_sum += truth.best
-        if truth.event:
-            self.note(now, "testbed", truth.event)
 
     def take_unreadable(self, why: str, now: float) -> None:
         """Count a message that could not be read, and say so the first time."""
@@ -197,7 +199,7 @@ class LinkModel:
         return self.achieved_sum / self.best_sum if self.best_sum > 0 else None
 
     def latency_ms(self, now: float) -> tuple[float, float] | None:
-        """Median and 99th percentile of burst-to-pattern latency over the last minute, ms."""
+        """Median and 99th percentile of burst-to-pattern latency over `latency_span_s`, ms."""
         self._forget(now)
         if not self._latencies:
             return None
@@ -205,5 +207,5 @@ class LinkModel:
         return float(np.median(values)), float(np.percentile(values, 99))
 
     def _forget(self, now: float) -> None:
-        while self._latencies and self._latencies[0][0] < now - LATENCY_SPAN_S:
+        while self._latencies and self._latencies[0][0] < now - self.latency_span_s:
             self._latencies.popleft()
