@@ -1,0 +1,259 @@
+"""Plays a testbed in real time: bursts out, patterns in, like the controller of a real one."""
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+from types import TracebackType
+from typing import Any
+
+import msgpack
+import zmq
+
+from tracker.messages import Refused, decode_pattern, encode_pilots, topic
+from tracker.simulation.searcher import Searcher
+from tracker.simulation.testbed import Report, Testbed
+
+MOST_BURST = 512 * 1024
+"""Bytes of a burst; larger messages cost several times more a byte."""
+QUEUED = 2000
+"""Bursts that may wait for a slow listener."""
+LINGER_MS = 500
+SAY_EVERY_S = 5.0
+"""Least time between two complaints about pace."""
+LONGEST_POLL_S = 0.1
+"""So long a stop may go unnoticed."""
+
+
+class PlayerError(Exception):
+    """Cannot play; the message is one line for the user."""
+
+
+class Endpoints:
+    """The controller's two sockets; use as a context manager.
+
+    Parameters
+    ----------
+    pilots : str
+        Where to bind for bursts and truth.
+    publish : str
+        The tracker's endpoint, to connect to for patterns; it need not be there yet.
+    link : str
+
+    Raises
+    ------
+    PlayerError
+        When an endpoint cannot be used.
+    """
+
+    def __init__(self, pilots: str, publish: str, link: str) -> None:
+        self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
+        self.out = self._context.socket(zmq.PUB)
+        self.out.setsockopt(zmq.SNDHWM, QUEUED)
+        self.patterns = self._context.socket(zmq.SUB)
+        self.pattern_topic = topic("pattern", link)
+        self.patterns.setsockopt(zmq.SUBSCRIBE, self.pattern_topic)
+        for action, option, endpoint in (
+            (self.out.bind, "--pilots", pilots),
+            (self.patterns.connect, "--publish", publish),
+        ):
+            try:
+                action(endpoint)
+            except zmq.ZMQError as error:
+                self.close()
+                hint = "is another testbed playing there?" if error.errno == zmq.EADDRINUSE else "check the endpoint"
+                raise PlayerError(f"{option}: {endpoint} cannot be used: {error.strerror}; {hint}") from None
+
+    def close(self) -> None:
+        """Close both, giving what was sent a moment to leave."""
+        self._context.destroy(linger=LINGER_MS)
+
+    def __enter__(self) -> "Endpoints":
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
+
+
+@dataclass(slots=True)
+class Played:
+    """What was played so far.
+
+    Parameters
+    ----------
+    bursts, patterns, truths : int
+        Sent, applied, sent.
+    refused : int
+        Patterns that could not be used.
+    late : int
+        Bursts that began later than the pace asked for.
+    """
+
+    bursts: int = 0
+    patterns: int = 0
+    truths: int = 0
+    refused: int = 0
+    late: int = 0
+
+
+class Player:
+    """Sends bursts at a pace and applies the patterns that come back.
+
+    Frames carry the times at which they would have been on the air. When the machine is too slow for the pace, bursts
+    begin later and say so in their times; it never sends old times.
+
+    Parameters
+    ----------
+    testbed : Testbed
+    endpoints : Endpoints
+    link : str
+    bursts_per_s : float
+    now_ns : callable
+        Returns the time, ns since the Unix epoch; steady.
+    say : callable
+        Takes a line for the user.
+    searcher : Searcher or None
+        Finds the best rate for `truth`; without it none is sent.
+    truth_every_s : float
+    """
+
+    def __init__(
+        self,
+        testbed: Testbed,
+        endpoints: Endpoints,
+        link: str,
+        bursts_per_s: float,
+        now_ns: Callable[[], int],
+        say: Callable[[str], None],
+        searcher: Searcher | None = None,
+        truth_every_s: float = 0.25,
+    ) -> None:
+        self._testbed, self._endpoints, self._link = testbed, endpoints, link
+        self._now_ns, self._say = now_ns, say
+        self._searcher, self._truth_every_ns = searcher, round(truth_every_s * 1e9)
+        self._period_ns = max(round(1e9 / bursts_per_s), testbed.burst_ns)
+        self._pilots_topic, self._truth_topic = topic("pilots", link), topic("truth", link)
+        self._stopping = False
+        self._truth_due_ns = 0
+        self._last: tuple[int, int] | None = None
+        self._complained_ns = -round(SAY_EVERY_S * 1e9)
+        self._late_before = 0
+        self.played = Played()
+
+    def stop(self) -> None:
+        """End after the burst under way; may be called from a signal handler."""
+        self._stopping = True
+
+    def run(self, most_bursts: int | None = None, until_ns: int | None = None) -> None:
+        """Play until stopped, or so many bursts, or until a time.
+
+        Raises
+        ------
+        PlayerError
+            When bursts are too large to send.
+        """
+        due_ns = self._now_ns()
+        while not self._stopping:
+            if most_bursts is not None and self.played.bursts >= most_bursts:
+                return
+            if until_ns is not None and due_ns >= until_ns:
+                return
+            self._wait(due_ns)
+            if self._stopping:
+                return
+            self._burst(due_ns)
+            self._truth()
+            due_ns += self._period_ns
+            now_ns = self._now_ns()
+            if now_ns > due_ns:
+                self.played.late += 1
+                due_ns = now_ns
+                self._complain(now_ns)
+
+    def _burst(self, t_ns: int) -> None:
+        burst = self._testbed.next_burst(t_ns)
+        body = encode_pilots(self._link, burst)
+        if len(body) > MOST_BURST:
+            raise PlayerError(f"a burst has {len(body)} bytes, at most {MOST_BURST} travel well; use fewer --frames")
+        # The last frame has to be on the air before the burst can be complete.
+        self._wait(t_ns + self._testbed.burst_ns)
+        self._endpoints.out.send_multipart([self._pilots_topic, body])
+        self.played.bursts += 1
+        self._last = (burst.run, burst.seq)
+
+    def _wait(self, until_ns: int) -> None:
+        """Take in patterns until a time; at least those that are there already."""
+        while True:
+            left_s = (until_ns - self._now_ns()) / 1e9
+            # Poll waits whole milliseconds; the last one is slept away.
+            wait_ms = int(min(max(left_s, 0.0), LONGEST_POLL_S) * 1e3)
+            while self._endpoints.patterns.poll(wait_ms):
+                self._pattern(self._endpoints.patterns.recv_multipart())
+                wait_ms = 0
+            if self._stopping or left_s <= 0:
+                return
+            if left_s < 1e-3:
+                time.sleep(max((until_ns - self._now_ns()) / 1e9, 0.0))
+                return
+
+    def _pattern(self, parts: list[bytes]) -> None:
+        if len(parts) != 2 or parts[0] != self._endpoints.pattern_topic:
+            return
+        try:
+            event = decode_pattern(parts[1]).event
+            self._testbed.apply(event.id, event.states)
+        except (Refused, ValueError) as error:
+            if not self.played.refused:
+                self._say(f"a pattern cannot be used and the one in force stays: {error}")
+            self.played.refused += 1
+            return
+        self.played.patterns += 1
+
+    def _truth(self) -> None:
+        searcher = self._searcher
+        if searcher is None:
+            return
+        try:
+            answer = searcher.answer()
+            if answer is not None:
+                self._send_truth(*answer)
+            now_ns = self._now_ns()
+            if now_ns >= self._truth_due_ns and not searcher.busy:
+                self._truth_due_ns = now_ns + self._truth_every_ns
+                searcher.ask(self._testbed.report(now_ns))
+        except (EOFError, OSError):
+            self._searcher = None
+            self._say("the search for the best rate ended by itself; bursts go on, what is true is no longer sent")
+
+    def _send_truth(self, report: Report, best: float) -> None:
+        run, seq = self._last or (0, 0)
+        values: dict[str, Any] = {
+            "v": 1,
+            "link": self._link,
+            "run": run,
+            "seq": seq,
+            "t_ns": report.t_ns,
+            "pattern": report.pattern_id,
+            "rate": report.rate,
+            # A search cut short may miss what the pattern in force already has.
+            "best": max(best, report.rate),
+            "event": report.happening,
+        }
+        self._endpoints.out.send_multipart([self._truth_topic, msgpack.packb(values)])
+        self.played.truths += 1
+
+    def _complain(self, now_ns: int) -> None:
+        since_s = (now_ns - self._complained_ns) / 1e9
+        if since_s < SAY_EVERY_S or self.played.late - self._late_before < 3:
+            return
+        late, self._late_before = self.played.late - self._late_before, self.played.late
+        self._complained_ns = now_ns
+        pace = 1e9 / self._period_ns
+        self._say(f"{late} bursts began late: this machine does not keep {pace:.0f} bursts/s here; times stay true")
+
+
+def steady_clock() -> Callable[[], int]:
+    """Make a clock that starts at the time of day and then never jumps."""
+    offset_ns = time.time_ns() - time.monotonic_ns()
+    return lambda: time.monotonic_ns() + offset_ns
