@@ -46,6 +46,40 @@ class Allowance:
         """Count what turning each line takes from what is left; negative where it gives back."""
         return np.where(states == self.base, self._weight, -self._weight)
 
+    def queue(self, states: Real, slope: Real, most: int) -> NDArray[np.intp]:
+        """Give the lines worth turning first, so that turning the first few, however many, stays within the allowance.
+
+        Parameters
+        ----------
+        states : ndarray of float64, shape (G,)
+        slope : ndarray of float64, shape (G,)
+            What turning each line promises.
+        most : int
+            How many lines to give.
+
+        Returns
+        -------
+        ndarray of intp
+            Lines in falling order of slope, except that where nothing is left, lines turned before turn back first.
+        """
+        left, cost = self.left(states), self.cost(states)
+        ranked = np.argsort(-slope, kind="stable")
+        turning = list(ranked[cost[ranked] > 0][:most])
+        returning = list(ranked[cost[ranked] <= 0][:most])
+        queue: list[np.intp] = []
+        while len(queue) < most and (turning or returning):
+            fits = bool(turning) and cost[turning[0]] <= left
+            if fits and (not returning or slope[turning[0]] >= slope[returning[0]]):
+                line = turning.pop(0)
+            elif returning:
+                line = returning.pop(0)
+            else:
+                turning.pop(0)  # neither fits nor can room be made
+                continue
+            left -= int(cost[line])
+            queue.append(line)
+        return np.array(queue, dtype=np.intp)
+
     def nearest(self, wish: Real) -> Real:
         """Turn the lines that matter most, as many as may be turned.
 

@@ -26,6 +26,8 @@ ROUNDING = 1e-12
 
 Indices = NDArray[np.intp]
 
+_PAIRS: tuple[Indices, Indices] = np.triu_indices(PAIRED, 1)
+
 
 class Ascent:
     """A pattern that is being improved, with all that is known about its surroundings.
@@ -99,6 +101,8 @@ class Ascent:
         groups = np.cumsum(np.add.reduceat(turns, [0, *sizes], axis=0), axis=0)
         moves = np.concatenate([turns[:SINGLES], groups[1:]])
         values = self._values(moves)
+        if self._allowance is not None:
+            values[: self._tried.size][~self._fits(self._tried)] = -np.inf
         best = int(values.argmax())
         if best < self._tried.size:
             return self._take(order[best : best + 1], moves[best], float(values[best]))
@@ -109,6 +113,8 @@ class Ascent:
         """Give the lines in falling order of slope: all that promise a gain, or as many as are tried singly."""
         slope, lines = self._slope, self._form.lines
         hopeful = int(np.count_nonzero(self._bound > 0.0))
+        if self._allowance is not None:
+            return self._allowance.queue(self.states, slope, min(2 * SINGLES, 2 * hopeful))
         count = min(hopeful, max(SINGLES, int(np.count_nonzero(slope > 0.0))))
         some = np.argpartition(slope, lines - count)[lines - count :] if 0 < count < lines else np.arange(count)
         return np.asarray(some[np.argsort(-slope[some])])
@@ -118,6 +124,8 @@ class Ascent:
         bound = self._bound
         bound[self._tried] = -np.inf
         rest = np.flatnonzero(bound > 0.0)
+        if self._allowance is not None:
+            rest = rest[self._fits(rest)]
         rest = rest[np.argsort(-bound[rest])]
         for first in range(0, rest.size, self._block):
             if not meter.step():
@@ -132,25 +140,53 @@ class Ascent:
 
     def _flip_pair(self) -> bool:
         """Try pairs of the lines that lose least singly."""
-        form, lines = self._form, self._form.lines
-        bound = self._slope + self._weight.max() * form.energy
-        count = min(PAIRED, lines)
-        some = np.argpartition(bound, lines - count)[lines - count :] if count < lines else np.arange(lines)
+        form = self._form
+        some = self._least_losing()
+        count = some.size
+        if count < 2:
+            return False
         turns = self._turns(some)
         heard = form.heard(turns)
         # gain ≤ Σ w (2 Re(conj(H) Δ) + |Δ|²) with Δ the sum of both turns
         cross = form.weigh(heard, self._weight).reshape(count, -1) @ heard.reshape(count, -1).T
         alone = 4.0 * self._slope[some] + cross.diagonal()
-        bounds = np.triu(2.0 * cross + alone[:, None] + alone, 1).reshape(-1)
+        left, right = _PAIRS
+        if count < PAIRED:
+            left, right = np.triu_indices(count, 1)
+        bounds = 2.0 * cross[left, right]
+        bounds += alone[left]
+        bounds += alone[right]
         hopeful = np.flatnonzero(bounds > 0.0)
+        if self._allowance is not None:
+            hopeful = hopeful[self._fits(some[left[hopeful]], some[right[hopeful]])]
         if hopeful.size == 0:
             return False
         hopeful = hopeful[np.argsort(-bounds[hopeful])[: self._block]]
-        left, right = np.divmod(hopeful, count)
+        left, right = left[hopeful], right[hopeful]
         moves = turns[left] + turns[right]
         values = self._values(moves)
         best = int(values.argmax())
         return self._take(some[[left[best], right[best]]], moves[best], float(values[best]))
+
+    def _least_losing(self) -> Indices:
+        """Give the lines whose pairs are looked at: those with the largest bound."""
+        bound = self._slope + self._weight.max() * self._form.energy
+        count = min(PAIRED, bound.size)
+        if self._allowance is None:
+            return np.argpartition(bound, bound.size - count)[bound.size - count :]
+        # Where nothing is left to change, a pair has to turn one line away and another back: take some of both.
+        order = np.argsort(-bound)
+        away = self._allowance.cost(self.states)[order] > 0
+        some = np.zeros(bound.size, dtype=bool)
+        for kind in (away, ~away):
+            some[np.flatnonzero(kind)[: PAIRED // 2]] = True
+        return order[some]
+
+    def _fits(self, *together: Indices) -> NDArray[np.bool_]:
+        """Tell which lines, or lines of several arrays together, may be turned within the allowance."""
+        assert self._allowance is not None
+        cost = self._allowance.cost(self.states)
+        return np.asarray(sum(cost[lines] for lines in together) <= self._allowance.left(self.states))
 
     def _turns(self, lines: Indices) -> Real:
         """Give what turning each line adds to the sums, shape (n, L)."""

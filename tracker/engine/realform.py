@@ -72,12 +72,12 @@ class RealForm:
     def heard(self, sums: Real) -> Real:
         """Respond on the tones: coefficients (…, L) to responses (…, R, 2K), real parts first."""
         rows = np.matmul(sums.reshape(-1, 2 * self.delays), self._to_tones)
-        return rows.reshape(*sums.shape[:-1], self.receivers, 2 * self.tones)
+        return np.asarray(rows.reshape(*sums.shape[:-1], self.receivers, 2 * self.tones))
 
     def back(self, heard: Real) -> Real:
         """Apply the transpose of `heard`: (…, R, 2K) to (…, L)."""
         rows = heard.reshape(-1, 2 * self.tones) @ self._from_tones
-        return rows.reshape(*heard.shape[:-2], self.width)
+        return np.asarray(rows.reshape(*heard.shape[:-2], self.width))
 
     def load(self, heard: Real) -> Real:
         """Give 1 + |H|², shape (…, R, K)."""

@@ -14,7 +14,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .allowance import Allowance
-from .one_carrier import one_carrier_optimum
 from .realform import Real, RealForm, bits
 
 Complex = NDArray[np.complex128]
@@ -96,11 +95,15 @@ def align(form: RealForm, directions: Real, allowance: Allowance | None) -> Real
     return np.copysign(1.0, wish, out=wish)
 
 
+def rate_slope(form: RealForm, batch: Batch) -> Real:
+    """Give the direction, shape (n, L), in which the rate of each pattern grows fastest."""
+    heard = form.heard(batch.sums)
+    return form.back(form.weigh(heard, 1.0 / form.load(heard)))
+
+
 def polish(form: RealForm, batch: Batch, allowance: Allowance | None) -> Batch:
     """Align every pattern with the slope of the rate at it; keep what is better."""
-    heard = form.heard(batch.sums)
-    slope = form.back(form.weigh(heard, 1.0 / form.load(heard)))
-    fresh = assess(form, align(form, slope, allowance))
+    fresh = assess(form, align(form, rate_slope(form, batch), allowance))
     better = fresh.values > batch.values
     return Batch(
         np.where(better[:, None], fresh.states, batch.states),
@@ -137,3 +140,30 @@ def spread_directions(form: RealForm, first: int, count: int) -> Real:
     phase = 2.0 * np.pi * (np.arange(first + 1, first + count + 1)[:, None] * turn % 1.0)
     strength = np.sqrt((form.surface * form.surface).sum(axis=0).reshape(-1, 2).sum(axis=1))
     return np.ascontiguousarray(strength * np.exp(1j * phase)).view(np.float64)
+
+
+def tone_directions(form: RealForm, count: int, phases: int) -> Real:
+    """Give directions that serve one tone at one receiver, taken in turns across the band, over a grid of phases.
+
+    Parameters
+    ----------
+    form : RealForm
+    count : int
+        Tones, shared among the receivers.
+    phases : int
+        Phases over half a turn; negating a pattern gives the other half.
+
+    Returns
+    -------
+    ndarray of float64, shape (at most count · phases, L)
+    """
+    count = min(count, form.tones * form.receivers)
+    receiver = np.arange(count) % form.receivers
+    tone = (2 * np.arange(count) + 1) * form.tones // (2 * count)
+    at = np.zeros((count, form.receivers, 2 * form.tones))
+    directions = []
+    for phase in np.pi * np.arange(phases) / phases:
+        at[np.arange(count), receiver, tone] = math.cos(phase)
+        at[np.arange(count), receiver, tone + form.tones] = math.sin(phase)
+        directions.append(form.back(at))
+    return np.concatenate(directions)
