@@ -98,4 +98,4 @@ class Allowance:
         spent = np.cumsum(self._weight[order], axis=1)
         turned = np.empty(wish.shape, dtype=bool)
         np.put_along_axis(turned, order, spent <= self._most, axis=1)
-        return np.where(turned & (gain > 0.0), -self.base, self.base)
+        return np.where(turned & (gain > 0.0), -self.base, self.base).astype(wish.dtype)

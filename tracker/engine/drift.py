@@ -8,12 +8,16 @@ against a baseline of its own that adapts slowly and with bounded steps, so that
 import math
 from typing import Any
 
+import numpy as np
+
 from .cusum import Change, Cusum
 from .run_length import threshold_for
 
-# Samples from which the first baseline is taken, before the test starts.
-WARM_UP = 32
-# Samples over which the baseline adapts afterwards.
+# Samples of a first baseline; it holds when its two halves agree, which they do not while the estimate still forms.
+WARM_UP = 64
+# Difference of the halves' means that still counts as agreement, in standard errors.
+AGREEMENT = 2.0
+# Samples over which the baseline adapts in the long run; at first it adapts over as many as it has seen.
 MEMORY = 1024
 # A sample moves the baseline by no more than this many standard deviations' worth.
 BOUND = 3.0
@@ -38,6 +42,7 @@ class DriftMonitor:
         self._count = 0
         self._mean = 0.0
         self._square = 0.0
+        self._first: list[float] = []
         self._elapsed_s = 0.0
         self._cusum: Cusum | None = None
 
@@ -72,19 +77,30 @@ class DriftMonitor:
         standard = (sample - self._mean) / spread
         change = self._cusum.update(standard)
         bounded = min(max(standard, -BOUND), BOUND) * spread
-        self._mean += bounded / MEMORY
-        self._square += (bounded * bounded - self._square) / MEMORY
+        self._count += 1
+        gain = 1.0 / min(self._count, MEMORY)
+        self._mean += bounded * gain
+        self._square += (bounded * bounded - self._square) * gain
         return change
 
     def _warm_up(self, sample: float, elapsed_s: float) -> None:
-        self._count += 1
+        """Gather a first baseline, over a sliding window until it is steady."""
+        self._first.append(sample)
         self._elapsed_s += elapsed_s
-        before = self._mean
-        self._mean += (sample - before) / self._count
-        self._square += ((sample - before) * (sample - self._mean) - self._square) / self._count
-        if self._count == WARM_UP:
-            period_s = max(self._elapsed_s / WARM_UP, 1e-9)
-            self._cusum = Cusum(threshold_for(max(self._false_alarm_s / period_s, 2.0), SLACK), SLACK)
+        self._count += 1
+        if len(self._first) < WARM_UP:
+            return
+        first = np.array(self._first)
+        halves = first.reshape(2, -1).mean(axis=1)
+        self._mean, self._square = float(first.mean()), float(first.var())
+        error = math.sqrt(max(self._square, 1.0) * 2 / (WARM_UP / 2))
+        if abs(halves[1] - halves[0]) > AGREEMENT * error:
+            del self._first[: WARM_UP // 2]
+            return
+        period_s = max(self._elapsed_s / self._count, 1e-9)
+        self._cusum = Cusum(threshold_for(max(self._false_alarm_s / period_s, 2.0), SLACK), SLACK)
+        self._first = []
+        self._count = WARM_UP
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -92,6 +108,7 @@ class DriftMonitor:
             "count": self._count,
             "mean": self._mean,
             "square": self._square,
+            "first": list(self._first),
             "elapsed_s": self._elapsed_s,
             "cusum": self._cusum.snapshot() if self._cusum else None,
         }
@@ -100,6 +117,7 @@ class DriftMonitor:
         """Take over a snapshot."""
         self._count = int(snapshot["count"])
         self._mean, self._square = float(snapshot["mean"]), float(snapshot["square"])
+        self._first = [float(sample) for sample in snapshot["first"]]
         self._elapsed_s = float(snapshot["elapsed_s"])
         self._cusum = None
         if snapshot["cusum"] is not None:

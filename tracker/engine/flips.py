@@ -114,6 +114,7 @@ class _Search:
 
     def __init__(self, form: RealForm, allowance: Allowance | None, meter: Meter) -> None:
         self._form = form
+        self._rough = form.single()
         self._reach = allowance if allowance is not None and allowance.limited else None
         self.meter = meter
         self.states: Real = np.empty(0)
@@ -121,7 +122,7 @@ class _Search:
         self._drawn = 0
         self._batch = max(8, min(64, WORK // (form.width * (form.lines + form.tones))))
         if allowance is not None:
-            self._offer(assess(form, allowance.base[None]))
+            self._offer(allowance.base)
 
     def run(self, *, thorough: bool) -> None:
         """Search until nothing more is found or the budget is spent."""
@@ -141,12 +142,12 @@ class _Search:
         if self._may_go_on():
             direct, elements = self._form.direct.view(np.complex128), self._form.surface.view(np.complex128)
             states, _ = one_carrier_optimum(complex(direct[0]), elements[:, 0])
-            self._offer(assess(self._form, states[None].astype(np.float64)))
+            self._offer(states.astype(np.float64))
 
     def _survey(self) -> None:
         """Climb from the best of many patterns."""
-        directions = np.concatenate([tone_directions(self._form, TONES, PHASES), self._draw(SPREAD)])
-        found = [] if self._value == -np.inf else [assess(self._form, self.states[None])]
+        directions = np.concatenate([tone_directions(self._rough, TONES, PHASES), self._draw(SPREAD)])
+        found = [] if self._value == -np.inf else [self._best()]
         for first in range(0, len(directions), self._batch):
             batch = self._begin(directions[first : first + self._batch])
             if batch is None:
@@ -158,11 +159,11 @@ class _Search:
 
     def _waves(self) -> None:
         """Climb from patterns scattered about the best, as long as that helps."""
-        form = self._form
+        form = self._rough
         idle = 0
         while idle < PATIENCE and self.meter.step():
             before = self._value
-            slope = rate_slope(form, assess(form, self.states[None]))
+            slope = rate_slope(form, self._best())
             scattered = _unit(slope) + SCATTER * _unit(self._draw(WAVE))
             wave = self._polished(assess(form, align(form, scattered, self._reach)), ROUNDS)
             self._climb(wave.states[wave.values.argmax()], pairs=False)
@@ -172,20 +173,20 @@ class _Search:
         """Work out the patterns aligned with directions; None when the budget is spent."""
         if not self._may_go_on():
             return None
-        form = self._form
+        form = self._rough
         if self._reach is None:
             batch = either_sign(form, align(form, directions, None))
         else:
             batch = assess(form, align(form, np.concatenate([directions, -directions]), self._reach))
-        self._offer(batch)
+        self._offer(batch.states[batch.values.argmax()])
         return batch
 
     def _polished(self, batch: Batch, rounds: int) -> Batch:
         for _ in range(rounds):
             if not self.meter.step():
                 break
-            batch = polish(self._form, batch, self._reach)
-            self._offer(batch)
+            batch = polish(self._rough, batch, self._reach)
+            self._offer(batch.states[batch.values.argmax()])
         return batch
 
     def _climb(self, states: Real, *, pairs: bool) -> None:
@@ -201,11 +202,14 @@ class _Search:
     def _draw(self, count: int) -> Real:
         """Give directions not used before."""
         self._drawn += count
-        return spread_directions(self._form, self._drawn - count, count)
+        return spread_directions(self._rough, self._drawn - count, count)
 
-    def _offer(self, batch: Batch) -> None:
-        row = int(batch.values.argmax())
-        self._keep(batch.states[row], float(batch.values[row]))
+    def _best(self) -> Batch:
+        return assess(self._rough, self.states[None].astype(np.float32))
+
+    def _offer(self, states: Real) -> None:
+        exact = assess(self._form, states[None].astype(np.float64))
+        self._keep(exact.states[0], float(exact.values[0]))
 
     def _keep(self, states: Real, value: float) -> None:
         if self._value == -np.inf or value > self._value * (1.0 + ROUNDING):

@@ -6,22 +6,24 @@ some BLAS kernels treat the ends of misaligned vectors apart and then round diff
 same bits wherever its memory happens to lie.
 """
 
+import copy
 import math
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-Real = NDArray[np.float64]
+Real = NDArray[np.floating[Any]]
 
-_ALIGNMENT = 8  # float64 values, 64 bytes
+_ALIGNMENT = 64
 
 
-def aligned(*shape: int) -> Real:
-    """Allocate a float64 array, not initialised, that starts at a multiple of 64 bytes."""
-    size = math.prod(shape)
-    memory = np.empty(size + _ALIGNMENT)
-    first = -(memory.ctypes.data // memory.itemsize) % _ALIGNMENT
-    return memory[first : first + size].reshape(shape)
+def aligned(*shape: int, precision: type[np.floating[Any]] = np.float64) -> Real:
+    """Allocate an array, not initialised, that starts at a multiple of 64 bytes."""
+    size = math.prod(shape) * np.dtype(precision).itemsize
+    memory = np.empty(size + _ALIGNMENT, dtype=np.uint8)
+    first = -memory.ctypes.data % _ALIGNMENT
+    return memory[first : first + size].view(precision).reshape(shape)
 
 
 class RealForm:
@@ -40,10 +42,10 @@ class RealForm:
         G, R, K, Q.
     width : int
         L = 2RQ, real coefficients of a sum over lines.
-    direct : ndarray of float64, shape (L,)
+    direct : ndarray, shape (L,)
         Re and Im side by side.
-    surface : ndarray of float64, shape (G, L)
-    energy : ndarray of float64, shape (G,)
+    surface : ndarray, shape (G, L)
+    energy : ndarray, shape (G,)
         Σ_rk |basis · surface[g]|², equal to the squared norm of a row of `surface`, for the basis is orthonormal.
     """
 
@@ -68,6 +70,17 @@ class RealForm:
         self._to_tones[0::2, tones:] = basis.imag.T
         np.negative(basis.imag.T, out=self._to_tones[1::2, :tones])
         self._from_tones = self._to_tones.T
+
+    def single(self) -> "RealForm":
+        """Give the same in single precision: half the time, and exact enough to compare starts."""
+        form = copy.copy(self)
+        for name in ("surface", "direct", "energy", "_to_tones"):
+            whole = getattr(self, name)
+            half = aligned(*whole.shape, precision=np.float32)
+            half[...] = whole
+            setattr(form, name, half)
+        form._from_tones = form._to_tones.T
+        return form
 
     def heard(self, sums: Real) -> Real:
         """Respond on the tones: coefficients (…, L) to responses (…, R, 2K), real parts first."""

@@ -20,7 +20,7 @@ from .report import Stand
 # Published patterns kept, to know what the controller shows when it names an id.
 REMEMBERED = 256
 # A search from many starts costs more than a climb; after the first, it is made again once in so many refreshes.
-THOROUGH_EVERY = 64
+THOROUGH_EVERY = 256
 # One-sided 95 % point of the normal distribution.
 QUANTILE_95 = 1.6449
 

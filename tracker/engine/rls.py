@@ -37,6 +37,9 @@ from scipy.linalg import blas, lapack
 
 Complex = NDArray[np.complex128]
 
+# Below this factor nothing of P is left beside the prior, and dividing by it would lose digits.
+SMALLEST_FACTOR = 1e-12
+
 
 class BlockRls:
     """The estimator's state: coefficients C and covariance P.
@@ -84,8 +87,9 @@ class BlockRls:
 
     def predicted_variance(self, regressor: NDArray[Any]) -> float:
         """Variance of z C for one regressor z of shape (n,): z P zᴴ, in units of the noise."""
-        column = self._times_covariance(np.ascontiguousarray(regressor, dtype=self._dtype)[None, :])
-        return float((regressor @ column[:, 0]).real)
+        a, b = self._pending
+        column = self._times_covariance(a, np.ascontiguousarray(regressor, dtype=self._dtype)[None, :])[:, 0]
+        return float((regressor @ column).real + b * (self._prior * np.abs(regressor) ** 2).sum())
 
     def forget(self, a: float, b: float, decay: float = 1.0) -> None:
         """Set P to a P + b P₀, to be carried out with the next update, and C to `decay` C; see `forgetting`."""
@@ -112,15 +116,15 @@ class BlockRls:
             L⁻¹(Y − Z C): unit variance each when the model holds.
         """
         z = np.ascontiguousarray(regressors, dtype=self._dtype)
-        gain = self._times_covariance(z)  # P⁻Zᴴ, (n, B)
-        spread = z @ gain
-        spread.flat[:: spread.shape[0] + 1] += 1.0
-        whitener = self._whitener(spread)
+        a = self._carry_out_forgetting()
+        gain = self._times_covariance(a, z)  # P⁻Zᴴ, (n, B)
+        whitener = self._whitener(z, gain)
         gain = self._times_adjoint(gain, whitener)  # Xᴴ = P⁻Zᴴ L⁻ᴴ
         innovation = outputs - self._product(z, self.coefficients)
         white = self._product(whitener, innovation)
         self.coefficients += self._product(gain, white)
-        self._downdate(gain)
+        subtract = blas.zherk if self._complex else blas.dsyrk
+        self._covariance = subtract(-1.0, gain, beta=a, c=self._covariance, lower=1, overwrite_c=1)
         return innovation, white
 
     def rescale(self, coefficients: NDArray[np.float64], covariance: float) -> None:
@@ -150,20 +154,33 @@ class BlockRls:
         rls._pending = (float(snapshot["pending"][0]), float(snapshot["pending"][1]))
         return rls
 
-    def _times_covariance(self, z: NDArray[Any]) -> NDArray[Any]:
-        """Compute P⁻ Zᴴ, (n, B) in Fortran order."""
+    def _carry_out_forgetting(self) -> float:
+        """Put the diagonal part of P⁻ = a P + b P₀ in place; the factor a returned is left to the BLAS calls."""
         a, b = self._pending
-        multiply = blas.zhemm if self._complex else blas.dsymm
-        adjoint = z.conj().T if self._complex else z.T
-        if not b:
-            return np.asarray(multiply(a, self._covariance, adjoint, lower=1))
-        on_diagonal = (b * self._prior)[:, None] * adjoint
-        return np.asarray(multiply(a, self._covariance, adjoint, beta=1.0, c=on_diagonal, lower=1, overwrite_c=1))
+        self._pending = (1.0, 0.0)
+        if a < SMALLEST_FACTOR:
+            self._covariance[...] = 0.0
+            a = 1.0
+        if b:
+            self._covariance.ravel(order="K")[:: self.size + 1] += (b / a) * self._prior
+        return a
 
-    def _whitener(self, spread: NDArray[Any]) -> NDArray[Any]:
-        """Compute L⁻¹ of S = L Lᴴ; B is small, and multiplying by the inverse is faster than solving n times."""
+    def _times_covariance(self, a: float, z: NDArray[Any]) -> NDArray[Any]:
+        """Compute a P Zᴴ, (n, B) in Fortran order."""
+        multiply = blas.zhemm if self._complex else blas.dsymm
+        return np.asarray(multiply(a, self._covariance, z.conj().T if self._complex else z.T, lower=1))
+
+    def _whitener(self, z: NDArray[Any], gain: NDArray[Any]) -> NDArray[Any]:
+        """Compute L⁻¹ of S = I + Z P⁻ Zᴴ = L Lᴴ; multiplying by the inverse is faster than solving n times."""
+        frames = z.shape[0]
+        half = frames // 2
+        spread = np.zeros((frames, frames), dtype=self._dtype, order="F")
+        # S is symmetric and only its lower triangle is read: the upper right quarter is left out.
+        spread[half:] = z[half:] @ gain
+        spread[:half, :half] = z[:half] @ gain[:, :half]
+        spread.ravel(order="K")[:: frames + 1] += 1.0
         factor, invert = (lapack.zpotrf, lapack.ztrtri) if self._complex else (lapack.dpotrf, lapack.dtrtri)
-        lower, info = factor(spread, lower=1, clean=1)
+        lower, info = factor(spread, lower=1, clean=1, overwrite_a=1)
         if info:
             raise FloatingPointError(f"innovation covariance is not positive definite (pivot {info})")
         return np.asarray(invert(lower, lower=1, overwrite_c=1)[0])
@@ -171,15 +188,6 @@ class BlockRls:
     def _times_adjoint(self, gain: NDArray[Any], whitener: NDArray[Any]) -> NDArray[Any]:
         multiply, adjoint = (blas.ztrmm, 2) if self._complex else (blas.dtrmm, 1)
         return np.asarray(multiply(1.0, whitener, gain, side=1, lower=1, trans_a=adjoint, overwrite_b=1))
-
-    def _downdate(self, gain: NDArray[Any]) -> None:
-        """Set P to P⁻ − Xᴴ X on the lower triangle, in place."""
-        a, b = self._pending
-        self._pending = (1.0, 0.0)
-        subtract = blas.zherk if self._complex else blas.dsyrk
-        self._covariance = subtract(-1.0, gain, beta=a, c=self._covariance, lower=1, overwrite_c=1)
-        if b:
-            self._covariance.flat[:: self.size + 1] += b * self._prior
 
     def _product(self, left: NDArray[Any], right: Complex) -> Complex:
         """Multiply a matrix that may be real with a complex one, at real cost when it is."""

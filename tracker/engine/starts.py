@@ -25,10 +25,10 @@ class Batch:
 
     Parameters
     ----------
-    states : ndarray of float64, shape (n, G)
-    sums : ndarray of float64, shape (n, L)
+    states : ndarray, shape (n, G)
+    sums : ndarray, shape (n, L)
         Direct path and lines added up, in real form.
-    values : ndarray of float64, shape (n,)
+    values : ndarray, shape (n,)
         Σ_rk log2(1 + |H|²).
     """
 
@@ -54,10 +54,10 @@ class Batch:
         """
         order = np.argsort(-self.values, kind="stable")
         if overlap >= 1.0:
-            # Different patterns practically never have the same value to the last bit or two.
+            # Different patterns practically never have the same value to six digits.
             values = self.values[order]
             fresh = np.ones(order.size, dtype=bool)
-            fresh[1:] = values[:-1] - values[1:] > 1e-12 * values[:-1]
+            fresh[1:] = values[:-1] - values[1:] > 1e-6 * values[:-1]
             return self.pick(order[fresh][:most])
         order = order[: 4 * most]
         states = self.states[order]
@@ -113,12 +113,15 @@ def polish(form: RealForm, batch: Batch, allowance: Allowance | None) -> Batch:
 
 
 def either_sign(form: RealForm, states: Real) -> Batch:
-    """Work out what patterns, shape (n, G), are worth, and take their negatives where these are better."""
+    """Work out what patterns, shape (n, G), are worth, and take their negatives where these are better, in place."""
     sums = states @ form.surface
     ahead = bits(form.load(form.heard(form.direct + sums)))
     behind = bits(form.load(form.heard(form.direct - sums)))
-    sign = np.where(ahead >= behind, 1.0, -1.0)[:, None]
-    return Batch(sign * states, sign * sums + form.direct, np.maximum(ahead, behind))
+    sign = np.copysign(1.0, ahead - behind)[:, None]
+    states *= sign
+    sums *= sign
+    sums += form.direct
+    return Batch(states, sums, np.maximum(ahead, behind))
 
 
 def spread_directions(form: RealForm, first: int, count: int) -> Real:
@@ -133,13 +136,14 @@ def spread_directions(form: RealForm, first: int, count: int) -> Real:
 
     Returns
     -------
-    ndarray of float64, shape (count, L)
+    ndarray, shape (count, L)
     """
     delay = np.arange(form.width // 2)
     turn = (math.sqrt(2.0) * (delay + 1) + math.sqrt(3.0) * (delay + 1) ** 2) % 1.0
     phase = 2.0 * np.pi * (np.arange(first + 1, first + count + 1)[:, None] * turn % 1.0)
     strength = np.sqrt((form.surface * form.surface).sum(axis=0).reshape(-1, 2).sum(axis=1))
-    return np.ascontiguousarray(strength * np.exp(1j * phase)).view(np.float64)
+    spread = np.ascontiguousarray(strength * np.exp(1j * phase)).view(np.float64)
+    return spread.astype(form.surface.dtype)
 
 
 def tone_directions(form: RealForm, count: int, phases: int) -> Real:
@@ -160,7 +164,7 @@ def tone_directions(form: RealForm, count: int, phases: int) -> Real:
     count = min(count, form.tones * form.receivers)
     receiver = np.arange(count) % form.receivers
     tone = (2 * np.arange(count) + 1) * form.tones // (2 * count)
-    at = np.zeros((count, form.receivers, 2 * form.tones))
+    at = np.zeros((count, form.receivers, 2 * form.tones), dtype=form.surface.dtype)
     directions = []
     for phase in np.pi * np.arange(phases) / phases:
         at[np.arange(count), receiver, tone] = math.cos(phase)
