@@ -3,9 +3,13 @@
 import json
 import os
 import shutil
+import signal
+import socket
 import stat
 import subprocess
 import sys
+import threading
+import tomllib
 from pathlib import Path
 
 import pytest
@@ -121,3 +125,57 @@ def test_one_benchmark_can_be_run_alone(checkout: Path) -> None:
     wrong = bench(checkout, "--only", "three")
     assert wrong.returncode == 2
     assert "there are: one, two" in wrong.stderr
+
+
+def demo(checkout: Path, *arguments: str, path: Path = ROOT) -> subprocess.Popen[str]:
+    """Start the demo of a checkout that has room for its own journal."""
+    return subprocess.Popen(
+        [sys.executable, checkout / "tools" / "demo.py", "--plain", *arguments],
+        cwd=checkout.parent,
+        env={**os.environ, "PYTHONPATH": os.pathsep.join([str(path), str(ROOT)])},
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+    )
+
+
+def test_the_demo_runs_service_and_testbed_and_leaves_nothing_running(checkout: Path) -> None:
+    """Patterns reach the testbed over real sockets; on SIGTERM both processes end, and a summary and the log remain."""
+    process = demo(checkout, "--seconds", "120")
+    assert process.stdout is not None
+    watchdog = threading.Timer(60.0, process.terminate)
+    watchdog.start()
+    try:
+        line = next(line for line in process.stdout if "achieved" in line and "patterns 0," not in line)
+        process.send_signal(signal.SIGTERM)
+        out, err = process.communicate(timeout=60)
+    finally:
+        watchdog.cancel()
+        process.terminate()
+    assert ", tracking, " in line or ", acquiring, " in line
+    assert (process.returncode, err) == (0, "")
+    assert "% of the best possible" in out
+    settings = tomllib.loads((checkout / "demo-journal" / "yard.toml").read_text(encoding="utf-8"))
+    for endpoint in settings["sockets"].values():
+        with socket.socket() as free:
+            free.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+            free.bind(("127.0.0.1", int(endpoint.rpartition(":")[2])))
+    (log,) = (checkout / "demo-journal").glob("**/*.mcap")
+    assert log.read_bytes()[:8] == b"\x89MCAP0\r\n"  # magic bytes of the open MCAP specification
+
+
+def test_the_demo_says_which_part_failed(checkout: Path) -> None:
+    """A service that ends by itself: status 1, one line that names it and its status, and the last it said."""
+    hook = checkout / "hook"
+    hook.mkdir()
+    (hook / "sitecustomize.py").write_text(
+        "import os, sys\nif 'serve' in sys.orig_argv:\n    os.write(2, b'out of order\\n')\n    os._exit(3)\n"
+    )
+    process = demo(checkout, "--seconds", "60", path=hook)
+    try:
+        _, err = process.communicate(timeout=60)
+    finally:
+        process.terminate()
+    assert process.returncode == 1
+    assert "the service ended by itself with status 3" in err
+    assert err.splitlines()[-1].strip() == "out of order"

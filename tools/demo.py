@@ -188,7 +188,7 @@ def arguments() -> argparse.Namespace:
     parser.add_argument("--plain", action="store_true", help="one line a second instead of a screen")
     parser.add_argument("--seconds", metavar="S", type=float, default=60.0, help="how long (default: 60)")
     parser.add_argument(
-        "--scene", metavar="NAME", choices=known, default="blocked", help="what happens (default: blocked)"
+        "--scene", metavar="NAME", choices=known, default="slow-carrier", help="what happens (default: slow-carrier)"
     )
     parser.add_argument("--seed", metavar="INT", type=int, default=1, help="of all chance in the scene (default: 1)")
     asked = parser.parse_args()

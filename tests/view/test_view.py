@@ -87,7 +87,7 @@ def full_model(now: float = 100.0) -> LinkModel:
     """A model that has heard one of everything."""
     model = LinkModel("yard")
     take(model, "pattern", encode_pattern("yard", PATTERN, 1500), now)
-    take(model, "state", encode_state("yard", STATE, {"estimate": 800, "refresh": 600}), now)
+    take(model, "state", encode_state("yard", STATE, {"estimate": 800, "refresh": 600, "whole": 1500}), now)
     take(model, "alarm", encode_alarm("yard", ALARM), now)
     take(model, "truth", truth("a straddle carrier drives off"), now)
     return model

@@ -235,8 +235,9 @@ def figures(scene: Scene) -> Table:
         grid.add_row(f"receiver {receiver}", f"noise {decibel}, innovation {ratio:.2f}")
     latency = model.latency_ms(scene.now)
     grid.add_row("latency", "–" if latency is None else f"{latency[0]:.2f} ms median, {latency[1]:.2f} ms p99")
-    if model.stages_us:
-        stage, longest = max(model.stages_us.items(), key=lambda item: item[1])
+    stages = {stage: us for stage, us in model.stages_us.items() if stage != "whole"}
+    if stages:
+        stage, longest = max(stages.items(), key=lambda item: item[1])
         grid.add_row("slowest", f"{stage}, {longest / 1e3:.2f} ms of it")
     grid.add_row("bursts", f"{state.bursts:,} ({state.frames:,} frames)")
     counts = f"lost {state.lost:,}, duplicate {state.duplicate:,}, refused {state.refused:,}"
