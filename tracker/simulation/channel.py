@@ -136,11 +136,13 @@ class Band:
         u = ((length_m - centre) * 2.0 ** (-quarter_octave / 4)).astype(np.float32)
         real, imag = np.ascontiguousarray(weights.real), np.ascontiguousarray(weights.imag)
         moments = np.empty((weights.shape[0], terms.shape[0]), dtype=np.complex64)
-        older, newer = np.ones_like(u), u
+        twice, older, newer = 2 * u, np.ones_like(u), u
         for order in range(terms.shape[0]):
-            moments.real[:, order] = np.einsum("bn,bn->b", real, np.broadcast_to(older, real.shape))
-            moments.imag[:, order] = np.einsum("bn,bn->b", imag, np.broadcast_to(older, real.shape))
-            older, newer = newer, 2 * u * newer - older
+            np.einsum("bn,bn->b", real, older, out=moments.real[:, order])
+            np.einsum("bn,bn->b", imag, older, out=moments.imag[:, order])
+            following = twice * newer
+            following -= older
+            older, newer = newer, following
         result: NDArray[np.complex64] = moments @ (terms * phasor(self.turns(np.asarray(centre))))
         return result
 

@@ -236,7 +236,7 @@ class Player:
             "t_ns": report.t_ns,
             "pattern": report.pattern_id,
             "rate": report.rate,
-            # A search cut short may miss what the pattern in force already has.
+            # Both are the same number, rounded differently, when the pattern in force is the best.
             "best": max(best, report.rate),
             "event": report.happening,
         }

@@ -63,6 +63,7 @@ class Propagation:
         self._scatterers = [one for one in config.reflectors if isinstance(one, Scatterer)]
         self._half, self._mean = reflection.half.astype(np.complex64), reflection.mean.astype(np.complex64)
         self._rest: _Rest | None = None
+        self._arriving: tuple[NDArray[np.float64], list[Ray]] | None = None  # for these places of mast and scatterers
         start = np.zeros(1)
         straight = np.linalg.norm(self._antennas(start)[0] - config.mast.at(start), axis=1)
         lead_m = config.delay_zero_samples * config.tones.sample_s * LIGHT_MPS
@@ -113,8 +114,12 @@ class Propagation:
         sending = np.concatenate([mast[:, None], *surroundings], axis=1)
         if _constant(sending) and _constant(antennas):
             return self._resting(t_s, np.concatenate([sending[0], antennas[0]]), mast, antennas, shown)
-        once = slice(0, 1) if _constant(sending) else slice(None)
-        arriving = self._rays(mast[once], t_s[once], "in")
+        if _constant(sending):
+            if self._arriving is None or not np.array_equal(self._arriving[0], sending[0]):
+                self._arriving = (sending[0].copy(), self._rays(mast[:1], t_s[:1], "in"))
+            arriving = self._arriving[1]
+        else:
+            arriving = self._rays(mast, t_s, "in")
         reflected = shown * self._half + self._mean
         response = self._direct(mast, antennas, t_s)
         for receiver in range(antennas.shape[1]):

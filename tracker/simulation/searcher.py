@@ -73,5 +73,4 @@ def _search(pipe: Connection, steps: int) -> None:
     with threadpool_limits(limits=1), contextlib.suppress(EOFError, ConnectionError):
         while True:
             channel, states = pipe.recv()
-            # The search may end below the pattern in force only when its steps run out.
             pipe.send(best_pattern(channel, states, steps)[1])

@@ -165,7 +165,7 @@ def _blocked() -> Scenario:
         blocks.append(Block(from_s=start, until_s=start + 15.0, loss_db=25.0, ramp_s=0.3))
         episodes.append(Episode(start, start + 15.0, "direct path blocked"))
         episodes.append(Episode(start + 15.0, start + 18.0, "direct path free again"))
-    scene = yard((Still(lane(0.0)[0]),), shadow_db=30.0, snr_db=2.0)
+    scene = yard((Still(lane(0.0)[0]),), shadow_db=26.0, snr_db=6.0)
     scene = replace(scene, direct=replace(scene.direct, blocks=tuple(blocks)), episodes=tuple(episodes))
     text = "a carrier waits; another drives into the direct path at 15 s, out at 30 s, and so on"
     return Scenario("blocked", text, TestbedConfig(scene))
@@ -192,15 +192,14 @@ def _moving() -> Scenario:
 
 def _two_carriers() -> Scenario:
     idling = Sway(Still(lane(-4.0)[0]), amplitude=(0.001, 0.001, 0.002), period_s=(3.1, 2.3, 1.7))
-    driving = Waypoints(lane(2.0, 5.0), 0.1, from_s=20.0, around=True)
+    driving = Waypoints(lane(2.0, 5.0), 0.1, from_s=10.0, around=True)
     scene = yard((idling, driving), shadow_db=42.0, snr_db=-8.0)
-    scene = replace(scene, episodes=(Episode(20.0, NEVER, "the second carrier moves at 0.1 m/s"),))
+    scene = replace(scene, episodes=(Episode(10.0, NEVER, "the second carrier moves at 0.1 m/s"),))
     return Scenario(
         "two-carriers",
-        "one carrier idles, shaking by a millimetre or two, a second one sets off at 20 s",
+        "one carrier idles, shaking by a millimetre or two, a second one sets off at 10 s",
         TestbedConfig(scene),
-        bursts_per_s=150.0,
-        time_constant_ms=150.0,
+        time_constant_ms=200.0,
     )
 
 
