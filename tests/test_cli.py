@@ -25,6 +25,8 @@ fft = 256
 first = 28
 count = 200
 spacing_khz = 156.25
+[sockets]
+publish = "tcp://127.0.0.1:9"
 """
 ARGUMENTS = {
     "serve": ["SETTINGS", "--log"],
@@ -32,7 +34,7 @@ ARGUMENTS = {
     "check": ["SETTINGS"],
     "watch": ["SETTINGS", "--publish", "--link", "--plain", "--seconds"],
     "inspect": ["LOG", "--json", "--quiet"],
-    "suggest": ["LOG"],
+    "suggest": ["LOG", "--quiet"],
 }
 
 
@@ -170,6 +172,14 @@ def test_check_says_what_the_settings_mean(settings: Path, capsys: pytest.Captur
     assert err == ""
     for wanted in ("N = 320 elements", "321 complex", "covariance 805 KB", "Mflop a frame", "yard"):  # 321² · 8 / 1024
         assert wanted in out
+
+
+def test_watch_takes_endpoint_and_link_from_the_settings(settings: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """Naming the settings is enough; a service that is not running is waited for, and the given time ends it."""
+    assert left_with(["watch", str(settings), "--plain", "--seconds", "1.2"]) == 0
+    out, err = capsys.readouterr()
+    assert err == ""
+    assert "yard, nothing heard yet" in out
 
 
 def test_a_fault_of_ours_keeps_its_traceback_in_a_file(

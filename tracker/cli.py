@@ -145,6 +145,7 @@ examples:
         "  ris-tracker suggest journal/yard-0001.mcap > yard.toml",
     )
     suggest.add_argument("log", metavar="LOG", type=_existing, help="a log, as the service records it")
+    _quiet(suggest)
     return parser
 
 
@@ -158,6 +159,10 @@ def _logs(parser: argparse.ArgumentParser) -> None:
 
 def _told(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--json", metavar="SUMMARY.json", type=Path, help="write the summary as JSON too")
+    _quiet(parser)
+
+
+def _quiet(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--quiet", action="store_true", help="show no progress")
 
 
@@ -227,7 +232,7 @@ def _suggest(asked: argparse.Namespace) -> int:
     from tracker.offline.suggest import suggest
 
     _one_blas_thread()
-    return suggest(asked.log)
+    return suggest(asked.log, not asked.quiet)
 
 
 COMMANDS = {

@@ -22,7 +22,7 @@ from tracker.view import plain
 from tracker.view.model import LinkModel
 from tracker.view.sections import Scene
 from tracker.view.stream import Stream, take
-from tracker.view.terminal import screen
+from tracker.view.terminal import screen, show
 from tracker.view.watch import watch
 
 STATE = State(
@@ -306,6 +306,28 @@ def test_a_view_hears_its_link_and_no_other(publisher: Publisher) -> None:
     assert model.alarms["motion"] >= 1
     assert model.unreadable == 0
     assert {str(note) for note in model.notes if note.kind == "mode"} == {"tracking"}
+
+
+def test_the_live_screen_follows_a_socket(publisher: Publisher) -> None:
+    """On a terminal, the live screen shows what arrives, and gives the terminal back when it ends."""
+    console = Console(width=140, height=44, file=io.StringIO(), force_terminal=True, legacy_windows=False)
+    until = time.monotonic() + 10.0
+    frames = 0
+    with Stream(publisher.endpoint, link="yard") as stream:
+
+        def running() -> bool:
+            nonlocal frames
+            heard = bool(stream.model.state and stream.model.pattern and stream.model.truth)
+            frames += heard
+            return frames < 3 and time.monotonic() < until
+
+        show(stream, console, (4, 3), running)
+    assert isinstance(console.file, io.StringIO)
+    written = console.file.getvalue()
+    assert "measured 5.21" in written
+    assert "Pattern 77" in written
+    # Alternate screen on, and off again (xterm control sequences, private modes 1049).
+    assert written.index("\x1b[?1049h") < written.index("measured 5.21") < written.index("\x1b[?1049l")
 
 
 def test_watch_without_a_terminal_writes_lines_and_ends_in_time(
