@@ -19,7 +19,7 @@ from .realform import Real, RealForm, aligned, bits
 
 SINGLES = 16
 """Lines tried singly in a step."""
-PAIRED = 32
+PAIRED = 16
 """Lines whose pairs are looked at when no single line gains."""
 ROUNDING = 1e-12
 """Relative gain below which a difference may be rounding."""
@@ -51,12 +51,10 @@ class Ascent:
     def __init__(self, form: RealForm, states: Real, allowance: Allowance | None = None) -> None:
         self._form = form
         self._allowance = allowance
-        self.states = aligned(form.lines)
+        self.states, self._slope, self._sums = aligned((form.lines,), (form.lines,), (form.width,))
         self.states[:] = states
-        self._sums = aligned(form.width)
         np.matmul(self.states, form.surface, out=self._sums)
         self._sums += form.direct
-        self._slope = aligned(form.lines)
         # Moves are tried so many at a time that a step takes about as long whatever the size of the channel.
         self._block = min(64, max(SINGLES, (1 << 14) // (form.receivers * form.tones)))
         self._look()

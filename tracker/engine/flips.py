@@ -11,6 +11,7 @@ climb is one step of the budget, which is asked before each and nowhere else (`b
 """
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,7 +25,18 @@ from .one_carrier import one_carrier_optimum
 from .panel import Limits
 from .rate import rate
 from .realform import Real, RealForm
-from .starts import Batch, align, assess, either_sign, polish, rate_slope, spread_directions, together, tone_directions
+from .starts import (
+    Batch,
+    align,
+    assess,
+    delay_strength,
+    either_sign,
+    polish,
+    rate_slope,
+    spread_directions,
+    together,
+    tone_directions,
+)
 
 SPREAD = 64
 """Directions of the survey that are spread over all phases."""
@@ -46,7 +58,7 @@ PATIENCE = 6
 """Waves in a row without gain after which the search ends."""
 ALIKE = 0.98
 """Correlation above which two patterns lead to the same summit, as a rule."""
-WORK = 1 << 22
+WORK = 1 << 23
 """Multiplications that a batch takes, about; it bounds how long a step lasts."""
 
 
@@ -114,26 +126,34 @@ class _Search:
 
     def __init__(self, form: RealForm, allowance: Allowance | None, meter: Meter) -> None:
         self._form = form
-        self._rough = form.single()
         self._reach = allowance if allowance is not None and allowance.limited else None
         self.meter = meter
-        self.states: Real = np.empty(0)
+        self.states: Real = np.empty(0) if allowance is None else allowance.base
         self._value = -np.inf
         self._drawn = 0
         self._batch = max(8, min(64, WORK // (form.width * (form.lines + form.tones))))
-        if allowance is not None:
-            self._offer(allowance.base)
+
+    @cached_property
+    def _rough(self) -> RealForm:
+        """The channel in single precision, to choose where to climb from."""
+        return self._form.single()
+
+    @cached_property
+    def _strength(self) -> Real:
+        return delay_strength(self._rough)
 
     def run(self, *, thorough: bool) -> None:
         """Search until nothing more is found or the budget is spent."""
         form = self._form
+        if self.states.size and thorough:
+            self._offer(self.states)
         if form.width == 2 and form.tones == 1 and self._reach is None:
             self._one_carrier()
             return
         if thorough:
             self._survey()
             self._waves()
-        elif self._value == -np.inf:
+        elif not self.states.size:
             self._begin(self._draw(self._batch))
         self._climb(self.states, pairs=True)
 
@@ -147,7 +167,7 @@ class _Search:
     def _survey(self) -> None:
         """Climb from the best of many patterns."""
         directions = np.concatenate([tone_directions(self._rough, TONES, PHASES), self._draw(SPREAD)])
-        found = [] if self._value == -np.inf else [self._best()]
+        found = [self._best()] if self.states.size else []
         for first in range(0, len(directions), self._batch):
             batch = self._begin(directions[first : first + self._batch])
             if batch is None:
@@ -197,12 +217,12 @@ class _Search:
 
     def _may_go_on(self) -> bool:
         """Ask for a step; without any pattern yet, take it whatever the budget says."""
-        return self.meter.step() or self._value == -np.inf
+        return self.meter.step() or not self.states.size
 
     def _draw(self, count: int) -> Real:
         """Give directions not used before."""
         self._drawn += count
-        return spread_directions(self._rough, self._drawn - count, count)
+        return spread_directions(self._strength, self._drawn - count, count)
 
     def _best(self) -> Batch:
         return assess(self._rough, self.states[None].astype(np.float32))
@@ -212,7 +232,7 @@ class _Search:
         self._keep(exact.states[0], float(exact.values[0]))
 
     def _keep(self, states: Real, value: float) -> None:
-        if self._value == -np.inf or value > self._value * (1.0 + ROUNDING):
+        if value > self._value + ROUNDING * abs(value):
             self.states, self._value = states, value
 
 

@@ -6,6 +6,7 @@ no pattern that it can think of breaks a limit.
 """
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,11 +47,10 @@ class Lines:
         surface = channel.surface[self.members]
         return direct, surface if self.single else np.add.reduceat(surface, self.first, axis=0)
 
-    def spread(self, states: NDArray[np.float64]) -> NDArray[np.int8]:
+    def spread(self, states: NDArray[np.floating[Any]]) -> NDArray[np.int8]:
         """Give the pattern, shape (N,), that lines in these states, shape (G,), make."""
         pattern = self.held.copy()
-        counts = np.diff(self.first, append=self.members.size)
-        pattern[self.members] = np.repeat(states, counts)
+        pattern[self.members] = states if self.single else np.repeat(states, self.sizes())
         return pattern
 
     def votes(self, pattern: NDArray[np.generic]) -> NDArray[np.int64]:
@@ -60,6 +60,8 @@ class Lines:
 
     def sizes(self) -> NDArray[np.int64]:
         """Count the elements of each line, shape (G,)."""
+        if self.single:
+            return np.ones(self.first.size, dtype=np.int64)
         return np.diff(self.first, append=self.members.size)
 
 

@@ -18,12 +18,17 @@ Real = NDArray[np.floating[Any]]
 _ALIGNMENT = 64
 
 
-def aligned(*shape: int, precision: type[np.floating[Any]] = np.float64) -> Real:
-    """Allocate an array, not initialised, that starts at a multiple of 64 bytes."""
-    size = math.prod(shape) * np.dtype(precision).itemsize
-    memory = np.empty(size + _ALIGNMENT, dtype=np.uint8)
+def aligned(*shapes: tuple[int, ...], precision: type[np.floating[Any]] = np.float64) -> list[Real]:
+    """Allocate arrays of these shapes, not initialised, that start at multiples of 64 bytes."""
+    size = np.dtype(precision).itemsize
+    room = [-(-size * math.prod(shape) // _ALIGNMENT) * _ALIGNMENT for shape in shapes]
+    memory = np.empty(sum(room) + _ALIGNMENT, dtype=np.uint8)
     first = -memory.ctypes.data % _ALIGNMENT
-    return memory[first : first + size].view(precision).reshape(shape)
+    arrays = []
+    for shape, bytes_ in zip(shapes, room, strict=True):
+        arrays.append(memory[first : first + size * math.prod(shape)].view(precision).reshape(shape))
+        first += bytes_
+    return arrays
 
 
 class RealForm:
@@ -55,17 +60,20 @@ class RealForm:
         self.lines, self.receivers, self.delays = (int(n) for n in surface.shape)
         self.tones = int(basis.shape[0])
         self.width = 2 * self.receivers * self.delays
-        self.surface = aligned(self.lines, self.width)
+        tones = self.tones
+        self.surface, self.direct, squares, ones, self._to_tones = aligned(
+            (self.lines, self.width),
+            (self.width,),
+            (self.lines, self.width),
+            (self.width,),
+            (2 * self.delays, 2 * tones),
+        )
         self.surface.view(np.complex128).reshape(surface.shape)[...] = surface
-        self.direct = aligned(self.width)
         self.direct.view(np.complex128).reshape(direct.shape)[...] = direct
-        squares = np.multiply(self.surface, self.surface, out=aligned(self.lines, self.width))
-        ones = aligned(self.width)
+        np.multiply(self.surface, self.surface, out=squares)
         ones[:] = 1.0
         self.energy = squares @ ones
         # A row of coefficients (Re, Im, Re, Im …) times this is a row of responses (Re of all tones, Im of all tones).
-        tones = self.tones
-        self._to_tones = aligned(2 * self.delays, 2 * tones)
         self._to_tones[0::2, :tones] = self._to_tones[1::2, tones:] = basis.real.T
         self._to_tones[0::2, tones:] = basis.imag.T
         np.negative(basis.imag.T, out=self._to_tones[1::2, :tones])
@@ -76,7 +84,7 @@ class RealForm:
         form = copy.copy(self)
         for name in ("surface", "direct", "energy", "_to_tones"):
             whole = getattr(self, name)
-            half = aligned(*whole.shape, precision=np.float32)
+            (half,) = aligned(whole.shape, precision=np.float32)
             half[...] = whole
             setattr(form, name, half)
         form._from_tones = form._to_tones.T

@@ -124,26 +124,33 @@ def either_sign(form: RealForm, states: Real) -> Batch:
     return Batch(states, sums, np.maximum(ahead, behind))
 
 
-def spread_directions(form: RealForm, first: int, count: int) -> Real:
-    """Give directions spread evenly over all phases of the delays, each delay as strong as the surface makes it.
+def delay_strength(form: RealForm) -> Real:
+    """Give how strong the surface can make each delay at each receiver (root of the summed power), shape (L / 2,)."""
+    return np.asarray(np.sqrt((form.surface * form.surface).sum(axis=0).reshape(-1, 2).sum(axis=1)))
+
+
+def spread_directions(strength: Real, first: int, count: int) -> Real:
+    """Give directions spread evenly over all phases of the delays.
 
     Parameters
     ----------
-    form : RealForm
+    strength : ndarray, shape (L / 2,)
+        Size of each coefficient.
     first, count : int
-        Members `first` to `first + count` of an endless sequence. Its phases i (aq + bq²), in turns with irrational a
-        and b, fill the torus evenly (Weyl), so no random source is needed.
+        Members `first` to `first + count` of an endless sequence. Its phases, multiples of irrational fractions of a
+        turn, fill the torus evenly (Weyl), so no random source is needed.
 
     Returns
     -------
     ndarray, shape (count, L)
     """
-    delay = np.arange(form.width // 2)
-    turn = (math.sqrt(2.0) * (delay + 1) + math.sqrt(3.0) * (delay + 1) ** 2) % 1.0
+    delay = np.arange(1, strength.size + 1)
+    turn = (math.sqrt(2.0) * delay + math.sqrt(3.0) * delay**2) % 1.0
     phase = 2.0 * np.pi * (np.arange(first + 1, first + count + 1)[:, None] * turn % 1.0)
-    strength = np.sqrt((form.surface * form.surface).sum(axis=0).reshape(-1, 2).sum(axis=1))
-    spread = np.ascontiguousarray(strength * np.exp(1j * phase)).view(np.float64)
-    return spread.astype(form.surface.dtype)
+    spread = np.empty((count, 2 * strength.size), dtype=strength.dtype)
+    np.multiply(strength, np.cos(phase), out=spread[:, 0::2], casting="same_kind")
+    np.multiply(strength, np.sin(phase), out=spread[:, 1::2], casting="same_kind")
+    return spread
 
 
 def tone_directions(form: RealForm, count: int, phases: int) -> Real:
