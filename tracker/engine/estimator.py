@@ -82,14 +82,14 @@ class Estimator:
         frames = coefficients.shape[0]
         scale = 1.0 / np.sqrt(self._noise.power)
         outputs = (coefficients * scale[:, None]).reshape(frames, -1)
+        regressors = self._config.aperture.regressors(panel.unpack(patterns, self._config.elements))
         first = self._rls is None
         if self._rls is None:
-            self._rls = BlockRls(prior_variances(outputs, self._config.aperture.size), outputs.shape[1])
+            self._rls = BlockRls(prior_variances(regressors, outputs), outputs.shape[1])
         elapsed_s = max(span_ns if first else end_ns - self._end_ns, 0) / 1e9
         self._end_ns = end_ns
         if not first:
             self._rls.forget(*forgetting(self._config.forgetting, elapsed_s, self._config.time_constant_s))
-        regressors = self._config.aperture.regressors(panel.unpack(patterns, self._config.elements))
         power = np.zeros(self._config.receivers)
         error = 0.0
         for start in range(0, frames, MOST_FRAMES):

@@ -8,33 +8,37 @@ holds, so that empty delays do not make the prior too tight for the delays that 
 import numpy as np
 from numpy.typing import NDArray
 
-# The surface is granted at least this share of what is heard: a first burst under one pattern shows nothing vary.
-LEAST_SURFACE_SHARE = 0.2
+# Where the patterns hardly differ, nothing of the surface shows; it is then granted this share of all that is heard.
+UNSEEN_SHARE = 0.2
+# Mean variance of the regressors below which the patterns hardly differ.
+LEAST_VARIETY = 0.1
 # A variance of this many noise units in all is granted at least, or a weak start would never be unlearned.
 LEAST_POWER = 0.1
 
 
-def prior_variances(outputs: NDArray[np.complex128], size: int) -> NDArray[np.float64]:
+def prior_variances(regressors: NDArray[np.float64], outputs: NDArray[np.complex128]) -> NDArray[np.float64]:
     """Prior variances of [direct, r surface coefficients], in units of the noise.
 
     Parameters
     ----------
+    regressors : ndarray, shape (B, r + 1)
+        z of each frame; patterns excite all surface coefficients alike.
     outputs : ndarray of complex, shape (B, D)
         Frames on the delay basis, divided by the noise amplitude.
-    size : int
-        r, surface coefficients; patterns excite all alike with unit power.
 
     Returns
     -------
     ndarray, shape (r + 1,)
     """
-    frames = outputs.shape[0]
+    frames, size = outputs.shape[0], regressors.shape[1] - 1
     power = np.mean(np.abs(outputs) ** 2, axis=0)
     steady = np.abs(outputs.mean(axis=0)) ** 2
     varying = (power - steady) * (frames / max(frames - 1, 1)) - 1.0
     heard = _energy_mean(power - 1.0)
     direct = max(_energy_mean(steady - 1.0 / frames), LEAST_POWER)
-    surface = max(_energy_mean(varying), LEAST_SURFACE_SHARE * heard, LEAST_POWER)
+    variety = float(regressors[:, 1:].var(axis=0).mean())
+    seen = _energy_mean(varying) / max(variety, LEAST_VARIETY)
+    surface = max(seen, LEAST_POWER if variety > LEAST_VARIETY else UNSEEN_SHARE * heard, LEAST_POWER)
     variances = np.full(size + 1, surface / size)
     # Terminals and blockages change the direct path by its whole strength, and one column more costs little.
     variances[0] = 2.0 * direct + surface

@@ -38,5 +38,5 @@ def shrink(surface: NDArray[np.complex128], posterior: float, prior: float) -> N
     moment = (surface.conj().T @ surface) / surface.shape[0]
     values, vectors = np.linalg.eigh(moment)
     alpha = np.maximum(values / (learned * learned * prior) - rest / learned, EMPTIEST)
-    factor = 1.0 / (1.0 + rest * (1.0 / alpha - 1.0))
+    factor = np.minimum(1.0 / (1.0 + rest * (1.0 / alpha - 1.0)), 1.0)
     return np.asarray(surface @ ((vectors * factor) @ vectors.conj().T))
