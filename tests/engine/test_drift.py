@@ -20,7 +20,7 @@ def _settled(rng: np.random.Generator, false_alarm_s: float = 3600.0) -> DriftMo
 
 
 def test_a_rise_is_found_fast_and_dated() -> None:
-    """A rise of 20 % (about 5.5 standard deviations a burst) is found within 6 bursts and dated to about when it began."""
+    """A rise of 20 % (5.5 standard deviations a burst) is found within 6 bursts and dated to about when it began."""
     rng = np.random.default_rng(1)
     monitor = _settled(rng)
     for count in range(1, 7):

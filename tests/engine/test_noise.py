@@ -2,13 +2,14 @@
 
 import numpy as np
 import scipy.stats
+from numpy.typing import NDArray
 
 from tracker.engine import noise, panel
 from tracker.engine.delay import delay_basis
 
 
-def _complex(rng: np.random.Generator, shape: tuple[int, ...]) -> np.ndarray:
-    return (rng.normal(size=shape) + 1j * rng.normal(size=shape)) / np.sqrt(2)
+def _complex(rng: np.random.Generator, shape: tuple[int, ...]) -> NDArray[np.complex128]:
+    return np.asarray((rng.normal(size=shape) + 1j * rng.normal(size=shape)) / np.sqrt(2))
 
 
 def test_outside_the_basis_there_is_noise_alone() -> None:
@@ -38,7 +39,7 @@ def test_repeats_differ_by_noise_alone() -> None:
 def test_nothing_repeated_says_nothing() -> None:
     """Without a repeat there are no degrees of freedom and no claim."""
     states = np.array([[1, -1, 1], [1, 1, 1], [-1, -1, 1]])
-    _, degrees = noise.repeats(panel.pack(states), np.ones((3, 1, 4), dtype=complex))
+    _, degrees = noise.repeats(panel.pack(states), np.ones((3, 1, 4), dtype=np.complex128))
     assert degrees == 0
 
 

@@ -1,4 +1,4 @@
-"""The block filter against least squares solved at once, textbook filters of general-purpose libraries, and real data."""
+"""The block filter against least squares solved at once, textbook filters of libraries, and real data."""
 
 import filterpy.kalman
 import numpy as np
@@ -183,7 +183,7 @@ def test_exponential_winds_up_where_resetting_does_not() -> None:
 
 
 def test_innovations_are_white_when_the_model_holds() -> None:
-    """Whitened innovations have unit power: mean of 100 blocks within the 95 % band of χ² at 100 · 2 · 8 · 2 degrees."""
+    """Whitened innovations have unit power: over 100 blocks within the 95 % band of χ² at 100 · 2 · 8 · 2 degrees."""
     rng = np.random.default_rng(7)
     size, frames, outputs, blocks = 16, 8, 2, 100
     prior = np.full(size, 0.5)

@@ -26,7 +26,7 @@ def _against_multiply(rounds: int) -> Row:
     product = np.empty_like(square)
     rls = BlockRls(np.full(size + 1, 0.01), 1)
     blocks = [np.ascontiguousarray(rng.choice([-1.0, 1.0], (frames, size + 1))) for _ in range(8)]
-    heard = rng.normal(size=(frames, 1)) + 0j
+    heard = rng.normal(size=(frames, 1)).astype(np.complex128)
     ours, limit = [], []
     for turn in range(rounds):
         rls.forget(*forgetting("resetting", 0.005, 0.5))
@@ -70,7 +70,7 @@ def _against_peers(frames: int) -> Iterator[Row]:
 
     ours = BlockRls(np.full(size, prior), 1)
     single = BlockRls(np.full(size, prior), 1)
-    heard = (y + 0j)[:, None]
+    heard = y.astype(np.complex128)[:, None]
 
     def blocks() -> None:
         for start in range(0, frames, 40):
