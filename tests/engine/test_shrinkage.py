@@ -37,7 +37,7 @@ def test_full_truth_loses_nothing() -> None:
 def test_risk_is_that_of_the_best_linear_estimate() -> None:
     """With known variances the best linear risk is Σ_q a_q d/(a_q + d) (Wiener); shrinking comes within 15 % of it."""
     rng = np.random.default_rng(3)
-    variances = np.array([0.2, 0.05, 0.01, 0.002, 0.0005, 0.0, 0.0, 0.0])
+    variances = np.array([0.05, 0.04, 0.01, 0.002, 0.0005, 0.0, 0.0, 0.0])
     posterior, prior = 0.008, 0.05
     data = posterior * prior / (prior - posterior)
     risk = []
@@ -47,6 +47,14 @@ def test_risk_is_that_of_the_best_linear_estimate() -> None:
         found = shrink(_estimate(rng, truth, posterior, prior), posterior, prior)
         risk.append(np.mean(np.abs(found - truth) ** 2))
     assert np.mean(risk) == pytest.approx(np.mean(variances * data / (variances + data)), rel=0.15)
+
+
+def test_nothing_is_strengthened() -> None:
+    """A direction stronger than the prior granted is left as estimated: what a sounded pattern gives is known well."""
+    rng = np.random.default_rng(4)
+    truth = np.sqrt(0.4 / 2) * (rng.normal(size=(400, 3)) + 1j * rng.normal(size=(400, 3)))
+    estimate = _estimate(rng, truth, 0.01, 0.05)
+    np.testing.assert_allclose(shrink(estimate, 0.01, 0.05), estimate, atol=1e-12)
 
 
 def test_without_data_nothing_is_done() -> None:
