@@ -5,6 +5,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 from tracker.simulation.channel import Band
 from tracker.simulation.config import DirectConfig, SceneConfig, Terminal
@@ -16,6 +17,12 @@ from tracker.simulation.schedule import Block
 
 Make = Callable[..., SceneConfig]
 FRAME_S = 1 / 28_000
+
+
+def every(step_s: float, frames: int, start_s: float = 0.0) -> NDArray[np.float64]:
+    """Times of frames, s."""
+    times: NDArray[np.float64] = start_s + step_s * np.arange(frames, dtype=np.float64)
+    return times
 
 
 @pytest.mark.parametrize("span_m", [0.0, 0.3, 5.0, 200.0])
@@ -100,7 +107,7 @@ def test_moving_frames_equal_the_formula_at_every_frame_time(busy: SceneConfig, 
     """exp(−2πj (f_c + f) τ(t)) summed ray by ray, at the time of each frame within the burst; the error is < 1e-4."""
     rng = np.random.default_rng(4)
     states = rng.choice(np.array([-1, 1], dtype=np.int8), (20, 64))
-    times = start_s + FRAME_S * np.arange(20)
+    times = every(FRAME_S, 20, start_s)
     frames = Scene(busy, 1).frames(times, states)
     zero_s = None
     for frame in (0, 7, 19):
@@ -120,7 +127,7 @@ def test_frames_do_not_depend_on_how_they_are_cut_into_bursts(busy: SceneConfig)
     """Asked at once or one by one, frames are the same but for rounding in single precision."""
     rng = np.random.default_rng(5)
     states = rng.choice(np.array([-1, 1], dtype=np.int8), (12, 64))
-    times = 1.0 + FRAME_S * np.arange(12)
+    times = every(FRAME_S, 12, 1.0)
     at_once = Scene(busy, 1).frames(times, states)
     scene = Scene(busy, 1)
     single = np.concatenate([scene.frames(times[i : i + 1], states[i : i + 1]) for i in range(12)])
@@ -134,7 +141,7 @@ def test_frames_equal_the_truth(plain: Make, busy: SceneConfig, moves: bool) -> 
     config = replace(config, direct=replace(config.direct, blocks=(Block(0.0, 1.0, 12.0, ramp_s=0.01),)))
     rng = np.random.default_rng(6)
     states = rng.choice(np.array([-1, 1], dtype=np.int8), (40, 64))
-    times = 0.005 + FRAME_S * np.arange(40)
+    times = every(FRAME_S, 40, 0.005)
     scene = Scene(config, 9)
     frames = scene.frames(times, states)
     for frame in (0, 17, 39):
@@ -151,7 +158,7 @@ def test_a_mast_or_scatterer_that_moves_is_followed(busy: SceneConfig, swaying: 
         moving = Scatterer(Straight((12.0, 2.0, 5.0), (2.0, 0.0, 0.0)), cross_section_m2=30.0)
         config = replace(busy, reflectors=(moving,))
     states = np.ones((30, 64), dtype=np.int8)
-    times = 2.0 + FRAME_S * np.arange(30)
+    times = every(FRAME_S, 30, 2.0)
     scene = Scene(config, 1)
     frames = scene.frames(times, states)
     expected = np.stack([scene.response(float(t), states[0]) for t in times])
@@ -163,7 +170,7 @@ def test_terminal_that_drives_off_shows_the_doppler_shift(plain: Make, ideal: Re
     terminal = Terminal(Straight((0.0, -30.0, 12.0), (0.0, -3.0, 0.0)))
     panel = PanelConfig(1, 1, (0.0, 50.0, 0.0), (0.0, 1.0, 0.0))  # looks away
     config = plain(terminals=(terminal,), panel=panel, reflection=ideal, direct=DirectConfig(), noise_power=1e-40)
-    times = np.arange(280) * FRAME_S
+    times = every(FRAME_S, 280)
     frames = Scene(config, 1).frames(times, np.ones((280, 1), dtype=np.int8))
     carrier = frames[:, 0, config.tones.fft // 2 - config.tones.first]
     shift_hz = np.polyfit(times, np.unwrap(np.angle(carrier)) / (2 * np.pi), 1)[0]
@@ -176,7 +183,7 @@ def test_surface_path_shows_its_own_doppler_shift(plain: Make, ideal: Reflection
     panel = PanelConfig(1, 1, (-40.0, -20.0, 3.0), (1.0, 0.0, 0.0))
     terminal = Terminal(Straight((0.0, -20.0, 3.0), (-2.0, 0.0, 0.0)))
     config = plain(terminals=(terminal,), panel=panel, mast=Still((0.0, 0.0, 3.0)), reflection=ideal, noise_power=1e-40)
-    times = np.arange(140) * FRAME_S
+    times = every(FRAME_S, 140)
     scene, other = Scene(config, 1), Scene(config, 1)
     plus = scene.frames(times, np.ones((140, 1), dtype=np.int8))
     minus = other.frames(times, -np.ones((140, 1), dtype=np.int8))
@@ -194,7 +201,7 @@ def test_large_moving_scene_stays_exact(plain: Make) -> None:
         noise_power=1e-40,
     )
     states = np.random.default_rng(7).choice(np.array([-1, 1], dtype=np.int8), (64, 1024))
-    times = 3.0 + FRAME_S * np.arange(64)
+    times = every(FRAME_S, 64, 3.0)
     scene = Scene(config, 2)
     frames = scene.frames(times, states)
     expected = scene.response(float(times[63]), states[63])

@@ -17,7 +17,7 @@ def test_straight_track_waits_then_moves_at_its_speed() -> None:
 def test_waypoints_take_each_leg_at_its_own_speed_and_stay_at_the_end() -> None:
     """4 m at 2 m/s and 3 m at 0.5 m/s take 2 s and 6 s."""
     track = Waypoints(((0, 0, 0), (4, 0, 0), (4, 3, 0)), (2.0, 0.5), from_s=1.0)
-    expected = [[0, 0, 0], [2, 0, 0], [4, 0, 0], [4, 1.5, 0], [4, 3, 0], [4, 3, 0]]
+    expected: list[list[float]] = [[0, 0, 0], [2, 0, 0], [4, 0, 0], [4, 1.5, 0], [4, 3, 0], [4, 3, 0]]
     np.testing.assert_allclose(track.at(np.array([0.5, 2.0, 3.0, 6.0, 9.0, 99.0])), expected, atol=1e-12)
 
 

@@ -132,7 +132,8 @@ def _record(args: argparse.Namespace) -> int:
     pace = args.bursts_per_s or scene.bursts_per_s
     count = math.ceil((args.seconds or 10.0) * pace)
     began = time.perf_counter()
-    with Progress(console=Console(stderr=True), transient=True) as progress:
+    console = Console(stderr=True)
+    with Progress(console=console, transient=True, disable=not console.is_terminal) as progress:
         task = progress.add_task(args.out.name, total=count)
         try:
             size = record(

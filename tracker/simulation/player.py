@@ -18,8 +18,10 @@ MOST_BURST = 512 * 1024
 QUEUED = 2000
 """Bursts that may wait for a slow listener."""
 LINGER_MS = 500
-SAY_EVERY_S = 5.0
-"""Least time between two complaints about pace."""
+LOOK_EVERY_S = 5.0
+"""Time over which the pace is looked at."""
+LATE_SHARE = 0.1
+"""Share of bursts begun late above which the user is told."""
 LONGEST_POLL_S = 0.1
 """So long a stop may go unnoticed."""
 
@@ -137,8 +139,7 @@ class Player:
         self._stopping = False
         self._truth_due_ns = 0
         self._last: tuple[int, int] | None = None
-        self._complained_ns = -round(SAY_EVERY_S * 1e9)
-        self._late_before = 0
+        self._looked: tuple[int, int, int] | None = None  # time, bursts and late ones at the last look at the pace
         self.played = Played()
 
     def stop(self) -> None:
@@ -169,7 +170,7 @@ class Player:
             if now_ns > due_ns:
                 self.played.late += 1
                 due_ns = now_ns
-                self._complain(now_ns)
+            self._look_at_pace(now_ns)
 
     def _burst(self, t_ns: int) -> None:
         burst = self._testbed.next_burst(t_ns)
@@ -243,14 +244,21 @@ class Player:
         self._endpoints.out.send_multipart([self._truth_topic, msgpack.packb(values)])
         self.played.truths += 1
 
-    def _complain(self, now_ns: int) -> None:
-        since_s = (now_ns - self._complained_ns) / 1e9
-        if since_s < SAY_EVERY_S or self.played.late - self._late_before < 3:
+    def _look_at_pace(self, now_ns: int) -> None:
+        """Tell the user when the machine is too slow; times are true all the same."""
+        now = (now_ns, self.played.bursts, self.played.late)
+        if self._looked is None:
+            self._looked = now
+        took_s = (now_ns - self._looked[0]) / 1e9
+        if took_s < LOOK_EVERY_S:
             return
-        late, self._late_before = self.played.late - self._late_before, self.played.late
-        self._complained_ns = now_ns
-        pace = 1e9 / self._period_ns
-        self._say(f"{late} bursts began late: this machine does not keep {pace:.0f} bursts/s here; times stay true")
+        bursts, late = now[1] - self._looked[1], now[2] - self._looked[2]
+        self._looked = now
+        if late > LATE_SHARE * bursts:
+            asked = 1e9 / self._period_ns
+            self._say(
+                f"this machine gives {bursts / took_s:.0f} bursts/s where {asked:.0f} were asked for; times stay true"
+            )
 
 
 def steady_clock() -> Callable[[], int]:

@@ -40,14 +40,14 @@ def hadamard(order: int) -> NDArray[np.int8]:
     ValueError
         When no construction here has this order.
     """
-    if order & (order - 1) == 0 and order > 0:
+    if not _makeable(order):
+        raise ValueError(f"no Hadamard matrix of order {order} can be made here")
+    if order & (order - 1) == 0:
         return np.asarray(scipy.linalg.hadamard(order), dtype=np.int8)
     if _paley(order):
         return _paley_matrix(order)
-    if order % 2 == 0 and order > 2:
-        half = hadamard(order // 2)
-        return np.block([[half, half], [half, -half]])
-    raise ValueError(f"no Hadamard matrix of order {order} can be made here")
+    half = hadamard(order // 2)
+    return np.block([[half, half], [half, -half]])
 
 
 def sweep(elements: int, rng: np.random.Generator) -> NDArray[np.int8]:
@@ -168,6 +168,8 @@ def _paley(order: int) -> bool:
 
 
 def _makeable(order: int) -> bool:
+    if order < 1:
+        return False
     if order & (order - 1) == 0 or _paley(order):
         return True
     return order % 4 == 0 and _makeable(order // 2)
