@@ -13,8 +13,10 @@ from numpy.typing import NDArray
 from .channel import Channel
 from .rate import rate
 
+Real = NDArray[np.float64]
+
 BLOCK = 1 << 14
-"""Responses worked off at once in `rate_bound`: small enough to stay in the cache."""
+"""Responses worked off at once in `rate_bound`: few enough to stay in the cache."""
 
 
 def one_carrier_optimum(direct: complex, elements: NDArray[np.complex128]) -> tuple[NDArray[np.int8], float]:
@@ -37,11 +39,12 @@ def one_carrier_optimum(direct: complex, elements: NDArray[np.complex128]) -> tu
     elements = np.asarray(elements, dtype=np.complex128)
     if elements.size == 0:
         return np.empty(0, dtype=np.int8), abs(direct) ** 2
-    real, imag = elements.real[None].copy(), elements.imag[None].copy()
-    # At corner j the elements first to j-th in the order have turned against the upper half plane.
-    states = np.copysign(1.0, imag[0])
-    order = _walk(real, imag)[0]
-    corner = int(np.argmax(_power(complex(direct), real, imag)))
+    # States that turn every element into the upper half plane; at corner j the first j in order have turned back.
+    states = np.copysign(1.0, elements.imag)
+    upper = states * elements
+    order = np.argsort(_angle_key(upper.real, np.abs(upper.imag)))
+    corners = np.cumsum(upper[order]) - 0.5 * upper.sum()
+    corner = int(np.argmax(np.abs(corners) ** 2 + np.abs((np.conj(direct) * corners).real)))
     states[order[: corner + 1]] *= -1.0
     reflected = complex(states @ elements)
     # The corner opposite is the whole pattern negated.
@@ -52,8 +55,8 @@ def one_carrier_optimum(direct: complex, elements: NDArray[np.complex128]) -> tu
 def rate_bound(channel: Channel) -> float:
     """Work out a rate that no pattern exceeds, bit/s/Hz.
 
-    Every tone at every receiver is given the best pattern for itself alone, found exactly; one pattern for all
-    cannot do better. The bound is met when there is a single tone and receiver.
+    Every tone at every receiver is given the best pattern for itself alone, found as on one carrier; one pattern for
+    all cannot do better. The bound is met when there is a single tone and receiver.
 
     Parameters
     ----------
@@ -62,7 +65,7 @@ def rate_bound(channel: Channel) -> float:
     Returns
     -------
     float
-        Mean over receivers and tones of log2(1 + max_s |H|²).
+        Mean over receivers and tones of log2(1 + max_s |H|²), at most 10⁻¹⁰ of the power above it.
     """
     count, tones = channel.elements, channel.tones
     if count == 0:
@@ -71,53 +74,65 @@ def rate_bound(channel: Channel) -> float:
     power = np.empty(direct.shape)
     block = max(1, BLOCK // count)
     for receiver in range(channel.receivers):
-        # Re and Im of basis · surface from real products: [Re B, −Im B] [Re v; Im v] and [Im B, Re B] [Re v; Im v].
         delays = channel.surface[:, receiver]
         parts = np.concatenate([delays.real, delays.imag], axis=1).T
+        # Turning each tone so that its direct path is real changes no power and saves work.
+        turned = np.exp(-1j * np.angle(direct[receiver]))[:, None] * channel.basis
         for first in range(0, tones, block):
             some = slice(first, first + block)
-            basis = channel.basis[some]
+            basis = turned[some]
+            # Re and Im of basis · surface from real products.
             real = np.concatenate([basis.real, -basis.imag], axis=1) @ parts
             imag = np.concatenate([basis.imag, basis.real], axis=1) @ parts
-            _walk(real, imag)
-            np.max(_power(direct[receiver, some, None], real, imag), axis=1, out=power[receiver, some])
-    # The sums above round; the slack keeps the bound above the rate of the pattern that meets it.
-    slack = 1.0 + 8.0 * (count + 1) * np.finfo(np.float64).eps
-    return float(np.log2(1.0 + slack * power).mean())
+            power[receiver, some] = _largest_power(np.abs(direct[receiver, some]), real, imag)
+    # Covers the rounding of the sums and of the sorted angles.
+    return float(np.log2(1.0 + (1.0 + 1e-10) * power).mean())
 
 
-def _walk(real: NDArray[np.float64], imag: NDArray[np.float64]) -> NDArray[np.intp]:
-    """Walk half round the zonogon of each row of elements, shape (T, N).
+def _angle_key(real: Real, imag: Real) -> Real:
+    """Give a number in [−1, 1] that falls as the angle of a point in the upper half plane grows; 0 for zero."""
+    size = np.abs(real)
+    size += imag
+    size += np.finfo(np.float64).tiny
+    return np.asarray(np.divide(real, size, out=size))
 
-    Replaces the elements by the N corners, in place, and returns the order in which the elements change sign. The
-    other N corners are these negated.
+
+def _largest_power(direct: Real, real: Real, imag: Real) -> Real:
+    """Give the largest power on each of T carriers.
+
+    Parameters
+    ----------
+    direct : ndarray of float64, shape (T,)
+        The direct path, turned so that it is real.
+    real, imag : ndarray of float64, shape (T, N)
+        The elements; overwritten.
+
+    Notes
+    -----
+    Sorts numbers rather than indices, which is twice as fast: the index of an element takes the place of the last bits
+    of its key. Angles that agree in the 38 bits left or more may swap places; that costs the power 10⁻¹¹ of itself.
     """
-    # Turn every element into the upper half plane. There the cotangent falls as the angle grows and costs only a
-    # division. An element on the real axis gives ±∞ and zero gives NaN; both are sorted where they belong.
     real *= np.copysign(1.0, imag)
     np.abs(imag, out=imag)
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        order = np.argsort(real / imag, axis=1)
-    place = order + np.arange(len(real))[:, None] * real.shape[1]
+    count = real.shape[1]
+    last = np.int64((1 << (count - 1).bit_length()) - 1)
+    keys = _angle_key(real, imag)
+    order = keys.view(np.int64)
+    order &= ~last
+    order |= np.arange(count)
+    keys.sort(axis=1)
+    order &= last
+    order += np.arange(len(real))[:, None] * count
+    # x = Σ h − 2 (h_1 + … + h_j), and half of −x costs less: add up from −Σ h / 2.
     for part in (real, imag):
-        total = part.sum(axis=1, keepdims=True)
-        # corner j = Σ h − 2 (h_1 + … + h_j)
-        np.cumsum(part.reshape(-1).take(place), axis=1, out=part)
-        np.multiply(part, -2.0, out=part)
-        np.add(part, total, out=part)
-    return order
-
-
-def _power(
-    direct: complex | NDArray[np.complex128], real: NDArray[np.float64], imag: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    """Give the larger of |d + x|² and |d − x|² at each corner: |d|² + |x|² + 2 |Re(conj(d) x)|."""
-    d = np.asarray(direct)
-    power = d.real * real
-    power += d.imag * imag
-    np.abs(power, out=power)
-    power *= 2.0
-    power += real * real
-    power += imag * imag
-    power += d.real**2 + d.imag**2
-    return power
+        half = -0.5 * part.sum(axis=1)
+        walk = part.reshape(-1).take(order)
+        walk[:, 0] += half
+        np.cumsum(walk, axis=1, out=part)
+    # |d ± x|² at its larger, with d real: (d + 2 |Re x/2|)² + (2 Im x/2)²
+    np.abs(real, out=real)
+    real += 0.5 * direct[:, None]
+    real *= real
+    imag *= imag
+    real += imag
+    return np.asarray(4.0 * real.max(axis=1))
