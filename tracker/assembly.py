@@ -33,6 +33,7 @@ def configure(settings: Settings, folder: Path) -> Config:
         forgetting=settings.estimator.forgetting,
         time_constant_s=settings.estimator.time_constant_ms / 1e3,
         false_alarm_s=settings.drift.false_alarm_hours * 3600.0,
+        follow_phase=settings.follow.phase,
         every_bursts=refresh.every_bursts,
         least_gain=refresh.least_gain,
         clock_skew_ns=round(settings.link.clock_skew_s * 1e9),

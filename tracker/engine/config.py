@@ -28,6 +28,8 @@ class Config:
         Wanted mean time between false drift alarms.
     every_bursts : int
         A refresh is considered once in so many bursts.
+    follow_phase : bool
+        Whether the phases of direct and surface path are followed.
     least_gain : float
         Predicted gain below which the pattern in use stays, bit/s/Hz.
     clock_skew_ns : int
@@ -42,6 +44,7 @@ class Config:
     forgetting: str = "resetting"
     time_constant_s: float = 0.5
     false_alarm_s: float = 36_000.0
+    follow_phase: bool = False
     every_bursts: int = 1
     least_gain: float = 0.01
     clock_skew_ns: int = 60_000_000_000

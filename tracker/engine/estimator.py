@@ -1,6 +1,6 @@
 """From frames to channel estimate: delay basis, noise, prior, least squares, shrinkage, in this order."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -8,14 +8,50 @@ import numpy as np
 from numpy.typing import NDArray
 
 from . import noise, panel
+from .burst import Burst
 from .channel import Channel
 from .config import Config
+from .following import Following
 from .prior import prior_variances
 from .rls import BlockRls, forgetting
 from .shrinkage import shrink
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
 MOST_FRAMES = 256
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Frames:
+    """Frames of one burst, without those left out.
+
+    Parameters
+    ----------
+    patterns : ndarray of uint8, shape (B, ceil(N/8))
+    response : ndarray of complex64, shape (B, R, K)
+    time_ns : ndarray of int64, shape (B,)
+        Time of each frame, rising.
+    """
+
+    patterns: NDArray[np.uint8]
+    response: NDArray[np.complex64]
+    time_ns: NDArray[np.int64]
+
+    @classmethod
+    def of(cls, burst: Burst) -> "Frames":
+        """Take the frames of a burst that are fit for use."""
+        kept = np.flatnonzero(burst.keep)
+        return cls(burst.patterns[kept], burst.response[kept], burst.t_ns + kept * burst.dt_ns)
+
+    @classmethod
+    def together(cls, parts: Sequence["Frames"]) -> "Frames":
+        """Put bursts one behind the other."""
+        if len(parts) == 1:
+            return parts[0]
+        return cls(
+            np.concatenate([part.patterns for part in parts]),
+            np.concatenate([part.response for part in parts]),
+            np.concatenate([part.time_ns for part in parts]),
+        )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -33,12 +69,15 @@ class Fit:
     error : float
         Mean squared error of predicting the frames from the estimate before them, in units of the noise on a delay
         direction; 1 is all that can be had. Unlike `ratio` it can be compared between settings.
+    lost : tuple of int
+        Receivers whose lock was lost at this block.
     """
 
     ratio: NDArray[np.float64]
     degrees: int
     elapsed_s: float
     error: float
+    lost: tuple[int, ...] = ()
 
 
 class Estimator:
@@ -55,6 +94,8 @@ class Estimator:
         self._noise = noise.NoiseEstimate(config.receivers)
         self._rls: BlockRls | None = None
         self._end_ns = 0
+        patience = config.aperture.size + 1
+        self.following = [Following(patience) for _ in range(config.receivers)] if config.follow_phase else []
 
     @property
     def ready_after(self) -> int:
@@ -66,16 +107,30 @@ class Estimator:
         """Noise power on a tone, shape (R,), in the units of |response|²."""
         return self._noise.power
 
-    def update(self, patterns: NDArray[np.uint8], response: NDArray[np.complex64], span_ns: int, end_ns: int) -> Fit:
-        """Take in frames.
+    def update(self, bursts: Sequence[Frames]) -> Fit:
+        """Take in the frames of a block.
 
         Parameters
         ----------
-        patterns : ndarray of uint8, shape (B, ceil(N/8))
-        response : ndarray of complex64, shape (B, R, K)
-        span_ns, end_ns : int
-            Time that the frames span, and time of the last one.
+        bursts : sequence of Frames
+            One or more, in order.
         """
+        if not self.following:
+            return self._take(Frames.together(bursts))
+        # Phases turn too far over several bursts to be taken as one; each is followed by itself.
+        fits = [self._take(frames) for frames in bursts]
+        degrees = sum(fit.degrees for fit in fits)
+        return Fit(
+            ratio=np.asarray(sum(fit.ratio * fit.degrees for fit in fits) / degrees),
+            degrees=degrees,
+            elapsed_s=sum(fit.elapsed_s for fit in fits),
+            error=sum(fit.error * fit.degrees for fit in fits) / degrees,
+            lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
+        )
+
+    def _take(self, taken: Frames) -> Fit:
+        """Take in frames that one model of the phases serves."""
+        patterns, response, time_ns = taken.patterns, taken.response, taken.time_ns
         tones = response.astype(np.complex128)
         coefficients = tones @ self._adjoint
         self._measure_noise(patterns, tones, coefficients)
@@ -86,10 +141,12 @@ class Estimator:
         first = self._rls is None
         if self._rls is None:
             self._rls = BlockRls(prior_variances(regressors, outputs), outputs.shape[1])
-        elapsed_s = max(span_ns if first else end_ns - self._end_ns, 0) / 1e9
+        end_ns = int(time_ns[-1])
+        elapsed_s = max(end_ns - (int(time_ns[0]) if first else self._end_ns), 0) / 1e9
         self._end_ns = end_ns
         if not first:
             self._rls.forget(*forgetting(self._config.forgetting, elapsed_s, self._config.time_constant_s))
+        lost = self._follow(self._rls, patterns, regressors, outputs, time_ns)
         power = np.zeros(self._config.receivers)
         error = 0.0
         for start in range(0, frames, MOST_FRAMES):
@@ -98,10 +155,15 @@ class Estimator:
             power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
             error += float(_power(innovation).sum())
         degrees = frames * self._adjoint.shape[1]
-        return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers))
+        return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost)
 
-    def channel(self) -> Channel:
+    def channel(self, time_ns: int | None = None) -> Channel:
         """Estimate as the optimizer takes it, in units of each receiver's noise.
+
+        Parameters
+        ----------
+        time_ns : int or None
+            Time for which it is wanted, as far as phases are followed; None for that of the last frame.
 
         Raises
         ------
@@ -112,9 +174,13 @@ class Estimator:
         receivers, size = self._config.receivers, self._adjoint.shape[1]
         prior = float(rls.prior[1:].mean())
         surface = shrink(rls.coefficients[1:], float(rls.variances[1:].mean()), prior)
+        direct = rls.coefficients[0].reshape(receivers, size).copy()
+        if time_ns is not None:
+            for receiver, following in enumerate(self.following):
+                direct[receiver] *= np.exp(1j * following.lead(time_ns))
         return Channel(
             basis=self._config.delay,
-            direct=rls.coefficients[0].reshape(receivers, size).copy(),
+            direct=direct,
             surface=np.ascontiguousarray(self._config.aperture.surface(surface).reshape(-1, receivers, size)),
         )
 
@@ -145,6 +211,7 @@ class Estimator:
             "noise": self._noise.snapshot(),
             "rls": self._rls.snapshot() if self._rls is not None else None,
             "end_ns": self._end_ns,
+            "following": [following.snapshot() for following in self.following],
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -152,6 +219,34 @@ class Estimator:
         self._noise.load(snapshot["noise"])
         self._rls = BlockRls.restore(snapshot["rls"]) if snapshot["rls"] is not None else None
         self._end_ns = int(snapshot["end_ns"])
+        for following, state in zip(self.following, snapshot["following"], strict=True):
+            following.load(state)
+
+    def _follow(
+        self,
+        rls: BlockRls,
+        patterns: NDArray[np.uint8],
+        regressors: NDArray[np.float64],
+        outputs: NDArray[np.complex128],
+        time_ns: NDArray[np.int64],
+    ) -> tuple[int, ...]:
+        """Turn the outputs back in place, and the estimate of the direct path along; return receivers that lost lock."""
+        if not self.following:
+            return ()
+        size = self._adjoint.shape[1]
+        surface = regressors[:, 1:] @ rls.coefficients[1:]
+        weight = 1.0 / (1.0 + float(rls.variances.sum()))
+        lost = []
+        for receiver, following in enumerate(self.following):
+            part = slice(receiver * size, (receiver + 1) * size)
+            turned = following.turn(
+                patterns, outputs[:, part], rls.coefficients[0, part], surface[:, part], time_ns, weight
+            )
+            outputs[:, part] = turned.outputs
+            rls.coefficients[0, part] = turned.direct
+            if turned.lost:
+                lost.append(receiver)
+        return tuple(lost)
 
     def _learned(self) -> BlockRls:
         if self._rls is None:

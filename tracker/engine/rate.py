@@ -21,7 +21,7 @@ def response(channel: Channel, states: NDArray[np.generic]) -> NDArray[np.comple
         H[r, k] = Σ_q basis[k, q] · (direct[r, q] + Σ_n s_n surface[n, r, q]).
     """
     # States are real: multiplying the real and imaginary parts as neighbours halves the work.
-    flat = np.ascontiguousarray(channel.surface).reshape(channel.elements, -1).view(np.float64)
+    flat = np.ascontiguousarray(channel.surface).reshape(channel.elements, channel.direct.size).view(np.float64)
     reflected = (np.asarray(states, dtype=np.float64) @ flat).view(np.complex128)
     return np.asarray((channel.direct + reflected.reshape(channel.direct.shape)) @ channel.basis.T)
 
@@ -61,7 +61,7 @@ def gradient(channel: Channel, states: NDArray[np.generic]) -> NDArray[np.float6
     heard = response(channel, states)
     weighted = heard / (1.0 + heard.real**2 + heard.imag**2)
     delays = np.ascontiguousarray(weighted @ channel.basis.conj()).reshape(-1)
-    flat = np.ascontiguousarray(channel.surface).reshape(channel.elements, -1)
+    flat = np.ascontiguousarray(channel.surface).reshape(channel.elements, channel.direct.size)
     # Re(v · conj(g)) of two complex vectors is the real inner product of their parts.
     inner = flat.view(np.float64) @ delays.view(np.float64)
     return np.asarray(inner * (2.0 / (np.log(2.0) * heard.size)))

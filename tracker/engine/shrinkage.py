@@ -19,7 +19,7 @@ def shrink(surface: NDArray[np.complex128], posterior: float, prior: float) -> N
     With posterior variance p under prior variance p₀, data alone would leave p_d = p p₀ / (p₀ − p), and the estimate
     is v̂ = (1 − p/p₀)(v + noise). Let a direction truly have variance α p₀: its mean |v̂|² is
     (1 − p/p₀)² (α p₀ + p_d), which gives α; its estimate under prior α p₀ is v̂ / (1 + (p/p₀)(1/α − 1)). A direction
-    stronger than the prior would be raised by this; it is left as it is, because p is a mean over all patterns, and what
+    stronger than the prior would be raised by this; it is left as it is: p is a mean over all patterns, and what
     the patterns in use show is known far better than that.
 
     Parameters

@@ -20,7 +20,7 @@ from .channel import Channel
 from .config import Config
 from .cusum import Change
 from .drift import DriftMonitor
-from .estimator import Estimator, Fit
+from .estimator import Estimator, Fit, Frames
 from .events import Cause, Event, Mode, Pattern
 from .lifecycle import Happening, after
 from .rate import rate
@@ -155,9 +155,8 @@ class Tracker:
             For the optimizer.
         """
         stand = Stand(bursts[-1].run, bursts[-1].seq, bursts[-1].end_ns)
-        patterns = np.concatenate([burst.patterns[burst.keep] for burst in bursts])
-        response = np.concatenate([burst.response[burst.keep] for burst in bursts])
-        fit = self._estimator.update(patterns, response, stand.t_ns - bursts[0].t_ns, stand.t_ns)
+        frames = [Frames.of(burst) for burst in bursts]
+        fit = self._estimator.update(frames)
         self._count(bursts)
         events: list[Event] = []
         if self._gap:
@@ -166,12 +165,13 @@ class Tracker:
         change = self._follow_drift(fit)
         if change:
             events.append(drift_alarm(change, fit.elapsed_s, stand))
-        channel = self._estimator.channel()
+        # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
+        channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
         pattern, steps = self._consider(channel, len(bursts), budget, stand)
         if pattern:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
             events.append(replace(pattern, rate_low=rate_low(pattern.rate, spread)))
-        link = self._link(channel, bursts[-1].pattern_id, patterns, response)
+        link = self._link(channel, bursts[-1].pattern_id, frames)
         noise, time_constant_s = self._estimator.noise_power.tolist(), self._config.time_constant_s
         events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
         return Outcome(events, steps, fit.error)
@@ -255,16 +255,16 @@ class Tracker:
         self,
         channel: Channel,
         told: int | None,
-        patterns: NDArray[np.uint8],
-        response: NDArray[np.complex64],
+        frames: Sequence[Frames],
     ) -> Link:
         """How the pattern in use does: predicted, and measured on the frames that sounded it."""
         in_use = told if told is not None else self._refresher.latest
         chosen = self._refresher.states(in_use)
         if chosen is None:
             return Link(in_use, None, None)
-        same = np.flatnonzero((patterns == panel.pack(chosen)).all(axis=1))
+        shown = panel.pack(chosen)
+        sounded = [part.response[(part.patterns == shown).all(axis=1)] for part in frames]
         measured = None
-        if same.size:
-            measured = float(np.log2(1.0 + self._estimator.powers(response[same])).mean())
+        if any(part.shape[0] for part in sounded):
+            measured = float(np.log2(1.0 + self._estimator.powers(np.concatenate(sounded))).mean())
         return Link(in_use, measured, rate(channel, chosen))
