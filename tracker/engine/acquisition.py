@@ -91,7 +91,7 @@ def _refined(grid: Real, power: Real, peak: int) -> float:
 
 
 def _repeated(patterns: NDArray[np.uint8]) -> list[NDArray[np.intp]]:
-    """Indices of the frames of each pattern that occurs more than once."""
+    """Return the indices of the frames of each pattern that occurs more than once."""
     _, group, count = np.unique(patterns, axis=0, return_inverse=True, return_counts=True)
     group = group.reshape(-1)
     return [np.flatnonzero(group == index) for index in np.flatnonzero(count > 1)]

@@ -93,9 +93,22 @@ class Allowance:
         ndarray of float64, shape (n, G)
             Patterns within the allowance.
         """
-        gain = np.where(wish * self.base < 0.0, np.abs(wish), 0.0)
-        order = np.argsort(-gain / np.maximum(self._weight, 0.5), axis=1, kind="stable")
-        spent = np.cumsum(self._weight[order], axis=1)
-        turned = np.empty(wish.shape, dtype=bool)
-        np.put_along_axis(turned, order, spent <= self._most, axis=1)
-        return np.where(turned & (gain > 0.0), -self.base, self.base).astype(wish.dtype)
+        base, weight = self.base.astype(wish.dtype), self._weight.astype(wish.dtype)
+        gain = np.maximum(wish * -base, 0.0)
+        # A line turns for nothing where as many of its elements show one state as the other; the others cost one
+        # change or more each, so that no more of them than changes left can turn: those with most gain a change.
+        free = (weight == 0.0) & (gain > 0.0)
+        if self._most == 0:
+            return np.where(free, -base, base)
+        worth = np.where(free, 0.0, gain / np.maximum(weight, 1.0))
+        rows = np.arange(len(wish))[:, None]
+        last = wish.shape[1] - self._most
+        order = np.argsort(-worth, axis=1) if last <= 0 else np.argpartition(worth, last, axis=1)[:, last:]
+        if last > 0:
+            order = order[rows, np.argsort(-worth[rows, order], axis=1)]
+        spent = np.cumsum(weight[order], axis=1)
+        turned = np.zeros(wish.shape, dtype=bool)
+        turned[rows, order] = spent <= self._most
+        turned &= worth > 0.0
+        turned |= free
+        return np.where(turned, -base, base)

@@ -11,7 +11,7 @@ from . import noise, panel
 from .burst import Burst
 from .channel import Channel
 from .config import Config
-from .following import Following
+from .following import Following, Lock
 from .prior import prior_variances
 from .rls import BlockRls, forgetting
 from .shrinkage import shrink
@@ -106,6 +106,17 @@ class Estimator:
     def noise_power(self) -> NDArray[np.float64]:
         """Noise power on a tone, shape (R,), in the units of |response|²."""
         return self._noise.power
+
+    @property
+    def lock(self) -> Lock:
+        """The worst lock of all receivers; locked when nothing is followed."""
+        locks = [following.lock for following in self.following]
+        return next((lock for lock in (Lock.LOST, Lock.SEARCHING) if lock in locks), Lock.LOCKED)
+
+    @property
+    def phase(self) -> tuple[float, tuple[float, float]]:
+        """Frequency offset, Hz, and phases of direct and surface path, rad, of the first receiver followed."""
+        return (self.following[0].offset_hz, self.following[0].phases) if self.following else (0.0, (0.0, 0.0))
 
     def update(self, bursts: Sequence[Frames]) -> Fit:
         """Take in the frames of a block.
@@ -230,7 +241,7 @@ class Estimator:
         outputs: NDArray[np.complex128],
         time_ns: NDArray[np.int64],
     ) -> tuple[int, ...]:
-        """Turn the outputs back in place, and the estimate of the direct path along; return receivers that lost lock."""
+        """Turn the outputs back in place, and the direct path's estimate along; return receivers that lost lock."""
         if not self.following:
             return ()
         size = self._adjoint.shape[1]

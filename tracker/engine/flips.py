@@ -131,7 +131,9 @@ class _Search:
         self.states: Real = np.empty(0) if allowance is None else allowance.base
         self._value = -np.inf
         self._drawn = 0
-        self._batch = max(8, min(64, WORK // (form.width * (form.lines + form.tones))))
+        batch = min(64, WORK // (form.width * (form.lines + form.tones)))
+        # Staying within an allowance costs several times the products.
+        self._batch = max(8, batch if self._reach is None else batch // 4)
 
     @cached_property
     def _rough(self) -> RealForm:

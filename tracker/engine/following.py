@@ -127,7 +127,7 @@ class Following:
         return Turned(turned, difference[-1] * direct, lost)
 
     def lead(self, time_ns: int) -> float:
-        """Phase, rad, by which the direct path will have turned against the surface path at a time, from its estimate."""
+        """Phase by which the direct path will have turned against the surface path at a time, rad."""
         if self._time_ns is None:
             return 0.0
         ahead_s = (time_ns - self._time_ns) / 1e9

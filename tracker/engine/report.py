@@ -47,12 +47,18 @@ class Link:
     pattern : int or None
         Its id.
     measured, predicted : float or None
-        Rates, bit/s/Hz.
+        Rates, bit/s/Hz; nothing is predicted without lock.
+    offset_hz : float
+        Frequency offset followed.
+    phase_rad : (float, float)
+        Phase of the direct and of the surface path.
     """
 
     pattern: int | None
     measured: float | None
     predicted: float | None
+    offset_hz: float = 0.0
+    phase_rad: tuple[float, float] = (0.0, 0.0)
 
 
 def drift_alarm(change: Change, elapsed_s: float, stand: Stand) -> Alarm:
@@ -68,6 +74,22 @@ def drift_alarm(change: Change, elapsed_s: float, stand: Stand) -> Alarm:
         threshold=change.threshold,
         next_kind="unclear" if change.up else "",
         action="reacquire" if change.up else "new baseline",
+    )
+
+
+def lock_alarm(receiver: int, quality: float, threshold: float, stand: Stand) -> Alarm:
+    """Phases of a receiver can no longer be followed; its frames are left out until they can."""
+    return Alarm(
+        run=stand.run,
+        seq=stand.seq,
+        t_ns=stand.t_ns,
+        since_ns=stand.t_ns,
+        kind="lock",
+        receiver=receiver,
+        statistic=quality,
+        threshold=threshold,
+        next_kind="channel",
+        action="search",
     )
 
 
@@ -114,8 +136,8 @@ def states(
             innovation=tuple(float(ratio) for ratio in fit.ratio),
             rate_measured=link.measured,
             rate_predicted=link.predicted,
-            offset_hz=0.0,
-            phase_rad=(0.0, 0.0),
+            offset_hz=link.offset_hz,
+            phase_rad=link.phase_rad,
             time_constant_ms=time_constant_s * 1e3,
             pattern=link.pattern,
             faults=(),

@@ -22,11 +22,12 @@ from .cusum import Change
 from .drift import DriftMonitor
 from .estimator import Estimator, Fit, Frames
 from .events import Cause, Event, Mode, Pattern
+from .following import KEPT, Lock
 from .lifecycle import Happening, after
 from .rate import rate
 from .refresh import Refresher, rate_low, rate_spread
 from .refusal import Reason
-from .report import Counts, Link, Stand, drift_alarm, gap_alarm, states
+from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, states
 
 # On a drift alarm P goes this share of the way back to the prior: new frames then outweigh old ones within a sweep.
 LOOSEN_ON_CHANGE = 0.9
@@ -162,6 +163,8 @@ class Tracker:
         if self._gap:
             events.append(gap_alarm(*self._gap, stand))
             self._gap = None
+        for receiver in fit.lost:
+            events.append(lock_alarm(receiver, self._estimator.following[receiver].quality, KEPT, stand))
         change = self._follow_drift(fit)
         if change:
             events.append(drift_alarm(change, fit.elapsed_s, stand))
@@ -224,6 +227,9 @@ class Tracker:
         if fit.elapsed_s > SILENCE_TIME_CONSTANTS * self._config.time_constant_s and self._mode is Mode.TRACKING:
             self._mode = after(self._mode, Happening.SILENCE)
             self._start_over()
+        if fit.lost:
+            self._mode = after(self._mode, Happening.CHANGE)
+            self._start_over()
         ratio = float(fit.ratio.mean())
         if self._frames_since >= self._estimator.ready_after and ratio < WORST_FIT:
             self._mode = after(self._mode, Happening.READY)
@@ -243,7 +249,10 @@ class Tracker:
         if self._adopted is not None:
             adopted, self._adopted = self._adopted, None
             return self._refresher.adopt(channel, adopted, stand), 0
-        if self._mode is Mode.HELD or not (self._refresher.due(bursts) or self._pending_cause):
+        # Without lock nothing is known of what another pattern would give: the one in use stays.
+        if self._mode is Mode.HELD or self._estimator.lock is Lock.LOST:
+            return None, 0
+        if not (self._refresher.due(bursts) or self._pending_cause):
             return None, 0
         cause = self._pending_cause or Cause.REFRESH
         if self._refresher.latest is None:
@@ -261,10 +270,11 @@ class Tracker:
         in_use = told if told is not None else self._refresher.latest
         chosen = self._refresher.states(in_use)
         if chosen is None:
-            return Link(in_use, None, None)
+            return Link(in_use, None, None, *self._estimator.phase)
         shown = panel.pack(chosen)
         sounded = [part.response[(part.patterns == shown).all(axis=1)] for part in frames]
         measured = None
         if any(part.shape[0] for part in sounded):
             measured = float(np.log2(1.0 + self._estimator.powers(np.concatenate(sounded))).mean())
-        return Link(in_use, measured, rate(channel, chosen))
+        predicted = rate(channel, chosen) if self._estimator.lock is not Lock.LOST else None
+        return Link(in_use, measured, predicted, *self._estimator.phase)
