@@ -8,11 +8,13 @@ from pathlib import Path
 
 from threadpoolctl import threadpool_limits
 
-from tracker.settings import Delay, Estimator, Link, Settings
+from tracker.assembly import configure
+from tracker.settings import Delay, Estimator, Link, Settings, SettingsError, parse
 
 from .errors import OfflineError
 from .progress import Bars, progress_bar
 from .survey import Survey, survey
+from .trial import Trial, try_out
 
 # Delay samples added at each end, for what the log happened not to show.
 MARGIN = 1
@@ -39,7 +41,7 @@ def draft(path: Path, bars: Bars | None = None) -> str:
     ----------
     path : Path
     bars : Bars or None
-        Told how far the log is read; it is read twice.
+        Told how far the work is: the log is read twice, then time constants are tried on parts of it.
 
     Returns
     -------
@@ -51,14 +53,35 @@ def draft(path: Path, bars: Bars | None = None) -> str:
     LogError, OfflineError
         One line for the user.
     """
-    known = survey(path, (bars or Bars(None)).begin)
+    bars = bars or Bars(None)
+    known = survey(path, bars.begin)
+    text = _text(path, known, None)
+    trial = _trial(path, known, text, bars)
+    return text if trial is None else _text(path, known, trial)
+
+
+def _text(path: Path, known: Survey, trial: Trial | None) -> str:
     lines = [
         f"# Settings to start from, derived from {path.name} by `ris-tracker suggest`.",
         f"# What a log cannot tell is marked {CORRECT[:-1]}; `ris-tracker check` says what the rest amounts to.",
     ]
-    for table in (_link, _panel, _tones, _delay, _estimator, _follow, _refresh):
+    for table in (_link, _panel, _tones, _delay):
+        lines += ["", f"[{table.__name__[1:]}]", *table(known)]
+    lines += ["", "[estimator]", *_estimator(known, trial)]
+    for table in (_follow, _refresh):
         lines += ["", f"[{table.__name__[1:]}]", *table(known)]
     return "\n".join(lines) + "\n" + _others(known.settings)
+
+
+def _trial(path: Path, known: Survey, text: str, bars: Bars) -> Trial | None:
+    """Try time constants under the other settings, when the log is long enough and the work bearable."""
+    if not known.stretches:
+        return None
+    try:
+        config = configure(parse(text), path.parent)
+    except SettingsError:  # a file that the settings in the log name is not here
+        return None
+    return try_out(known.stretches, known.warm, config, bars.begin(f"{path.name}, time constants"))
 
 
 def suggest(path: Path, progress: bool = True) -> int:
@@ -74,7 +97,7 @@ def suggest(path: Path, progress: bool = True) -> int:
     LogError, OfflineError
         One line for the user.
     """
-    with threadpool_limits(limits=1), progress_bar(progress, 2) as bars:
+    with threadpool_limits(limits=1), progress_bar(progress, 1) as bars:
         text = draft(path, bars)
     sys.stdout.write(text)
     return 0
@@ -158,29 +181,37 @@ def _delay(known: Survey) -> Iterator[str]:
     yield f"before = {before}"
 
 
-def _estimator(known: Survey) -> Iterator[str]:
+def _estimator(known: Survey, trial: Trial | None) -> Iterator[str]:
     kind = known.settings.estimator.forgetting if known.settings else Estimator().forgetting
-    sweep = f"{known.size.elements + 1} unknowns take {_rounded(_sweep_ms(known))} ms to sound once."
-    aging = known.aging
     yield f'forgetting = "{kind}"'
-    if aging is None:
+    aging = known.aging
+    if aging is not None and aging.stale > MOST_STALE:
         yield from _why(
-            f"{CORRECT} the log does not show how fast the channel changes, because no pattern recurs from burst to "
-            f"burst or nothing tells signal from noise. {sweep}"
+            f"Under the commonest pattern {100 * aging.stale:.0f} % of the channel's power changes before every "
+            'element is sounded once. More frames a second, or fewer unknowns ([aperture] basis = "tiles"), will help '
+            "more than any time constant."
         )
-        yield f"time_constant_ms = {Estimator().time_constant_ms}"
-        return
-    yield from _why(
-        "From how the response under the commonest pattern changes, looked at over lags of up to "
-        f"{_rounded(aging.longest_s)} s: noise and age of the estimate balance when it remembers "
-        f"{_rounded(1e3 * aging.memory_s)} ms. {sweep}"
-    )
-    if aging.stale > MOST_STALE:
+    sweep = f"{known.size.elements + 1} unknowns take {_rounded(_sweep_ms(known))} ms to sound once."
+    if trial is not None:
+        told = ", ".join(f"{_rounded(error)} at {_rounded(1e3 * tau)} ms" for tau, error in trial.tried)
         yield from _why(
-            f"Of the channel's power {100 * aging.stale:.0f} % changes before every element is sounded once. More "
-            'frames a second, or fewer unknowns ([aperture] basis = "tiles"), will help more than any time constant.'
+            "The shortest with which the estimator predicts the next burst about as well as with any. Mean squared "
+            f"errors over parts of the log, in units of the noise: {told}. {sweep}"
         )
-    seconds = 2.0 * aging.memory_s if kind == "exponential" else aging.coherence_s
+        seconds = trial.time_constant_s
+    elif aging is not None:
+        yield from _why(
+            "From how the response under the commonest pattern changes, looked at over lags of up to "
+            f"{_rounded(aging.longest_s)} s: noise and age of the estimate balance when it remembers "
+            f"{_rounded(1e3 * aging.memory_s)} ms. {sweep}"
+        )
+        seconds = 2.0 * aging.memory_s if kind == "exponential" else aging.coherence_s
+    else:
+        yield from _why(
+            f"{CORRECT} the log does not show how fast the channel changes: too few bursts, or no pattern that recurs "
+            f"from burst to burst. {sweep}"
+        )
+        seconds = Estimator().time_constant_ms / 1e3
     yield f"time_constant_ms = {_rounded(1e3 * seconds)}"
 
 

@@ -19,6 +19,7 @@ from .aging import Change, best_memory, coherence_time, measure_change
 from .contents import Contents, Sizes
 from .errors import OfflineError
 from .extent import extent
+from .trial import plan
 
 Complex = NDArray[np.complex128]
 
@@ -26,10 +27,10 @@ Complex = NDArray[np.complex128]
 MOST_SNAPSHOTS = 400
 # Memory for the responses under the reference pattern, bytes.
 MOST_REFERENCE = 128 * 1024 * 1024
-# Following the phase is worth while when it lowers the error by this factor.
-WORTH_FOLLOWING = 0.5
-# Phase is told from noise only when the reference stands this far above it.
-LEAST_POWER = 10.0
+# Following the phase is worth while when it lowers the error by this factor,
+WORTH_FOLLOWING = 0.7
+# and the error is no less than this share of the noise.
+LEAST_ERROR = 0.1
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,6 +83,10 @@ class Survey:
         Median distance of bursts, s.
     clock_s : float
         Largest distance between a burst's time and its arrival, s.
+    stretches : list of list of Burst
+        Bursts to try time constants on; empty when there are too few, or too much work in them.
+    warm : int
+        Bursts of each to begin with.
     """
 
     link: str
@@ -95,6 +100,8 @@ class Survey:
     frame_s: float
     interval_s: float | None
     clock_s: float
+    stretches: list[list[Burst]]
+    warm: int
 
 
 def survey(path: Path, begin: Callable[[str], Callable[[int, int], None]]) -> Survey:
@@ -141,6 +148,8 @@ def survey(path: Path, begin: Callable[[str], Callable[[int, int], None]]) -> Su
         frame_s=frame_s,
         interval_s=float(np.median(contents.interval_s)) if contents.interval_s else None,
         clock_s=float(np.max(np.abs(contents.arrival_s))),
+        stretches=samples.stretches,
+        warm=samples.plan.warm if samples.plan else 0,
     )
 
 
@@ -181,6 +190,9 @@ class _Samples:
         self._most = MOST_REFERENCE // (8 * size.receivers * size.tones)
         commonest = contents.commonest
         self._reference = np.frombuffer(commonest[0], np.uint8) if commonest else None
+        burst_bytes = contents.bytes // contents.bursts
+        self.plan = plan(contents.bursts, size.frames, size.elements + 1, burst_bytes)
+        self.stretches: list[list[Burst]] = [[] for _ in self.plan.starts] if self.plan else []
         self._snapshots: list[NDArray[np.complex64]] = []
         self._time_ns: list[int] = []
         self._counts: list[int] = []
@@ -199,6 +211,9 @@ class _Samples:
                 continue
             if count % self._stride == 0:
                 self._snapshots.append(burst.response[int(np.argmax(burst.keep))])
+            stretch = self.plan.index(count) if self.plan else None
+            if stretch is not None:
+                self.stretches[stretch].append(burst)
             count += 1
             self._take_reference(burst)
             advanced(reader.tell(), reader.size)
@@ -236,7 +251,7 @@ class _Samples:
         unknowns = self._size.elements + 1
         memory, error = best_memory(plain, delays, unknowns, frame_s)
         other, less = best_memory(turned, delays, unknowns, frame_s)
-        follow = less < WORTH_FOLLOWING * error and plain.power > LEAST_POWER
+        follow = less < WORTH_FOLLOWING * error and error > LEAST_ERROR * delays
         change, memory = (turned, other) if follow else (plain, memory)
         stale = float(change.at(np.array([frame_s * unknowns]))[0]) / (2.0 * change.power)
         return Aging(memory, coherence_time(change, memory), float(change.lag_s[-1]), stale, follow)
