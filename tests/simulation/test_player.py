@@ -9,6 +9,7 @@ from collections.abc import Iterator
 from itertools import pairwise
 from pathlib import Path
 from types import SimpleNamespace
+from typing import cast
 
 import msgpack
 import numpy as np
@@ -21,6 +22,7 @@ from tracker.engine.panel import unpack
 from tracker.messages import decode_pilots, encode_pattern
 from tracker.simulation.__main__ import main
 from tracker.simulation.player import Endpoints, Player
+from tracker.simulation.searcher import Searcher
 from tracker.simulation.testbed import Testbed, TestbedConfig
 from tracker.simulation.yard import scenario
 
@@ -135,6 +137,51 @@ def test_machine_too_slow_for_the_pace_keeps_times_true_and_says_so(wires: Simpl
     times = [burst.t_ns for burst in bursts]
     assert times == sorted(times)
     assert all(after - before >= 4_000_000 for before, after in pairwise(times))
+
+
+class Gone:
+    """A searcher whose process has been killed."""
+
+    busy = False
+
+    def ask(self, *_: object) -> None:
+        raise BrokenPipeError
+
+    def answer(self) -> None:
+        return None
+
+
+def test_bursts_go_on_when_the_search_has_died(wires: SimpleNamespace) -> None:
+    """The user is told once; bursts are worth more than knowing what is true."""
+    said: list[str] = []
+    testbed = Testbed(TestbedConfig(scenario("quiet").config, frames=4), 1)
+    with Endpoints(wires.pilots, wires.publish, "yard") as endpoints:
+        player = Player(testbed, endpoints, "yard", 500.0, Hands(100_000), said.append, cast(Searcher, Gone()))
+        player.run(most_bursts=20)
+    assert player.played.bursts == 20
+    assert len(said) == 1
+    assert "bursts go on" in said[0]
+
+
+def test_searcher_answers_what_the_testbed_itself_reports() -> None:
+    """Rate, pattern and words of the other process are those of a testbed made here from the same seed."""
+    config, start_ns = scenario("blocked").testbed, 5_000_000_000
+    states = np.where(np.arange(256) % 7 == 0, 1, -1).astype(np.int8)
+    searcher = Searcher(config, 3, start_ns, 50)
+    try:
+        searcher.ask(start_ns + 20_000_000_000, 12, states)
+        assert searcher.wait(PATIENCE_MS / 1e3)
+        known = searcher.answer()
+        assert searcher.answer() is None
+    finally:
+        searcher.close()
+    testbed = Testbed(config, 3, start_ns=start_ns)
+    testbed.apply(12, states)
+    report = testbed.report(start_ns + 20_000_000_000)
+    assert known is not None
+    assert (known.t_ns, known.pattern_id, known.rate) == (report.t_ns, 12, report.rate)
+    assert known.happening == "direct path blocked"
+    assert known.best > known.rate
 
 
 def test_unusable_pattern_is_reported_and_the_one_in_force_stays(wires: SimpleNamespace) -> None:

@@ -95,11 +95,12 @@ def _play(args: argparse.Namespace) -> int:
 
     scene = _chosen(args)
     now_ns = steady_clock()
-    testbed = Testbed(scene.testbed, args.seed, run=secrets.randbits(63), start_ns=now_ns())
+    start_ns = now_ns()
+    testbed = Testbed(scene.testbed, args.seed, run=secrets.randbits(63), start_ns=start_ns)
     pace = args.bursts_per_s or scene.bursts_per_s
     try:
         with Endpoints(args.pilots, args.publish, args.link) as endpoints:
-            searcher = None if args.no_truth else Searcher(args.search_steps)
+            searcher = None if args.no_truth else Searcher(scene.testbed, args.seed, start_ns, args.search_steps)
             try:
                 player = Player(testbed, endpoints, args.link, pace, now_ns, _say, searcher, args.truth_every)
                 with _Signals(player.stop):

@@ -129,9 +129,3 @@ class Sway:
         angle = 2 * np.pi * t_s[:, None] / np.asarray(self.period_s)
         position: NDArray[np.float64] = self.about.at(t_s) + np.asarray(self.amplitude) * np.sin(angle)
         return position
-
-
-def speed_mps(track: Track, t_s: float, step_s: float = 1e-3) -> float:
-    """Speed of a track at a time, m/s, by central difference over `step_s`."""
-    before, after = track.at(np.array([t_s - step_s / 2, t_s + step_s / 2]))
-    return float(np.linalg.norm(after - before) / step_s)

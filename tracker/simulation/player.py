@@ -10,8 +10,8 @@ import msgpack
 import zmq
 
 from tracker.messages import Refused, decode_pattern, encode_pilots, topic
-from tracker.simulation.searcher import Searcher
-from tracker.simulation.testbed import Report, Testbed
+from tracker.simulation.searcher import Known, Searcher
+from tracker.simulation.testbed import Testbed
 
 MOST_BURST = 512 * 1024
 """Bytes of a burst; larger messages cost several times more a byte."""
@@ -116,7 +116,7 @@ class Player:
     say : callable
         Takes a line for the user.
     searcher : Searcher or None
-        Finds the best rate for `truth`; without it none is sent.
+        Works out what is true; without it no `truth` is sent.
     truth_every_s : float
     """
 
@@ -218,28 +218,27 @@ class Player:
         try:
             answer = searcher.answer()
             if answer is not None:
-                self._send_truth(*answer)
+                self._send_truth(answer)
             now_ns = self._now_ns()
             if now_ns >= self._truth_due_ns and not searcher.busy:
                 self._truth_due_ns = now_ns + self._truth_every_ns
-                searcher.ask(self._testbed.report(now_ns))
+                searcher.ask(now_ns, self._testbed.pattern_id, self._testbed.states)
         except (EOFError, OSError):
             self._searcher = None
             self._say("the search for the best rate ended by itself; bursts go on, what is true is no longer sent")
 
-    def _send_truth(self, report: Report, best: float) -> None:
+    def _send_truth(self, known: Known) -> None:
         run, seq = self._last or (0, 0)
         values: dict[str, Any] = {
             "v": 1,
             "link": self._link,
             "run": run,
             "seq": seq,
-            "t_ns": report.t_ns,
-            "pattern": report.pattern_id,
-            "rate": report.rate,
-            # Both are the same number, rounded differently, when the pattern in force is the best.
-            "best": max(best, report.rate),
-            "event": report.happening,
+            "t_ns": known.t_ns,
+            "pattern": known.pattern_id,
+            "rate": known.rate,
+            "best": known.best,
+            "event": known.happening,
         }
         self._endpoints.out.send_multipart([self._truth_topic, msgpack.packb(values)])
         self.played.truths += 1

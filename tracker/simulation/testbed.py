@@ -97,6 +97,11 @@ class Testbed:
         return self.config.frames * self.config.frame_ns
 
     @property
+    def pattern_id(self) -> int | None:
+        """Id of the pattern in force; None before the first."""
+        return self._pattern_id
+
+    @property
     def states(self) -> NDArray[np.int8]:
         """The pattern in force, shape (N,)."""
         return self._states

@@ -14,7 +14,6 @@ from tracker.simulation.config import DirectConfig, SceneConfig, Terminal, ToneG
 from tracker.simulation.geometry import PanelConfig, Scatterer, Wall
 from tracker.simulation.motion import Still, Sway, Track, Waypoints
 from tracker.simulation.schedule import NEVER, Block, Episode
-from tracker.simulation.sounding import SoundingConfig
 from tracker.simulation.testbed import TestbedConfig
 
 MAST = (0.0, 0.0, 22.0)
@@ -154,7 +153,6 @@ def _slow_carrier() -> Scenario:
         "slow-carrier",
         "a carrier waits, then moves along the lane at 0.05 to 0.2 m/s",
         TestbedConfig(scene),
-        bursts_per_s=150.0,
         time_constant_ms=150.0,
     )
 
@@ -184,7 +182,7 @@ def _moving() -> Scenario:
         "moving",
         "a carrier drives up and down the lane at 1 to 3 m/s",
         TestbedConfig(scene),
-        bursts_per_s=200.0,
+        bursts_per_s=150.0,
         time_constant_ms=60.0,
         follow_phase=True,
     )
@@ -198,7 +196,7 @@ def _two_carriers() -> Scenario:
     return Scenario(
         "two-carriers",
         "one carrier idles, shaking by a millimetre or two, a second one sets off at 10 s",
-        TestbedConfig(scene),
+        TestbedConfig(scene, frames=32),
         time_constant_ms=200.0,
     )
 
@@ -221,8 +219,3 @@ def scenario(name: str) -> Scenario:
         When there is none.
     """
     return SCENARIOS[name]()
-
-
-def with_sounding(scene: Scenario, sounding: SoundingConfig) -> Scenario:
-    """Change what a scenario's frames sound."""
-    return replace(scene, testbed=replace(scene.testbed, sounding=sounding))
