@@ -16,9 +16,9 @@ FOLDER = Path(__file__).resolve().parent
 sys.path.insert(0, str(FOLDER.parent))  # so that the demo is found, and these modules as `pictures.NAME`
 
 import demo  # noqa: E402
+
 from pictures import loop, screen  # noqa: E402
 from pictures.theme import THEMES  # noqa: E402
-
 from tracker.view import terminal  # noqa: E402
 from tracker.view.model import LinkModel  # noqa: E402
 from tracker.view.sections import Scene  # noqa: E402

@@ -7,9 +7,10 @@ gaps, become shapes.
 from collections.abc import Iterator, Sequence
 from xml.sax.saxutils import escape
 
-from pictures.theme import Theme
 from rich.console import Console, RenderableType
 from rich.segment import Segment
+
+from pictures.theme import Theme
 
 WIDE, HIGH = 9.0, 18.0  # of a character, px
 MARGIN = 16.0
