@@ -63,6 +63,8 @@ def find_offset(
     groups = _repeated(patterns)
     if not groups and overlap is None:
         return None
+    # Beyond half the frame rate an offset cannot be told from one within.
+    most_hz = min(most_hz, 0.5 * (time_s.shape[0] - 1) / span)
     count = int(2 * most_hz * span * FINENESS) + 1
     grid = np.linspace(-most_hz, most_hz, max(count, 3))
     turns = np.exp(-2j * np.pi * np.outer(grid, time_s))

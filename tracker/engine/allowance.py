@@ -63,7 +63,7 @@ class Allowance:
             Lines in falling order of slope, except that where nothing is left, lines turned before turn back first.
         """
         left, cost = self.left(states), self.cost(states)
-        ranked = np.argsort(-slope, kind="stable")
+        ranked = np.argsort(-slope)
         turning = list(ranked[cost[ranked] > 0][:most])
         returning = list(ranked[cost[ranked] <= 0][:most])
         queue: list[np.intp] = []
@@ -96,19 +96,11 @@ class Allowance:
         base, weight = self.base.astype(wish.dtype), self._weight.astype(wish.dtype)
         gain = np.maximum(wish * -base, 0.0)
         # A line turns for nothing where as many of its elements show one state as the other; the others cost one
-        # change or more each, so that no more of them than changes left can turn: those with most gain a change.
+        # change or more each, so no more of them than changes are left can turn: those that gain most for a change.
         free = (weight == 0.0) & (gain > 0.0)
-        if self._most == 0:
-            return np.where(free, -base, base)
         worth = np.where(free, 0.0, gain / np.maximum(weight, 1.0))
-        rows = np.arange(len(wish))[:, None]
-        last = wish.shape[1] - self._most
-        order = np.argsort(-worth, axis=1) if last <= 0 else np.argpartition(worth, last, axis=1)[:, last:]
-        if last > 0:
-            order = order[rows, np.argsort(-worth[rows, order], axis=1)]
-        spent = np.cumsum(weight[order], axis=1)
-        turned = np.zeros(wish.shape, dtype=bool)
-        turned[rows, order] = spent <= self._most
-        turned &= worth > 0.0
-        turned |= free
+        order = np.argsort(-worth, axis=1)[:, : self._most]
+        turned = free.copy()
+        turned[np.arange(len(wish))[:, None], order] |= np.cumsum(weight[order], axis=1) <= self._most
+        turned &= gain > 0.0
         return np.where(turned, -base, base)

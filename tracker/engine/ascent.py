@@ -21,7 +21,7 @@ SINGLES = 16
 """Lines tried singly in a step."""
 PAIRED = 16
 """Lines whose pairs are looked at when no single line gains."""
-ROUNDING = 1e-12
+ROUNDING = 1e-13
 """Relative gain below which a difference may be rounding."""
 
 Indices = NDArray[np.intp]
@@ -78,9 +78,9 @@ class Ascent:
         """Work out response and value of the pattern, the slope of each line and the bound on what it gains."""
         form = self._form
         self._heard = form.heard(self._sums)
-        load = form.load(self._heard)
-        self._weight = 1.0 / load
-        self.value = float(bits(load[None])[0])
+        power = form.power(self._heard)
+        self._weight = 1.0 / (1.0 + power)
+        self.value = float(bits(power[None])[0])
         np.matmul(form.surface, form.back(form.weigh(self._heard, self._weight)), out=self._slope)
         self._slope *= self.states
         np.negative(self._slope, out=self._slope)
@@ -196,7 +196,7 @@ class Ascent:
         """Give the value after each move, shape (n,), for changes of the sums, shape (n, L)."""
         heard = self._form.heard(moves)
         heard += self._heard
-        return bits(self._form.load(heard))
+        return bits(self._form.power(heard))
 
     def _take(self, lines: Indices, move: Real, value: float) -> bool:
         """Turn lines if the value found for that is a gain."""

@@ -1,6 +1,6 @@
 """From frames to channel estimate: delay basis, noise, prior, least squares, shrinkage, in this order."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -18,6 +18,8 @@ from .shrinkage import shrink
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
 MOST_FRAMES = 256
+# Time over which phases are taken to turn evenly: in it the random walks of `phases` bend them by a tenth of a radian.
+STRETCH_NS = 10_000_000
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -41,6 +43,14 @@ class Frames:
         """Take the frames of a burst that are fit for use."""
         kept = np.flatnonzero(burst.keep)
         return cls(burst.patterns[kept], burst.response[kept], burst.t_ns + kept * burst.dt_ns)
+
+    def stretches(self, most_ns: int) -> Iterator["Frames"]:
+        """Cut into parts that span no more than a time."""
+        start = 0
+        while start < self.time_ns.shape[0]:
+            stop = int(np.searchsorted(self.time_ns, self.time_ns[start] + most_ns, side="right"))
+            yield Frames(self.patterns[start:stop], self.response[start:stop], self.time_ns[start:stop])
+            start = stop
 
     @classmethod
     def together(cls, parts: Sequence["Frames"]) -> "Frames":
@@ -126,10 +136,13 @@ class Estimator:
         bursts : sequence of Frames
             One or more, in order.
         """
+        together = Frames.together(bursts)
+        if self._rls is None:
+            self._rls = self._begin(together)
         if not self.following:
-            return self._take(Frames.together(bursts))
-        # Phases turn too far over several bursts to be taken as one; each is followed by itself.
-        fits = [self._take(frames) for frames in bursts]
+            return self._take(self._rls, together)
+        # Over a long time phases do not turn evenly: each stretch is followed by itself.
+        fits = [self._take(self._rls, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
         degrees = sum(fit.degrees for fit in fits)
         return Fit(
             ratio=np.asarray(sum(fit.ratio * fit.degrees for fit in fits) / degrees),
@@ -139,30 +152,30 @@ class Estimator:
             lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
         )
 
-    def _take(self, taken: Frames) -> Fit:
+    def _begin(self, frames: Frames) -> BlockRls:
+        """Start from the first block: how strong the paths may be."""
+        tones, coefficients = self._project(frames)
+        if not self._noise.known:
+            self._measure_noise(frames.patterns, tones, coefficients)
+        outputs = self._in_noise_units(coefficients)
+        self._end_ns = int(frames.time_ns[0])
+        return BlockRls(prior_variances(self._regressors(frames), outputs), outputs.shape[1])
+
+    def _take(self, rls: BlockRls, taken: Frames) -> Fit:
         """Take in frames that one model of the phases serves."""
-        patterns, response, time_ns = taken.patterns, taken.response, taken.time_ns
-        tones = response.astype(np.complex128)
-        coefficients = tones @ self._adjoint
-        self._measure_noise(patterns, tones, coefficients)
-        frames = coefficients.shape[0]
-        scale = 1.0 / np.sqrt(self._noise.power)
-        outputs = (coefficients * scale[:, None]).reshape(frames, -1)
-        regressors = self._config.aperture.regressors(panel.unpack(patterns, self._config.elements))
-        first = self._rls is None
-        if self._rls is None:
-            self._rls = BlockRls(prior_variances(regressors, outputs), outputs.shape[1])
-        end_ns = int(time_ns[-1])
-        elapsed_s = max(end_ns - (int(time_ns[0]) if first else self._end_ns), 0) / 1e9
+        tones, coefficients = self._project(taken)
+        self._measure_noise(taken.patterns, tones, coefficients)
+        outputs, regressors = self._in_noise_units(coefficients), self._regressors(taken)
+        frames, end_ns = outputs.shape[0], int(taken.time_ns[-1])
+        elapsed_s = max(end_ns - self._end_ns, 0) / 1e9
         self._end_ns = end_ns
-        if not first:
-            self._rls.forget(*forgetting(self._config.forgetting, elapsed_s, self._config.time_constant_s))
-        lost = self._follow(self._rls, patterns, regressors, outputs, time_ns)
+        rls.forget(*forgetting(self._config.forgetting, elapsed_s, self._config.time_constant_s))
+        lost = self._follow(rls, taken, regressors, outputs)
         power = np.zeros(self._config.receivers)
         error = 0.0
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
-            innovation, white = self._rls.update(regressors[part], outputs[part])
+            innovation, white = rls.update(regressors[part], outputs[part])
             power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
             error += float(_power(innovation).sum())
         degrees = frames * self._adjoint.shape[1]
@@ -236,10 +249,9 @@ class Estimator:
     def _follow(
         self,
         rls: BlockRls,
-        patterns: NDArray[np.uint8],
+        frames: Frames,
         regressors: NDArray[np.float64],
         outputs: NDArray[np.complex128],
-        time_ns: NDArray[np.int64],
     ) -> tuple[int, ...]:
         """Turn the outputs back in place, and the direct path's estimate along; return receivers that lost lock."""
         if not self.following:
@@ -251,13 +263,30 @@ class Estimator:
         for receiver, following in enumerate(self.following):
             part = slice(receiver * size, (receiver + 1) * size)
             turned = following.turn(
-                patterns, outputs[:, part], rls.coefficients[0, part], surface[:, part], time_ns, weight
+                frames.patterns,
+                outputs[:, part],
+                rls.coefficients[0, part],
+                surface[:, part],
+                frames.time_ns,
+                weight,
             )
             outputs[:, part] = turned.outputs
             rls.coefficients[0, part] = turned.direct
             if turned.lost:
                 lost.append(receiver)
         return tuple(lost)
+
+    def _project(self, frames: Frames) -> tuple[NDArray[np.complex128], NDArray[np.complex128]]:
+        """Bring frames to double precision: on the tones, and on the delay basis."""
+        tones = frames.response.astype(np.complex128)
+        return tones, tones @ self._adjoint
+
+    def _in_noise_units(self, coefficients: NDArray[np.complex128]) -> NDArray[np.complex128]:
+        scale = 1.0 / np.sqrt(self._noise.power)
+        return np.asarray((coefficients * scale[:, None]).reshape(coefficients.shape[0], -1))
+
+    def _regressors(self, frames: Frames) -> NDArray[np.float64]:
+        return self._config.aperture.regressors(panel.unpack(frames.patterns, self._config.elements))
 
     def _learned(self) -> BlockRls:
         if self._rls is None:

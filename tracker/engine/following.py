@@ -108,8 +108,9 @@ class Following:
         """
         middle_ns = int(time_ns[0] + (time_ns[-1] - time_ns[0]) // 2)
         time_s = (time_ns - middle_ns) / 1e9
-        if self._time_ns is not None:
-            self.loops.predict((middle_ns - self._time_ns) / 1e9)
+        elapsed_s = (middle_ns - self._time_ns) / 1e9 if self._time_ns is not None else 0.0
+        self.loops.sense_spacing((time_s[-1] - time_s[0]) / (time_s.shape[0] - 1) if time_s.shape[0] > 1 else elapsed_s)
+        self.loops.predict(elapsed_s)
         self._time_ns = middle_ns
         direct = direct * np.exp(-1j * self._stands_at)
         overlap = Overlap.of(outputs, direct, surface)

@@ -27,8 +27,16 @@ OWN_PHASE_WALK = 0.5
 # Random walk of the rates, (rad/s)²/s: as above; a terminal at 3.75 GHz that brakes with 1 m/s² gives 80 rad/s in 1 s.
 COMMON_RATE_WALK = 2000.0
 OWN_RATE_WALK = 1000.0
-# Uncertainty of the rates before anything is known, rad/s: motion, once the common offset is found.
-FIRST_RATE = 200.0
+# Variance of the predicted phase, rad², from which the steps do not start at the prediction: they might not find home.
+FAR = 0.1
+# Uncertainty of the rates before anything is known, rad/s: what is common, and what motion makes different.
+FIRST_COMMON_RATE = 200.0
+FIRST_OWN_RATE = 200.0
+# Common turn from frame to frame, rad, that is granted at first: beyond half a turn rates are not told apart anyway.
+GRANTED_COMMON = 2.0
+# Spacing of the frames, s, up to which motion is followed in full. Slower sounding cannot follow motion, and must not
+# let the surface's phase stray from the direct path's while the surface is not known yet.
+FULL_MOTION_S = 1e-3
 
 DIRECT, SURFACE = 0, 2  # where the phase of either path stands in the state; its rate follows
 
@@ -90,7 +98,15 @@ class PhaseLoops:
 
     def __init__(self) -> None:
         self.state: Real = np.zeros(4)
-        self.covariance: Real = np.diag([1.0, FIRST_RATE**2, 1.0, FIRST_RATE**2])
+        self.covariance: Real = np.eye(4)
+        self._motion = 0.0  # share of motion that is followed; 0 until the spacing of the frames is known
+
+    def sense_spacing(self, spacing_s: float) -> None:
+        """Learn how far apart frames are, once: it bounds what can be followed."""
+        if self._motion or spacing_s <= 0:
+            return
+        self._motion = min(1.0, FULL_MOTION_S / spacing_s)
+        self._forget_rates(min(FIRST_COMMON_RATE, GRANTED_COMMON / spacing_s))
 
     def predict(self, elapsed_s: float) -> None:
         """Go forward in time."""
@@ -102,8 +118,7 @@ class PhaseLoops:
     def turn_rates(self, rate: float, spread: float) -> None:
         """Take a common rate found by acquisition, rad/s, known to ± `spread`."""
         self.state[[1, 3]] = rate
-        self.covariance[[1, 3], :] = self.covariance[:, [1, 3]] = 0.0
-        self.covariance[1, 1] = self.covariance[3, 3] = spread**2
+        self._forget_rates(spread)
         self.covariance[[0, 2], [0, 2]] = np.pi**2
 
     def measure(self, overlap: Overlap, time_s: Real, weight: float) -> None:
@@ -119,6 +134,8 @@ class PhaseLoops:
         """
         prior_state, information = self.state, np.linalg.inv(self.covariance)
         state = prior_state.copy()
+        if self.covariance[SURFACE, SURFACE] > FAR:
+            state[[DIRECT, SURFACE]] += self._common_turn(overlap, time_s, state)
         measured = np.zeros((4, 4))
         for _ in range(STEPS):
             slope, measured = self._slope(overlap, time_s, state)
@@ -130,6 +147,12 @@ class PhaseLoops:
         covariance = np.linalg.inv(information + measured)
         self.covariance = 0.5 * (covariance + covariance.T)
 
+    def _forget_rates(self, common: float) -> None:
+        """Set the uncertainty of the rates: what is common to both, and what each has of its own."""
+        self.covariance[[1, 3], :] = self.covariance[:, [1, 3]] = 0.0
+        own = FIRST_OWN_RATE * self._motion**1.5
+        self.covariance[np.ix_([1, 3], [1, 3])] = common**2 + own**2 * np.eye(2)
+
     def phases(self, time_s: Real) -> tuple[Real, Real]:
         """Phases of the direct and of the surface path at times about that of the state, rad."""
         return (
@@ -139,24 +162,36 @@ class PhaseLoops:
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
-        return {"state": self.state.copy(), "covariance": self.covariance.copy()}
+        return {
+            "state": self.state.copy(),
+            "covariance": self.covariance.copy(),
+            "own_rate": self._own_rate,
+            "stepped": self._stepped,
+        }
 
     def load(self, snapshot: dict[str, Any]) -> None:
         """Take over a snapshot."""
         self.state = np.array(snapshot["state"], dtype=np.float64)
         self.covariance = np.array(snapshot["covariance"], dtype=np.float64)
+        self._motion = float(snapshot["motion"])
 
-    @staticmethod
-    def _walk(elapsed_s: float) -> Real:
+    def _walk(self, elapsed_s: float) -> Real:
         """Covariance that random walks of phase and rate gather: the usual integrated-walk form, common and own."""
         dt = elapsed_s
 
         def block(phase: float, rate: float) -> Real:
             return np.array([[phase * dt + rate * dt**3 / 3, rate * dt**2 / 2], [rate * dt**2 / 2, rate * dt]])
 
-        own = block(OWN_PHASE_WALK, OWN_RATE_WALK)
+        own = block(OWN_PHASE_WALK * self._motion**2, OWN_RATE_WALK * self._motion**3)
         common = block(COMMON_PHASE_WALK, COMMON_RATE_WALK)
         return np.block([[own + common, common], [common, own + common]])
+
+    @staticmethod
+    def _common_turn(overlap: Overlap, time_s: Real, state: Real) -> float:
+        """Turn of both paths together that the burst shows at a glance, rad."""
+        turn_d = np.exp(-1j * (state[DIRECT] + state[DIRECT + 1] * time_s))
+        turn_s = np.exp(-1j * (state[SURFACE] + state[SURFACE + 1] * time_s))
+        return float(np.angle((turn_d * overlap.direct + turn_s * overlap.surface).sum()))
 
     @staticmethod
     def _slope(overlap: Overlap, time_s: Real, state: Real) -> tuple[Real, Real]:

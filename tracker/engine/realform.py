@@ -100,12 +100,10 @@ class RealForm:
         rows = heard.reshape(-1, 2 * self.tones) @ self._from_tones
         return np.asarray(rows.reshape(*heard.shape[:-2], self.width))
 
-    def load(self, heard: Real) -> Real:
-        """Give 1 + |H|², shape (…, R, K)."""
+    def power(self, heard: Real) -> Real:
+        """Give |H|², shape (…, R, K), of responses (…, R, 2K)."""
         squared = heard * heard
-        load = squared[..., : self.tones] + squared[..., self.tones :]
-        load += 1.0
-        return load
+        return squared[..., : self.tones] + squared[..., self.tones :]
 
     def weigh(self, heard: Real, weight: Real) -> Real:
         """Multiply responses (…, R, 2K) by real weights (…, R, K)."""
@@ -113,7 +111,12 @@ class RealForm:
         return (split * weight[..., None, :]).reshape(heard.shape)
 
 
-def bits(load: Real) -> Real:
-    """Add up log2(load) over receivers and tones: (n, R, K) to (n,). Overwrites `load`."""
-    np.log2(load, out=load)
-    return np.asarray(load.reshape(len(load), -1).sum(axis=1))
+def bits(power: Real) -> Real:
+    """Add up log2(1 + |H|²) over receivers and tones: (n, R, K) to (n,). Overwrites `power`."""
+    if power.dtype == np.float32:
+        # Far below the noise, 1 + |H|² would lose |H|² in single precision.
+        nats = np.log1p(power, out=power)
+        return np.asarray(nats.reshape(len(nats), -1).sum(axis=1) / np.float32(math.log(2.0)))
+    power += 1.0
+    np.log2(power, out=power)
+    return np.asarray(power.reshape(len(power), -1).sum(axis=1))

@@ -84,7 +84,7 @@ def assess(form: RealForm, states: Real) -> Batch:
     """Work out what patterns, shape (n, G), are worth."""
     sums = states @ form.surface
     sums += form.direct
-    return Batch(states, sums, bits(form.load(form.heard(sums))))
+    return Batch(states, sums, bits(form.power(form.heard(sums))))
 
 
 def align(form: RealForm, directions: Real, allowance: Allowance | None) -> Real:
@@ -98,7 +98,7 @@ def align(form: RealForm, directions: Real, allowance: Allowance | None) -> Real
 def rate_slope(form: RealForm, batch: Batch) -> Real:
     """Give the direction, shape (n, L), in which the rate of each pattern grows fastest."""
     heard = form.heard(batch.sums)
-    return form.back(form.weigh(heard, 1.0 / form.load(heard)))
+    return form.back(form.weigh(heard, 1.0 / (1.0 + form.power(heard))))
 
 
 def polish(form: RealForm, batch: Batch, allowance: Allowance | None) -> Batch:
@@ -115,8 +115,8 @@ def polish(form: RealForm, batch: Batch, allowance: Allowance | None) -> Batch:
 def either_sign(form: RealForm, states: Real) -> Batch:
     """Work out what patterns, shape (n, G), are worth, and take their negatives where these are better, in place."""
     sums = states @ form.surface
-    ahead = bits(form.load(form.heard(form.direct + sums)))
-    behind = bits(form.load(form.heard(form.direct - sums)))
+    ahead = bits(form.power(form.heard(form.direct + sums)))
+    behind = bits(form.power(form.heard(form.direct - sums)))
     sign = np.copysign(1.0, ahead - behind)[:, None]
     states *= sign
     sums *= sign

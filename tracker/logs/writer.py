@@ -6,6 +6,7 @@ file is put together from the library's records (MCAP specification, section "Re
 
 import zlib
 from collections.abc import Callable, Mapping
+from contextlib import suppress
 from pathlib import Path
 from types import MappingProxyType, TracebackType
 from typing import Self
@@ -85,6 +86,8 @@ class LogWriter:
                 self._attach(name, data, clock_ns())
         except OSError as error:
             self._file.close()
+            with suppress(OSError):
+                path.unlink()  # a file without its beginning is no log, and only stands in the way
             raise LogError(f"{path}: cannot be written: {error.strerror}") from None
 
     @property

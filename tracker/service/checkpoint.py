@@ -1,14 +1,17 @@
 """The estimate over a planned restart: written when the service ends, taken up once when it starts again.
 
-A file is used only once and only under the same settings: after a crash there is none, and an old estimate is never
-mistaken for a fresh one.
+A file is used only once and only by the same version under the same settings: after a crash there is none, and an old
+estimate is never mistaken for a fresh one.
 """
 
 import os
+from collections.abc import Callable, Mapping
 from pathlib import Path
+from typing import Any
 
 import msgpack
 
+from tracker import __version__
 from tracker.engine.tracker import Tracker
 from tracker.snapshots import SnapshotError, Start, pack_start, unpack_start
 
@@ -26,26 +29,55 @@ class Checkpoint:
     def __init__(self, path: Path, settings: str) -> None:
         self._path, self._settings = path, settings
 
-    def resume(self, tracker: Tracker) -> bool:
-        """Load the tracker from the file, if there is one for these settings; the file is gone afterwards."""
+    def resume(self, afresh: Callable[[], Tracker]) -> tuple[Tracker, bool]:
+        """Make a tracker, from the file if there is one that fits; the file is gone afterwards.
+
+        Parameters
+        ----------
+        afresh : callable
+            Makes a tracker that knows nothing.
+
+        Returns
+        -------
+        tracker : Tracker
+        resumed : bool
+            Whether it goes on from the file.
+        """
+        tracker = afresh()
+        snapshot = self._take()
+        if snapshot is None:
+            return tracker, False
+        try:
+            if snapshot["refresher"]["next_id"] == tracker.next_id:
+                tracker.load(snapshot)
+                return tracker, True
+        except (LookupError, TypeError, ValueError, AttributeError):
+            return afresh(), False  # of another version: what it took over by then is thrown away
+        return tracker, False
+
+    def keep(self, tracker: Tracker) -> None:
+        """Write the file, whole or not at all.
+
+        Raises
+        ------
+        OSError
+            When the disk fails.
+        """
+        part = self._path.with_suffix(".part")
+        start = pack_start(Start(tracker.next_id, tracker.snapshot()))
+        part.write_bytes(msgpack.packb([__version__, self._settings, start]))
+        os.replace(part, self._path)
+
+    def _take(self) -> Mapping[str, Any] | None:
         try:
             data = self._path.read_bytes()
             self._path.unlink()
         except OSError:
-            return False
+            return None
         try:
-            settings, start = msgpack.unpackb(data)
-            snapshot = unpack_start(start).snapshot if settings == self._settings else None
-        except (SnapshotError, ValueError, TypeError):
-            return False
-        if snapshot is None or snapshot["refresher"]["next_id"] != tracker.next_id:
-            return False
-        tracker.load(snapshot)
-        return True
-
-    def keep(self, tracker: Tracker) -> None:
-        """Write the file, whole or not at all."""
-        part = self._path.with_suffix(".part")
-        start = pack_start(Start(tracker.next_id, tracker.snapshot()))
-        part.write_bytes(msgpack.packb([self._settings, start]))
-        os.replace(part, self._path)
+            version, settings, start = msgpack.unpackb(data)
+            if (version, settings) != (__version__, self._settings):
+                return None
+            return unpack_start(start).snapshot
+        except (SnapshotError, ValueError, TypeError, msgpack.UnpackException):
+            return None

@@ -38,10 +38,12 @@ class Control:
         self._elements, self._change, self._stop, self._status = elements, change, stop, status
         self._settings = settings
 
-    def answer(self, body: bytes) -> bytes:
+    def answer(self, parts: list[bytes]) -> bytes:
         """Carry out one request and return the reply; a bad request is answered, never fatal."""
         try:
-            request = decode_request(body)
+            if len(parts) != 1:
+                raise Refused(Reason.NOT_MSGPACK, f"{len(parts)} parts, a request has one: the body")
+            request = decode_request(parts[0])
             return encode_reply(**self._carry_out(request))
         except Refused as refused:
             return encode_reply(error=str(refused))

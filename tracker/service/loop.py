@@ -1,47 +1,34 @@
-"""The loop: bursts off the socket, through the engine, into the journal, and only then out to the world.
-
-What is waiting when a block is done is taken together as the next, larger block, up to `MOST_TOGETHER` frames: a
-larger block costs less a frame, so falling behind is what catches up again. Nothing is dropped here; what the queue
-in front of the socket cannot hold shows as a gap in `seq`.
-"""
+"""The loop: bursts off the socket, through the engine, into the journal, and only then out to the world."""
 
 import gc
 import time
-from dataclasses import dataclass
+from collections.abc import Iterator
+from contextlib import contextmanager
 from typing import Any
 
 import zmq
 
 from tracker.assembly import shape
-from tracker.decisions import COMMAND, DECISION, Command, carry_out, encode_command, encode_decision
-from tracker.engine.burst import Burst
-from tracker.engine.events import Alarm, Event, Pattern
-from tracker.engine.tracker import Outcome, Tracker
-from tracker.messages import Reason, Refused, decode_pilots
-from tracker.outgoing import encode
+from tracker.decisions import Command, carry_out
+from tracker.engine.tracker import Tracker
+from tracker.messages import Verb
 from tracker.settings import Settings
 
 from .control import Control
 from .deadline import Deadline
 from .identity import IdFile
+from .intake import Intake
 from .journal import Journal
 from .latency import Latencies
+from .log import Account
 from .notices import Notices
+from .outlet import Outlet
 from .refusals import Refusals
-from .sockets import Sockets
+from .sockets import Sockets, receive_queue
 
-MOST_TOGETHER = 512
 POLL_MS = 100
 # Cycles are collected when nothing has come for a poll, or after so long without a pause, ns.
 COLLECT_NS = 60_000_000_000
-
-
-@dataclass(frozen=True, slots=True)
-class _Arrival:
-    burst: Burst
-    body: bytes
-    wall_ns: int
-    monotonic_ns: int
 
 
 class Service:
@@ -69,21 +56,22 @@ class Service:
         ids: IdFile,
         log: Any,
     ) -> None:
-        self._settings, self._tracker = settings, tracker
-        self._sockets, self._journal, self._ids, self._log = sockets, journal, ids, log
-        self._link = settings.link.name
-        self._shape = shape(settings)
-        self._topic = f"pilots/{self._link}".encode()
+        self._settings, self._tracker, self._sockets = settings, tracker, sockets
+        self._journal, self._log = journal, log
+        link, required = settings.link.name, settings.journal.required
         self._refusals = Refusals(log)
-        self._latencies = Latencies()
-        self._notices = Notices(self._link, log)
+        self._notices = Notices(log, required=required)
+        self._intake = Intake(sockets.pilots, link, shape(settings), tracker, self._refusals, self._notices)
+        self._outlet = Outlet(link, sockets.publish, journal, ids, required=required)
         self._control = Control(settings.panel.elements, self._change, self.stop, self._status, text)
+        self._account = Account(log)
+        self._latencies = Latencies()
+        self._last = (0, 0)  # run and seq of the last burst worked off
         self._stopping = False
         self._collected_ns = time.monotonic_ns()
-        self._journal_us = 0
 
     def stop(self) -> None:
-        """Ask the loop to end; what has arrived by then is still worked off."""
+        """Ask the loop to end; what has arrived by then is still worked off. May be called from a signal handler."""
         self._stopping = True
 
     def run(self) -> None:
@@ -91,144 +79,85 @@ class Service:
         poller = zmq.Poller()
         poller.register(self._sockets.pilots, zmq.POLLIN)
         poller.register(self._sockets.control, zmq.POLLIN)
-        gc.collect()
-        gc.freeze()
-        gc.disable()
-        try:
+        with _no_collection():
             while not self._stopping:
                 waiting = dict(poller.poll(POLL_MS))
                 if self._sockets.control in waiting:
-                    self._sockets.control.send(self._control.answer(self._sockets.control.recv()))
+                    self._answer()
                 if self._sockets.pilots in waiting:
                     self._work_off()
                 self._look_after(idle=not waiting)
-            while self._work_off():
-                pass
-        finally:
-            gc.enable()
-            gc.unfreeze()
-
-    def _work_off(self) -> bool:
-        """Take what is waiting as one block; False when nothing was."""
-        arrivals, heard = self._drain()
-        if arrivals:
-            self._advance(arrivals)
-        return heard
-
-    def _drain(self) -> tuple[list[_Arrival], bool]:
-        """Receive, decode and admit what is waiting, up to one block's worth."""
-        arrivals: list[_Arrival] = []
-        frames = 0
-        heard = False
-        while frames < MOST_TOGETHER:
-            try:
-                parts = self._sockets.pilots.recv_multipart(zmq.NOBLOCK)
-            except zmq.Again:
-                break
-            heard = True
-            wall_ns, monotonic_ns = time.time_ns(), time.monotonic_ns()
-            if parts[0] != self._topic:
-                continue  # another link whose name begins like ours
-            try:
-                if len(parts) != 2:
-                    raise Refused(Reason.NOT_MSGPACK, f"{len(parts)} parts, a message has two: topic and body")
-                burst = decode_pilots(parts[1], self._link, self._shape)
-                self._tracker.admit(burst, wall_ns)
-            except Refused as refused:
-                self._refuse(refused)
-                continue
-            arrivals.append(_Arrival(burst, parts[1], wall_ns, monotonic_ns))
-            frames += burst.frames
-        self._notices.load(frames >= MOST_TOGETHER)
-        return arrivals, heard
-
-    def _refuse(self, refused: Refused) -> None:
-        self._tracker.refuse(refused.reason)
-        self._refusals.take(refused)
-        if refused.reason in (Reason.FAR_FUTURE, Reason.FAR_PAST):
-            self._notices.clock(refused.detail)
-
-    def _advance(self, arrivals: list[_Arrival]) -> None:
-        first, last = arrivals[0], arrivals[-1]
-        started_ns = time.monotonic_ns()
-        refresh = self._settings.refresh
-        deadline = Deadline(first.monotonic_ns, refresh.budget_ms, refresh.most_steps)
-        outcome = self._tracker.advance([arrival.burst for arrival in arrivals], deadline)
-        done_ns = time.monotonic_ns()
-        stages_us = {
-            "intake": (started_ns - last.monotonic_ns) // 1000,
-            "engine": (done_ns - started_ns) // 1000,
-            "journal": self._journal_us,  # of the block before: this one's is still to come
-            "whole": (done_ns - first.monotonic_ns) // 1000,
-        }
-        self._give_out(arrivals, outcome, stages_us)
-
-    def _give_out(self, arrivals: list[_Arrival], outcome: Outcome, stages_us: dict[str, int]) -> None:
-        """Journal the block, then publish what came of it."""
-        events: list[Event] = [*self._notices.take(arrivals[-1].burst), *outcome.events]
-        now_ns = time.time_ns()
-        records = [(f"pilots/{self._link}", arrival.body, arrival.wall_ns, arrival.burst.t_ns) for arrival in arrivals]
-        named = [(arrival.burst.run, arrival.burst.seq) for arrival in arrivals]
-        records.append((f"{DECISION}/{self._link}", encode_decision(named, outcome.steps), now_ns, now_ns))
-        out: list[tuple[str, bytes, bool]] = []
-        for event in events:
-            kind, body, t_ns = encode(self._link, event, stages_us["whole"], stages_us)
-            records.append((f"{kind}/{self._link}", body, now_ns, t_ns))
-            out.append((f"{kind}/{self._link}", body, kind == "pattern"))
-        before_ns = time.monotonic_ns()
-        if self._ids.next_id != self._tracker.next_id:
-            self._ids.keep(self._tracker.next_id)
-        kept = self._journal.write(records)
-        self._journal_us = (time.monotonic_ns() - before_ns) // 1000
-        self._notices.disk(kept)
-        for topic, body, binding in out:
-            # A pattern that could not be recorded is withheld, unless the settings say that recording is no condition.
-            if kept or not binding or not self._settings.journal.required:
-                self._sockets.publish.send_multipart((topic.encode(), body))
-        self._latencies.add((time.monotonic_ns() - arrivals[0].monotonic_ns) // 1000)
-        self._tell(events, stages_us)
-        if self._journal.full:
-            self._journal.rotate()
-
-    def _tell(self, events: list[Event], stages_us: dict[str, int]) -> None:
-        for event in events:
-            if isinstance(event, Pattern):
-                self._log.info(
-                    "pattern",
-                    id=event.id,
-                    cause=str(event.cause),
-                    rate=round(event.rate, 3),
-                    before=round(event.rate_before, 3),
-                    bound=round(event.rate_bound, 3),
-                    steps=event.steps,
-                )
-            elif isinstance(event, Alarm):
-                self._log.warning(
-                    "alarm",
-                    kind=event.kind,
-                    statistic=round(event.statistic, 2),
-                    threshold=round(event.threshold, 2),
-                    action=event.action,
-                )
-            else:
-                self._log.debug("burst", seq=event.seq, mode=str(event.mode), together=event.together, **stages_us)
-
-    def _change(self, command: Command) -> None:
-        """Carry out a verb that changes the engine, and journal it where it stood in the order of things."""
-        carry_out(command, self._tracker, self._settings.panel.elements)
-        now_ns = time.time_ns()
-        self._notices.disk(self._journal.write([(f"{COMMAND}/{self._link}", encode_command(command), now_ns, now_ns)]))
-        self._log.info("command", verb=command.verb)
+            self._intake.close(receive_queue(self._settings))
+            while self._intake.waiting:
+                self._work_off()
+                self._look_after(idle=False)
+            self._refusals.tell(at_once=True)
 
     def totals(self) -> dict[str, Any]:
         """Return the counts since start, for the last line of the log."""
         status = self._status()
         return {key: status[key] for key in ("bursts", "frames", "lost", "refused", "pattern", "latency_us")}
 
+    def _answer(self) -> None:
+        # All parts: the socket takes no reply before the request is read to its end.
+        self._sockets.control.send(self._control.answer(self._sockets.control.recv_multipart()))
+
+    def _work_off(self) -> None:
+        """Take what is waiting as one block, work it off and give out what came of it."""
+        arrivals = self._intake.take()
+        if not arrivals:
+            return
+        first, last = arrivals[0], arrivals[-1]
+        started_ns = time.monotonic_ns()
+        refresh = self._settings.refresh
+        deadline = Deadline(first.monotonic_ns, refresh.budget_ms, refresh.most_steps)
+        try:
+            outcome = self._tracker.advance([arrival.burst for arrival in arrivals], deadline)
+        except Exception:
+            self._outlet.unfinished(arrivals)
+            raise
+        done_ns = time.monotonic_ns()
+        stages_us = {
+            "intake": (started_ns - last.monotonic_ns) // 1000,
+            "engine": (done_ns - started_ns) // 1000,
+            "journal": self._outlet.journal_us,  # of the block before: this one's is still to come
+            "whole": (done_ns - first.monotonic_ns) // 1000,
+        }
+        self._last = (last.burst.run, last.burst.seq)
+        kept = self._outlet.block(arrivals, outcome.steps, outcome.events, self._tracker.next_id, stages_us)
+        self._latencies.add((time.monotonic_ns() - first.monotonic_ns) // 1000)
+        self._account.take(outcome.events, stages_us)
+        if not kept:
+            self._notices.disk(self._journal.fault)
+        if self._journal.full:
+            self._journal.rotate()
+
+    def _change(self, command: Command) -> None:
+        """Carry out a verb that changes the engine, and journal it where it stood in the order of things."""
+        carry_out(command, self._tracker, self._settings.panel.elements)
+        if not self._outlet.command(command):
+            self._notices.disk(self._journal.fault)
+        self._log.info("command", verb=command.verb)
+
+    def _look_after(self, *, idle: bool) -> None:
+        """Housekeeping between two blocks: the journal, what is untold, and memory cycles when nobody is waiting."""
+        if self._journal.broken and self._journal.mend():
+            self._log.info("journal", journal=str(self._journal.path))
+        if self._outlet.works_again():
+            # The tracker takes the pattern that was withheld for the one in use: have it publish one that goes out.
+            self._change(Command(str(Verb.REFRESH)))
+        if alarms := self._notices.take(*self._last):
+            self._outlet.alarms(alarms)
+        self._refusals.tell()
+        self._account.tell()
+        if idle or time.monotonic_ns() - self._collected_ns > COLLECT_NS:
+            gc.collect(1 if idle else 0)
+            self._collected_ns = time.monotonic_ns()
+
     def _status(self) -> dict[str, Any]:
         counts = self._tracker.counts
         return {
-            "link": self._link,
+            "link": self._settings.link.name,
             "mode": str(self._tracker.mode),
             "bursts": counts.bursts,
             "frames": counts.frames,
@@ -238,11 +167,18 @@ class Service:
             "pattern": self._tracker.next_id - 1,
             "latency_us": self._latencies.summary(),
             "journal": str(self._journal.path) if self._journal.path else None,
+            "journal_works": not self._journal.broken,
         }
 
-    def _look_after(self, *, idle: bool) -> None:
-        """Housekeeping: untold refusals, and memory cycles when nobody is waiting."""
-        self._refusals.tell()
-        if idle or time.monotonic_ns() - self._collected_ns > COLLECT_NS:
-            gc.collect(1 if idle else 0)
-            self._collected_ns = time.monotonic_ns()
+
+@contextmanager
+def _no_collection() -> Iterator[None]:
+    """Keep the search for memory cycles out of the way: a full one takes tens of milliseconds."""
+    gc.collect()
+    gc.freeze()
+    gc.disable()
+    try:
+        yield
+    finally:
+        gc.enable()
+        gc.unfreeze()

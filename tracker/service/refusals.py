@@ -22,7 +22,7 @@ class Refusals:
         self.counts: Counter[str] = Counter()
         self._untold: Counter[str] = Counter()
         self._last_detail = ""
-        self._told_ns = 0
+        self._told_ns = -TELL_EVERY_NS
 
     def take(self, refused: Refused) -> None:
         """Count one."""
@@ -31,10 +31,10 @@ class Refusals:
         self._last_detail = refused.detail
         self.tell()
 
-    def tell(self) -> None:
-        """Write what is untold, if a second has passed since the last line."""
+    def tell(self, *, at_once: bool = False) -> None:
+        """Write what is untold, if a second has passed since the last line or it is to be told at once."""
         now = time.monotonic_ns()
-        if not self._untold or now - self._told_ns < TELL_EVERY_NS:
+        if not self._untold or (now - self._told_ns < TELL_EVERY_NS and not at_once):
             return
         self._log.warning("refused", by_reason=dict(self._untold), last=self._last_detail)
         self._untold.clear()

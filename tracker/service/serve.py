@@ -1,6 +1,8 @@
 """Starting and ending the service."""
 
 import signal
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 from threadpoolctl import threadpool_limits
@@ -12,6 +14,7 @@ from tracker.settings import load
 from tracker.snapshots import Start, pack_start
 
 from .checkpoint import Checkpoint
+from .errors import ServiceError
 from .identity import IdFile
 from .journal import Journal
 from .log import configure_log
@@ -39,52 +42,69 @@ def serve(settings_path: Path, log_level: str = "info") -> int:
     """
     settings = load(settings_path)
     text = settings_path.read_text(encoding="utf-8")
+    link = settings.link.name
     config = configure(settings, settings_path.parent)
     folder = settings_path.parent / settings.journal.folder
     log = configure_log(log_level)
     with threadpool_limits(limits=1), Sockets(settings) as sockets:
-        folder.mkdir(parents=True, exist_ok=True)
-        ids = IdFile(folder / f"{settings.link.name}.next-id")
-        checkpoint = Checkpoint(folder / f"{settings.link.name}.checkpoint", text)
-        tracker = Tracker(config, ids.next_id)
-        resumed = checkpoint.resume(tracker)
+        _make(folder)
+        ids = IdFile(folder / f"{link}.next-id")
+        checkpoint = Checkpoint(folder / f"{link}.checkpoint", text)
+        tracker, resumed = checkpoint.resume(lambda: Tracker(config, ids.next_id))
         journal = Journal(
-            folder, settings.link.name, text, settings.journal.rotate_mb, lambda: pack_start(_start(tracker))
+            folder,
+            link,
+            text,
+            settings.journal.rotate_mb,
+            lambda: pack_start(Start(tracker.next_id, tracker.snapshot())),
         )
         service = Service(settings, text, tracker, sockets, journal, ids, log)
-        previous = {
-            number: signal.signal(number, lambda *_: service.stop()) for number in (signal.SIGTERM, signal.SIGINT)
-        }
-        log.info(
-            "serving",
-            version=__version__,
-            link=settings.link.name,
-            elements=config.elements,
-            receivers=config.receivers,
-            tones=config.tones,
-            delay_directions=config.delay.shape[1],
-            unknowns=config.aperture.size + 1,
-            pilots=settings.sockets.pilots,
-            publish=settings.sockets.publish,
-            control=settings.sockets.control,
-            queue_bursts=receive_queue(settings),
-            journal=str(journal.path),
-            first_pattern=tracker.next_id,
-            resumed=resumed,
-            blas_threads=1,
-        )
-        try:
-            service.run()
-            checkpoint.keep(tracker)
-        finally:
-            journal.close()
-            ids.close()
-            for number, handler in previous.items():
-                signal.signal(number, handler)
-        log.info("stopped", journal=str(journal.path), **service.totals())
+        with _stopped_by_signals(service.stop):
+            log.info(
+                "serving",
+                version=__version__,
+                link=link,
+                elements=config.elements,
+                receivers=config.receivers,
+                tones=config.tones,
+                delay_directions=config.delay.shape[1],
+                unknowns=config.aperture.size + 1,
+                pilots=settings.sockets.pilots,
+                publish=settings.sockets.publish,
+                control=settings.sockets.control,
+                queue_bursts=receive_queue(settings),
+                journal=str(journal.path),
+                first_pattern=tracker.next_id,
+                resumed=resumed,
+                blas_threads=1,
+            )
+            try:
+                service.run()
+                try:
+                    checkpoint.keep(tracker)
+                except OSError as error:
+                    log.warning("no checkpoint", why=error.strerror, then="the next start begins afresh")
+            finally:
+                journal.close()
+                ids.close()
+            log.info("stopped", journal=str(journal.path), **service.totals())
     return 0
 
 
-def _start(tracker: Tracker) -> Start:
-    """How the tracker stands at the beginning of a journal file."""
-    return Start(tracker.next_id, tracker.snapshot() if tracker.counts.bursts else None)
+def _make(folder: Path) -> None:
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise ServiceError(
+            f"{folder}: {error.strerror}; journal.folder must be a folder that can be made and written"
+        ) from None
+
+
+@contextmanager
+def _stopped_by_signals(stop: Callable[[], None]) -> Iterator[None]:
+    previous = {number: signal.signal(number, lambda *_: stop()) for number in (signal.SIGTERM, signal.SIGINT)}
+    try:
+        yield
+    finally:
+        for number, handler in previous.items():
+            signal.signal(number, handler)
