@@ -201,9 +201,9 @@ class Ascent:
     def _take(self, lines: Indices, move: Real, value: float) -> bool:
         """Turn lines if the value found for that is a gain."""
         form = self._form
-        if value - self.value <= ROUNDING * (form.receivers * form.tones + value):
-            return False
-        self.states[lines] *= -1.0
-        self._sums += move
-        self._look()
-        return True
+        gains = value - self.value > ROUNDING * (form.receivers * form.tones + value)
+        if gains:
+            self.states[lines] *= -1.0
+            self._sums += move
+            self._look()
+        return gains

@@ -109,11 +109,13 @@ def optimize(
     Raises
     ------
     ValueError
-        The limits name an element that does not exist, or contradict themselves.
+        The channel is not finite; the limits name an element that does not exist, or contradict themselves.
     """
     lines = lines_of(limits, channel.elements)
     form = RealForm(channel.basis, *lines.join(channel))
     allowance = None if in_use is None else Allowance(lines, in_use, limits.most_changes)
+    if not np.isfinite(form.energy.sum() + form.direct @ form.direct):
+        raise ValueError("the channel holds NaN, infinity or numbers too large to square")
     search = _Search(form, allowance, Meter(budget))
     if form.lines:
         search.run(thorough=thorough)

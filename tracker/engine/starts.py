@@ -16,8 +16,6 @@ from numpy.typing import NDArray
 from .allowance import Allowance
 from .realform import Real, RealForm, bits
 
-Complex = NDArray[np.complex128]
-
 
 @dataclass(slots=True, eq=False)
 class Batch:
@@ -36,15 +34,12 @@ class Batch:
     sums: Real
     values: Real
 
-    def __len__(self) -> int:
-        return len(self.values)
-
     def pick(self, rows: NDArray[np.intp]) -> "Batch":
         """Give some of the patterns."""
         return Batch(self.states[rows], self.sums[rows], self.values[rows])
 
     def best(self, most: int, overlap: float = 1.0) -> "Batch":
-        """Give the best patterns, at most so many, no two of which agree too much.
+        """Give the best patterns, at most so many, best first, no two of which agree too much.
 
         Parameters
         ----------
@@ -166,7 +161,7 @@ def tone_directions(form: RealForm, count: int, phases: int) -> Real:
 
     Returns
     -------
-    ndarray of float64, shape (at most count · phases, L)
+    ndarray, shape (at most count · phases, L)
     """
     count = min(count, form.tones * form.receivers)
     receiver = np.arange(count) % form.receivers
