@@ -3,10 +3,13 @@
 import numpy as np
 import pytest
 
-from tracker.engine.aperture import ApertureBasis, Elements, Tiles
+from tracker.engine.aperture import ApertureBasis, Columns, Elements, Tiles
+
+_PHASES = np.exp(2j * np.pi * np.random.default_rng(0).uniform(size=(12, 4)))
+_COLUMNS = Columns(np.linalg.qr(_PHASES)[0], np.array([4.0, 2.0, 1.0, 1.0]))
 
 
-@pytest.mark.parametrize("basis", [Elements(12), Tiles(5, 4, 2, 3), Tiles(4, 4, 4, 4), Tiles(3, 7, 1, 1)])
+@pytest.mark.parametrize("basis", [Elements(12), Tiles(5, 4, 2, 3), Tiles(4, 4, 4, 4), Tiles(3, 7, 1, 1), _COLUMNS])
 def test_response_through_the_basis(basis: ApertureBasis) -> None:
     """zᵀ[direct, c] equals direct + Σ s_n v_n with v the expanded coefficients, and power of z is even."""
     rng = np.random.default_rng(1)
@@ -32,3 +35,11 @@ def test_tiles_of_one_element_are_elements() -> None:
     """1 × 1 tiles give the same regressors as the elements themselves."""
     states = np.random.default_rng(2).choice([-1.0, 1.0], (4, 21))
     np.testing.assert_allclose(Tiles(3, 7, 1, 1).regressors(states), Elements(21).regressors(states))
+
+
+def test_columns_are_checked() -> None:
+    """Columns that are not orthonormal, and variances that cannot be, are refused."""
+    with pytest.raises(ValueError, match="orthonormal"):
+        Columns(2 * np.eye(4, 2, dtype=np.complex128), np.ones(2))
+    with pytest.raises(ValueError, match="above zero"):
+        Columns(np.eye(4, 2, dtype=np.complex128), np.array([1.0, 0.0]))

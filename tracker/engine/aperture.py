@@ -4,7 +4,7 @@ A pattern s enters the model as z(s) = [1, Uᵀs]: the direct path, then the sur
 columns). Fewer columns are fewer unknowns, as long as the true responses lie in their span.
 """
 
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,7 +24,15 @@ class ApertureBasis(Protocol):
     def size(self) -> int:
         """r, columns of U."""
 
-    def regressors(self, states: Array) -> Array:
+    @property
+    def weights(self) -> Array:
+        """Variance of each coefficient before any data, shape (r,), relative to their mean."""
+
+    @property
+    def is_complex(self) -> bool:
+        """Whether U, and with it z, is complex."""
+
+    def regressors(self, states: Array) -> NDArray[Any]:
         """Turn states (B, N) into z (B, r + 1), the direct path first."""
 
     def surface(self, coefficients: Complex) -> Complex:
@@ -37,6 +45,8 @@ class Elements:
     def __init__(self, elements: int) -> None:
         self.elements = elements
         self.size = elements
+        self.weights = np.ones(elements)
+        self.is_complex = False
 
     def regressors(self, states: Array) -> Array:
         """See `ApertureBasis`."""
@@ -67,6 +77,8 @@ class Tiles:
         down = -(-rows // tile_rows)
         self._tile = (element // rows) // tile_columns * down + (element % rows) // tile_rows
         self.size = int(self._tile.max()) + 1
+        self.weights = np.ones(self.size)
+        self.is_complex = False
         # Each column has unit length, so that unit patterns excite all columns alike.
         self._weight = 1.0 / np.sqrt(np.bincount(self._tile))
         self._columns = np.zeros((self.elements, self.size))
@@ -82,3 +94,43 @@ class Tiles:
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""
         return np.asarray((coefficients * self._weight[:, None])[self._tile])
+
+
+class Columns:
+    """Any orthonormal columns, learned from logs or worked out from geometry.
+
+    Parameters
+    ----------
+    columns : ndarray of complex, shape (N, r)
+        U.
+    variances : ndarray, shape (r,)
+        Variance of each coefficient before any data; only their ratios matter.
+
+    Raises
+    ------
+    ValueError
+        When the columns are not orthonormal or a variance is not above zero.
+    """
+
+    def __init__(self, columns: Complex, variances: Array) -> None:
+        self.elements, self.size = columns.shape
+        gram = columns.conj().T @ columns
+        if not np.allclose(gram, np.eye(self.size), atol=1e-6):
+            raise ValueError("the columns of an aperture basis must be orthonormal")
+        if variances.shape != (self.size,) or not (variances > 0).all():
+            raise ValueError(f"an aperture basis of {self.size} columns needs as many variances, all above zero")
+        self.weights = variances / variances.mean()
+        self.is_complex = True
+        self._columns = np.ascontiguousarray(columns, dtype=np.complex128)
+
+    def regressors(self, states: Array) -> Complex:
+        """See `ApertureBasis`."""
+        z = np.empty((states.shape[0], self.size + 1), dtype=np.complex128)
+        z[:, 0] = 1.0
+        # A real matrix times the two real parts costs half of a complex product.
+        z[:, 1:] = (states @ self._columns.view(np.float64)).view(np.complex128)
+        return z
+
+    def surface(self, coefficients: Complex) -> Complex:
+        """See `ApertureBasis`."""
+        return np.asarray(self._columns @ coefficients)

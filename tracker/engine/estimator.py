@@ -159,7 +159,9 @@ class Estimator:
             self._measure_noise(frames.patterns, tones, coefficients)
         outputs = self._in_noise_units(coefficients)
         self._end_ns = int(frames.time_ns[0])
-        return BlockRls(prior_variances(self._regressors(frames), outputs), outputs.shape[1])
+        aperture = self._config.aperture
+        prior = prior_variances(self._regressors(frames), outputs, aperture.weights)
+        return BlockRls(prior, outputs.shape[1], complex_regressors=aperture.is_complex)
 
     def _take(self, rls: BlockRls, taken: Frames) -> Fit:
         """Take in frames that one model of the phases serves."""
@@ -250,7 +252,7 @@ class Estimator:
         self,
         rls: BlockRls,
         frames: Frames,
-        regressors: NDArray[np.float64],
+        regressors: NDArray[Any],
         outputs: NDArray[np.complex128],
     ) -> tuple[int, ...]:
         """Turn the outputs back in place, and the direct path's estimate along; return receivers that lost lock."""
@@ -285,7 +287,7 @@ class Estimator:
         scale = 1.0 / np.sqrt(self._noise.power)
         return np.asarray((coefficients * scale[:, None]).reshape(coefficients.shape[0], -1))
 
-    def _regressors(self, frames: Frames) -> NDArray[np.float64]:
+    def _regressors(self, frames: Frames) -> NDArray[Any]:
         return self._config.aperture.regressors(panel.unpack(frames.patterns, self._config.elements))
 
     def _learned(self) -> BlockRls:

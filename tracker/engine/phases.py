@@ -165,8 +165,7 @@ class PhaseLoops:
         return {
             "state": self.state.copy(),
             "covariance": self.covariance.copy(),
-            "own_rate": self._own_rate,
-            "stepped": self._stepped,
+            "motion": self._motion,
         }
 
     def load(self, snapshot: dict[str, Any]) -> None:

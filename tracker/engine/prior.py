@@ -5,6 +5,8 @@ surface's. One variance serves all delays, because one covariance does; each del
 holds, so that empty delays do not make the prior too tight for the delays that matter.
 """
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -16,7 +18,9 @@ LEAST_VARIETY = 0.1
 LEAST_POWER = 0.1
 
 
-def prior_variances(regressors: NDArray[np.float64], outputs: NDArray[np.complex128]) -> NDArray[np.float64]:
+def prior_variances(
+    regressors: NDArray[Any], outputs: NDArray[np.complex128], weights: NDArray[np.float64]
+) -> NDArray[np.float64]:
     """Prior variances of [direct, r surface coefficients], in units of the noise.
 
     Parameters
@@ -25,6 +29,8 @@ def prior_variances(regressors: NDArray[np.float64], outputs: NDArray[np.complex
         z of each frame; patterns excite all surface coefficients alike.
     outputs : ndarray of complex, shape (B, D)
         Frames on the delay basis, divided by the noise amplitude.
+    weights : ndarray, shape (r,)
+        Variances of the surface coefficients relative to their mean.
 
     Returns
     -------
@@ -39,7 +45,7 @@ def prior_variances(regressors: NDArray[np.float64], outputs: NDArray[np.complex
     variety = float(regressors[:, 1:].var(axis=0).mean())
     seen = _energy_mean(varying) / max(variety, LEAST_VARIETY)
     surface = max(seen, LEAST_POWER if variety > LEAST_VARIETY else UNSEEN_SHARE * heard, LEAST_POWER)
-    variances = np.full(size + 1, surface / size)
+    variances = np.concatenate(([0.0], surface / size * weights))
     # Terminals and blockages change the direct path by its whole strength, and one column more costs little.
     variances[0] = 2.0 * direct + surface
     return variances
