@@ -6,12 +6,13 @@ Where a channel estimate exists, what the frames have in common with its predict
 """
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 Complex = NDArray[np.complex128]
-Real = NDArray[np.float64]
+Real = NDArray[np.floating[Any]]
 
 # Points of the search over frequency a resolution cell (1 / span of the burst).
 FINENESS = 4
@@ -65,8 +66,9 @@ def find_offset(
         return None
     # Beyond half the frame rate an offset cannot be told from one within.
     most_hz = min(most_hz, 0.5 * (time_s.shape[0] - 1) / span)
-    count = int(2 * most_hz * span * FINENESS) + 1
-    grid = np.linspace(-most_hz, most_hz, max(count, 3))
+    step = 1.0 / (FINENESS * span)
+    reach = int(np.ceil(most_hz / step)) + 1  # one beyond, so that a peak at the end has two neighbours
+    grid = step * np.arange(-reach, reach + 1)
     turns = np.exp(-2j * np.pi * np.outer(grid, time_s))
     power = np.zeros(grid.shape[0])
     for group in groups:
