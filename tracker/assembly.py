@@ -32,6 +32,7 @@ def configure(settings: Settings, folder: Path) -> Config:
         aperture=_aperture(settings),
         forgetting=settings.estimator.forgetting,
         time_constant_s=settings.estimator.time_constant_ms / 1e3,
+        bank=settings.estimator.bank,
         false_alarm_s=settings.drift.false_alarm_hours * 3600.0,
         follow_phase=settings.follow.phase,
         every_bursts=refresh.every_bursts,

@@ -103,6 +103,7 @@ class Estimator(Table):
 
     forgetting: Literal["resetting", "exponential"] = "resetting"
     time_constant_ms: PositiveFloat = 500.0
+    bank: Annotated[int, Field(ge=1, le=7)] = 1
 
 
 class Follow(Table):

@@ -24,6 +24,8 @@ class Config:
         ``resetting`` or ``exponential``.
     time_constant_s : float
         Of forgetting.
+    bank : int
+        Time constants side by side, that one in the middle.
     false_alarm_s : float
         Wanted mean time between false drift alarms.
     every_bursts : int
@@ -43,6 +45,7 @@ class Config:
     aperture: ApertureBasis
     forgetting: str = "resetting"
     time_constant_s: float = 0.5
+    bank: int = 1
     false_alarm_s: float = 36_000.0
     follow_phase: bool = False
     every_bursts: int = 1

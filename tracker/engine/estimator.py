@@ -8,12 +8,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from . import noise, panel
+from .bank import Bank, time_constants
 from .burst import Burst
 from .channel import Channel
 from .config import Config
 from .following import Following, Lock
 from .prior import prior_variances
-from .rls import BlockRls, forgetting
+from .rls import BlockRls
 from .shrinkage import shrink
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
@@ -102,8 +103,9 @@ class Estimator:
         self._config = config
         self._adjoint = np.ascontiguousarray(config.delay.conj())
         self._noise = noise.NoiseEstimate(config.receivers)
-        self._rls: BlockRls | None = None
+        self._bank: Bank | None = None
         self._end_ns = 0
+        self._constants_s = time_constants(config.time_constant_s, config.bank)
         patience = config.aperture.size + 1
         self.following = [Following(patience) for _ in range(config.receivers)] if config.follow_phase else []
 
@@ -116,6 +118,11 @@ class Estimator:
     def noise_power(self) -> NDArray[np.float64]:
         """Noise power on a tone, shape (R,), in the units of |response|²."""
         return self._noise.power
+
+    @property
+    def time_constant_s(self) -> float:
+        """Time constant in use, s."""
+        return self._bank.time_constant_s if self._bank is not None else self._config.time_constant_s
 
     @property
     def lock(self) -> Lock:
@@ -137,12 +144,12 @@ class Estimator:
             One or more, in order.
         """
         together = Frames.together(bursts)
-        if self._rls is None:
-            self._rls = self._begin(together)
+        if self._bank is None:
+            self._bank = self._begin(together)
         if not self.following:
-            return self._take(self._rls, together)
+            return self._take(self._bank, together)
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
-        fits = [self._take(self._rls, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
+        fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
         degrees = sum(fit.degrees for fit in fits)
         return Fit(
             ratio=np.asarray(sum(fit.ratio * fit.degrees for fit in fits) / degrees),
@@ -152,7 +159,7 @@ class Estimator:
             lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
         )
 
-    def _begin(self, frames: Frames) -> BlockRls:
+    def _begin(self, frames: Frames) -> Bank:
         """Start from the first block: how strong the paths may be."""
         tones, coefficients = self._project(frames)
         if not self._noise.known:
@@ -161,9 +168,11 @@ class Estimator:
         self._end_ns = int(frames.time_ns[0])
         aperture = self._config.aperture
         prior = prior_variances(self._regressors(frames), outputs, aperture.weights)
-        return BlockRls(prior, outputs.shape[1], complex_regressors=aperture.is_complex)
+        constants_s = self._constants_s
+        filters = [BlockRls(prior, outputs.shape[1], complex_regressors=aperture.is_complex) for _ in constants_s]
+        return Bank(filters, self._config.forgetting, constants_s)
 
-    def _take(self, rls: BlockRls, taken: Frames) -> Fit:
+    def _take(self, bank: Bank, taken: Frames) -> Fit:
         """Take in frames that one model of the phases serves."""
         tones, coefficients = self._project(taken)
         self._measure_noise(taken.patterns, tones, coefficients)
@@ -171,13 +180,13 @@ class Estimator:
         frames, end_ns = outputs.shape[0], int(taken.time_ns[-1])
         elapsed_s = max(end_ns - self._end_ns, 0) / 1e9
         self._end_ns = end_ns
-        rls.forget(*forgetting(self._config.forgetting, elapsed_s, self._config.time_constant_s))
-        lost = self._follow(rls, taken, regressors, outputs)
+        bank.forget_for(elapsed_s)
+        lost = self._follow(bank, taken, regressors, outputs)
         power = np.zeros(self._config.receivers)
         error = 0.0
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
-            innovation, white = rls.update(regressors[part], outputs[part])
+            innovation, white = bank.update(regressors[part], outputs[part])
             power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
             error += float(_power(innovation).sum())
         degrees = frames * self._adjoint.shape[1]
@@ -217,12 +226,12 @@ class Estimator:
 
     def loosen(self, share: float) -> None:
         """Let what was known count for less: P goes the given share of the way back to the prior."""
-        if self._rls is not None:
-            self._rls.forget(1.0 - share, share)
+        if self._bank is not None:
+            self._bank.forget(1.0 - share, share)
 
     def relearn(self) -> None:
         """Throw the estimate away; the noise stays known."""
-        self._rls = None
+        self._bank = None
 
     def powers(self, response: NDArray[np.complex64]) -> NDArray[np.float64]:
         """|H|² of frames in units of the noise, unbiased, shape (R, K): the mean over the frames (B, R, K)."""
@@ -235,7 +244,7 @@ class Estimator:
         """All state."""
         return {
             "noise": self._noise.snapshot(),
-            "rls": self._rls.snapshot() if self._rls is not None else None,
+            "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
             "following": [following.snapshot() for following in self.following],
         }
@@ -243,14 +252,15 @@ class Estimator:
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
         self._noise.load(snapshot["noise"])
-        self._rls = BlockRls.restore(snapshot["rls"]) if snapshot["rls"] is not None else None
+        bank = snapshot["bank"]
+        self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
         self._end_ns = int(snapshot["end_ns"])
         for following, state in zip(self.following, snapshot["following"], strict=True):
             following.load(state)
 
     def _follow(
         self,
-        rls: BlockRls,
+        bank: Bank,
         frames: Frames,
         regressors: NDArray[Any],
         outputs: NDArray[np.complex128],
@@ -258,7 +268,7 @@ class Estimator:
         """Turn the outputs back in place, and the direct path's estimate along; return receivers that lost lock."""
         if not self.following:
             return ()
-        size = self._adjoint.shape[1]
+        rls, size = bank.chosen, self._adjoint.shape[1]
         surface = regressors[:, 1:] @ rls.coefficients[1:]
         weight = 1.0 / (1.0 + float(rls.variances.sum()))
         lost = []
@@ -273,7 +283,7 @@ class Estimator:
                 weight,
             )
             outputs[:, part] = turned.outputs
-            rls.coefficients[0, part] = turned.direct
+            bank.turn_direct(part, turned.turn)
             if turned.lost:
                 lost.append(receiver)
         return tuple(lost)
@@ -291,9 +301,9 @@ class Estimator:
         return self._config.aperture.regressors(panel.unpack(frames.patterns, self._config.elements))
 
     def _learned(self) -> BlockRls:
-        if self._rls is None:
+        if self._bank is None:
             raise ValueError("there is no estimate before the first frame")
-        return self._rls
+        return self._bank.chosen
 
     def _measure_noise(
         self, patterns: NDArray[np.uint8], tones: NDArray[np.complex128], coefficients: NDArray[np.complex128]
@@ -309,10 +319,10 @@ class Estimator:
             elif not known:
                 # Nothing repeats yet: take all that is heard for noise, which is cautious, until something does.
                 self._noise.update((np.abs(tones) ** 2).mean(axis=(0, 2)), 1)
-        if known and self._rls is not None:
+        if known and self._bank is not None:
             ratio = before / self._noise.power
             amplitude = np.repeat(np.sqrt(ratio), self._adjoint.shape[1])
-            self._rls.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
+            self._bank.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
 
 
 def _power(values: NDArray[np.complex128]) -> NDArray[np.float64]:

@@ -56,12 +56,15 @@ class Turned:
         Turned back, with the direct path standing still where it stands at the last frame.
     direct : ndarray of complex, shape (Q,)
         Estimate of the direct path there.
+    turn : complex
+        By which the estimate was turned to get there.
     lost : bool
         True at the burst at which the lock was lost.
     """
 
     outputs: Complex
     direct: Complex
+    turn: complex
     lost: bool
 
 
@@ -112,7 +115,8 @@ class Following:
         self.loops.sense_spacing((time_s[-1] - time_s[0]) / (time_s.shape[0] - 1) if time_s.shape[0] > 1 else elapsed_s)
         self.loops.predict(elapsed_s)
         self._time_ns = middle_ns
-        direct = direct * np.exp(-1j * self._stands_at)
+        back = np.exp(-1j * self._stands_at)
+        direct = direct * back
         overlap = Overlap.of(outputs, direct, surface)
         if self.lock is not Lock.LOCKED:
             self._acquire(patterns, outputs, overlap, time_s)
@@ -121,11 +125,12 @@ class Following:
         phase_d, phase_s = self.loops.phases(time_s)
         difference = np.exp(1j * (phase_d - phase_s))
         self._stands_at = float(phase_d[-1] - phase_s[-1])
+        turn = complex(back * difference[-1])
         if self.lock is Lock.LOST:
             # What the estimate says in place of what was heard: the frames are left out.
-            return Turned(surface + difference[-1] * direct, difference[-1] * direct, lost)
+            return Turned(surface + difference[-1] * direct, difference[-1] * direct, turn, lost)
         turned = outputs * np.exp(-1j * phase_s)[:, None] - (difference - difference[-1])[:, None] * direct
-        return Turned(turned, difference[-1] * direct, lost)
+        return Turned(turned, difference[-1] * direct, turn, lost)
 
     def lead(self, time_ns: int) -> float:
         """Phase by which the direct path will have turned against the surface path at a time, rad."""

@@ -175,7 +175,7 @@ class Tracker:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
             events.append(replace(pattern, rate_low=rate_low(pattern.rate, spread)))
         link = self._link(channel, bursts[-1].pattern_id, frames)
-        noise, time_constant_s = self._estimator.noise_power.tolist(), self._config.time_constant_s
+        noise, time_constant_s = self._estimator.noise_power.tolist(), self._estimator.time_constant_s
         events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
         return Outcome(events, steps, fit.error)
 
