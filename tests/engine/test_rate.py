@@ -6,7 +6,7 @@ import scipy.optimize
 from numpy.typing import NDArray
 
 from tracker.engine.channel import Channel
-from tracker.engine.rate import gradient, rate, response
+from tracker.engine.rate import gradient, promise, rate, response
 
 
 def _channel(rng: np.random.Generator, elements: int, receivers: int, tones: int, delays: int) -> Channel:
@@ -81,3 +81,24 @@ def test_shapes_that_do_not_fit_are_refused() -> None:
         Channel(np.ones((4, 3), complex), np.ones((2, 3), complex), np.ones((5, 1, 3), complex))
     with pytest.raises(ValueError, match=r"\(K, Q\)"):
         Channel(np.ones(3, complex), np.ones((2, 3), complex), np.ones((5, 2, 3), complex))
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_promise_bounds_every_single_flip(seed: int) -> None:
+    """No single flip gains more than is promised, and a pattern that promises nothing is best among its neighbours."""
+    rng = np.random.default_rng(seed)
+    channel = _channel(rng, 24, 2, 8, 3)
+    states = rng.choice([-1, 1], 24).astype(np.int8)
+    while True:
+        gains = []
+        for element in range(24):
+            states[element] *= -1
+            gains.append(rate(channel, states))
+            states[element] *= -1
+        gains = [gain - rate(channel, states) for gain in gains]
+        assert max(gains) <= promise(channel, states) + 1e-12
+        best = int(np.argmax(gains))
+        if gains[best] <= 0:
+            break
+        states[best] *= -1
+    assert promise(channel, states) < 0.1 * rate(channel, states)

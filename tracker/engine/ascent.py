@@ -108,17 +108,19 @@ class Ascent:
         return self._take(order[:size], moves[best], float(values[best]))
 
     def _most_promising(self) -> Indices:
-        """Give the lines in falling order of slope: all that promise a gain, or as many as are tried singly."""
+        """Give the lines in falling order of slope: all that promise a gain, and enough to be tried singly."""
         slope, lines = self._slope, self._form.lines
-        hopeful = int(np.count_nonzero(self._bound > 0.0))
+        promising = int(np.count_nonzero(slope > 0.0))
+        if promising == 0:
+            return np.empty(0, dtype=np.intp)
         if self._allowance is not None:
-            return self._allowance.queue(self.states, slope, min(2 * SINGLES, 2 * hopeful))
-        count = min(hopeful, max(SINGLES, int(np.count_nonzero(slope > 0.0))))
-        some = np.argpartition(slope, lines - count)[lines - count :] if 0 < count < lines else np.arange(count)
+            return self._allowance.queue(self.states, slope, 2 * SINGLES)
+        count = min(lines, max(SINGLES, promising))
+        some = np.argpartition(slope, lines - count)[lines - count :] if count < lines else np.arange(lines)
         return np.asarray(some[np.argsort(-slope[some])])
 
     def _flip_rest(self, meter: Meter) -> bool:
-        """Try every other line that may gain singly."""
+        """Try every other line that may gain singly, its slope notwithstanding."""
         bound = self._bound
         bound[self._tried] = -np.inf
         rest = np.flatnonzero(bound > 0.0)

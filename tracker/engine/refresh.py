@@ -14,13 +14,15 @@ from .config import Config
 from .events import Cause, Pattern
 from .flips import optimize
 from .one_carrier import rate_bound
-from .rate import rate, response
+from .rate import promise, rate, response
 from .report import Stand
 
 # Published patterns kept, to know what the controller shows when it names an id.
 REMEMBERED = 256
 # A search from many starts costs more than a climb; after the first, it is made again once in so many refreshes.
 THOROUGH_EVERY = 256
+# Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
+WORTH_A_LOOK = 0.6
 # One-sided 95 % point of the normal distribution.
 QUANTILE_95 = 1.6449
 
@@ -89,7 +91,11 @@ class Refresher:
             Optimizer steps taken.
         """
         in_use = self.states(self.latest)
-        found = optimize(channel, in_use, self._config.limits, budget, thorough=self._thorough())
+        thorough = self._thorough()
+        if in_use is not None and cause is Cause.REFRESH and not thorough:
+            if promise(channel, in_use) < WORTH_A_LOOK * self._config.least_gain:
+                return None, 0
+        found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough)
         before = rate(channel, in_use) if in_use is not None else 0.0
         forced = cause in (Cause.FIRST, Cause.OPERATOR)
         same = in_use is not None and np.array_equal(found.states, in_use)
