@@ -57,7 +57,7 @@ def _against_annealing(elements: int, tones: int, receivers: int, channels: int,
         if gaps[-1] <= SHORTFALL:
             least = _least_steps(link, (1.0 - SHORTFALL) * reached, found.steps)
             times.append(_best_time(lambda link=link, least=least: _thorough(link, least), 3))  # type: ignore[misc]
-    worst = 100.0 * max(gaps)
+    worst = 100.0 * max(0.0, *gaps)
     ahead = sum(gap < -1e-9 for gap in gaps)
     level = sum(abs(gap) <= 1e-9 for gap in gaps)
     yield Row(
@@ -67,7 +67,7 @@ def _against_annealing(elements: int, tones: int, receivers: int, channels: int,
         "<= 0.1",
         worst <= 100.0 * SHORTFALL,
         f"best of {CHAINS} annealings of {steps} flips, {channels} channels, half by rays, half Rayleigh; "
-        f"ahead in {ahead} (by up to {-100.0 * min(gaps):.2f} %), level in {level}",
+        f"level to 9 digits in {level}, ahead in {ahead}" + (f" by up to {-100.0 * min(gaps):.2f} %" if ahead else ""),
     )
     if times:
         yield Row(
@@ -105,10 +105,14 @@ def _within_deadline(channels: int) -> Iterator[Row]:
         for number in range(channels):
             link = channel(number, 1024, 256, 1)
             whole = _thorough(link).rate
-            begun = time.perf_counter()
-            found = optimize(link, None, Limits(), _Deadline(begun + milliseconds / 1e3), thorough=True)
-            late.append(1e3 * (time.perf_counter() - begun) - milliseconds)
-            losses.append(100.0 * (1.0 - found.rate / whole))
+            tries = []
+            for _ in range(5):
+                begun = time.perf_counter()
+                found = optimize(link, None, Limits(), _Deadline(begun + milliseconds / 1e3), thorough=True)
+                tries.append((1e3 * (time.perf_counter() - begun) - milliseconds, 1.0 - found.rate / whole))
+            # The median of five: what else runs on the machine stalls one or the other.
+            late.append(median(lateness for lateness, _ in tries))
+            losses.append(100.0 * median(loss for _, loss in tries))
         yield Row(
             f"thorough, N 1024, K 256: lost when cut off after {milliseconds:.0f} ms",
             median(losses),
