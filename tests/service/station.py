@@ -45,6 +45,7 @@ from tracker.snapshots import Start, pack_start
 
 ROOT = Path(__file__).resolve().parent.parent.parent
 PATIENCE_S = 20.0
+PATIENCE_MS = round(PATIENCE_S * 1e3)
 DECODERS: Mapping[str, Callable[[bytes], Any]] = {
     "pattern": decode_pattern,
     "state": decode_state,
@@ -135,9 +136,10 @@ class Controller:
     def meet(self) -> None:
         """Wait until the service listens and is listened to; begin with nothing heard."""
         self.part()
-        assert self.pilots.poll(PATIENCE_S * 1e3), "the service does not subscribe"
-        while self.pilots.poll(0):
-            self.pilots.recv()
+        word = b""
+        while not word.startswith(b"\x01"):  # a subscription; those of services that ended are taken back by 0
+            assert self.pilots.poll(PATIENCE_MS), "the service does not subscribe"
+            word = self.pilots.recv()
         self.heard = Heard()
         self.asking, self.listening = self._socket(zmq.REQ), self._socket(zmq.SUB)
         self.asking.connect(self.settings.sockets.control)
@@ -145,7 +147,7 @@ class Controller:
         self.listening.setsockopt(zmq.RCVHWM, 0)
         self.listening.setsockopt(zmq.SUBSCRIBE, b"")
         self.listening.connect(self.settings.sockets.publish)
-        assert monitor.poll(PATIENCE_S * 1e3), "the service does not publish"
+        assert monitor.poll(PATIENCE_MS), "the service does not publish"
         self.listening.disable_monitor()
         # The subscription left before these requests did, through the same thread: once they are answered it is there.
         for _ in range(2):
@@ -173,7 +175,7 @@ class Controller:
     def ask_body(self, *parts: bytes) -> Reply:
         assert self.asking is not None
         self.asking.send_multipart(parts)
-        assert self.asking.poll(PATIENCE_S * 1e3), "no reply"
+        assert self.asking.poll(PATIENCE_MS), "no reply"
         return decode_reply(self.asking.recv())
 
     def listen(self, enough: Callable[[Heard], bool]) -> Heard:
@@ -181,8 +183,8 @@ class Controller:
         assert self.listening is not None
         until = time.monotonic() + PATIENCE_S
         while not enough(self.heard):
-            left_ms = (until - time.monotonic()) * 1e3
-            assert self.listening.poll(max(left_ms, 0.0)), f"not heard: {self.heard}"
+            left_ms = round((until - time.monotonic()) * 1e3)
+            assert self.listening.poll(max(left_ms, 0)), f"not heard: {self.heard}"
             self.take()
         return self.heard
 

@@ -140,6 +140,7 @@ def test_pattern_ids_go_on_over_restarts(controller: Controller, nursery: Nurser
     for run, number in enumerate((signal.SIGTERM, signal.SIGKILL, signal.SIGKILL, signal.SIGTERM)):
         service = nursery.start("serve", controller.path)
         controller.meet()
+        assert controller.ask("refresh").ok
         for burst in bursts(3, run=run):
             controller.send(burst)
         ids = [pattern.id for pattern in controller.listen(lambda heard: bool(heard.pattern)).pattern]
