@@ -4,7 +4,7 @@ from pathlib import Path
 
 from tracker.engine.aperture import ApertureBasis, Elements, Tiles
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.delay import delay_basis, frequencies
 from tracker.engine.panel import Limits
 from tracker.messages import Shape
 from tracker.settings import Settings, SettingsError
@@ -34,6 +34,7 @@ def configure(settings: Settings, folder: Path) -> Config:
         time_constant_s=settings.estimator.time_constant_ms / 1e3,
         bank=settings.estimator.bank,
         false_alarm_s=settings.drift.false_alarm_hours * 3600.0,
+        frequency_hz=frequencies(tones.fft, tones.first, tones.count, tones.spacing_khz),
         follow_phase=settings.follow.phase,
         every_bursts=refresh.every_bursts,
         least_gain=refresh.least_gain,

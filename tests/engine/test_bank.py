@@ -42,7 +42,7 @@ def test_the_true_time_constant_wins(wanted_s: float) -> None:
 
 
 def test_it_changes_over_when_the_channel_does() -> None:
-    """A channel that begins to move brings a faster filter within some hundred bursts, and a slower one when at rest."""
+    """A channel that begins to move brings a faster filter in some hundred bursts, a slower one when at rest."""
     rng = np.random.default_rng(2)
     bank = _bank(3)
     _run(bank, rng, 0.0, 400)

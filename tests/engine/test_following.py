@@ -93,6 +93,7 @@ def test_both_paths_are_followed_each_with_its_rate() -> None:
     stand = np.array(link.direct)
     for _ in range(60):
         patterns, heard, surface, time_ns = link.burst(300.0, 330.0)
+        following.begin(time_ns)
         turned = following.turn(patterns, heard, stand, surface, time_ns, 1.0)
         stand = turned.direct
     rates = following.loops.state[[1, 3]] / (2 * np.pi)
@@ -107,6 +108,7 @@ def test_turned_frames_stand_still() -> None:
     stand, left = np.array(link.direct), []
     for number in range(60):
         patterns, heard, surface, time_ns = link.burst(-200.0, -180.0)
+        following.begin(time_ns)
         turned = following.turn(patterns, heard, stand, surface, time_ns, 1.0)
         stand = turned.direct
         if number >= 20:
@@ -121,6 +123,7 @@ def test_lead_says_where_the_direct_path_will_stand() -> None:
     stand = np.array(link.direct)
     for _ in range(60):
         patterns, heard, surface, time_ns = link.burst(0.0, 35.0)
+        following.begin(time_ns)
         stand = following.turn(patterns, heard, stand, surface, time_ns, 1.0).direct
     ahead_ns = int(time_ns[-1]) + round(64 * FRAME_S * 1e9)
     stands = np.angle(np.vdot(link.direct, stand))  # of the direct path against the surface's
@@ -135,11 +138,13 @@ def test_lock_is_lost_and_gained_again() -> None:
     stand = np.array(link.direct)
     for _ in range(20):
         patterns, heard, surface, time_ns = link.burst(100.0, 100.0)
+        following.begin(time_ns)
         stand = following.turn(patterns, heard, stand, surface, time_ns, 1.0).direct
     other.frame = link.frame
     lost = False
     for _ in range(10):
         patterns, heard, _, time_ns = other.burst(100.0, 100.0)
+        following.begin(time_ns)
         turned = following.turn(patterns, heard, stand, panel.unpack(patterns, ELEMENTS) @ link.elements, time_ns, 1.0)
         stand, lost = turned.direct, lost or turned.lost
     assert lost
@@ -149,8 +154,26 @@ def test_lock_is_lost_and_gained_again() -> None:
     link.frame = other.frame
     for _ in range(10):
         patterns, heard, surface, time_ns = link.burst(100.0, 100.0)
+        following.begin(time_ns)
         stand = following.turn(patterns, heard, stand, surface, time_ns, 1.0).direct
     assert str(following.lock) == "locked"
+
+
+def test_a_step_of_gain_is_taken_with_the_burst_that_shows_it() -> None:
+    """When all grows by half, the follower says so at once, to 5 %, and not a second time."""
+    link, following = Link(12), Following(patience=100)
+    stand, gains = np.array(link.direct), []
+    for number in range(30):
+        if number == 20:
+            link.direct, link.elements = 1.5 * link.direct, 1.5 * link.elements
+        patterns, heard, surface, time_ns = link.burst(20.0, 25.0)
+        surface = surface / 1.5 if number == 20 else surface  # the estimate does not know yet
+        following.begin(time_ns)
+        turned = following.turn(patterns, heard, stand, surface, time_ns, 1.0)
+        stand = turned.direct
+        gains.append(turned.gain)
+    assert gains[20] == pytest.approx(1.5, rel=0.05)
+    assert all(gain == 1.0 for number, gain in enumerate(gains) if number != 20)
 
 
 def test_loops_are_a_kalman_filter_when_phases_are_small() -> None:
@@ -178,9 +201,13 @@ def test_snapshot_goes_on_bit_by_bit() -> None:
     stand = np.array(link.direct)
     for _ in range(10):
         patterns, heard, surface, time_ns = link.burst(50.0, 60.0)
+        following.begin(time_ns)
         stand = following.turn(patterns, heard, stand, surface, time_ns, 1.0).direct
     copy = Following(patience=100)
     copy.load(following.snapshot())
     patterns, heard, surface, time_ns = link.burst(50.0, 60.0)
-    results = [one.turn(patterns, heard, stand, surface, time_ns, 1.0).outputs for one in (following, copy)]
+    results = []
+    for one in (following, copy):
+        one.begin(time_ns)
+        results.append(one.turn(patterns, heard, stand, surface, time_ns, 1.0).outputs)
     assert np.array_equal(results[0], results[1])

@@ -47,11 +47,21 @@ def test_running_estimate_converges_and_goes_on_from_a_snapshot() -> None:
     """The running mean weighs by frames, and a copy goes on bit by bit."""
     estimate = noise.NoiseEstimate(1)
     assert not estimate.known
-    estimate.update(np.array([1.0]), 10)
-    estimate.update(np.array([3.0]), 30)
+    estimate.update(np.array([1.0]), 10, 1)
+    estimate.update(np.array([3.0]), 30, 1)
     np.testing.assert_allclose(estimate.power, [2.5])
     copy = noise.NoiseEstimate(1)
     copy.load(estimate.snapshot())
     for other in (estimate, copy):
-        other.update(np.array([7.0]), 3)
+        other.update(np.array([7.0]), 3, 1)
     assert np.array_equal(copy.power, estimate.power)
+
+
+def test_a_jump_of_the_noise_is_taken_at_once() -> None:
+    """Chance leaves the average alone; a noise of four times the power is believed with the burst that shows it."""
+    estimate = noise.NoiseEstimate(2)
+    for _ in range(100):
+        estimate.update(np.array([1.0, 1.0]), 64, 6400)
+    estimate.update(np.array([1.05, 4.0]), 64, 6400)
+    assert abs(estimate.power[0] - 1.0) < 0.01
+    assert estimate.power[1] == 4.0

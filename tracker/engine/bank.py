@@ -87,6 +87,11 @@ class Bank:
         for one in self._filters:
             one.coefficients[0, columns] *= turn
 
+    def amplify(self, columns: slice, gain: float) -> None:
+        """Make the estimates stronger, for the outputs named: the signal has grown by this amplitude."""
+        for one in self._filters:
+            one.coefficients[:, columns] *= gain
+
     def snapshot(self) -> dict[str, Any]:
         """All state."""
         return {

@@ -30,6 +30,8 @@ class Config:
         Wanted mean time between false drift alarms.
     every_bursts : int
         A refresh is considered once in so many bursts.
+    frequency_hz : ndarray, shape (K,), or None
+        Of the tones, about the carrier; needed to follow a timing drift.
     follow_phase : bool
         Whether the phases of direct and surface path are followed.
     least_gain : float
@@ -47,6 +49,7 @@ class Config:
     time_constant_s: float = 0.5
     bank: int = 1
     false_alarm_s: float = 36_000.0
+    frequency_hz: NDArray[np.float64] | None = None
     follow_phase: bool = False
     every_bursts: int = 1
     least_gain: float = 0.01

@@ -16,6 +16,7 @@ from .following import Following, Lock
 from .prior import prior_variances
 from .rls import BlockRls
 from .shrinkage import shrink
+from .timing import TimingLoop
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
 MOST_FRAMES = 256
@@ -44,6 +45,11 @@ class Frames:
         """Take the frames of a burst that are fit for use."""
         kept = np.flatnonzero(burst.keep)
         return cls(burst.patterns[kept], burst.response[kept], burst.t_ns + kept * burst.dt_ns)
+
+    def showing(self, pattern: NDArray[np.uint8]) -> "Frames":
+        """Take the frames that sounded a packed pattern."""
+        same = np.flatnonzero((self.patterns == pattern).all(axis=1))
+        return Frames(self.patterns[same], self.response[same], self.time_ns[same])
 
     def stretches(self, most_ns: int) -> Iterator["Frames"]:
         """Cut into parts that span no more than a time."""
@@ -107,7 +113,9 @@ class Estimator:
         self._end_ns = 0
         self._constants_s = time_constants(config.time_constant_s, config.bank)
         patience = config.aperture.size + 1
-        self.following = [Following(patience) for _ in range(config.receivers)] if config.follow_phase else []
+        self.following = []
+        if config.follow_phase:
+            self.following = [Following(patience, self._timing()) for _ in range(config.receivers)]
 
     @property
     def ready_after(self) -> int:
@@ -174,6 +182,8 @@ class Estimator:
 
     def _take(self, bank: Bank, taken: Frames) -> Fit:
         """Take in frames that one model of the phases serves."""
+        for following in self.following:
+            following.begin(taken.time_ns)
         tones, coefficients = self._project(taken)
         self._measure_noise(taken.patterns, tones, coefficients)
         outputs, regressors = self._in_noise_units(coefficients), self._regressors(taken)
@@ -233,9 +243,9 @@ class Estimator:
         """Throw the estimate away; the noise stays known."""
         self._bank = None
 
-    def powers(self, response: NDArray[np.complex64]) -> NDArray[np.float64]:
-        """|H|² of frames in units of the noise, unbiased, shape (R, K): the mean over the frames (B, R, K)."""
-        tones = (response.astype(np.complex128) @ self._adjoint) @ self._config.delay.T
+    def powers(self, frames: Frames) -> NDArray[np.float64]:
+        """|H|² in units of the noise, unbiased, shape (R, K): the mean over frames."""
+        tones = self._project(frames)[1] @ self._config.delay.T
         bias = (np.abs(self._config.delay) ** 2).sum(axis=1)
         power = (np.abs(tones) ** 2).mean(axis=0) / self._noise.power[:, None] - bias
         return np.asarray(np.maximum(power, 0.0))
@@ -284,6 +294,8 @@ class Estimator:
             )
             outputs[:, part] = turned.outputs
             bank.turn_direct(part, turned.turn)
+            if turned.gain != 1.0:
+                bank.amplify(part, turned.gain)
             if turned.lost:
                 lost.append(receiver)
         return tuple(lost)
@@ -291,7 +303,13 @@ class Estimator:
     def _project(self, frames: Frames) -> tuple[NDArray[np.complex128], NDArray[np.complex128]]:
         """Bring frames to double precision: on the tones, and on the delay basis."""
         tones = frames.response.astype(np.complex128)
+        for receiver, following in enumerate(self.following):
+            tones[:, receiver] = following.take_off_delay(tones[:, receiver])
         return tones, tones @ self._adjoint
+
+    def _timing(self) -> TimingLoop | None:
+        frequency_hz = self._config.frequency_hz
+        return TimingLoop(self._config.delay, frequency_hz) if frequency_hz is not None else None
 
     def _in_noise_units(self, coefficients: NDArray[np.complex128]) -> NDArray[np.complex128]:
         scale = 1.0 / np.sqrt(self._noise.power)
@@ -311,14 +329,15 @@ class Estimator:
         """Update the noise power, and carry the estimate over into the new unit."""
         known, before = self._noise.known, self._noise.power
         if tones.shape[2] - coefficients.shape[2] >= noise.LEAST_OUTSIDE:
-            self._noise.update(noise.outside(tones, coefficients), tones.shape[0])
+            left_over = tones.shape[2] - coefficients.shape[2]
+            self._noise.update(noise.outside(tones, coefficients), tones.shape[0], tones.shape[0] * left_over)
         else:
             power, degrees = noise.repeats(patterns, coefficients)
             if degrees:
-                self._noise.update(power, degrees)
+                self._noise.update(power, degrees, degrees * coefficients.shape[2])
             elif not known:
                 # Nothing repeats yet: take all that is heard for noise, which is cautious, until something does.
-                self._noise.update((np.abs(tones) ** 2).mean(axis=(0, 2)), 1)
+                self._noise.update((np.abs(tones) ** 2).mean(axis=(0, 2)), 1, 1)
         if known and self._bank is not None:
             ratio = before / self._noise.power
             amplitude = np.repeat(np.sqrt(ratio), self._adjoint.shape[1])

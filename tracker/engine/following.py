@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 
 from .acquisition import find_offset
 from .phases import DIRECT, SURFACE, Overlap, PhaseLoops
+from .timing import TimingLoop
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -36,6 +37,9 @@ GAINED, KEPT = 0.6, 0.3
 LEAST_MODEL = 40.0
 # Bursts in a row that explain too little before the lock counts as lost.
 LOST_AFTER = 3
+# A gain step is one that both paths show alike, this far from 1 and this many standard deviations, after so many bursts
+# in which the model's amplitude was right.
+LEAST_STEP, STEP_DEVIATIONS, STEADY_BURSTS = 0.1, 5.0, 8
 
 
 class Lock(StrEnum):
@@ -58,6 +62,9 @@ class Turned:
         Estimate of the direct path there.
     turn : complex
         By which the estimate was turned to get there.
+    gain : float
+        By which the signal has grown at this burst: a step of gain or transmitted power; 1 as a rule. The outputs and
+        `direct` are in the new unit already.
     lost : bool
         True at the burst at which the lock was lost.
     """
@@ -65,6 +72,7 @@ class Turned:
     outputs: Complex
     direct: Complex
     turn: complex
+    gain: float
     lost: bool
 
 
@@ -75,10 +83,13 @@ class Following:
     ----------
     patience : int
         Frames left out after a loss of lock before the channel itself is taken to have changed.
+    timing : TimingLoop or None
+        Follows a delay common to all tones; None when none is to be followed.
     """
 
-    def __init__(self, patience: int) -> None:
+    def __init__(self, patience: int, timing: TimingLoop | None = None) -> None:
         self._patience = patience
+        self._timing = timing
         self.loops = PhaseLoops()
         self.lock = Lock.SEARCHING
         self.quality = 0.0
@@ -86,6 +97,23 @@ class Following:
         self._stands_at = 0.0  # phase of the direct path against the surface path's that the estimate is turned to
         self._weak = 0
         self._left_out = 0
+        self._steady = 0
+
+    def begin(self, time_ns: NDArray[np.int64]) -> None:
+        """Go forward to a burst whose frames have these times, shape (B,)."""
+        middle_ns = int(time_ns[0] + (time_ns[-1] - time_ns[0]) // 2)
+        elapsed_s = (middle_ns - self._time_ns) / 1e9 if self._time_ns is not None else 0.0
+        count = time_ns.shape[0]
+        spacing_s = float(time_ns[-1] - time_ns[0]) / 1e9 / (count - 1) if count > 1 else elapsed_s
+        self.loops.sense_spacing(spacing_s)
+        self.loops.predict(elapsed_s)
+        if self._timing is not None:
+            self._timing.predict(elapsed_s)
+        self._time_ns = middle_ns
+
+    def take_off_delay(self, tones: Complex) -> Complex:
+        """Turn tones (B, K) back by the delay followed."""
+        return self._timing.take_off(tones) if self._timing is not None else tones
 
     def turn(
         self,
@@ -96,7 +124,7 @@ class Following:
         time_ns: NDArray[np.int64],
         weight: float,
     ) -> Turned:
-        """Follow a burst and turn it back.
+        """Follow the burst that was begun, and turn it back.
 
         Parameters
         ----------
@@ -109,12 +137,7 @@ class Following:
         weight : float
             Inverse variance of an output about the model.
         """
-        middle_ns = int(time_ns[0] + (time_ns[-1] - time_ns[0]) // 2)
-        time_s = (time_ns - middle_ns) / 1e9
-        elapsed_s = (middle_ns - self._time_ns) / 1e9 if self._time_ns is not None else 0.0
-        self.loops.sense_spacing((time_s[-1] - time_s[0]) / (time_s.shape[0] - 1) if time_s.shape[0] > 1 else elapsed_s)
-        self.loops.predict(elapsed_s)
-        self._time_ns = middle_ns
+        time_s = (time_ns - (self._time_ns if self._time_ns is not None else time_ns[0])) / 1e9
         back = np.exp(-1j * self._stands_at)
         direct = direct * back
         overlap = Overlap.of(outputs, direct, surface)
@@ -123,14 +146,19 @@ class Following:
         self.loops.measure(overlap, time_s, weight)
         lost = self._judge(overlap, time_s)
         phase_d, phase_s = self.loops.phases(time_s)
+        gain = self._gain_step(overlap, phase_d, phase_s, weight)
+        direct, surface = gain * direct, gain * surface
+        if self._timing is not None and self.lock is Lock.LOCKED:
+            model = np.exp(1j * phase_d)[:, None] * direct + np.exp(1j * phase_s)[:, None] * surface
+            self._timing.measure(model, outputs - model, weight)
         difference = np.exp(1j * (phase_d - phase_s))
         self._stands_at = float(phase_d[-1] - phase_s[-1])
         turn = complex(back * difference[-1])
         if self.lock is Lock.LOST:
             # What the estimate says in place of what was heard: the frames are left out.
-            return Turned(surface + difference[-1] * direct, difference[-1] * direct, turn, lost)
+            return Turned(surface + difference[-1] * direct, difference[-1] * direct, turn, gain, lost)
         turned = outputs * np.exp(-1j * phase_s)[:, None] - (difference - difference[-1])[:, None] * direct
-        return Turned(turned, difference[-1] * direct, turn, lost)
+        return Turned(turned, difference[-1] * direct, turn, gain, lost)
 
     def lead(self, time_ns: int) -> float:
         """Phase by which the direct path will have turned against the surface path at a time, rad."""
@@ -161,6 +189,8 @@ class Following:
             "stands_at": self._stands_at,
             "weak": self._weak,
             "left_out": self._left_out,
+            "steady": self._steady,
+            "timing": self._timing.snapshot() if self._timing is not None else None,
         }
 
     def load(self, snapshot: dict[str, Any]) -> None:
@@ -171,6 +201,9 @@ class Following:
         self._time_ns = snapshot["time_ns"]
         self._stands_at = float(snapshot["stands_at"])
         self._weak, self._left_out = int(snapshot["weak"]), int(snapshot["left_out"])
+        self._steady = int(snapshot["steady"])
+        if self._timing is not None:
+            self._timing.load(snapshot["timing"])
 
     def _acquire(self, patterns: NDArray[np.uint8], outputs: Complex, overlap: Overlap, time_s: Real) -> None:
         power = overlap.direct_power * time_s.shape[0] + float(overlap.surface_power.sum())
@@ -204,6 +237,33 @@ class Following:
             if self._left_out > self._patience:
                 self.lock = Lock.SEARCHING
         return False
+
+    def _gain_step(self, overlap: Overlap, phase_d: Real, phase_s: Real, weight: float) -> float:
+        """Return the step of gain that the burst shows, 1 for none."""
+        if self.lock is not Lock.LOCKED:
+            self._steady = 0
+            return 1.0
+        if abs(self.quality - 1.0) < LEAST_STEP:
+            self._steady += 1
+            return 1.0
+        if self._steady < STEADY_BURSTS:
+            return 1.0
+        cross = float((np.exp(1j * (phase_s - phase_d)) * overlap.cross).real.sum())
+        direct_power = overlap.direct_power * phase_d.shape[0]
+        matrix = np.array([[direct_power, cross], [cross, float(overlap.surface_power.sum())]])
+        heard = np.array(
+            [
+                float((np.exp(-1j * phase_d) * overlap.direct).real.sum()),
+                float((np.exp(-1j * phase_s) * overlap.surface).real.sum()),
+            ]
+        )
+        covariance = np.linalg.inv(2.0 * weight * matrix + 1e-9 * np.eye(2))
+        amplitude = np.linalg.solve(matrix + 1e-9 * np.eye(2), heard)
+        apart = (amplitude[0] - amplitude[1]) ** 2 / (covariance[0, 0] + covariance[1, 1] - 2 * covariance[0, 1])
+        deviations = abs(self.quality - 1.0) * np.sqrt(2.0 * weight * float(matrix.sum()))
+        if deviations < STEP_DEVIATIONS or apart > STEP_DEVIATIONS**2:
+            return 1.0
+        return self.quality
 
 
 def _wrapped(phase: float) -> float:

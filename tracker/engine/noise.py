@@ -14,6 +14,9 @@ from numpy.typing import NDArray
 LEAST_OUTSIDE = 4
 # Frames over which the running noise estimate averages once it is established.
 MEMORY_FRAMES = 4096
+# A burst whose noise differs from the running one by this share and this many standard deviations is a jump, not
+# chance: the average starts anew, or everything would be in a wrong unit for as long as it remembers.
+JUMP_SHARE, JUMP_DEVIATIONS = 0.15, 6.0
 # Below this the response is exactly zero or a constant; noise then counts as this, so that nothing is divided by zero.
 FLOOR = 1e-30
 
@@ -78,26 +81,29 @@ class NoiseEstimate:
     """
 
     def __init__(self, receivers: int) -> None:
-        self._frames = 0.0
+        self._frames: NDArray[np.float64] = np.zeros(receivers)
         self.power: NDArray[np.float64] = np.zeros(receivers)
 
     @property
     def known(self) -> bool:
         """True once anything was measured."""
-        return self._frames > 0
+        return bool((self._frames > 0).all())
 
-    def update(self, power: NDArray[np.float64], frames: int) -> None:
-        """Take in what `frames` frames measured."""
-        self._frames = min(self._frames + frames, MEMORY_FRAMES)
+    def update(self, power: NDArray[np.float64], frames: int, degrees: int) -> None:
+        """Take in what `frames` frames measured, with so many complex degrees of freedom each receiver."""
+        off = np.abs(power - self.power)
+        limit = max(JUMP_SHARE, JUMP_DEVIATIONS / np.sqrt(degrees)) * np.maximum(self.power, FLOOR)
+        self._frames = np.where(off > limit, 0.0, self._frames)
+        self._frames = np.minimum(self._frames + frames, MEMORY_FRAMES)
         self.power = np.maximum(self.power + (power - self.power) * (frames / self._frames), FLOOR)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
-        return {"frames": self._frames, "power": self.power.copy()}
+        return {"frames": self._frames.copy(), "power": self.power.copy()}
 
     def load(self, snapshot: dict[str, Any]) -> None:
         """Take over a snapshot."""
-        self._frames = float(snapshot["frames"])
+        self._frames = np.array(snapshot["frames"], dtype=np.float64)
         self.power = np.array(snapshot["power"], dtype=np.float64)
 
 

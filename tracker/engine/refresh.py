@@ -92,9 +92,9 @@ class Refresher:
         """
         in_use = self.states(self.latest)
         thorough = self._thorough()
-        if in_use is not None and cause is Cause.REFRESH and not thorough:
-            if promise(channel, in_use) < WORTH_A_LOOK * self._config.least_gain:
-                return None, 0
+        routine = cause is Cause.REFRESH and not thorough
+        if routine and in_use is not None and promise(channel, in_use) < WORTH_A_LOOK * self._config.least_gain:
+            return None, 0
         found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough)
         before = rate(channel, in_use) if in_use is not None else 0.0
         forced = cause in (Cause.FIRST, Cause.OPERATOR)

@@ -271,10 +271,9 @@ class Tracker:
         chosen = self._refresher.states(in_use)
         if chosen is None:
             return Link(in_use, None, None, *self._estimator.phase)
-        shown = panel.pack(chosen)
-        sounded = [part.response[(part.patterns == shown).all(axis=1)] for part in frames]
+        sounded = Frames.together([part.showing(panel.pack(chosen)) for part in frames])
         measured = None
-        if any(part.shape[0] for part in sounded):
-            measured = float(np.log2(1.0 + self._estimator.powers(np.concatenate(sounded))).mean())
+        if sounded.time_ns.size:
+            measured = float(np.log2(1.0 + self._estimator.powers(sounded)).mean())
         predicted = rate(channel, chosen) if self._estimator.lock is not Lock.LOST else None
         return Link(in_use, measured, predicted, *self._estimator.phase)
