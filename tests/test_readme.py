@@ -24,12 +24,13 @@ import pytest
 import zmq
 from rich.text import Text
 
+from tracker.assembly import configure
 from tracker.cli import COMMANDS
 from tracker.engine.burst import Burst
 from tracker.engine.events import Alarm, Cause, Mode, Pattern, State
 from tracker.engine.refusal import Reason
 from tracker.messages import Verb, encode_alarm, encode_pattern, encode_pilots, encode_state
-from tracker.settings import Settings
+from tracker.settings import Settings, SettingsError, parse
 
 ROOT = Path(__file__).resolve().parent.parent
 PAGES = {name: (ROOT / name).read_text(encoding="utf-8") for name in ("README.md", "DEVELOPERS.md")}
@@ -65,6 +66,10 @@ def rows(heading: str) -> list[list[str]]:
 def names(cell: str) -> list[str]:
     """What stands in backticks."""
     return re.findall(r"`([^`]+)`", cell)
+
+
+CONTROLLER, ASKING = blocks(README, "python")
+SETTINGS = blocks(README, "toml")[0]
 
 
 # Links and pictures
@@ -245,6 +250,17 @@ def test_the_table_of_settings_is_the_settings() -> None:
         assert len(cells[4]) > 10, key
 
 
+@pytest.mark.parametrize("basis", ["learned", "region"])
+def test_what_the_table_calls_refused_is_refused(basis: str) -> None:
+    """A basis that the README says this version refuses cannot be had; when it can, the README has to say so."""
+    (row,) = (cells for cells in rows("Settings") if cells[0] == "`aperture.basis`")
+    assert row[3].endswith('`"learned"`, `"region"`')
+    assert "this version refuses the other two" in row[4]
+    text = f'{SETTINGS}\n[aperture]\nbasis = "{basis}"\nfile = "basis.npz"\n'
+    with pytest.raises(SettingsError, match=basis):
+        configure(parse(text), Path())
+
+
 def sent() -> dict[str, dict[str, Any]]:
     """One message of each kind as it goes over the wire, unpacked by the library alone."""
     states = np.ones(8, np.int8)
@@ -291,10 +307,6 @@ def test_every_dependency_is_accounted_for() -> None:
 
 
 # The example
-
-
-CONTROLLER, ASKING = blocks(README, "python")
-SETTINGS = blocks(README, "toml")[0]
 
 
 def test_the_example_needs_little() -> None:
