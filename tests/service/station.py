@@ -268,6 +268,7 @@ class Running:
     service: Service
     tracker: Tracker
     journal: Journal
+    ended: threading.Event = field(default_factory=threading.Event)
     fault: BaseException | None = None
 
 
@@ -303,6 +304,7 @@ def running(controller: Controller, create: Callable[..., LogWriter] = LogWriter
                 service.run()
             except BaseException as fault:  # noqa: BLE001 - the test looks at it
                 this.fault = fault
+            this.ended.set()
 
         thread = threading.Thread(target=work)
         thread.start()

@@ -72,18 +72,20 @@ def steps(records: Iterable[Record], link: str, shape: Shape, *, follow: bool) -
         When a journal contradicts itself.
     """
     waiting: dict[tuple[int, int], Taken] = {}
+    time_ns = 0
     for record in records:
         kind, name = _topic(record)
         if name != link:
             continue
+        time_ns = record.log_time_ns
         try:
             if kind == "pilots":
                 burst = decode_pilots(record.body, link, shape)
-                taken = Taken(burst if follow else replace(burst, pattern_id=None), record.log_time_ns)
                 if follow:
-                    waiting[burst.run, burst.seq] = taken
+                    waiting[burst.run, burst.seq] = Taken(burst, time_ns)
                 else:
-                    yield Block([taken], None, record.log_time_ns)
+                    # The pattern in use was one of another tracker's: its id says nothing to this one.
+                    yield Block([Taken(replace(burst, pattern_id=None), time_ns)], None, time_ns)
             elif kind == DECISION and follow:
                 yield _block(decode_decision(record.body), waiting, record)
             elif kind == COMMAND and follow:
@@ -92,6 +94,9 @@ def steps(records: Iterable[Record], link: str, shape: Shape, *, follow: bool) -
                 yield Said(kind, record.body)
         except Refused as refused:
             yield refused
+    if waiting:
+        # The service met a fault with these, and wrote them down for a replay to meet it too.
+        yield Block(list(waiting.values()), None, time_ns)
 
 
 def _topic(record: Record) -> tuple[str, str]:

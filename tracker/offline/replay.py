@@ -7,7 +7,9 @@ others it says what would have changed.
 import json
 import sys
 import time
-from collections.abc import Callable
+from collections import Counter
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -17,16 +19,18 @@ from tracker.assembly import configure, shape
 from tracker.decisions import Command, carry_out
 from tracker.engine.budget import Steps
 from tracker.engine.events import Event, Pattern
-from tracker.engine.refusal import Refused
+from tracker.engine.refusal import Reason, Refused
+from tracker.engine.report import Counts
 from tracker.engine.tracker import Tracker
-from tracker.logs import LogReader, LogWriter
+from tracker.logs import LogError, LogReader, LogWriter, Record
 from tracker.outgoing import encode
-from tracker.settings import Settings, load, parse
+from tracker.settings import Settings, SettingsError, load, parse
 from tracker.snapshots import SnapshotError, unpack_start
 
 from .blocks import Block, Said, steps
 from .errors import OfflineError
 from .progress import progress_bar
+from .replay_text import render
 from .summary import Account, Comparison, decode_said
 
 
@@ -47,6 +51,7 @@ class Replay:
         self._given, self._folder, self._writer = settings, folder, writer
         self._settings: Settings | None = settings
         self._tracker: Tracker | None = None
+        self._taken: Counter[str] = Counter()
         self.logged, self.replayed, self.comparison = Account(), Account(), Comparison()
         self.refused = 0
         self.span_s = 0.0
@@ -67,44 +72,47 @@ class Replay:
         LogError, OfflineError, SettingsError
         """
         reader = LogReader(path)
-        settings, follow = self._prepare(path, reader)
-        tracker = self._tracker
-        if tracker is None:
-            raise OfflineError(f"{path}: no tracker could be made")
+        settings, tracker, follow = self._prepare(path, reader)
+        link, before = settings.link.name, tracker.counts
+        links: set[str] = set()
+        first_refusal: Refused | None = None
         first_ns = last_ns = None
-        for step in steps(reader, settings.link.name, shape(settings), follow=follow):
+        for step in steps(_noting(reader, links), link, shape(settings), follow=follow):
             if isinstance(step, Block):
-                self._advance(tracker, step, settings)
+                first_refusal = self._advance(tracker, step, settings) or first_refusal
                 first_ns = first_ns if first_ns is not None else step.taken[0].burst.t_ns
                 last_ns = step.taken[-1].burst.end_ns
                 advanced(reader.tell(), reader.size)
             elif isinstance(step, Command):
-                carry_out(step, tracker, settings.panel.elements)
+                self._carry_out(step, tracker, settings)
             elif isinstance(step, Said):
                 self._heard(step)
             else:
                 self.refused += 1
+                first_refusal = first_refusal or step
+                if step.reason is Reason.SETTINGS and first_ns is None:
+                    break  # the log is of another panel: to read on to its end would change nothing
+        self._count(before, tracker.counts)
+        if tracker.counts.bursts == before.bursts:
+            _check_used(path, link, links, first_refusal)
         if first_ns is not None and last_ns is not None:
             self.span_s += (last_ns - first_ns) / 1e9
         if reader.damage:
             self.damage.append(f"{path}: {reader.damage}")
+        advanced(reader.size, reader.size)
 
     @property
     def counts(self) -> dict[str, int]:
-        """What the engine took and did not take."""
-        if self._tracker is None:
-            return {}
-        counts = self._tracker.counts
-        return {
-            "bursts": counts.bursts,
-            "frames": counts.frames,
-            "lost": counts.lost,
-            "duplicate": counts.duplicate,
-            "refused": self.refused,
-            "dropped_frames": counts.dropped_frames,
-        }
+        """What the engine took and did not take, over all logs."""
+        names = ("bursts", "frames", "lost", "duplicate", "refused", "dropped_frames")
+        return {name: self._taken[name] for name in names} | {"refused": self.refused}
 
-    def _prepare(self, path: Path, reader: LogReader) -> tuple[Settings, bool]:
+    def _count(self, before: Counts, after: Counts) -> None:
+        # A journal's counts go on from file to file: what is counted is what came in between.
+        for name in Counts.__slots__:
+            self._taken[name] += getattr(after, name) - getattr(before, name)
+
+    def _prepare(self, path: Path, reader: LogReader) -> tuple[Settings, Tracker, bool]:
         """Find the settings, and the tracker that starts into this log."""
         text = reader.attachments.get("settings.toml")
         own = parse(text.decode(errors="replace"), f"{path}: settings.toml") if text is not None else None
@@ -114,20 +122,31 @@ class Replay:
         follow = own == settings and "start.msgpack" in reader.attachments
         self.own_settings &= own == settings
         if follow:
-            try:
-                start = unpack_start(reader.attachments["start.msgpack"])
-            except SnapshotError as error:
-                raise OfflineError(f"{path}: {error}") from None
-            self._tracker = Tracker(configure(settings, self._folder), start.first_id)
-            if start.snapshot is not None:
-                self._tracker.load(start.snapshot)
+            self._tracker = self._started(path, reader.attachments["start.msgpack"], settings)
         elif self._tracker is None or settings != self._settings:
             self._tracker = Tracker(configure(settings, self._folder))
         self._settings = settings
-        return settings, follow
+        return settings, self._tracker, follow
 
-    def _advance(self, tracker: Tracker, block: Block, settings: Settings) -> None:
-        bursts = []
+    def _started(self, path: Path, data: bytes, settings: Settings) -> Tracker:
+        """Make the tracker as it stood when the journal's file began."""
+        try:
+            start = unpack_start(data)
+            tracker = Tracker(configure(settings, self._folder), start.first_id)
+            if start.snapshot is not None:
+                tracker.load(start.snapshot)
+        except SnapshotError as error:
+            raise OfflineError(f"{path}: {error}") from None
+        except (LookupError, TypeError, ValueError, AttributeError) as error:
+            raise OfflineError(
+                f"{path}: start.msgpack was written by another version of this program ({error!r}); "
+                "with --settings that differ from its own the log can be replayed all the same"
+            ) from None
+        return tracker
+
+    def _advance(self, tracker: Tracker, block: Block, settings: Settings) -> Refused | None:
+        """Work off a block; return the refusal of a burst, if one was refused."""
+        bursts, refusal = [], None
         for taken in block.taken:
             try:
                 tracker.admit(taken.burst, taken.arrival_ns)
@@ -135,17 +154,19 @@ class Replay:
             except Refused as refused:
                 tracker.refuse(refused.reason)
                 self.refused += 1
+                refusal = refusal or refused
         if not bursts:
-            return
+            return refusal
         budget = Steps(settings.refresh.most_steps if block.steps is None else block.steps)
         outcome = tracker.advance(bursts, budget)
-        self.replayed.error.extend([outcome.error] * len(bursts))
+        self.replayed.error.add(outcome.error, len(bursts))
         for event in outcome.events:
             self.replayed.take(event)
             if isinstance(event, Pattern):
                 self.comparison.replayed(event)
         if self._writer is not None:
             self._write(self._writer, settings.link.name, outcome.events, block.time_ns)
+        return refusal
 
     @staticmethod
     def _write(writer: LogWriter, link: str, events: list[Event], time_ns: int) -> None:
@@ -153,6 +174,12 @@ class Replay:
             kind, body, t_ns = encode(link, event, 0, {})
             writer.add(f"{kind}/{link}", body, time_ns, t_ns)
         writer.commit()
+
+    def _carry_out(self, command: Command, tracker: Tracker, settings: Settings) -> None:
+        try:
+            carry_out(command, tracker, settings.panel.elements)
+        except (Refused, ValueError):  # of a program that knows more verbs, or of another panel
+            self.refused += 1
 
     def _heard(self, said: Said) -> None:
         try:
@@ -163,6 +190,25 @@ class Replay:
         self.logged.take(event)
         if isinstance(event, Pattern):
             self.comparison.logged(event)
+
+
+def _noting(records: Iterable[Record], links: set[str]) -> Iterator[Record]:
+    """Pass records on, and note the links that bursts are of."""
+    for record in records:
+        if record.topic.startswith("pilots/"):
+            links.add(record.topic.removeprefix("pilots/"))
+        yield record
+
+
+def _check_used(path: Path, link: str, links: set[str], refusal: Refused | None) -> None:
+    """Complain about a log of which nothing could be used; one that holds no bursts at all is as it should be."""
+    if refusal is not None and link in links:
+        raise OfflineError(f"{path}: none of its bursts can be used; the first refusal: {refusal.detail}")
+    if links and link not in links:
+        raise OfflineError(
+            f"{path}: holds no bursts of link {link!r}, but of {', '.join(sorted(links))}; "
+            "name one of them in link.name of the settings"
+        )
 
 
 def replay(
@@ -195,22 +241,14 @@ def replay(
     """
     settings = load(settings_path) if settings_path else None
     folder = settings_path.parent if settings_path else paths[0].parent
-    writer = None
-    if out is not None:
-        text = (
-            settings_path.read_bytes() if settings_path else LogReader(paths[0]).attachments.get("settings.toml", b"")
-        )
-        # A fixed clock: the same replay twice writes the same file.
-        writer = LogWriter(out, attachments={"settings.toml": text}, clock_ns=lambda: 0)
-    work = Replay(settings, folder, writer)
+    if summary_path is not None and not summary_path.parent.is_dir():
+        raise OfflineError(f"{summary_path}: cannot be written: there is no folder {summary_path.parent}")
     began = time.perf_counter()
-    try:
+    with _written(out, settings_path, paths[0]) as writer:
+        work = Replay(settings, folder, writer)
         with threadpool_limits(limits=1), progress_bar(progress, len(paths)) as bar:
             for path in paths:
                 work.run(path, bar.begin(path.name))
-    finally:
-        if writer is not None:
-            writer.close()
     result = _result(work, paths, time.perf_counter() - began)
     if summary_path is not None:
         try:
@@ -221,11 +259,30 @@ def replay(
     return 0
 
 
+@contextmanager
+def _written(out: Path | None, settings_path: Path | None, first: Path) -> Iterator[LogWriter | None]:
+    """Open the log of what would have been published; it goes again when the user's mistake left nothing to write."""
+    if out is None:
+        yield None
+        return
+    text = settings_path.read_bytes() if settings_path else LogReader(first).attachments.get("settings.toml", b"")
+    # A fixed clock: the same replay twice writes the same file.
+    with LogWriter(out, attachments={"settings.toml": text}, clock_ns=lambda: 0) as writer:
+        begun = writer.bytes_written
+        try:
+            yield writer
+        except (LogError, OfflineError, SettingsError):
+            if writer.bytes_written == begun:
+                out.unlink()
+            raise
+
+
 def _result(work: Replay, paths: list[Path], took_s: float) -> dict[str, Any]:
     only_log, only_replay = work.comparison.unmatched
+    own = work.own_settings
     return {
         "logs": [str(path) for path in paths],
-        "own_settings": work.own_settings,
+        "own_settings": own,
         "span_s": work.span_s,
         "took_s": took_s,
         "times_real_time": work.span_s / took_s if took_s > 0 else None,
@@ -235,54 +292,7 @@ def _result(work: Replay, paths: list[Path], took_s: float) -> dict[str, Any]:
         "patterns_same": work.comparison.same,
         "patterns_only_in_log": only_log,
         "patterns_only_in_replay": only_replay,
-        "first_difference": work.comparison.first_difference,
+        # Under other settings patterns are meant to differ.
+        "first_difference": work.comparison.first_difference if own else None,
         "damage": work.damage,
     }
-
-
-def render(result: dict[str, Any]) -> str:
-    """Write a summary as text for a person."""
-    counts, logged, replayed = result["counts"], result["logged"], result["replayed"]
-    lines = [
-        f"{counts.get('bursts', 0)} bursts, {counts.get('frames', 0)} frames over {result['span_s']:.3f} s, "
-        f"worked off in {result['took_s']:.2f} s ({result['times_real_time'] or 0:.1f} times real time)",
-        f"lost {counts.get('lost', 0)}, refused {counts.get('refused', 0)}, frames left out "
-        f"{counts.get('dropped_frames', 0)}",
-        "",
-        f"{'':24}{'logged':>12}{'replayed':>12}",
-    ]
-    rows = [
-        ("patterns published", "patterns", "d"),
-        ("rate measured", "rate_measured", ".3f"),
-        ("rate predicted", "rate_predicted", ".3f"),
-        ("innovation ratio", "innovation", ".3f"),
-        ("prediction error", "prediction_error", ".3f"),
-    ]
-    for label, key, form in rows:
-        lines.append(f"{label:24}{_cell(logged[key], form):>12}{_cell(replayed[key], form):>12}")
-    for kind in sorted({*logged["alarms"], *replayed["alarms"]}):
-        label = f"alarms: {kind}"
-        lines.append(f"{label:24}{logged['alarms'].get(kind, 0):>12}{replayed['alarms'].get(kind, 0):>12}")
-    lines += ["", _verdict(result)]
-    lines += [f"damage: {text}" for text in result["damage"]]
-    return "\n".join(lines) + "\n"
-
-
-def _verdict(result: dict[str, Any]) -> str:
-    same, logged = result["patterns_same"], result["logged"]["patterns"]
-    if not logged:
-        return "The log holds no published patterns to compare with."
-    if not result["own_settings"]:
-        return "Other settings than the log's own: what is replayed is what they would have done with the same frames."
-    if same == logged and not result["patterns_only_in_replay"]:
-        return f"All {logged} patterns came out bit by bit as published."
-    parts = [f"{same} of {logged} patterns came out bit by bit as published"]
-    if result["first_difference"]:
-        parts.append(f"first difference: {result['first_difference']}")
-    if result["patterns_only_in_log"] or result["patterns_only_in_replay"]:
-        parts.append(f"{result['patterns_only_in_log']} only in the log, {result['patterns_only_in_replay']} only here")
-    return "; ".join(parts) + "."
-
-
-def _cell(value: float | None, form: str) -> str:
-    return "–" if value is None else format(value, form)

@@ -1,6 +1,6 @@
 """What a replay has to say: how the log went, how the replay went, and whether they are the same."""
 
-from collections import Counter
+from collections import Counter, deque
 from collections.abc import Iterable
 from dataclasses import dataclass, field, fields
 from typing import Any
@@ -14,6 +14,24 @@ from .blocks import Said
 
 
 @dataclass(slots=True)
+class Mean:
+    """A mean that needs no memory of its values."""
+
+    count: int = 0
+    total: float = 0.0
+
+    def add(self, value: float, times: int = 1) -> None:
+        """Take a value in, so many times."""
+        self.count += times
+        self.total += value * times
+
+    @property
+    def value(self) -> float | None:
+        """The mean; None before the first value."""
+        return self.total / self.count if self.count else None
+
+
+@dataclass(slots=True)
 class Account:
     """One side's account: the log's own, or the replay's.
 
@@ -21,16 +39,16 @@ class Account:
     ----------
     patterns, alarms : int, Counter
         Refreshes published, alarms by kind.
-    predicted, measured, innovation, error : list of float
-        A value a burst, where there is one.
+    predicted, measured, innovation, error : Mean
+        Over bursts, where there is a value.
     """
 
     patterns: int = 0
     alarms: Counter[str] = field(default_factory=Counter)
-    predicted: list[float] = field(default_factory=list)
-    measured: list[float] = field(default_factory=list)
-    innovation: list[float] = field(default_factory=list)
-    error: list[float] = field(default_factory=list)
+    predicted: Mean = field(default_factory=Mean)
+    measured: Mean = field(default_factory=Mean)
+    innovation: Mean = field(default_factory=Mean)
+    error: Mean = field(default_factory=Mean)
 
     def take(self, event: Event) -> None:
         """Take in one event."""
@@ -43,20 +61,21 @@ class Account:
 
     def _take_state(self, state: State) -> None:
         if state.rate_predicted is not None:
-            self.predicted.append(state.rate_predicted)
+            self.predicted.add(state.rate_predicted)
         if state.rate_measured is not None:
-            self.measured.append(state.rate_measured)
-        self.innovation.append(float(np.mean(state.innovation)))
+            self.measured.add(state.rate_measured)
+        if state.innovation:
+            self.innovation.add(sum(state.innovation) / len(state.innovation))
 
     def as_dict(self) -> dict[str, Any]:
         """Summarise as plain values."""
         return {
             "patterns": self.patterns,
             "alarms": dict(self.alarms),
-            "rate_predicted": _mean(self.predicted),
-            "rate_measured": _mean(self.measured),
-            "innovation": _mean(self.innovation),
-            "prediction_error": _mean(self.error),
+            "rate_predicted": self.predicted.value,
+            "rate_measured": self.measured.value,
+            "innovation": self.innovation.value,
+            "prediction_error": self.error.value,
         }
 
 
@@ -64,8 +83,8 @@ class Comparison:
     """Holds the patterns of a replay against those that the log says were published, one after another."""
 
     def __init__(self) -> None:
-        self._logged: list[Pattern] = []
-        self._replayed: list[Pattern] = []
+        self._logged: deque[Pattern] = deque()
+        self._replayed: deque[Pattern] = deque()
         self.same = 0
         self.first_difference: str | None = None
 
@@ -86,7 +105,7 @@ class Comparison:
 
     def _settle(self) -> None:
         while self._logged and self._replayed:
-            logged, replayed = self._logged.pop(0), self._replayed.pop(0)
+            logged, replayed = self._logged.popleft(), self._replayed.popleft()
             different = [name for name in _names() if not _equal(getattr(logged, name), getattr(replayed, name))]
             if not different:
                 self.same += 1
@@ -114,7 +133,3 @@ def _names() -> Iterable[str]:
 
 def _equal(a: Any, b: Any) -> bool:
     return bool(np.array_equal(a, b))
-
-
-def _mean(values: list[float]) -> float | None:
-    return float(np.mean(values)) if values else None

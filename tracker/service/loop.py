@@ -128,7 +128,7 @@ class Service:
         self._latencies.add((time.monotonic_ns() - first.monotonic_ns) // 1000)
         self._account.take(outcome.events, stages_us)
         if not kept:
-            self._notices.disk(self._journal.fault)
+            self._notices.disk(self._outlet.fault)
         if self._journal.full:
             self._journal.rotate()
 
@@ -136,7 +136,7 @@ class Service:
         """Carry out a verb that changes the engine, and journal it where it stood in the order of things."""
         carry_out(command, self._tracker, self._settings.panel.elements)
         if not self._outlet.command(command):
-            self._notices.disk(self._journal.fault)
+            self._notices.disk(self._outlet.fault)
         self._log.info("command", verb=command.verb)
 
     def _look_after(self, *, idle: bool) -> None:

@@ -32,6 +32,8 @@ class Outlet:
         Whether the latest pattern of the tracker was not sent.
     journal_us : int
         How long the last block took to be written, µs.
+    fault : str
+        Why something could not be recorded, when last it could not.
     """
 
     def __init__(
@@ -41,6 +43,7 @@ class Outlet:
         self._required = required
         self.withheld = False
         self.journal_us = 0
+        self.fault = ""
 
     def block(
         self,
@@ -84,11 +87,11 @@ class Outlet:
     def command(self, command: Command) -> bool:
         """Record a command where it stands in the order of things."""
         now_ns = time.time_ns()
-        return self._journal.write([(f"{COMMAND}/{self._link}", encode_command(command), now_ns, now_ns)])
+        return self._record([(f"{COMMAND}/{self._link}", encode_command(command), now_ns, now_ns)])
 
     def unfinished(self, arrivals: Sequence[Arrival]) -> None:
         """Record bursts that the tracker could not work off, so that a replay meets the same fault."""
-        self._journal.write(self._heard(arrivals))
+        self._record(self._heard(arrivals))
 
     def works_again(self) -> bool:
         """Whether a pattern was withheld and the next one can be recorded; said once."""
@@ -115,7 +118,7 @@ class Outlet:
             topic = f"{kind}/{self._link}"
             entries.append((topic, body, now_ns, t_ns))
             out.append((topic, body, isinstance(event, Pattern)))
-        kept = (next_id == self._ids.next_id or self._keep_id(next_id)) and self._journal.write(entries)
+        kept = (next_id == self._ids.next_id or self._keep_id(next_id)) and self._record(entries)
         for topic, body, is_pattern in out:
             # A pattern that could not be recorded is withheld, unless the settings say that recording is no condition.
             if is_pattern:
@@ -128,6 +131,13 @@ class Outlet:
     def _keep_id(self, next_id: int) -> bool:
         try:
             self._ids.keep(next_id)
-        except OSError:
+        except OSError as error:
+            self.fault = f"the next pattern id cannot be written: {error.strerror}"
             return False
         return True
+
+    def _record(self, entries: list[Entry]) -> bool:
+        kept = self._journal.write(entries)
+        if not kept:
+            self.fault = self._journal.fault
+        return kept
