@@ -100,6 +100,8 @@ class State:
         Drift statistic: the larger of the two CUSUM sums.
     threshold : float
         Its alarm threshold.
+    promise_kept : float or None
+        Share of the last promises (`Pattern.rate_low`) that the measured rate kept; None before any was tested.
     """
 
     run: int
@@ -124,6 +126,7 @@ class State:
     together: int
     statistic: float
     threshold: float
+    promise_kept: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -23,8 +23,6 @@ REMEMBERED = 256
 THOROUGH_EVERY = 256
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
 WORTH_A_LOOK = 0.6
-# One-sided 95 % point of the normal distribution.
-QUANTILE_95 = 1.6449
 
 
 class Refresher:
@@ -184,8 +182,3 @@ def rate_spread(channel: Channel, states: NDArray[np.int8], variance: float) -> 
     slope = (weight @ channel.basis) * (2.0 / (math.log(2.0) * tones.size))
     # A complex error of variance v moves the rate through one of its two real dimensions: v / 2.
     return math.sqrt(0.5 * variance * float((np.abs(slope) ** 2).sum()))
-
-
-def rate_low(pattern_rate: float, spread: float) -> float:
-    """Rate expected to be met with probability 0.95."""
-    return max(pattern_rate - QUANTILE_95 * spread, 0.0)

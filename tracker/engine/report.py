@@ -52,6 +52,8 @@ class Link:
         Frequency offset followed.
     phase_rad : (float, float)
         Phase of the direct and of the surface path.
+    promise_kept : float or None
+        Share of the last promises that were kept.
     """
 
     pattern: int | None
@@ -59,6 +61,7 @@ class Link:
     predicted: float | None
     offset_hz: float = 0.0
     phase_rad: tuple[float, float] = (0.0, 0.0)
+    promise_kept: float | None = None
 
 
 def drift_alarm(change: Change, elapsed_s: float, stand: Stand) -> Alarm:
@@ -144,6 +147,7 @@ def states(
             together=len(bursts),
             statistic=drift.statistic,
             threshold=drift.threshold,
+            promise_kept=link.promise_kept,
         )
         for burst in bursts
     ]

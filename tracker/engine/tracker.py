@@ -16,6 +16,7 @@ from . import panel
 from .admission import Admission
 from .budget import Budget
 from .burst import Burst
+from .calibration import Calibration
 from .channel import Channel
 from .config import Config
 from .cusum import Change
@@ -25,7 +26,7 @@ from .events import Cause, Event, Mode, Pattern
 from .following import KEPT, Lock
 from .lifecycle import Happening, after
 from .rate import rate
-from .refresh import Refresher, rate_low, rate_spread
+from .refresh import Refresher, rate_spread
 from .refusal import Reason
 from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, states
 
@@ -72,6 +73,7 @@ class Tracker:
         self._estimator = Estimator(config)
         self._drift = DriftMonitor(config.false_alarm_s)
         self._refresher = Refresher(config, first_id)
+        self._calibration = Calibration()
         self._counts = Counts()
         self._mode = Mode.ACQUIRING
         self._frames_since = 0
@@ -170,11 +172,14 @@ class Tracker:
             events.append(drift_alarm(change, fit.elapsed_s, stand))
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
+        link = self._link(channel, bursts[-1].pattern_id, frames)
+        self._calibration.observe(link.pattern, link.measured)
+        link = replace(link, promise_kept=self._calibration.kept_share)
         pattern, steps = self._consider(channel, len(bursts), budget, stand)
         if pattern:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
-            events.append(replace(pattern, rate_low=rate_low(pattern.rate, spread)))
-        link = self._link(channel, bursts[-1].pattern_id, frames)
+            promised = self._calibration.promise(pattern.id, pattern.rate, spread)
+            events.append(replace(pattern, rate_low=promised))
         noise, time_constant_s = self._estimator.noise_power.tolist(), self._estimator.time_constant_s
         events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
         return Outcome(events, steps, fit.error)
@@ -187,6 +192,7 @@ class Tracker:
             "estimator": self._estimator.snapshot(),
             "drift": self._drift.snapshot(),
             "refresher": self._refresher.snapshot(),
+            "calibration": self._calibration.snapshot(),
             "counts": [getattr(counts, name) for name in Counts.__slots__],
             "mode": str(self._mode),
             "frames_since": self._frames_since,
@@ -201,6 +207,7 @@ class Tracker:
         self._estimator.load(snapshot["estimator"])
         self._drift.load(snapshot["drift"])
         self._refresher.load(snapshot["refresher"])
+        self._calibration.load(snapshot["calibration"])
         self._counts = Counts(*(int(count) for count in snapshot["counts"]))
         self._mode = Mode(snapshot["mode"])
         self._frames_since = int(snapshot["frames_since"])

@@ -46,6 +46,7 @@ def encode_state(link: str, event: events.State, latency_us: Mapping[str, int]) 
         faults=[[int(element), str(fault), float(confidence)] for element, fault, confidence in event.faults],
         statistic=float(event.statistic),
         threshold=float(event.threshold),
+        promise_kept=_float_or_none(event.promise_kept),
     )
 
 
@@ -76,6 +77,7 @@ def decode_state(body: Body) -> StateMessage:
         faults=_faults(fields),
         statistic=fields.number("statistic"),
         threshold=fields.number("threshold"),
+        promise_kept=fields.optional_number("promise_kept") if "promise_kept" in fields.values else None,
     )
     return StateMessage(fields.check_link(), event, _latencies(fields))
 
