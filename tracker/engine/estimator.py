@@ -88,6 +88,8 @@ class Fit:
         direction; 1 is all that can be had. Unlike `ratio` it can be compared between settings.
     lost : tuple of int
         Receivers whose lock was lost at this block.
+    left_out : int
+        Frames that a receiver had to leave out, being without lock.
     """
 
     ratio: NDArray[np.float64]
@@ -95,6 +97,7 @@ class Fit:
     elapsed_s: float
     error: float
     lost: tuple[int, ...] = ()
+    left_out: int = 0
 
 
 class Estimator:
@@ -165,6 +168,7 @@ class Estimator:
             elapsed_s=sum(fit.elapsed_s for fit in fits),
             error=sum(fit.error * fit.degrees for fit in fits) / degrees,
             lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
+            left_out=sum(fit.left_out for fit in fits),
         )
 
     def _begin(self, frames: Frames) -> Bank:
@@ -200,7 +204,8 @@ class Estimator:
             power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
             error += float(_power(innovation).sum())
         degrees = frames * self._adjoint.shape[1]
-        return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost)
+        left_out = frames if self.lock is Lock.LOST else 0
+        return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost, left_out)
 
     def channel(self, time_ns: int | None = None) -> Channel:
         """Estimate as the optimizer takes it, in units of each receiver's noise.

@@ -75,7 +75,7 @@ class State:
         Counts since start: bursts and frames worked into the estimate, bursts lost by `seq`, repeats,
         bursts refused.
     dropped_frames : int
-        Frames left out because they held NaN or infinity.
+        Frames left out: they held NaN or infinity, or came while the phases could not be followed.
     noise : tuple of float
         Noise power on a tone, a receiver, in the units of |response|².
     innovation : tuple of float

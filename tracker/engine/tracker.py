@@ -161,6 +161,7 @@ class Tracker:
         frames = [Frames.of(burst) for burst in bursts]
         fit = self._estimator.update(frames)
         self._count(bursts)
+        self._counts.dropped_frames += fit.left_out
         events: list[Event] = []
         if self._gap:
             events.append(gap_alarm(*self._gap, stand))
