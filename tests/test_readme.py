@@ -12,6 +12,7 @@ import time
 import tomllib
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import fields
 from functools import cache
 from importlib import import_module
 from pathlib import Path
@@ -266,10 +267,9 @@ def sent() -> dict[str, dict[str, Any]]:
     states = np.ones(8, np.int8)
     burst = Burst(1, 2, 3, 4, 8, np.zeros((1, 1), np.uint8), np.zeros((1, 1, 4), np.complex64), np.ones(1, np.bool_), 5)
     pattern = Pattern(1, 1, 2, 3, states, 1.0, 1.0, 1.0, 1.0, Cause.FIRST, 1)
-    state = State(
-        *(1, 2, 3, Mode.TRACKING, 1, 1, 0, 0, 0, 0, (1.0,), (1.0,), None, None),
-        *(0.0, (0.0, 0.0), 500.0, None, (), 1, 0.0, 0.0),
-    )
+    values: dict[str, Any] = {field.name: 1 for field in fields(State)}
+    values |= {"mode": Mode.TRACKING, "noise": (1.0,), "innovation": (1.0,), "phase_rad": (0.0, 0.0), "faults": ()}
+    state = State(**values)
     alarm = Alarm(1, 2, 3, 3, "channel", None, 1.0, 1.0, "", "none")
     bodies = {
         "`pilots/LINK`: controller to tracker": encode_pilots("bench", burst),
