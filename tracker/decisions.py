@@ -66,9 +66,12 @@ def decode_decision(body: bytes) -> Decision:
     """
     fields = _fields(body)
     try:
-        return Decision(tuple((int(run), int(seq)) for run, seq in fields["bursts"]), int(fields["steps"]))
+        decision = Decision(tuple((int(run), int(seq)) for run, seq in fields["bursts"]), int(fields["steps"]))
     except (KeyError, TypeError, ValueError) as error:
         raise Refused(Reason.WRONG_TYPE, f"decision record: {error!r}") from None
+    if not decision.bursts or decision.steps < 0:
+        raise Refused(Reason.OUT_OF_RANGE, "decision record: of no burst, or less than no step")
+    return decision
 
 
 def encode_command(command: Command) -> bytes:

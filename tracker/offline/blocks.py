@@ -109,6 +109,6 @@ def _block(decision: Decision, waiting: dict[tuple[int, int], Taken], record: Re
         taken = [waiting.pop(burst) for burst in decision.bursts]
     except KeyError as missing:
         raise OfflineError(
-            f"the journal says at byte {record.position} that burst {missing.args[0]} was worked off, but lacks it"
+            f"byte {record.position}: the journal says that burst {missing.args[0]} was worked off, but lacks it"
         ) from None
     return Block(taken, decision.steps, record.log_time_ns)

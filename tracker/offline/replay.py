@@ -8,7 +8,7 @@ import json
 import sys
 import time
 from collections import Counter
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -22,13 +22,14 @@ from tracker.engine.events import Event, Pattern
 from tracker.engine.refusal import Reason, Refused
 from tracker.engine.report import Counts
 from tracker.engine.tracker import Tracker
-from tracker.logs import LogError, LogReader, LogWriter, Record
+from tracker.logs import LogError, LogReader, LogWriter
 from tracker.outgoing import encode
 from tracker.settings import Settings, SettingsError, load, parse
 from tracker.snapshots import SnapshotError, unpack_start
 
 from .blocks import Block, Said, steps
 from .errors import OfflineError
+from .found import Found
 from .progress import progress_bar
 from .replay_text import render
 from .summary import Account, Comparison, decode_said
@@ -73,33 +74,41 @@ class Replay:
         """
         reader = LogReader(path)
         settings, tracker, follow = self._prepare(path, reader)
-        link, before = settings.link.name, tracker.counts
-        links: set[str] = set()
-        first_refusal: Refused | None = None
-        first_ns = last_ns = None
-        for step in steps(_noting(reader, links), link, shape(settings), follow=follow):
+        before = tracker.counts
+        found = Found(settings.link.name)
+        try:
+            self._walk(reader, settings, tracker, found, advanced, follow=follow)
+        except OfflineError as error:
+            raise OfflineError(f"{path}: {error}") from None
+        self._count(before, tracker.counts)
+        self.span_s += found.span_s
+        if reader.damage:
+            self.damage.append(f"{path}: {reader.damage}")
+        advanced(reader.size, reader.size)
+
+    def _walk(
+        self,
+        reader: LogReader,
+        settings: Settings,
+        tracker: Tracker,
+        found: Found,
+        advanced: Callable[[int, int], None],
+        *,
+        follow: bool,
+    ) -> None:
+        for step in steps(found.noting(reader), settings.link.name, shape(settings), follow=follow):
             if isinstance(step, Block):
-                first_refusal = self._advance(tracker, step, settings) or first_refusal
-                first_ns = first_ns if first_ns is not None else step.taken[0].burst.t_ns
-                last_ns = step.taken[-1].burst.end_ns
+                self._advance(tracker, step, settings, found)
                 advanced(reader.tell(), reader.size)
             elif isinstance(step, Command):
                 self._carry_out(step, tracker, settings)
             elif isinstance(step, Said):
                 self._heard(step)
             else:
-                self.refused += 1
-                first_refusal = first_refusal or step
-                if step.reason is Reason.SETTINGS and first_ns is None:
+                self._refuse(step, found)
+                if step.reason is Reason.SETTINGS and not found.used:
                     break  # the log is of another panel: to read on to its end would change nothing
-        self._count(before, tracker.counts)
-        if tracker.counts.bursts == before.bursts:
-            _check_used(path, link, links, first_refusal)
-        if first_ns is not None and last_ns is not None:
-            self.span_s += (last_ns - first_ns) / 1e9
-        if reader.damage:
-            self.damage.append(f"{path}: {reader.damage}")
-        advanced(reader.size, reader.size)
+        found.check()
 
     @property
     def counts(self) -> dict[str, int]:
@@ -144,19 +153,18 @@ class Replay:
             ) from None
         return tracker
 
-    def _advance(self, tracker: Tracker, block: Block, settings: Settings) -> Refused | None:
-        """Work off a block; return the refusal of a burst, if one was refused."""
-        bursts, refusal = [], None
+    def _advance(self, tracker: Tracker, block: Block, settings: Settings, found: Found) -> None:
+        bursts = []
         for taken in block.taken:
             try:
                 tracker.admit(taken.burst, taken.arrival_ns)
                 bursts.append(taken.burst)
             except Refused as refused:
                 tracker.refuse(refused.reason)
-                self.refused += 1
-                refusal = refusal or refused
+                self._refuse(refused, found)
         if not bursts:
-            return refusal
+            return
+        found.use(bursts)
         budget = Steps(settings.refresh.most_steps if block.steps is None else block.steps)
         outcome = tracker.advance(bursts, budget)
         self.replayed.error.add(outcome.error, len(bursts))
@@ -166,7 +174,10 @@ class Replay:
                 self.comparison.replayed(event)
         if self._writer is not None:
             self._write(self._writer, settings.link.name, outcome.events, block.time_ns)
-        return refusal
+
+    def _refuse(self, refused: Refused, found: Found) -> None:
+        self.refused += 1
+        found.refusal = found.refusal or refused
 
     @staticmethod
     def _write(writer: LogWriter, link: str, events: list[Event], time_ns: int) -> None:
@@ -190,25 +201,6 @@ class Replay:
         self.logged.take(event)
         if isinstance(event, Pattern):
             self.comparison.logged(event)
-
-
-def _noting(records: Iterable[Record], links: set[str]) -> Iterator[Record]:
-    """Pass records on, and note the links that bursts are of."""
-    for record in records:
-        if record.topic.startswith("pilots/"):
-            links.add(record.topic.removeprefix("pilots/"))
-        yield record
-
-
-def _check_used(path: Path, link: str, links: set[str], refusal: Refused | None) -> None:
-    """Complain about a log of which nothing could be used; one that holds no bursts at all is as it should be."""
-    if refusal is not None and link in links:
-        raise OfflineError(f"{path}: none of its bursts can be used; the first refusal: {refusal.detail}")
-    if links and link not in links:
-        raise OfflineError(
-            f"{path}: holds no bursts of link {link!r}, but of {', '.join(sorted(links))}; "
-            "name one of them in link.name of the settings"
-        )
 
 
 def replay(
