@@ -21,6 +21,8 @@ from .report import Stand
 REMEMBERED = 256
 # A search from many starts costs more than a climb; after the first, it is made again once in so many refreshes.
 THOROUGH_EVERY = 256
+# Bursts after which a controller that still shows another pattern than the latest is sent it again.
+PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
 WORTH_A_LOOK = 0.6
 
@@ -42,6 +44,8 @@ class Refresher:
         self._since_considered = 0
         self._since_thorough = 0
         self._next_thorough = 0
+        self._run: int | None = None
+        self._not_shown = 0
 
     @property
     def next_id(self) -> int:
@@ -65,6 +69,17 @@ class Refresher:
         self._since_considered = 0
         return True
 
+    def hear(self, run: int, told: int | None, bursts: int) -> None:
+        """Take what the controller says of itself: its run, and the pattern that it shows.
+
+        A controller that has restarted, or missed a pattern, waits for one that would otherwise never come.
+        """
+        if self._run is not None and run != self._run:
+            self._not_shown = PATIENCE_BURSTS
+        self._run = run
+        if told is not None and self.latest is not None:
+            self._not_shown = self._not_shown + bursts if told != self.latest else 0
+
     def begin_afresh(self) -> None:
         """Search thoroughly next, and often again while the estimate forms."""
         self._since_thorough = self._next_thorough = 0
@@ -76,7 +91,8 @@ class Refresher:
         ----------
         channel : Channel
         cause : Cause
-            ``first`` and ``operator`` publish whatever comes out; the others only what gains enough.
+            ``first`` and ``operator`` publish whatever comes out; the others only what gains enough, unless the
+            controller has missed the latest pattern.
         budget : Budget
         stand : Stand
             The last burst that it rests on.
@@ -90,12 +106,13 @@ class Refresher:
         """
         in_use = self.states(self.latest)
         thorough = self._thorough()
-        routine = cause is Cause.REFRESH and not thorough
+        missed = self._not_shown >= PATIENCE_BURSTS
+        routine = cause is Cause.REFRESH and not thorough and not missed
         if routine and in_use is not None and promise(channel, in_use) < WORTH_A_LOOK * self._config.least_gain:
             return None, 0
         found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough)
         before = rate(channel, in_use) if in_use is not None else 0.0
-        forced = cause in (Cause.FIRST, Cause.OPERATOR)
+        forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
         same = in_use is not None and np.array_equal(found.states, in_use)
         if not forced and (same or found.rate - before < self._config.least_gain):
             return None, found.steps
@@ -115,6 +132,8 @@ class Refresher:
             "since_considered": self._since_considered,
             "since_thorough": self._since_thorough,
             "next_thorough": self._next_thorough,
+            "run": self._run,
+            "not_shown": self._not_shown,
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -128,6 +147,8 @@ class Refresher:
         self._since_considered = int(snapshot["since_considered"])
         self._since_thorough = int(snapshot["since_thorough"])
         self._next_thorough = int(snapshot["next_thorough"])
+        self._run = snapshot["run"]
+        self._not_shown = int(snapshot["not_shown"])
 
     def _thorough(self) -> bool:
         """Search thoroughly at refreshes 1, 2, 4, 8 … after a fresh start, then at regular distances."""
@@ -164,6 +185,7 @@ class Refresher:
         self._published[pattern.id] = states
         self._published.pop(pattern.id - REMEMBERED, None)
         self._next_id += 1
+        self._not_shown = 0
         return pattern
 
 
