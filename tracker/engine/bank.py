@@ -69,6 +69,11 @@ class Bank:
         for one in self._filters:
             one.forget(a, b)
 
+    def reset(self, rows: NDArray[np.intp]) -> None:
+        """Forget how well some coefficients are known; see `BlockRls.reset`."""
+        for one in self._filters:
+            one.reset(rows)
+
     def update(self, regressors: NDArray[Any], outputs: Complex) -> tuple[Complex, Complex]:
         """Take in a block of frames; returns what the filter in use returns, see `BlockRls.update`."""
         results = [one.update(regressors, outputs) for one in self._filters]

@@ -1,14 +1,22 @@
-"""Drift alarm: has the innovation ratio left its own baseline.
+"""Drift alarm: has any of the statistics under watch left its own baseline.
 
-The ratio of measured to expected innovation power is 1 on average while the model holds; its spread follows from the
-degrees of freedom. Real links sit a little off (motion between bursts, imperfect calibration), so the ratio is held
-against a baseline of its own that adapts slowly and with bounded steps, so that a change cannot drag it along.
+What is watched is named by the caller: powers over what is expected of them (gamma distributed, with known degrees of
+freedom), or plain values. Each becomes a standard normal deviate from its baseline: powers exactly, through the gamma
+distribution, so that few degrees of freedom do no harm. Real links sit a little off what theory says, so the baseline
+is measured; it adapts slowly, in bounded steps and not while a sum is raised, so that a change cannot drag it along.
+Where samples are found to spread or to hang together in time more than theory has it, they are scaled and whitened.
+
+The deviates go to two two-sided CUSUM tests, one tuned to small changes, one to large. All tests of all statistics
+share the false alarms that the user allows: the sum of their rates is the rate asked for (Bonferroni).
 """
 
 import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from scipy.special import gammainc, gammaincc, ndtri
 
 from .cusum import Change, Cusum
 from .run_length import threshold_for
@@ -18,108 +26,303 @@ WARM_UP = 64
 # Difference of the halves' means that still counts as agreement, in standard errors.
 AGREEMENT = 2.0
 # Samples over which the baseline adapts in the long run; at first it adapts over as many as it has seen.
-MEMORY = 1024
+MEMORY = 4096
 # A sample moves the baseline by no more than this many standard deviations' worth.
-BOUND = 3.0
-SLACK = 0.5
+BOUND = 4.0
+# Slacks of the two tests: best for changes of one and of four standard deviations a sample.
+SLACKS = (0.5, 2.0)
+# Share of a threshold beyond which the baseline stands still.
+RAISED = 0.7
+# Theory is believed until what is measured differs by this many standard errors.
+BELIEF = 4.0
+# Samples whose mean shows whether they hang together over longer than a sample.
+LONG = 16
+# Deviates are cut here: beyond, the distribution functions run out of digits and nothing is to be gained.
+MOST = 35.0
 
 
-class DriftMonitor:
-    """Two-sided CUSUM of the standardised innovation ratio.
+def deviate(ratio: float, degrees: int) -> float:
+    """Turn a power over its mean, averaged over so many complex degrees of freedom, to a standard normal deviate."""
+    shape, at = float(degrees), degrees * ratio
+    if ratio <= 1.0:
+        return max(float(ndtri(gammainc(shape, at))), -MOST)
+    return min(-float(ndtri(gammaincc(shape, at))), MOST)
+
+
+class Watch:
+    """One statistic: baseline, scale, whitening, tests.
 
     Parameters
     ----------
     false_alarm_s : float
-        Wanted mean time between false alarms, s.
+        Wanted mean time between false alarms of this one, s.
     """
 
     def __init__(self, false_alarm_s: float) -> None:
         self._false_alarm_s = false_alarm_s
+        self._cusums = [Cusum(math.inf, slack) for slack in SLACKS]
         self.reset()
 
     def reset(self) -> None:
         """Forget the baseline: the next samples make a new one."""
-        self._count = 0
-        self._mean = 0.0
-        self._square = 0.0
-        self._first: list[float] = []
-        self._elapsed_s = 0.0
-        self._cusum: Cusum | None = None
+        self._count = 0  # samples in the baseline
+        self._samples, self._elapsed_s = 0, 0.0
+        self._level = 0.0  # logarithm of a power's mean; mean of a plain value
+        self._scale = 1.0  # standard deviation of a plain value
+        self._square = 1.0  # mean squared deviate
+        self._product = 0.0  # mean product of neighbouring deviates
+        self._before = 0.0  # the last deviate
+        self._sum, self._summed, self._long_square = 0.0, 0, 1.0  # white deviates over LONG samples: mean² · LONG
+        self._first: list[tuple[float, int]] = []
+        self.clear()
+
+    def clear(self) -> None:
+        """Begin the sums anew on the same baseline, as after a change that left it as it was."""
+        for cusum in self._cusums:
+            cusum.reset()
 
     @property
-    def statistic(self) -> float:
-        """The larger CUSUM sum, 0 while the baseline is being made."""
-        return self._cusum.statistic if self._cusum else 0.0
+    def settled(self) -> bool:
+        """Whether there is a baseline."""
+        return self._count > 0
 
     @property
-    def threshold(self) -> float:
-        """Alarm threshold, 0 while the baseline is being made."""
-        return self._cusum.threshold if self._cusum else 0.0
+    def height(self) -> float:
+        """The higher sum over its threshold; 1 raises an alarm."""
+        return max(cusum.statistic / cusum.threshold for cusum in self._cusums)
 
-    def update(self, ratio: float, degrees: int, elapsed_s: float) -> Change | None:
-        """Take in the innovation ratio of one block.
+    @property
+    def highest(self) -> tuple[float, float]:
+        """Statistic and threshold of the test nearest to an alarm; zeros before there is a baseline."""
+        if not self.settled:
+            return 0.0, 0.0
+        cusum = max(self._cusums, key=lambda one: one.statistic / one.threshold)
+        return cusum.statistic, cusum.threshold
+
+    def update(self, value: float, degrees: int, elapsed_s: float) -> Change | None:
+        """Take in a sample.
 
         Parameters
         ----------
-        ratio : float
-            Measured over expected power.
+        value : float
+            A power above zero, or a plain value.
         degrees : int
-            Complex degrees of freedom that it was averaged over.
+            Complex degrees of freedom that a power was averaged over; 0 for a plain value.
         elapsed_s : float
-            Time since the block before, s.
+            Time since the sample before, s.
         """
-        # |complex unit Gaussian|² has mean 1 and variance 1, so this has unit variance whatever the block's size.
-        sample = (ratio - 1.0) * math.sqrt(degrees)
-        if self._cusum is None:
-            self._warm_up(sample, elapsed_s)
-            return None
-        spread = math.sqrt(max(self._square, 1.0))
-        standard = (sample - self._mean) / spread
-        change = self._cusum.update(standard)
-        bounded = min(max(standard, -BOUND), BOUND) * spread
-        self._count += 1
-        gain = 1.0 / min(self._count, MEMORY)
-        self._mean += bounded * gain
-        self._square += (bounded * bounded - self._square) * gain
-        return change
-
-    def _warm_up(self, sample: float, elapsed_s: float) -> None:
-        """Gather a first baseline, over a sliding window until it is steady."""
-        self._first.append(sample)
+        self._samples += 1
         self._elapsed_s += elapsed_s
-        self._count += 1
-        if len(self._first) < WARM_UP:
-            return
-        first = np.array(self._first)
-        halves = first.reshape(2, -1).mean(axis=1)
-        self._mean, self._square = float(first.mean()), float(first.var())
-        error = math.sqrt(max(self._square, 1.0) * 2 / (WARM_UP / 2))
-        if abs(halves[1] - halves[0]) > AGREEMENT * error:
-            del self._first[: WARM_UP // 2]
-            return
-        period_s = max(self._elapsed_s / self._count, 1e-9)
-        self._cusum = Cusum(threshold_for(max(self._false_alarm_s / period_s, 2.0), SLACK), SLACK)
-        self._first = []
-        self._count = WARM_UP
+        if not self.settled:
+            self._warm_up(value, degrees)
+            return None
+        before = self._before
+        sample, unit = self._deviate(value, degrees)
+        together = self._correlation()
+        white = (sample - together * before) / math.sqrt(1.0 - together * together) / self._spread(degrees)
+        change = None
+        for cusum in self._cusums:
+            change = cusum.update(white / self._long_spread()) or change
+        self._adapt(sample, white, unit)
+        self._before = _bounded(sample, BOUND * math.sqrt(self._square))
+        return change
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
         return {
-            "count": self._count,
-            "mean": self._mean,
-            "square": self._square,
-            "first": list(self._first),
-            "elapsed_s": self._elapsed_s,
-            "cusum": self._cusum.snapshot() if self._cusum else None,
+            "numbers": [getattr(self, name) for name in _NUMBERS],
+            "counts": [getattr(self, name) for name in _COUNTS],
+            "first": [[value, degrees] for value, degrees in self._first],
+            "cusums": [cusum.snapshot() for cusum in self._cusums],
         }
 
-    def load(self, snapshot: dict[str, Any]) -> None:
+    def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
-        self._count = int(snapshot["count"])
-        self._mean, self._square = float(snapshot["mean"]), float(snapshot["square"])
-        self._first = [float(sample) for sample in snapshot["first"]]
-        self._elapsed_s = float(snapshot["elapsed_s"])
-        self._cusum = None
-        if snapshot["cusum"] is not None:
-            self._cusum = Cusum(1.0)
-            self._cusum.load(snapshot["cusum"])
+        for name, number in zip(_NUMBERS, snapshot["numbers"], strict=True):
+            setattr(self, name, float(number))
+        for name, count in zip(_COUNTS, snapshot["counts"], strict=True):
+            setattr(self, name, int(count))
+        self._first = [(float(value), int(degrees)) for value, degrees in snapshot["first"]]
+        for cusum, state in zip(self._cusums, snapshot["cusums"], strict=True):
+            cusum.load(state)
+
+    def _deviate(self, value: float, degrees: int) -> tuple[float, float]:
+        """Deviate from the baseline, and what a unit of it is in the unit of the level."""
+        if degrees:
+            return deviate(value * math.exp(-self._level), degrees), 1.0 / math.sqrt(degrees)
+        return (value - self._level) / self._scale, self._scale
+
+    def _correlation(self) -> float:
+        """Correlation of neighbouring samples, where it is beyond doubt."""
+        together = self._product / self._square
+        return _bounded(together, 0.9) if abs(together) > BELIEF / math.sqrt(self._gathered) else 0.0
+
+    def _spread(self, degrees: int) -> float:
+        """Give the standard deviation of the deviates, where theory is beyond doubt too small or there is none."""
+        doubtless = not degrees or self._square > 1.0 + BELIEF * math.sqrt(2.0 / self._gathered)
+        return math.sqrt(self._square) if doubtless else 1.0
+
+    def _long_spread(self) -> float:
+        """Give the same over longer, where white deviates are beyond doubt not as white as all that."""
+        batches = max(self._gathered // LONG, 1)
+        return (
+            math.sqrt(max(self._long_square, 1.0)) if self._long_square > 1 + BELIEF * math.sqrt(2 / batches) else 1.0
+        )
+
+    @property
+    def _gathered(self) -> int:
+        return min(self._count, MEMORY)
+
+    def _adapt(self, sample: float, white: float, unit: float) -> None:
+        """Let the baseline follow, slowly and bounded."""
+        self._count += 1
+        gain = 1.0 / self._gathered
+        bounded = _bounded(sample, BOUND * math.sqrt(self._square))
+        if self.height < RAISED:
+            self._level += bounded * unit * gain
+        self._square += (bounded * bounded - self._square) * gain
+        self._product += (bounded * self._before - self._product) * gain
+        self._sum += white
+        self._summed += 1
+        if self._summed == LONG:
+            square = min(self._sum**2 / LONG, BOUND**2 * max(self._long_square, 1.0))
+            self._long_square += (square - self._long_square) * min(gain * LONG, 1.0)
+            self._sum, self._summed = 0.0, 0
+        if self._count <= MEMORY and self._count & (self._count - 1) == 0:
+            self._set_thresholds()
+
+    def _set_thresholds(self) -> None:
+        """Thresholds that give the false alarms wanted, as far as the baseline is known."""
+        period_s = max(self._elapsed_s / self._samples, 1e-9)
+        samples = max(self._false_alarm_s / period_s * len(SLACKS), 2.0)
+        # In the long run the level is a moving average, which knows the mean as well as twice as many samples do.
+        doubt = 1.0 / self._count if self._count < MEMORY else 0.5 / MEMORY
+        for cusum in self._cusums:
+            cusum.threshold = threshold_for(samples, cusum.slack, doubt)
+
+    def _warm_up(self, value: float, degrees: int) -> None:
+        """Gather a first baseline, over a sliding window until it is steady."""
+        self._first.append((value, degrees))
+        if len(self._first) < WARM_UP:
+            return
+        values, counts = np.array(self._first).T
+        halves = np.array([part.mean() for part in np.split(values, 2)])
+        if degrees:
+            self._level = math.log(float(values @ counts) / float(counts.sum()))
+            unit = math.exp(self._level) / math.sqrt(float(counts.mean()))
+        else:
+            self._level = float(values.mean())
+            self._scale = unit = max(float(values.std(ddof=1)), 1e-12)
+        spread = max(float(values.std()), unit)
+        if abs(halves[1] - halves[0]) > AGREEMENT * spread * math.sqrt(4.0 / WARM_UP):
+            del self._first[: WARM_UP // 2]
+            return
+        samples = np.array([self._deviate(*one)[0] for one in self._first])
+        self._square = float((samples * samples).mean())
+        self._product = float((samples[1:] * samples[:-1]).mean())
+        self._before = float(samples[-1])
+        self._first = []
+        self._count = WARM_UP
+        self._set_thresholds()
+
+
+_NUMBERS = ("_elapsed_s", "_level", "_scale", "_square", "_product", "_before", "_sum", "_long_square")
+_COUNTS = ("_count", "_samples", "_summed")
+
+
+def _bounded(value: float, limit: float) -> float:
+    return min(max(value, -limit), limit)
+
+
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """A sample of a statistic under watch.
+
+    Parameters
+    ----------
+    name : str
+        Of the statistic.
+    value : float
+    degrees : int
+        See `Watch.update`.
+    """
+
+    name: str
+    value: float
+    degrees: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Suspicion:
+    """A statistic that left its baseline.
+
+    Parameters
+    ----------
+    name : str
+        Of the statistic.
+    change : Change
+    """
+
+    name: str
+    change: Change
+
+
+class DriftMonitor:
+    """All statistics under watch.
+
+    Parameters
+    ----------
+    false_alarm_s : float
+        Wanted mean time between false alarms of all together, s.
+    names : sequence of str
+        Of the statistics; each has the same share of false alarms.
+    """
+
+    def __init__(self, false_alarm_s: float, names: Sequence[str]) -> None:
+        self._watches = {name: Watch(false_alarm_s * len(names)) for name in names}
+
+    def reset(self) -> None:
+        """Forget all baselines."""
+        for watch in self._watches.values():
+            watch.reset()
+
+    def clear(self) -> None:
+        """Begin all sums anew on the same baselines."""
+        for watch in self._watches.values():
+            watch.clear()
+
+    @property
+    def height(self) -> float:
+        """The highest sum over its threshold; 1 raises an alarm."""
+        return max(watch.height for watch in self._watches.values())
+
+    @property
+    def highest(self) -> tuple[float, float]:
+        """Statistic and threshold of the test that is nearest to an alarm."""
+        return max(self._watches.values(), key=lambda watch: watch.height).highest
+
+    def update(self, readings: Sequence[Reading], elapsed_s: float) -> list[Suspicion]:
+        """Take in what one block gave.
+
+        Parameters
+        ----------
+        readings : sequence of Reading
+            Of statistics named at the start; one that has none this time keeps its sums.
+        elapsed_s : float
+            Time since the block before, s.
+        """
+        suspicions = []
+        for reading in readings:
+            change = self._watches[reading.name].update(reading.value, reading.degrees, elapsed_s)
+            if change is not None:
+                suspicions.append(Suspicion(reading.name, change))
+        return suspicions
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state."""
+        return {name: watch.snapshot() for name, watch in self._watches.items()}
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot."""
+        for name, watch in self._watches.items():
+            watch.load(snapshot[name])

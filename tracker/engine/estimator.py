@@ -1,7 +1,7 @@
 """From frames to channel estimate: delay basis, noise, prior, least squares, shrinkage, in this order."""
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -12,7 +12,9 @@ from .bank import Bank, time_constants
 from .burst import Burst
 from .channel import Channel
 from .config import Config
+from .drift import Reading
 from .following import Following, Lock
+from .innovation import DIRECT, INNOVATION, Innovations
 from .prior import prior_variances
 from .rls import BlockRls
 from .shrinkage import shrink
@@ -90,6 +92,8 @@ class Fit:
         Receivers whose lock was lost at this block.
     left_out : int
         Frames that a receiver had to leave out, being without lock.
+    readings : tuple of Reading
+        Samples of the statistics under watch, see `Estimator.watched`.
     """
 
     ratio: NDArray[np.float64]
@@ -98,6 +102,7 @@ class Fit:
     error: float
     lost: tuple[int, ...] = ()
     left_out: int = 0
+    readings: tuple[Reading, ...] = ()
 
 
 class Estimator:
@@ -112,6 +117,9 @@ class Estimator:
         self._config = config
         self._adjoint = np.ascontiguousarray(config.delay.conj())
         self._noise = noise.NoiseEstimate(config.receivers)
+        self._innovations = Innovations(config.receivers, config.delay.shape[1])
+        self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
+        self._heard_degrees = 0
         self._bank: Bank | None = None
         self._end_ns = 0
         self._constants_s = time_constants(config.time_constant_s, config.bank)
@@ -119,6 +127,11 @@ class Estimator:
         self.following = []
         if config.follow_phase:
             self.following = [Following(patience, self._timing()) for _ in range(config.receivers)]
+
+    @property
+    def watched(self) -> tuple[str, ...]:
+        """Names of the statistics under watch."""
+        return INNOVATION, DIRECT, *(noise_of(receiver) for receiver in range(self._config.receivers))
 
     @property
     def ready_after(self) -> int:
@@ -158,7 +171,7 @@ class Estimator:
         if self._bank is None:
             self._bank = self._begin(together)
         if not self.following:
-            return self._take(self._bank, together)
+            return replace(self._take(self._bank, together), readings=self._readings())
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
         degrees = sum(fit.degrees for fit in fits)
@@ -169,6 +182,7 @@ class Estimator:
             error=sum(fit.error * fit.degrees for fit in fits) / degrees,
             lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
             left_out=sum(fit.left_out for fit in fits),
+            readings=self._readings(),
         )
 
     def _begin(self, frames: Frames) -> Bank:
@@ -201,6 +215,7 @@ class Estimator:
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
             innovation, white = bank.update(regressors[part], outputs[part])
+            self._innovations.take(innovation, white, bank.chosen.whitener)
             power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
             error += float(_power(innovation).sum())
         degrees = frames * self._adjoint.shape[1]
@@ -244,6 +259,11 @@ class Estimator:
         if self._bank is not None:
             self._bank.forget(1.0 - share, share)
 
+    def renew_direct(self) -> None:
+        """Forget how well the direct path is known, and that alone."""
+        if self._bank is not None:
+            self._bank.reset(np.array([0]))
+
     def relearn(self) -> None:
         """Throw the estimate away; the noise stays known."""
         self._bank = None
@@ -259,6 +279,7 @@ class Estimator:
         """All state."""
         return {
             "noise": self._noise.snapshot(),
+            "innovations": self._innovations.snapshot(),
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
             "following": [following.snapshot() for following in self.following],
@@ -267,6 +288,7 @@ class Estimator:
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
         self._noise.load(snapshot["noise"])
+        self._innovations.load(snapshot["innovations"])
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
         self._end_ns = int(snapshot["end_ns"])
@@ -335,11 +357,14 @@ class Estimator:
         known, before = self._noise.known, self._noise.power
         if tones.shape[2] - coefficients.shape[2] >= noise.LEAST_OUTSIDE:
             left_over = tones.shape[2] - coefficients.shape[2]
-            self._noise.update(noise.outside(tones, coefficients), tones.shape[0], tones.shape[0] * left_over)
+            power, degrees = noise.outside(tones, coefficients), tones.shape[0] * left_over
+            self._noise.update(power, tones.shape[0], degrees)
+            self._hear(power, degrees)
         else:
             power, degrees = noise.repeats(patterns, coefficients)
             if degrees:
                 self._noise.update(power, degrees, degrees * coefficients.shape[2])
+                self._hear(power, degrees * coefficients.shape[2])
             elif not known:
                 # Nothing repeats yet: take all that is heard for noise, which is cautious, until something does.
                 self._noise.update((np.abs(tones) ** 2).mean(axis=(0, 2)), 1, 1)
@@ -347,6 +372,24 @@ class Estimator:
             ratio = before / self._noise.power
             amplitude = np.repeat(np.sqrt(ratio), self._adjoint.shape[1])
             self._bank.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
+
+    def _hear(self, power: NDArray[np.float64], degrees: int) -> None:
+        self._heard += power * degrees
+        self._heard_degrees += degrees
+
+    def _readings(self) -> tuple[Reading, ...]:
+        """Give samples of what is under watch from the block just taken."""
+        readings = self._innovations.readings()
+        if self._heard_degrees:
+            heard = np.maximum(self._heard / self._heard_degrees, noise.FLOOR)
+            readings += [Reading(noise_of(r), float(power), self._heard_degrees) for r, power in enumerate(heard)]
+        self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
+        return tuple(readings)
+
+
+def noise_of(receiver: int) -> str:
+    """Name of the statistic that watches a receiver's noise."""
+    return f"noise {receiver}"
 
 
 def _power(values: NDArray[np.complex128]) -> NDArray[np.float64]:

@@ -4,10 +4,10 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from .burst import Burst
-from .cusum import Change
-from .drift import DriftMonitor
+from .drift import DriftMonitor, Suspicion
 from .estimator import Fit
 from .events import Alarm, Mode, State
+from .innovation import DIRECT
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,19 +64,23 @@ class Link:
     promise_kept: float | None = None
 
 
-def drift_alarm(change: Change, elapsed_s: float, stand: Stand) -> Alarm:
-    """Innovations left their baseline: upward the channel is not what it was, downward the baseline was wrong."""
+def drift_alarm(suspicion: Suspicion, elapsed_s: float, stand: Stand) -> Alarm:
+    """Say what left its baseline: upward the channel is not what it was, downward the baseline was wrong."""
+    change = suspicion.change
+    kind, action = ("channel", "reacquire") if change.up else ("unclear", "new baseline")
+    if suspicion.name == DIRECT and change.up:
+        kind, action = "direct-path", "renew direct path"
     return Alarm(
         run=stand.run,
         seq=stand.seq,
         t_ns=stand.t_ns,
         since_ns=stand.t_ns - round(change.since * elapsed_s * 1e9),
-        kind="channel" if change.up else "unclear",
+        kind=kind,
         receiver=None,
         statistic=change.statistic,
         threshold=change.threshold,
         next_kind="unclear" if change.up else "",
-        action="reacquire" if change.up else "new baseline",
+        action=action,
     )
 
 
@@ -145,8 +149,8 @@ def states(
             pattern=link.pattern,
             faults=(),
             together=len(bursts),
-            statistic=drift.statistic,
-            threshold=drift.threshold,
+            statistic=drift.highest[0],
+            threshold=drift.highest[1],
             promise_kept=link.promise_kept,
         )
         for burst in bursts

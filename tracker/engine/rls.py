@@ -60,6 +60,7 @@ class BlockRls:
         self._dtype = np.complex128 if complex_regressors else np.float64
         self._covariance = np.asfortranarray(np.diag(self._prior).astype(self._dtype))
         self.coefficients: Complex = np.zeros((self.size, outputs), dtype=np.complex128)
+        self.whitener: NDArray[Any] = np.ones((0, 0))  # L⁻¹ of the last update
         self._pending = (1.0, 0.0)  # P is a · stored + b · prior, for the (a, b) gathered since the last update
 
     @property
@@ -118,7 +119,7 @@ class BlockRls:
         z = np.ascontiguousarray(regressors, dtype=self._dtype)
         a = self._carry_out_forgetting()
         gain = self._times_covariance(a, z)  # P⁻Zᴴ, (n, B)
-        whitener = self._whitener(z, gain)
+        whitener = self.whitener = self._whitener(z, gain)
         gain = self._times_adjoint(gain, whitener)  # Xᴴ = P⁻Zᴴ L⁻ᴴ
         innovation = outputs - self._product(z, self.coefficients)
         white = self._product(whitener, innovation)
@@ -126,6 +127,17 @@ class BlockRls:
         subtract = blas.zherk if self._complex else blas.dsyrk
         self._covariance = subtract(-1.0, gain, beta=a, c=self._covariance, lower=1, overwrite_c=1)
         return innovation, white
+
+    def reset(self, rows: NDArray[np.intp]) -> None:
+        """Forget how well some coefficients are known: their covariance is that before any data, with none to others.
+
+        The coefficients stay where they are; what is heard next moves them at once.
+        """
+        a, b = self._pending
+        self._covariance[rows, :] = 0.0
+        self._covariance[:, rows] = 0.0
+        # Pending forgetting makes a · stored + b · prior of it, which is to be the prior.
+        self._covariance[rows, rows] = (1.0 - b) / a * self._prior[rows]
 
     def rescale(self, coefficients: NDArray[np.float64], covariance: float) -> None:
         """Change the unit of the noise: multiply columns of C, and P with its prior, by given factors."""

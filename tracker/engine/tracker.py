@@ -19,11 +19,11 @@ from .burst import Burst
 from .calibration import Calibration
 from .channel import Channel
 from .config import Config
-from .cusum import Change
-from .drift import DriftMonitor
+from .drift import DriftMonitor, Suspicion
 from .estimator import Estimator, Fit, Frames
 from .events import Cause, Event, Mode, Pattern
 from .following import KEPT, Lock
+from .innovation import DIRECT
 from .lifecycle import Happening, after
 from .rate import rate
 from .refresh import Refresher, rate_spread
@@ -71,7 +71,7 @@ class Tracker:
         self._config = config
         self._admission = Admission(config.clock_skew_ns)
         self._estimator = Estimator(config)
-        self._drift = DriftMonitor(config.false_alarm_s)
+        self._drift = DriftMonitor(config.false_alarm_s, self._estimator.watched)
         self._refresher = Refresher(config, first_id)
         self._calibration = Calibration()
         self._counts = Counts()
@@ -168,11 +168,12 @@ class Tracker:
             self._gap = None
         for receiver in fit.lost:
             events.append(lock_alarm(receiver, self._estimator.following[receiver].quality, KEPT, stand))
-        change = self._follow_drift(fit)
-        if change:
-            events.append(drift_alarm(change, fit.elapsed_s, stand))
+        suspicion = self._follow_drift(fit)
+        if suspicion:
+            events.append(drift_alarm(suspicion, fit.elapsed_s, stand))
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
+        self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
         link = self._link(channel, bursts[-1].pattern_id, frames)
         self._calibration.observe(link.pattern, link.measured)
         link = replace(link, promise_kept=self._calibration.kept_share)
@@ -230,7 +231,7 @@ class Tracker:
             self._counts.dropped_frames += burst.frames - kept
             self._frames_since += kept
 
-    def _follow_drift(self, fit: Fit) -> Change | None:
+    def _follow_drift(self, fit: Fit) -> Suspicion | None:
         """Move through the lifecycle; return a change that calls for an alarm."""
         if fit.elapsed_s > SILENCE_TIME_CONSTANTS * self._config.time_constant_s and self._mode is Mode.TRACKING:
             self._mode = after(self._mode, Happening.SILENCE)
@@ -243,14 +244,19 @@ class Tracker:
             self._mode = after(self._mode, Happening.READY)
         if self._mode is not Mode.TRACKING:
             return None
-        change = self._drift.update(ratio, fit.degrees * fit.ratio.shape[0], fit.elapsed_s)
-        if change and change.up:
+        suspicions = self._drift.update(fit.readings, fit.elapsed_s)
+        if not suspicions:
+            return None
+        if any(one.name == DIRECT and one.change.up for one in suspicions):
+            self._mode = after(self._mode, Happening.CHANGE)
+            self._estimator.renew_direct()
+            self._pending_cause = Cause.DRIFT
+        elif any(one.change.up for one in suspicions):
             self._mode = after(self._mode, Happening.CHANGE)
             self._estimator.loosen(LOOSEN_ON_CHANGE)
             self._pending_cause = Cause.DRIFT
-        if change:
-            self._start_over()
-        return change
+        self._start_over()
+        return suspicions[0]
 
     def _consider(self, channel: Channel, bursts: int, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
         """Publish a pattern if one is due and worth it; also say how many optimizer steps were taken."""

@@ -1,0 +1,115 @@
+"""What the innovations of a block show, as statistics for the drift alarm.
+
+The filter's covariance says how large innovations may be, but it is built on a time constant that somebody chose: a
+channel that stands still is predicted better, one that moves faster worse. So the share α of the predicted excess
+over noise that really occurs is measured, slowly, frame by frame::
+
+    E|ε_b|² = 1 + α s_b,    s_b = z_b P zᴴ_b given the frames before, ε_b the innovation given them
+
+With L Lᴴ = I + Z P⁻ Zᴴ and w = L⁻¹(Y − Z C) these are s_b = L_bb² − 1 and ε_b = L_bb w_b: the same whether frames come
+one by one or in blocks.
+
+A change of the direct path is the same in all frames. The mean of Y − Z C over a block shows it where it drowns in the
+power of all innovations, and shows it even if the filter, granting the direct path much, has followed it after a frame.
+"""
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .drift import Reading
+
+Complex = NDArray[np.complex128]
+Real = NDArray[np.float64]
+
+# Blocks over which α is averaged, and how far above its expectation a frame counts, in standard deviations.
+MEMORY = 256
+BOUND = 3.0
+# α cannot be told from anything beyond this.
+MOST = 100.0
+# Frames from which a change of the direct path is judged.
+COMMON_FRAMES = 16
+FLOOR = 1e-30
+
+INNOVATION, DIRECT = "innovation", "direct path"
+
+
+class Innovations:
+    """Gathers what the frames of a block show.
+
+    Parameters
+    ----------
+    receivers, size : int
+        R and Q: outputs are R × Q.
+    """
+
+    def __init__(self, receivers: int, size: int) -> None:
+        self._shape = (receivers, size)
+        self._moments = np.zeros(2)  # of the regression for α
+        self._blocks = 0
+        self.excess = 1.0
+        self._power, self._frames = 0.0, 0
+        self._common: Complex = np.zeros(receivers * size, dtype=np.complex128)
+        self._common_frames = 0
+
+    def take(self, innovation: Complex, white: Complex, whitener: NDArray[Any]) -> None:
+        """Take in frames worked off in one step.
+
+        Parameters
+        ----------
+        innovation, white : ndarray of complex, shape (B, D)
+            Y − Z C, and w.
+        whitener : ndarray, shape (B, B)
+            L⁻¹.
+        """
+        spread = 1.0 / whitener.diagonal().real ** 2  # L_bb²
+        expected = 1.0 + self.excess * (spread - 1.0)
+        parts = white.view(np.float64)
+        power = np.einsum("bd,bd->b", parts, parts) * (spread / white.shape[1])
+        self._power += float((power / expected).sum())
+        self._frames += white.shape[0]
+        self._common += innovation.sum(axis=0)
+        self._common_frames += white.shape[0]
+        self._calibrate(power, spread - 1.0, expected)
+
+    def readings(self) -> list[Reading]:
+        """Say what the block showed, and begin the next."""
+        size = self._common.shape[0]
+        readings = [Reading(INNOVATION, max(self._power / max(self._frames, 1), FLOOR), self._frames * size)]
+        self._power, self._frames = 0.0, 0
+        if self._common_frames >= COMMON_FRAMES:
+            power = float((self._common.real**2 + self._common.imag**2).sum()) / (self._common_frames * size)
+            readings.append(Reading(DIRECT, max(power, FLOOR), size))
+            self._common = np.zeros_like(self._common)
+            self._common_frames = 0
+        return readings
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state."""
+        return {
+            "moments": self._moments.copy(),
+            "blocks": self._blocks,
+            "excess": self.excess,
+            "common": self._common.copy(),
+            "common_frames": self._common_frames,
+        }
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot, made between blocks."""
+        self._moments = np.array(snapshot["moments"], dtype=np.float64)
+        self._blocks, self.excess = int(snapshot["blocks"]), float(snapshot["excess"])
+        self._common = np.array(snapshot["common"], dtype=np.complex128)
+        self._common_frames = int(snapshot["common_frames"])
+
+    def _calibrate(self, power: Real, predicted: Real, expected: Real) -> None:
+        """Regress the innovations' power beyond the noise on what the covariance predicts, weighted by its spread."""
+        self._blocks += 1
+        gain = 1.0 / min(self._blocks, MEMORY)
+        bounded = np.minimum(power, expected * (1.0 + BOUND / np.sqrt(self._common.shape[0])))
+        weight = predicted / expected**2
+        moments = np.array([weight @ (bounded - 1.0), weight @ predicted])
+        self._moments += (moments - self._moments) * gain
+        if self._moments[1] > 0.0:
+            self.excess = float(min(max(self._moments[0] / self._moments[1], 0.0), MOST))
