@@ -3,7 +3,7 @@
 import difflib
 import tomllib
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any, Literal, get_args
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
@@ -21,6 +21,8 @@ _PATTERNS = {
     _ENDPOINT: "an endpoint such as tcp://127.0.0.1:5600 or ipc:///run/pilots",
 }
 Endpoint = Annotated[str, Field(pattern=_ENDPOINT)]
+Finite = Annotated[float, Field(allow_inf_nan=False)]
+Vector = Annotated[list[Finite], Field(min_length=3, max_length=3)]
 
 
 class Table(BaseModel):
@@ -38,10 +40,16 @@ class Link(Table):
 
 
 class Panel(Table):
-    """The reflecting surface: element i is column i // rows, row i % rows."""
+    """The reflecting surface: element i is column i // rows, row i % rows.
+
+    Seen from the front, columns run to the right and rows upwards. Spacings are from the middle of one element to that
+    of the next; rows are as far apart as columns unless told otherwise.
+    """
 
     columns: Annotated[int, Field(ge=1, le=4096)]
     rows: Annotated[int, Field(ge=1, le=4096)]
+    spacing_mm: PositiveFloat | None = None
+    row_spacing_mm: PositiveFloat | None = None
     stuck: dict[Literal["plus", "minus"], list[Annotated[int, Field(ge=0)]]] = Field(default_factory=dict)
     tied: list[Annotated[list[Annotated[int, Field(ge=0)]], Field(min_length=2)]] = Field(default_factory=list)
 
@@ -96,6 +104,26 @@ class Aperture(Table):
     size: Positive = 64
     tile_columns: Positive = 2
     tile_rows: Positive = 2
+
+
+class Mirror(Table):
+    """An endless plane that mirrors, such as the ground or a wall: a point on it, its normal, the loss."""
+
+    point_m: Vector
+    normal: Vector
+    loss_db: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 6.0
+
+
+class Site(Table):
+    """Where everything is, for `basis = "region"`: any right-handed axes, the same for all, lengths in m."""
+
+    carrier_ghz: PositiveFloat
+    panel_m: Vector
+    facing: Vector
+    up: Vector = Field(default_factory=lambda: [0.0, 0.0, 1.0])
+    transmitter_m: Vector
+    region_m: Annotated[list[Vector], Field(min_length=2, max_length=2)]
+    mirrors: list[Mirror] = Field(default_factory=list)
 
 
 class Estimator(Table):
@@ -161,6 +189,7 @@ class Settings(Table):
     tones: Tones
     delay: Delay = Delay()
     aperture: Aperture = Aperture()
+    site: Site | None = None
     estimator: Estimator = Estimator()
     follow: Follow = Follow()
     drift: Drift = Drift()
@@ -178,6 +207,12 @@ class Settings(Table):
             raise ValueError(
                 'aperture.file is missing, basis = "learned" needs the file that `ris-tracker learn` wrote'
             )
+        if self.aperture.basis == "region":
+            needs = 'aperture.basis = "region" needs to know where everything is'
+            if self.site is None:
+                raise ValueError(f"{needs}: add the table [site], or choose another basis")
+            if self.panel.spacing_mm is None:
+                raise ValueError(f"{needs}: add panel.spacing_mm, the distance from element to element")
         return self
 
 
@@ -247,6 +282,8 @@ def _sentence(problem: dict[str, Any], raw: dict[str, Any]) -> str:
         return f"{key}: found {_found(raw, where)}, allowed is: {_PATTERNS[problem['ctx']['pattern']]}"
     if problem["type"] == "too_short":
         return f"{key}: found {_found(raw, where)}, allowed is: at least {problem['ctx']['min_length']} items"
+    if problem["type"] == "too_long":
+        return f"{key}: found {_found(raw, where)}, allowed is: at most {problem['ctx']['max_length']} items"
     allowed = str(problem["msg"]).removeprefix("Input should be ").removeprefix("a valid ")
     return f"{key}: found {_found(raw, where)}, allowed is: {allowed}"
 
@@ -255,11 +292,22 @@ def _known_keys(where: list[str]) -> list[str]:
     """List the keys allowed in the table at `where`, in the order of the file."""
     model: type[BaseModel] = Settings
     for part in where:
+        if part.isdigit():  # a place in a list
+            continue
         field = model.model_fields.get(part)
-        if field is None or not (isinstance(field.annotation, type) and issubclass(field.annotation, BaseModel)):
+        tables = [kind for kind in _kinds(field.annotation) if issubclass(kind, BaseModel)] if field else []
+        if not tables:
             return []
-        model = field.annotation
+        model = tables[0]
     return list(model.model_fields)
+
+
+def _kinds(annotation: Any) -> list[type]:
+    """List the classes that an annotation is made of, such as `Site` for `Site | None`."""
+    inner = get_args(annotation)
+    if not inner:
+        return [annotation] if isinstance(annotation, type) else []
+    return [kind for part in inner for kind in _kinds(part)]
 
 
 def _found(raw: Any, where: list[Any]) -> str:

@@ -105,6 +105,8 @@ class Columns:
         U.
     variances : ndarray, shape (r,)
         Variance of each coefficient before any data; only their ratios matter.
+    held : float or None
+        Share of the energy to be expected that the columns hold, if that is known.
 
     Raises
     ------
@@ -112,7 +114,7 @@ class Columns:
         When the columns are not orthonormal or a variance is not above zero.
     """
 
-    def __init__(self, columns: Complex, variances: Array) -> None:
+    def __init__(self, columns: Complex, variances: Array, held: float | None = None) -> None:
         self.elements, self.size = columns.shape
         gram = columns.conj().T @ columns
         if not np.allclose(gram, np.eye(self.size), atol=1e-6):
@@ -121,6 +123,7 @@ class Columns:
             raise ValueError(f"an aperture basis of {self.size} columns needs as many variances, all above zero")
         self.weights = variances / variances.mean()
         self.is_complex = True
+        self.held = held
         self._columns = np.ascontiguousarray(columns, dtype=np.complex128)
 
     def regressors(self, states: Array) -> Complex:
