@@ -97,6 +97,17 @@ class Bank:
         for one in self._filters:
             one.coefficients[:, columns] *= gain
 
+    def scale(self, direct: Complex, surface: Complex) -> None:
+        """Multiply the estimates of the direct path and of the surface, factors (D,) an output."""
+        for one in self._filters:
+            one.coefficients[0] *= direct
+            one.coefficients[1:] *= surface
+
+    def put(self, coefficients: Complex) -> None:
+        """Set the estimates of all filters."""
+        for one in self._filters:
+            one.coefficients[...] = coefficients
+
     def snapshot(self) -> dict[str, Any]:
         """All state."""
         return {

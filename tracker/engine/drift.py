@@ -99,6 +99,11 @@ class Watch:
         cusum = max(self._cusums, key=lambda one: one.statistic / one.threshold)
         return cusum.statistic, cusum.threshold
 
+    @property
+    def period_s(self) -> float:
+        """Mean time between samples."""
+        return max(self._elapsed_s / max(self._samples, 1), 1e-9)
+
     def update(self, value: float, degrees: int, elapsed_s: float) -> Change | None:
         """Take in a sample.
 
@@ -192,9 +197,8 @@ class Watch:
             self._set_thresholds()
 
     def _set_thresholds(self) -> None:
-        """Thresholds that give the false alarms wanted, as far as the baseline is known."""
-        period_s = max(self._elapsed_s / self._samples, 1e-9)
-        samples = max(self._false_alarm_s / period_s * len(SLACKS), 2.0)
+        """Set thresholds that give the false alarms wanted, as far as the baseline is known."""
+        samples = max(self._false_alarm_s / self.period_s * len(SLACKS), 2.0)
         # In the long run the level is a moving average, which knows the mean as well as twice as many samples do.
         doubt = 1.0 / self._count if self._count < MEMORY else 0.5 / MEMORY
         for cusum in self._cusums:
@@ -261,10 +265,13 @@ class Suspicion:
     name : str
         Of the statistic.
     change : Change
+    since_s : float
+        For how long, as estimated.
     """
 
     name: str
     change: Change
+    since_s: float
 
 
 class DriftMonitor:
@@ -280,6 +287,7 @@ class DriftMonitor:
 
     def __init__(self, false_alarm_s: float, names: Sequence[str]) -> None:
         self._watches = {name: Watch(false_alarm_s * len(names)) for name in names}
+        self._silent_s = dict.fromkeys(names, 0.0)  # since the last reading of each
 
     def reset(self) -> None:
         """Forget all baselines."""
@@ -312,17 +320,25 @@ class DriftMonitor:
             Time since the block before, s.
         """
         suspicions = []
+        for name in self._silent_s:
+            self._silent_s[name] += elapsed_s
         for reading in readings:
-            change = self._watches[reading.name].update(reading.value, reading.degrees, elapsed_s)
+            watch = self._watches[reading.name]
+            change = watch.update(reading.value, reading.degrees, self._silent_s[reading.name])
+            self._silent_s[reading.name] = 0.0
             if change is not None:
-                suspicions.append(Suspicion(reading.name, change))
+                suspicions.append(Suspicion(reading.name, change, change.since * watch.period_s))
         return suspicions
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
-        return {name: watch.snapshot() for name, watch in self._watches.items()}
+        return {
+            "watches": {name: watch.snapshot() for name, watch in self._watches.items()},
+            "silent_s": dict(self._silent_s),
+        }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
         for name, watch in self._watches.items():
-            watch.load(snapshot[name])
+            watch.load(snapshot["watches"][name])
+            self._silent_s[name] = float(snapshot["silent_s"][name])

@@ -8,11 +8,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from . import noise, panel
+from .aperture import Elements
 from .bank import Bank, time_constants
 from .burst import Burst
+from .changes import Evidence, Verdict, judge
 from .channel import Channel
 from .config import Config
 from .drift import Reading
+from .evidence import Heard, Memory
 from .following import Following, Lock
 from .innovation import DIRECT, INNOVATION, Innovations
 from .prior import prior_variances
@@ -24,6 +27,8 @@ from .timing import TimingLoop
 MOST_FRAMES = 256
 # Time over which phases are taken to turn evenly: in it the random walks of `phases` bend them by a tenth of a radian.
 STRETCH_NS = 10_000_000
+# Frames that were left out fit again when their error is at most this many times what it was before.
+FITS = 1.5
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -120,6 +125,10 @@ class Estimator:
         self._innovations = Innovations(config.receivers, config.delay.shape[1])
         self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
         self._heard_degrees = 0
+        # Where phases are followed each block stands at phases of its own.
+        self._memory = Memory(blocks=1 if config.follow_phase else None)
+        self._taken: list[Heard] = []
+        self._left_out_most = 0  # frames that may yet be left out because they do not fit
         self._bank: Bank | None = None
         self._end_ns = 0
         self._constants_s = time_constants(config.time_constant_s, config.bank)
@@ -168,6 +177,7 @@ class Estimator:
             One or more, in order.
         """
         together = Frames.together(bursts)
+        self._taken = []
         if self._bank is None:
             self._bank = self._begin(together)
         if not self.following:
@@ -210,6 +220,13 @@ class Estimator:
         self._end_ns = end_ns
         bank.forget_for(elapsed_s)
         lost = self._follow(bank, taken, regressors, outputs)
+        heard = outputs.reshape(frames, self._config.receivers, -1)
+        self._taken.append(Heard(taken.patterns, taken.response, heard, taken.time_ns, self._noise.power))
+        if self._left_out_most and not self._fits(bank, regressors, outputs):
+            self._left_out_most = max(self._left_out_most - frames, 0)
+            degrees = frames * self._adjoint.shape[1]
+            return Fit(np.ones(self._config.receivers), degrees, elapsed_s, 1.0, lost, frames)
+        self._left_out_most = 0
         power = np.zeros(self._config.receivers)
         error = 0.0
         for start in range(0, frames, MOST_FRAMES):
@@ -264,9 +281,82 @@ class Estimator:
         if self._bank is not None:
             self._bank.reset(np.array([0]))
 
+    def calm(self) -> None:
+        """Take note that nothing is suspected: the estimate is what changes will be held against."""
+        if self._bank is not None:
+            self._memory.calm(self._bank.chosen.coefficients, self._noise.power, self._innovations.variance)
+
+    def keep(self) -> None:
+        """Take note that something may be going on: keep the block just taken."""
+        for heard in self._taken:
+            self._memory.keep(heard)
+
+    def judge(self, since_s: float) -> Verdict | None:
+        """Say what changed since so long ago; None when too little is known of before."""
+        memory, receivers = self._memory, self._config.receivers
+        if memory.before is None or not memory.heard or self._bank is None:
+            return None
+        from_ns = int(memory.heard[-1].time_ns[0]) - round(since_s * 1e9)
+        blocks = [heard for heard in memory.heard if heard.time_ns[0] >= from_ns] or memory.heard[-1:]
+        frames = Frames(*(np.concatenate([getattr(one, name) for one in blocks]) for name in Frames.__slots__))
+        unit = np.sqrt(memory.noise)[:, None]
+        outputs = [one.outputs * (np.sqrt(one.noise)[:, None] / unit) for one in blocks]
+        tones = frames.response.astype(np.complex128) / unit
+        rls = self._bank.chosen
+        model = memory.before.copy()
+        model[1:] = shrink(model[1:], float(rls.variances[1:].mean()), float(rls.prior[1:].mean()))
+        elements = self._config.aperture.surface(model[1:])
+        model = model.reshape(-1, receivers, self._adjoint.shape[1])
+        regressors = self._regressors(frames)
+        evidence = Evidence(
+            outputs=np.concatenate(outputs),
+            regressors=regressors,
+            states=panel.unpack(frames.patterns, self._config.elements),
+            model=model,
+            elements=elements.reshape(-1, *model.shape[1:]),
+            prior=rls.prior,
+            outside=tones - (tones @ self._adjoint) @ self._config.delay.T,
+            basis=self._config.delay,
+            doubt=self._doubt(regressors),
+            time_s=(frames.time_ns - frames.time_ns[0]) / 1e9,
+        )
+        return judge(evidence)
+
+    def forget_calm(self) -> None:
+        """Drop what changes are held against."""
+        self._memory.forget()
+
+    def mend(self, direct: NDArray[np.complex128], surface: NDArray[np.complex128]) -> None:
+        """Multiply the estimate from before the change by factors a receiver, shapes (R,), and go on from it."""
+        self.roll_back()
+        if self._bank is not None:
+            size = self._adjoint.shape[1]
+            self._bank.scale(np.repeat(direct, size), np.repeat(surface, size))
+
+    def renew(self, elements: NDArray[np.intp]) -> None:
+        """Forget how well some elements are known; all, where the basis does not tell elements apart."""
+        if self._bank is None:
+            return
+        if isinstance(self._config.aperture, Elements):
+            self._bank.reset(1 + elements)
+        else:
+            self.loosen(0.5)
+
+    def roll_back(self) -> None:
+        """Go back to the estimate from before the change."""
+        memory = self._memory
+        if self._bank is not None and memory.before is not None:
+            scale = np.sqrt(memory.noise / self._noise.power)
+            self._bank.put(memory.before * np.repeat(scale, self._adjoint.shape[1]))
+
+    def leave_out(self, most: int) -> None:
+        """Leave out frames until they fit the estimate again, but no more than so many."""
+        self._left_out_most = most
+
     def relearn(self) -> None:
         """Throw the estimate away; the noise stays known."""
         self._bank = None
+        self._memory.forget()
 
     def powers(self, frames: Frames) -> NDArray[np.float64]:
         """|H|² in units of the noise, unbiased, shape (R, K): the mean over frames."""
@@ -280,6 +370,8 @@ class Estimator:
         return {
             "noise": self._noise.snapshot(),
             "innovations": self._innovations.snapshot(),
+            "memory": self._memory.snapshot(),
+            "left_out_most": self._left_out_most,
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
             "following": [following.snapshot() for following in self.following],
@@ -289,6 +381,8 @@ class Estimator:
         """Take over a snapshot."""
         self._noise.load(snapshot["noise"])
         self._innovations.load(snapshot["innovations"])
+        self._memory.load(snapshot["memory"])
+        self._left_out_most = int(snapshot["left_out_most"])
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
         self._end_ns = int(snapshot["end_ns"])
@@ -321,8 +415,10 @@ class Estimator:
             )
             outputs[:, part] = turned.outputs
             bank.turn_direct(part, turned.turn)
+            self._memory.turn_direct(part, turned.turn)
             if turned.gain != 1.0:
                 bank.amplify(part, turned.gain)
+                self._memory.amplify(part, turned.gain)
             if turned.lost:
                 lost.append(receiver)
         return tuple(lost)
@@ -372,6 +468,22 @@ class Estimator:
             ratio = before / self._noise.power
             amplitude = np.repeat(np.sqrt(ratio), self._adjoint.shape[1])
             self._bank.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
+
+    def _doubt(self, regressors: NDArray[Any]) -> NDArray[Any]:
+        """Work out how wrong the surface's part of frames was expected before they were taken in.
+
+        With S the covariance Z P Zᴴ from before, it is S (I + S)⁻¹ now; forgetting in between is small.
+        """
+        surface = regressors.copy()
+        surface[:, 0] = 0.0
+        values, vectors = np.linalg.eigh(self._learned().predicted_covariance(surface))
+        values = np.clip(values, 0.0, 0.95)
+        # P promises what it promises; what really comes of it is measured.
+        return np.asarray((vectors * (self._innovations.excess * values / (1.0 - values))) @ vectors.conj().T)
+
+    def _fits(self, bank: Bank, regressors: NDArray[Any], outputs: NDArray[np.complex128]) -> bool:
+        error = outputs - regressors @ bank.chosen.coefficients
+        return bool(_power(error).mean() / error.shape[0] < FITS * self._innovations.variance)
 
     def _hear(self, power: NDArray[np.float64], degrees: int) -> None:
         self._heard += power * degrees

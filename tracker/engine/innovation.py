@@ -50,6 +50,7 @@ class Innovations:
         self._moments = np.zeros(2)  # of the regression for α
         self._blocks = 0
         self.excess = 1.0
+        self.variance = 1.0  # of an innovation, in the last block
         self._power, self._frames = 0.0, 0
         self._common: Complex = np.zeros(receivers * size, dtype=np.complex128)
         self._common_frames = 0
@@ -72,6 +73,7 @@ class Innovations:
         self._frames += white.shape[0]
         self._common += innovation.sum(axis=0)
         self._common_frames += white.shape[0]
+        self.variance = float(expected.mean())
         self._calibrate(power, spread - 1.0, expected)
 
     def readings(self) -> list[Reading]:
@@ -92,6 +94,7 @@ class Innovations:
             "moments": self._moments.copy(),
             "blocks": self._blocks,
             "excess": self.excess,
+            "variance": self.variance,
             "common": self._common.copy(),
             "common_frames": self._common_frames,
         }
@@ -100,6 +103,7 @@ class Innovations:
         """Take over a snapshot, made between blocks."""
         self._moments = np.array(snapshot["moments"], dtype=np.float64)
         self._blocks, self.excess = int(snapshot["blocks"]), float(snapshot["excess"])
+        self.variance = float(snapshot["variance"])
         self._common = np.array(snapshot["common"], dtype=np.complex128)
         self._common_frames = int(snapshot["common_frames"])
 

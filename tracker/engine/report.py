@@ -4,10 +4,10 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from .burst import Burst
+from .changes import Verdict
 from .drift import DriftMonitor, Suspicion
 from .estimator import Fit
 from .events import Alarm, Mode, State
-from .innovation import DIRECT
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,22 +64,18 @@ class Link:
     promise_kept: float | None = None
 
 
-def drift_alarm(suspicion: Suspicion, elapsed_s: float, stand: Stand) -> Alarm:
-    """Say what left its baseline: upward the channel is not what it was, downward the baseline was wrong."""
-    change = suspicion.change
-    kind, action = ("channel", "reacquire") if change.up else ("unclear", "new baseline")
-    if suspicion.name == DIRECT and change.up:
-        kind, action = "direct-path", "renew direct path"
+def drift_alarm(suspicion: Suspicion, verdict: Verdict, action: str, stand: Stand) -> Alarm:
+    """Say what left its baseline, what that means and what is done about it."""
     return Alarm(
         run=stand.run,
         seq=stand.seq,
         t_ns=stand.t_ns,
-        since_ns=stand.t_ns - round(change.since * elapsed_s * 1e9),
-        kind=kind,
-        receiver=None,
-        statistic=change.statistic,
-        threshold=change.threshold,
-        next_kind="unclear" if change.up else "",
+        since_ns=stand.t_ns - round(suspicion.since_s * 1e9),
+        kind=verdict.kind,
+        receiver=verdict.receiver,
+        statistic=suspicion.change.statistic,
+        threshold=suspicion.change.threshold,
+        next_kind=verdict.next_kind,
         action=action,
     )
 

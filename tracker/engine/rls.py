@@ -92,6 +92,12 @@ class BlockRls:
         column = self._times_covariance(a, np.ascontiguousarray(regressor, dtype=self._dtype)[None, :])[:, 0]
         return float((regressor @ column).real + b * (self._prior * np.abs(regressor) ** 2).sum())
 
+    def predicted_covariance(self, regressors: NDArray[Any]) -> NDArray[Any]:
+        """Covariance over frames of Z C, shape (B, B), for regressors (B, n): Z P Zᴴ, in units of the noise."""
+        a, b = self._pending
+        z = np.ascontiguousarray(regressors, dtype=self._dtype)
+        return np.asarray(z @ self._times_covariance(a, z) + (z * (b * self._prior)) @ z.conj().T)
+
     def forget(self, a: float, b: float, decay: float = 1.0) -> None:
         """Set P to a P + b P₀, to be carried out with the next update, and C to `decay` C; see `forgetting`."""
         before_a, before_b = self._pending

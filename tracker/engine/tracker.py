@@ -17,21 +17,23 @@ from .admission import Admission
 from .budget import Budget
 from .burst import Burst
 from .calibration import Calibration
+from .changes import Verdict
 from .channel import Channel
 from .config import Config
 from .drift import DriftMonitor, Suspicion
 from .estimator import Estimator, Fit, Frames
 from .events import Cause, Event, Mode, Pattern
 from .following import KEPT, Lock
-from .innovation import DIRECT
+from .innovation import DIRECT, INNOVATION
 from .lifecycle import Happening, after
 from .rate import rate
+from .reaction import HARMLESS, react
 from .refresh import Refresher, rate_spread
 from .refusal import Reason
 from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, states
 
-# On a drift alarm P goes this share of the way back to the prior: new frames then outweigh old ones within a sweep.
-LOOSEN_ON_CHANGE = 0.9
+# While no sum is beyond this share of its threshold, nothing is suspected.
+CALM = 0.3
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -170,7 +172,7 @@ class Tracker:
             events.append(lock_alarm(receiver, self._estimator.following[receiver].quality, KEPT, stand))
         suspicion = self._follow_drift(fit)
         if suspicion:
-            events.append(drift_alarm(suspicion, fit.elapsed_s, stand))
+            events.append(drift_alarm(suspicion, *self._answer(suspicion), stand))
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
         self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
@@ -220,6 +222,7 @@ class Tracker:
 
     def _start_over(self) -> None:
         self._frames_since = 0
+        self._estimator.forget_calm()
         self._drift.reset()
         self._refresher.begin_afresh()
 
@@ -245,18 +248,28 @@ class Tracker:
         if self._mode is not Mode.TRACKING:
             return None
         suspicions = self._drift.update(fit.readings, fit.elapsed_s)
-        if not suspicions:
-            return None
-        if any(one.name == DIRECT and one.change.up for one in suspicions):
+        if suspicions:
+            return max(suspicions, key=lambda one: one.change.statistic / one.change.threshold)
+        if self._drift.height < CALM:
+            self._estimator.calm()
+        else:
+            self._estimator.keep()
+        return None
+
+    def _answer(self, suspicion: Suspicion) -> tuple[Verdict, str]:
+        """Find out what changed, and do what is to be done about it."""
+        self._estimator.keep()
+        verdict = self._estimator.judge(suspicion.since_s) or Verdict("unclear", "", 0.0)
+        if not suspicion.change.up and suspicion.name in (INNOVATION, DIRECT):
+            # A link that fits better than before has not changed: the baseline was wrong.
+            verdict, action = Verdict("unclear", "", 0.0), "new baseline"
+        else:
+            action = react(self._estimator, verdict)
+        if action not in HARMLESS:
             self._mode = after(self._mode, Happening.CHANGE)
-            self._estimator.renew_direct()
-            self._pending_cause = Cause.DRIFT
-        elif any(one.change.up for one in suspicions):
-            self._mode = after(self._mode, Happening.CHANGE)
-            self._estimator.loosen(LOOSEN_ON_CHANGE)
             self._pending_cause = Cause.DRIFT
         self._start_over()
-        return suspicions[0]
+        return verdict, action
 
     def _consider(self, channel: Channel, bursts: int, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
         """Publish a pattern if one is due and worth it; also say how many optimizer steps were taken."""
