@@ -14,7 +14,8 @@ span_ns                   int64 (2,): first and last frame, ns since the Unix ep
 frames                    int64: frames learned from
 settings                  str: text of the settings
 version                   str: of the program that wrote it
-held                      float64: share of the energy of held-out frames that the columns hold
+held, held_deviation      float64: share of the surface's energy in held-out frames that the columns hold, its standard
+                          deviation; NaN when it could not be told
 sizes, errors             int64, float64 (m,): numbers of columns tried, and the mean squared error of predicting
                           held-out frames with each, in units of the noise
 elements_error            float64: the same with every element for itself
@@ -53,6 +54,7 @@ class LearnedBasis:
     settings: str
     version: str
     held: float
+    held_deviation: float
     sizes: tuple[int, ...]
     errors: tuple[float, ...]
     elements_error: float
@@ -96,6 +98,7 @@ def unpack_basis(data: bytes) -> LearnedBasis:
             settings=str(found["settings"]),
             version=str(found["version"]),
             held=float(found["held"]),
+            held_deviation=float(found["held_deviation"]),
             sizes=tuple(found["sizes"].tolist()),
             errors=tuple(found["errors"].tolist()),
             elements_error=float(found["elements_error"]),

@@ -128,6 +128,31 @@ examples:
     watch.add_argument("--plain", action="store_true", help="one line a second instead of a screen, for logs")
     watch.add_argument("--seconds", metavar="S", type=_positive, help="end after this many seconds")
 
+    learn = command(
+        "learn",
+        "learn an aperture basis from recorded logs",
+        "Finds the few columns in which the responses of all elements lie, as far as the logs show them: the engine\n"
+        "then estimates those instead of every element, and follows a moving terminal with far fewer frames. Frames\n"
+        "held out say how many columns to keep and how good they are. Writes a picture beside the basis.",
+        "  ris-tracker learn journal/yard-0001.mcap --out yard-basis.npz\n"
+        "  ris-tracker learn journal/*.mcap --settings yard.toml --out yard-basis.npz --size 16",
+    )
+    _logs(learn)
+    learn.add_argument(
+        "--settings",
+        metavar="SETTINGS",
+        type=Path,
+        help="use these settings (default: those recorded in the first log)",
+    )
+    learn.add_argument("--out", metavar="BASIS.npz", type=Path, required=True, help="basis to write")
+    learn.add_argument(
+        "--size",
+        metavar="R",
+        type=_count,
+        help="keep this many columns (default: aperture.size, or what held-out frames say)",
+    )
+    _quiet(learn)
+
     inspect = command(
         "inspect",
         "say what recorded logs hold",
@@ -185,6 +210,12 @@ def _positive(text: str) -> float:
     return value
 
 
+def _count(text: str) -> int:
+    if not text.isdecimal() or int(text) < 1:
+        raise argparse.ArgumentTypeError(f"found {text!r}, allowed is: a whole number above 0")
+    return int(text)
+
+
 def _serve(asked: argparse.Namespace) -> int:
     from tracker.service.serve import serve
 
@@ -228,6 +259,13 @@ def _inspect(asked: argparse.Namespace) -> int:
     return inspect(asked.logs, asked.json, not asked.quiet)
 
 
+def _learn(asked: argparse.Namespace) -> int:
+    from tracker.offline.learn import learn
+
+    _one_blas_thread()
+    return learn(asked.logs, asked.settings, asked.out, asked.size, not asked.quiet)
+
+
 def _suggest(asked: argparse.Namespace) -> int:
     from tracker.offline.suggest import suggest
 
@@ -240,6 +278,7 @@ COMMANDS = {
     "replay": _replay,
     "check": _check,
     "watch": _watch,
+    "learn": _learn,
     "inspect": _inspect,
     "suggest": _suggest,
 }
