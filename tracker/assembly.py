@@ -1,5 +1,6 @@
 """From settings to an engine: the one place where keys of the file become terms of the engine."""
 
+import math
 from functools import lru_cache
 from pathlib import Path
 
@@ -13,6 +14,8 @@ from tracker.messages import Shape
 from tracker.settings import Settings, SettingsError
 
 LIGHT_M_S = 299_792_458.0
+# Name under which the learned basis in force lies in a log.
+BASIS = "basis.npz"
 
 
 def configure(settings: Settings, folder: Path, basis: bytes | None = None) -> Config:
@@ -98,7 +101,8 @@ def _learned(settings: Settings, data: bytes | None) -> Columns:
             f"aperture.file: {name} was learned on a panel of {basis.panel[0]} columns × {basis.panel[1]} rows, "
             f"[panel] has {panel.columns} × {panel.rows}; learn one on this panel"
         )
-    return Columns(basis.columns[:, :size], basis.variances[:size], basis.held_by(size))
+    held = basis.held_by(size)
+    return Columns(basis.columns[:, :size], basis.variances[:size], held if math.isfinite(held) else None)
 
 
 def _region(settings: Settings) -> Columns:

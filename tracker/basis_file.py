@@ -6,7 +6,7 @@ name                      what
 format                    1
 columns                   complex128 (N, r): orthonormal columns, the strongest first
 variances                 float64 (r,): variance of each coefficient, free of what noise adds
-eigenvalues               float64 (r,): as the frames showed it, noise included
+eigenvalues               float64 (w,): of all columns sought, as the frames showed them, noise included
 noise                     float64: what noise adds to each eigenvalue
 panel                     int64 (2,): columns and rows of the panel
 logs, sha256              str (n,): names of the logs, and the SHA-256 of each

@@ -36,7 +36,7 @@ def draw(basis: LearnedBasis) -> str:
     parts = list(_eigenvalues(basis, 60, 40, 360))
     parts += _errors(basis, 520, 40, 360)
     shown = min(MOST_DRAWN, basis.columns.shape[1])
-    top = CHART_HEIGHT + 120
+    top = CHART_HEIGHT + 140
     parts.append(
         _text(60, top - 28, "First columns on the panel, seen from the front: brightness amplitude, colour phase")
     )
@@ -59,20 +59,21 @@ def _eigenvalues(basis: LearnedBasis, x: float, y: float, width: float) -> Itera
     noise = 10.0 * math.log10(max(basis.noise, 1e-12))
     low, high = _ticks(float(min(levels.min(), noise)) - 1.0, float(levels.max()) + 1.0, 5.0)
     chart = _Chart(x, y, width, (0.5, levels.size + 0.5), (low, high))
-    yield from chart.frame("Power of each column", "column", "dB over noise", 5.0)
+    yield from chart.frame("Power of each column", "column; filled: kept", "dB over noise", 5.0)
     yield chart.line([0.5, levels.size + 0.5], [noise, noise], OTHER, "4 3")
     yield _text(x + width, chart.at(0, noise)[1] - 5, "what noise adds", OTHER, "end")
     for place, level in enumerate(levels, 1):
-        yield chart.dot(place, float(level), MARK)
+        yield chart.dot(place, float(level), MARK, hollow=place > basis.columns.shape[1])
 
 
 def _errors(basis: LearnedBasis, x: float, y: float, width: float) -> Iterator[str]:
     """Prediction error of held-out frames against the number of columns."""
     excess = [error for error in (*basis.errors, basis.elements_error) if math.isfinite(error)]
-    low, high = _ticks(1.0, max([*excess, 1.05]), 0.05 if max(excess, default=1.0) < 1.4 else 0.5)
+    most = max([*excess, 1.05])
+    step = 10.0 ** math.floor(math.log10(most - 1.0)) * (0.5 if math.log10(most - 1.0) % 1.0 < 0.5 else 1.0)
+    low, high = _ticks(1.0, most, step)
     sizes = [math.log2(size) for size in basis.sizes]
     chart = _Chart(x, y, width, (min(sizes) - 0.5, max(sizes) + 0.5), (low, high))
-    step = (high - low) / 5.0
     yield from chart.frame("Error of predicting held-out frames", "columns", "1 is noise alone", step, [])
     for place, size in zip(sizes, basis.sizes, strict=True):
         yield _text(chart.at(place, low)[0], chart.at(place, low)[1] + 18, str(size), QUIET, "middle")
@@ -159,14 +160,15 @@ class _Chart:
         dashed = f' stroke-dasharray="{dashes}"' if dashes else ""
         return f'<polyline points="{points}" fill="none" stroke="{colour}" stroke-width="1.5"{dashed}/>'
 
-    def dot(self, across: float, up: float, colour: str) -> str:
+    def dot(self, across: float, up: float, colour: str, hollow: bool = False) -> str:
         left, height = self.at(across, up)
-        return f'<circle cx="{left:.1f}" cy="{height:.1f}" r="3.5" fill="{colour}"/>'
+        fill = "#ffffff" if hollow else colour
+        return f'<circle cx="{left:.1f}" cy="{height:.1f}" r="3.5" fill="{fill}" stroke="{colour}"/>'
 
 
 def _ticks(low: float, high: float, step: float) -> tuple[float, float]:
     """Widen a range to whole steps."""
-    return step * math.floor(low / step), step * math.ceil(high / step)
+    return step * math.floor(low / step + 1e-9), step * math.ceil(high / step - 1e-9)
 
 
 def _text(x: float, y: float, text: str, colour: str = INK, anchor: str = "start") -> str:

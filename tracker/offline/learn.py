@@ -121,7 +121,7 @@ def work_out(paths: Sequence[Path], settings: Settings, text: str, size: int | N
     held_out = {stretch.number for stretch in turning.stretches if blocks.held_out(stretch.number) is not None}
     tried = [size] if size is not None else [number for number in SIZES if number <= width]
     trials = try_sizes(pieces("trying columns"), config, space, tried, held_out)
-    return _basis(turning, space.cut(trials.size), trials, blocks, settings, text, logs)
+    return _basis(turning, space, trials, blocks, settings, text, logs)
 
 
 def render(basis: LearnedBasis, out: Path, picture: Path) -> str:
@@ -209,11 +209,12 @@ def _basis(
     text: str,
     logs: Sequence[Recorded],
 ) -> LearnedBasis:
-    held = share_held(turning.stretches, space, blocks)
+    kept = space.cut(trials.size)
+    held = share_held(turning.stretches, kept, blocks)
     out = [stretch.error for stretch in turning.stretches if blocks.held_out(stretch.number) is not None]
     return LearnedBasis(
-        columns=space.columns,
-        variances=space.variances,
+        columns=np.ascontiguousarray(kept.columns),
+        variances=kept.variances,
         eigenvalues=space.eigenvalues,
         noise=space.noise,
         panel=(settings.panel.columns, settings.panel.rows),

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from tracker.engine.aperture import Columns
 from tracker.engine.config import Config
 from tracker.engine.delay import frequencies
 from tracker.settings import Settings
@@ -23,16 +24,17 @@ class Demand:
     Parameters
     ----------
     unknowns : int
-        n, real regressors of one output: the direct path and the columns of the aperture basis.
+        n, regressors of one output: the direct path and the columns of the aperture basis.
     outputs : int
         D, receivers times delay directions; each has `unknowns` complex coefficients.
     covariance_bytes : int
-        P, n × n real.
+        P, n × n, complex where the columns of the aperture basis are.
     coefficient_bytes : int
         C, n × D complex.
     flops_a_frame : int
         Floating-point operations a frame: P Zᵀ (2 n²), P − XᵀX on one triangle (n²), Z C and XᵀL⁻¹(Y − Z C) with
-        complex C (4 n D each).
+        complex C (4 n D each). With complex columns the first two cost four times as much, the others twice, and Uᵀs
+        comes on top (4 N r).
     burst_bytes : int
         Patterns and response of a burst of `FRAMES` frames.
     """
@@ -49,12 +51,15 @@ def demand(config: Config) -> Demand:
     """Work out what an estimator needs."""
     unknowns = config.aperture.size + 1
     outputs = config.receivers * config.delay.shape[1]
+    flops = 3 * unknowns**2 + 8 * unknowns * outputs
+    if config.aperture.is_complex:
+        flops = 12 * unknowns**2 + 16 * unknowns * outputs + 4 * config.elements * config.aperture.size
     return Demand(
         unknowns=unknowns,
         outputs=outputs,
-        covariance_bytes=8 * unknowns**2,
+        covariance_bytes=(16 if config.aperture.is_complex else 8) * unknowns**2,
         coefficient_bytes=16 * unknowns * outputs,
-        flops_a_frame=3 * unknowns**2 + 8 * unknowns * outputs,
+        flops_a_frame=flops,
         burst_bytes=FRAMES * _frame_bytes(config),
     )
 
@@ -100,7 +105,7 @@ def summary(settings: Settings, config: Config, queue: int) -> str:
         (
             "unknowns",
             f"{need.unknowns} complex for each of {need.outputs} outputs (receivers × delay directions), "
-            f'basis "{settings.aperture.basis}"',
+            f'basis "{settings.aperture.basis}"{_held(settings, config)}',
         ),
         (
             "memory",
@@ -138,6 +143,15 @@ def summary(settings: Settings, config: Config, queue: int) -> str:
         ("journal", f"{settings.journal.folder}, a new file every {settings.journal.rotate_mb:g} MB"),
     ]
     return "\n".join(f"{label:<12} {text}" for label, text in lines)
+
+
+def _held(settings: Settings, config: Config) -> str:
+    """Say how much of what is to be expected the columns of an aperture basis hold."""
+    held = config.aperture.held if isinstance(config.aperture, Columns) else None
+    if held is None:
+        return ""
+    whose = "waves from the region" if settings.aperture.basis == "region" else "frames held out when it was learned"
+    return f", whose {config.aperture.size} columns hold {100 * held:.1f} % of the energy in {whose}"
 
 
 def _frame_bytes(config: Config) -> int:
