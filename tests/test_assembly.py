@@ -85,12 +85,15 @@ def test_the_aperture_basis_is_the_one_chosen() -> None:
     assert (made().aperture.size, tiles.size, tiles.elements) == (16, 4, 16)
 
 
-@pytest.mark.parametrize("line", ['basis = "learned"\nfile = "basis.npz"', 'basis = "region"'])
-def test_a_basis_that_cannot_be_had_is_the_users_mistake(line: str) -> None:
-    """One line: key, what was found, what can be had."""
-    with pytest.raises(SettingsError, match=r'aperture.basis: found .*"elements" or "tiles"') as caught:
-        made(aperture=line)
+def test_a_basis_that_cannot_be_had_is_the_users_mistake(tmp_path: Path) -> None:
+    """The file of a learned basis is missing, or something else: one line with the key and the file."""
+    text = settings_text("tcp://127.0.0.1:1", aperture='basis = "learned"\nfile = "basis.npz"')
+    with pytest.raises(SettingsError, match=r"aperture.file: .*basis.npz: there is no such file") as caught:
+        configure(parse(text), tmp_path)
     assert "\n" not in str(caught.value)
+    (tmp_path / "basis.npz").write_bytes(b"not a basis")
+    with pytest.raises(SettingsError, match=r"aperture.file: basis.npz is not a basis"):
+        configure(parse(text), tmp_path)
 
 
 def test_the_shape_of_bursts_is_that_of_the_settings() -> None:

@@ -9,6 +9,8 @@ import numpy as np
 
 ARRAY = 1
 VERSION = 1
+# Name under which a start lies in a log.
+START = "start.msgpack"
 
 
 class SnapshotError(Exception):

@@ -283,7 +283,7 @@ def running(controller: Controller, create: Callable[..., LogWriter] = LogWriter
         journal = Journal(
             folder,
             controller.link,
-            controller.text,
+            {"settings.toml": controller.text.encode()},
             settings.journal.rotate_mb,
             lambda: pack_start(Start(tracker.next_id, tracker.snapshot())),
             create,

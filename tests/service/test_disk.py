@@ -125,7 +125,7 @@ def test_patterns_go_out_when_recording_is_no_condition(make_controller: Callabl
 def test_an_id_that_cannot_be_kept_withholds_its_pattern(
     controller: Controller, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    """Else it could be given again after a kill; estimates go on, and a pattern follows once the file can be written."""
+    """Else it could be given again after a kill; a pattern follows once the file can be written."""
     fails = [True]
     written = IdFile.keep
 
@@ -164,7 +164,7 @@ def test_a_journal_that_cannot_begin_says_why(tmp_path: Path) -> None:
     disk = Disk()
     disk.works = False
     with pytest.raises(ServiceError, match="No space left on device") as caught:
-        Journal(tmp_path, "yard", "", 1.0, lambda: b"", disk.create)
+        Journal(tmp_path, "yard", {}, 1.0, lambda: b"", disk.create)
     assert str(tmp_path) in str(caught.value)
     assert list(tmp_path.iterdir()) == []
 
@@ -177,7 +177,7 @@ def test_a_failing_sync_is_a_failing_disk(tmp_path: Path, monkeypatch: pytest.Mo
         raise OSError(errno.EIO, "Input/output error")
 
     monkeypatch.setattr(syncing, "_sync", broken)
-    journal = Journal(tmp_path, "yard", "", 1.0, lambda: b"")
+    journal = Journal(tmp_path, "yard", {}, 1.0, lambda: b"")
     try:
         written = 0
         while journal.write([("pilots/yard", b"x", 1, 1)]):
@@ -195,8 +195,8 @@ def test_files_sort_in_the_order_they_were_begun(tmp_path: Path, monkeypatch: py
     """Also when several begin within a second, and when the machine's clock is set back."""
     real = time.gmtime
     back = [0.0]
-    monkeypatch.setattr(journal_module.time, "gmtime", lambda: real(time.time() - back[0]))
-    journal = Journal(tmp_path, "yard", "", 1e-6, lambda: b"")
+    monkeypatch.setattr(time, "gmtime", lambda: real(time.time() - back[0]))
+    journal = Journal(tmp_path, "yard", {}, 1e-6, lambda: b"")
     begun = [journal.path]
     for turn in range(12):
         back[0] = 3600.0 * (turn > 5)

@@ -94,7 +94,7 @@ class Door:
 
 def estimate(controller: Controller) -> dict[str, Any]:
     """What the service knew when it ended, from its checkpoint, but for the counts of what was refused."""
-    _, _, start = msgpack.unpackb((controller.journal / "yard.checkpoint").read_bytes())
+    _, start = msgpack.unpackb((controller.journal / "yard.checkpoint").read_bytes())
     snapshot = unpack_start(start).snapshot
     assert snapshot is not None
     return {key: value for key, value in snapshot.items() if key != "counts"}

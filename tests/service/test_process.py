@@ -13,6 +13,7 @@ import pytest
 from mcap.reader import make_reader
 
 from tests.service.station import PATIENCE_S, RESTLESS, ROOT, Controller, Nursery, bursts
+from tracker.basis_file import LearnedBasis, pack_basis
 from tracker.engine.events import Mode
 from tracker.logs import LogReader, LogWriter
 from tracker.messages import decode_pattern, decode_pilots
@@ -229,6 +230,58 @@ def test_each_file_of_a_journal_replays_alone_and_all_in_turn(
         assert_same(work, work.comparison.same)
     assert sum(work.comparison.same for work in alone) == len(controller.heard.pattern)
     assert [burst for path in paths for burst in journaled(path)] == [(7, seq) for seq in range(40)]
+
+
+def basis(seed: int) -> bytes:
+    """A learned basis of six columns for the small panel."""
+    columns, _ = np.linalg.qr(np.random.default_rng(seed).normal(size=(16, 6)) + 0j)
+    return pack_basis(
+        LearnedBasis(
+            columns=columns,
+            variances=np.full(6, 1e-12),
+            eigenvalues=np.full(6, 1e-12),
+            noise=1e-14,
+            panel=(4, 4),
+            logs=("yard.mcap",),
+            sha256=("0" * 64,),
+            span_ns=(0, 1),
+            frames=1000,
+            settings="",
+            version="0",
+            held=0.9,
+            held_deviation=0.01,
+            sizes=(6,),
+            errors=(1.1,),
+            elements_error=1.2,
+        )
+    )
+
+
+def test_the_learned_basis_lies_in_the_journal(
+    make_controller: Callable[..., Controller], nursery: Nursery, tmp_path: Path
+) -> None:
+    """A replay needs no other file; an estimate in one basis is not taken up in another."""
+    controller = make_controller(aperture='basis = "learned"\nfile = "yard-basis.npz"', estimator=RESTLESS)
+    file = tmp_path / "yard-basis.npz"
+    for seed in (1, 2):
+        file.write_bytes(basis(seed))
+        service = nursery.start("serve", controller.path)
+        controller.meet()
+        for number, burst in enumerate(bursts(15)):
+            assert controller.step(burst).bursts == number + 1
+        assert controller.ask("stop").ok
+        assert nursery.wait(service) == 0
+    last, heard = logs(controller)[-1], len(controller.heard.pattern)
+    assert heard > 2
+    given = Replay(controller.settings, tmp_path)
+    given.run(last)
+    assert given.own_settings
+    file.write_bytes(basis(3))
+    other = Replay(controller.settings, tmp_path)
+    other.run(last)
+    assert not other.own_settings
+    file.unlink()
+    assert_same(replayed([last]), heard)
 
 
 def lines_and_status(nursery: Nursery, controller: Controller, log: Path) -> tuple[int | None, list[str]]:

@@ -5,6 +5,7 @@ order of the records against the MCAP specification: that shows a damaged head e
 """
 
 import struct
+import zlib
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from io import BytesIO
@@ -16,6 +17,8 @@ from mcap.opcode import Opcode
 from mcap.records import Chunk
 from mcap.stream_reader import get_chunk_data_stream
 from mcap.writer import MCAP0_MAGIC
+
+from tracker.logs.packing import unpack_plain_chunk
 
 MOST_RECORD = 256 * 1024 * 1024  # bytes of one record, and of one chunk unpacked
 PRIVATE = 0x80  # from here on opcodes belong to applications, and readers step over them
@@ -158,15 +161,8 @@ def unpack_chunk(frame: Frame) -> Iterator[Frame]:
     Damaged
         Before any record, when the CRC does not match.
     """
-    chunk = frame.parse(Chunk.read)
-    told = chunk.uncompressed_size
-    if told > MOST_RECORD:
-        raise frame.damaged(f"the chunk says that it unpacks to {told} bytes, at most {MOST_RECORD} are read")
-    try:
-        stream, length = get_chunk_data_stream(chunk, validate_crc=True)
-        data = stream.read(length)
-    except Exception as error:  # noqa: BLE001 - the decompressors raise errors of their own kinds on damaged data
-        raise frame.damaged(f"the chunk is damaged: {' '.join(str(error).split())}") from None
+    data, told = _records_of(frame)
+    length = len(data)
     if length != told:
         raise frame.damaged(f"the chunk holds {length} bytes, its head says {told}")
     at = 0
@@ -175,8 +171,30 @@ def unpack_chunk(frame: Frame) -> Iterator[Frame]:
         end = at + HEAD.size + size
         if end > length:
             raise frame.damaged(f"the chunk is damaged at its byte {at}")
-        yield Frame(opcode, data[at + HEAD.size : end], frame.start, frame.end, frame.size)
+        yield Frame(opcode, bytes(data[at + HEAD.size : end]), frame.start, frame.end, frame.size)
         at = end
+
+
+def _records_of(frame: Frame) -> tuple[bytes | memoryview, int]:
+    """Give the records in a chunk, checked against its CRC, and their size as its head tells it."""
+    try:
+        plain = unpack_plain_chunk(frame.content)
+    except struct.error:
+        raise frame.damaged("the chunk record is damaged") from None
+    if plain is not None:
+        told, crc, data = plain
+        if crc and crc != zlib.crc32(data):  # 0 stands for none
+            raise frame.damaged("the chunk is damaged: its records do not match their CRC")
+        return data, told
+    chunk = frame.parse(Chunk.read)
+    told = chunk.uncompressed_size
+    if told > MOST_RECORD:
+        raise frame.damaged(f"the chunk says that it unpacks to {told} bytes, at most {MOST_RECORD} are read")
+    try:
+        stream, length = get_chunk_data_stream(chunk, validate_crc=True)
+        return stream.read(length), told
+    except Exception as error:  # noqa: BLE001 - the decompressors raise errors of their own kinds on damaged data
+        raise frame.damaged(f"the chunk is damaged: {' '.join(str(error).split())}") from None
 
 
 def _name(opcode: int) -> str:

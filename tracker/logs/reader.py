@@ -9,11 +9,12 @@ from pathlib import Path
 from typing import BinaryIO
 
 from mcap.opcode import Opcode
-from mcap.records import Attachment, Channel, DataEnd, Footer, Message, Statistics
+from mcap.records import Attachment, Channel, DataEnd, Footer, Statistics
 from mcap.writer import MCAP0_MAGIC
 
 from tracker.logs.errors import LogError
 from tracker.logs.frames import DATA, HEAD, PRIVATE, SUMMARY, Damaged, Frame, frames, next_frame, unpack_chunk
+from tracker.logs.packing import unpack_message
 
 _READ = DATA - {Opcode.SCHEMA, Opcode.METADATA} | {Opcode.DATA_END}
 _INDEX = struct.Struct("<HI")
@@ -162,11 +163,14 @@ def _record(frame: Frame, channels: dict[int, str]) -> Record | None:
         return None
     if frame.opcode != Opcode.MESSAGE:
         return None
-    message = frame.parse(lambda stream: Message.read(stream, len(frame.content)))
-    topic = channels.get(message.channel_id)
+    try:
+        channel_id, log_time, publish_time, body = unpack_message(frame.content)
+    except struct.error:
+        raise frame.damaged("the message record is damaged") from None
+    topic = channels.get(channel_id)
     if topic is None:
-        raise frame.damaged(f"a message on channel {message.channel_id}, which was not declared")
-    return Record(topic, message.data, message.log_time, message.publish_time, frame.start)
+        raise frame.damaged(f"a message on channel {channel_id}, which was not declared")
+    return Record(topic, body, log_time, publish_time, frame.start)
 
 
 def _check_index(frame: Frame, before: int) -> None:

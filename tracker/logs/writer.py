@@ -17,20 +17,17 @@ from mcap.records import (
     Attachment,
     AttachmentIndex,
     Channel,
-    Chunk,
-    ChunkIndex,
     DataEnd,
     Footer,
     Header,
     McapRecord,
-    Message,
-    MessageIndex,
     Statistics,
     SummaryOffset,
 )
 from mcap.writer import MCAP0_MAGIC
 
 from tracker.logs.errors import LogError
+from tracker.logs.packing import chunk_head, chunk_index, message_head, message_index
 
 LIBRARY = "ris-tracker"
 MOST_TIME = 2**64 - 1
@@ -72,12 +69,13 @@ class LogWriter:
         self._channels: dict[str, Channel] = {}
         self._undeclared: list[str] = []  # channels whose record lies in the chunk not yet committed
         self._messages: dict[int, int] = {}
-        self._chunk = RecordBuilder()
-        self._index: dict[int, MessageIndex] = {}
+        self._chunk: list[bytes] = []
+        self._chunk_size = 0
+        self._index: dict[int, list[int]] = {}
         self._span = _Span()
         self._total = _Span()
         self._chunks = 0
-        self._chunk_indexes = RecordBuilder()
+        self._chunk_indexes = bytearray()
         self._attachment_indexes = RecordBuilder()
         self._attachments = len(attachments)
         try:
@@ -117,14 +115,13 @@ class LogWriter:
             channel = Channel(len(self._channels) + 1, topic, "msgpack", {}, 0)
             self._channels[topic] = channel
             self._undeclared.append(topic)
-            channel.write(self._chunk)
-        log_time, publish_time = (min(max(time, 0), MOST_TIME) for time in (log_time_ns, publish_time_ns))
-        index = self._index.get(channel.id)
-        if index is None:
-            index = self._index[channel.id] = MessageIndex(channel.id, [])
-        index.records.append((log_time, self._chunk.count))
+            self._put(_encoded(channel))
+        log_time = min(max(log_time_ns, 0), MOST_TIME)
+        publish_time = min(max(publish_time_ns, 0), MOST_TIME)
+        self._index.setdefault(channel.id, []).extend((log_time, self._chunk_size))
         self._span.include(log_time, log_time)
-        Message(channel.id, log_time, body, publish_time, 0).write(self._chunk)
+        self._put(message_head(channel.id, log_time, publish_time, len(body)))
+        self._put(body)
 
     def commit(self) -> None:
         """Write all buffered messages as one chunk; once it returns, killing the process loses nothing.
@@ -137,31 +134,32 @@ class LogWriter:
         """
         if not self._index:
             return
-        data = _taken(self._chunk)
+        chunk, size = self._chunk, self._chunk_size
         span, index, declared = self._span, self._index, self._undeclared
+        self._chunk, self._chunk_size = [], 0
         self._span, self._index, self._undeclared = _Span(), {}, []
-        chunk = Chunk("", data, span.last, span.first, zlib.crc32(data), len(data))
-        out = RecordBuilder()
-        chunk.write(out)
-        start, length = self._written, out.count
-        offsets = {}
-        for channel, records in index.items():
-            offsets[channel] = start + out.count
-            records.write(out)
-        index_length = out.count - length
+        crc = 0
+        for part in chunk:
+            crc = zlib.crc32(part, crc)
+        head = chunk_head(span.first, span.last, crc, size)
+        start, length = self._written, len(head) + size
+        indexes, offsets, end = [], {}, start + length
+        for channel, entries in index.items():
+            offsets[channel] = end
+            indexes.append(message_index(channel, entries))
+            end += len(indexes[-1])
         try:
-            self._write(_taken(out))
+            self._write(b"".join((head, *chunk, *indexes)))
         except OSError:
             for topic in declared:
                 del self._channels[topic]
             raise
-        for channel, records in index.items():
-            self._messages[channel] = self._messages.get(channel, 0) + len(records.records)
+        for channel, entries in index.items():
+            self._messages[channel] = self._messages.get(channel, 0) + len(entries) // 2
         self._total.include(span.first, span.last)
         self._chunks += 1
-        ChunkIndex(length, start, "", len(data), span.last, index_length, offsets, span.first, len(data)).write(
-            self._chunk_indexes
-        )
+        index_length = end - start - length
+        self._chunk_indexes += chunk_index(span.first, span.last, start, length, offsets, index_length, size)
 
     def close(self) -> None:
         """Commit what is buffered, write the index and the end mark, close the file; a second call does nothing.
@@ -188,6 +186,10 @@ class LogWriter:
     ) -> None:
         self.close()
 
+    def _put(self, data: bytes) -> None:
+        self._chunk.append(data)
+        self._chunk_size += len(data)
+
     def _attach(self, name: str, data: bytes, now: int) -> None:
         media = "application/toml" if name.endswith(".toml") else "application/octet-stream"
         encoded = _encoded(Attachment(now, now, name, media, data))
@@ -213,14 +215,14 @@ class LogWriter:
         start = self._written
         summary, offsets = RecordBuilder(), RecordBuilder()
         for opcode, group in (
-            (Opcode.CHANNEL, channels),
-            (Opcode.STATISTICS, statistics),
+            (Opcode.CHANNEL, _taken(channels)),
+            (Opcode.STATISTICS, _taken(statistics)),
             (Opcode.CHUNK_INDEX, self._chunk_indexes),
-            (Opcode.ATTACHMENT_INDEX, self._attachment_indexes),
+            (Opcode.ATTACHMENT_INDEX, _taken(self._attachment_indexes)),
         ):
-            if group.count:
-                SummaryOffset(opcode, start + summary.count, group.count).write(offsets)
-                summary.write(_taken(group))
+            if group:
+                SummaryOffset(opcode, start + summary.count, len(group)).write(offsets)
+                summary.write(group)
         offsets_start = start + summary.count
         body = _taken(summary) + _taken(offsets)
         footer = _encoded(Footer(start, offsets_start, 0))[:-4]  # its CRC covers the section and the footer so far

@@ -15,9 +15,10 @@ from typing import Any
 
 from threadpoolctl import threadpool_limits
 
-from tracker.assembly import configure, shape
+from tracker.assembly import BASIS, configure, learned_basis, shape
 from tracker.decisions import Command, carry_out
 from tracker.engine.budget import Steps
+from tracker.engine.config import Config
 from tracker.engine.events import Event, Pattern
 from tracker.engine.refusal import Reason, Refused
 from tracker.engine.report import Counts
@@ -25,7 +26,7 @@ from tracker.engine.tracker import Tracker
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.outgoing import encode
 from tracker.settings import Settings, SettingsError, load, parse
-from tracker.snapshots import SnapshotError, unpack_start
+from tracker.snapshots import START, SnapshotError, unpack_start
 
 from .blocks import Block, Said, steps
 from .errors import OfflineError
@@ -50,7 +51,7 @@ class Replay:
 
     def __init__(self, settings: Settings | None, folder: Path, writer: LogWriter | None = None) -> None:
         self._given, self._folder, self._writer = settings, folder, writer
-        self._settings: Settings | None = settings
+        self._in_force: tuple[Settings | None, bytes | None] = None, None
         self._tracker: Tracker | None = None
         self._taken: Counter[str] = Counter()
         self.logged, self.replayed, self.comparison = Account(), Account(), Comparison()
@@ -123,25 +124,30 @@ class Replay:
 
     def _prepare(self, path: Path, reader: LogReader) -> tuple[Settings, Tracker, bool]:
         """Find the settings, and the tracker that starts into this log."""
-        text = reader.attachments.get("settings.toml")
+        attached = reader.attachments
+        text, basis = attached.get("settings.toml"), attached.get(BASIS)
         own = parse(text.decode(errors="replace"), f"{path}: settings.toml") if text is not None else None
         settings = self._given or own
         if settings is None:
             raise OfflineError(f"{path}: holds no settings; give them with --settings")
-        follow = own == settings and "start.msgpack" in reader.attachments
-        self.own_settings &= own == settings
-        if follow:
-            self._tracker = self._started(path, reader.attachments["start.msgpack"], settings)
-        elif self._tracker is None or settings != self._settings:
-            self._tracker = Tracker(configure(settings, self._folder))
-        self._settings = settings
-        return settings, self._tracker, follow
+        same = own == settings
+        if self._given is not None:
+            given = learned_basis(self._given, self._folder)
+            same, basis = same and given == basis, given
+        self.own_settings &= same
+        if same and START in attached:
+            self._tracker = self._started(path, attached[START], configure(settings, self._folder, basis))
+        elif self._tracker is None or (settings, basis) != self._in_force:
+            self._tracker = Tracker(configure(settings, self._folder, basis))
+        self._in_force = settings, basis
+        return settings, self._tracker, same and START in attached
 
-    def _started(self, path: Path, data: bytes, settings: Settings) -> Tracker:
+    @staticmethod
+    def _started(path: Path, data: bytes, config: Config) -> Tracker:
         """Make the tracker as it stood when the journal's file began."""
         try:
             start = unpack_start(data)
-            tracker = Tracker(configure(settings, self._folder), start.first_id)
+            tracker = Tracker(config, start.first_id)
             if start.snapshot is not None:
                 tracker.load(start.snapshot)
         except SnapshotError as error:

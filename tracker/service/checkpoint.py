@@ -1,9 +1,10 @@
 """The estimate over a planned restart: written when the service ends, taken up once when it starts again.
 
-A file is used only once and only by the same version under the same settings: after a crash there is none, and an old
-estimate is never mistaken for a fresh one.
+A file is used only once, and only by the same version under the same settings and basis: after a crash there is none,
+and an old estimate is never mistaken for a fresh one.
 """
 
+import hashlib
 import os
 from collections.abc import Callable, Mapping
 from pathlib import Path
@@ -22,12 +23,16 @@ class Checkpoint:
     Parameters
     ----------
     path : Path
-    settings : str
-        Text of the settings in force.
+    attachments : mapping of str to bytes
+        What is in force: settings, and the learned basis if there is one.
     """
 
-    def __init__(self, path: Path, settings: str) -> None:
-        self._path, self._settings = path, settings
+    def __init__(self, path: Path, attachments: Mapping[str, bytes]) -> None:
+        self._path = path
+        digest = hashlib.sha256(__version__.encode())
+        for name, data in sorted(attachments.items()):
+            digest.update(f"\n{name} {len(data)}\n".encode() + data)
+        self._in_force = digest.digest()
 
     def resume(self, afresh: Callable[[], Tracker]) -> tuple[Tracker, bool]:
         """Make a tracker, from the file if there is one that fits; the file is gone afterwards.
@@ -65,7 +70,7 @@ class Checkpoint:
         """
         part = self._path.with_suffix(".part")
         start = pack_start(Start(tracker.next_id, tracker.snapshot()))
-        part.write_bytes(msgpack.packb([__version__, self._settings, start]))
+        part.write_bytes(msgpack.packb([self._in_force, start]))
         os.replace(part, self._path)
 
     def _take(self) -> Mapping[str, Any] | None:
@@ -75,9 +80,7 @@ class Checkpoint:
         except OSError:
             return None
         try:
-            version, settings, start = msgpack.unpackb(data)
-            if (version, settings) != (__version__, self._settings):
-                return None
-            return unpack_start(start).snapshot
+            in_force, start = msgpack.unpackb(data)
+            return unpack_start(start).snapshot if in_force == self._in_force else None
         except (SnapshotError, ValueError, TypeError, msgpack.UnpackException):
             return None

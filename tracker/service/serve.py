@@ -8,7 +8,7 @@ from pathlib import Path
 from threadpoolctl import threadpool_limits
 
 from tracker import __version__
-from tracker.assembly import configure
+from tracker.assembly import BASIS, configure, learned_basis
 from tracker.engine.tracker import Tracker
 from tracker.settings import load
 from tracker.snapshots import Start, pack_start
@@ -43,18 +43,20 @@ def serve(settings_path: Path, log_level: str = "info") -> int:
     settings = load(settings_path)
     text = settings_path.read_text(encoding="utf-8")
     link = settings.link.name
-    config = configure(settings, settings_path.parent)
+    basis = learned_basis(settings, settings_path.parent)
+    config = configure(settings, settings_path.parent, basis)
+    attachments = {"settings.toml": text.encode()} | ({BASIS: basis} if basis is not None else {})
     folder = settings_path.parent / settings.journal.folder
     log = configure_log(log_level)
     with threadpool_limits(limits=1), Sockets(settings) as sockets:
         _make(folder)
         ids = IdFile(folder / f"{link}.next-id")
-        checkpoint = Checkpoint(folder / f"{link}.checkpoint", text)
+        checkpoint = Checkpoint(folder / f"{link}.checkpoint", attachments)
         tracker, resumed = checkpoint.resume(lambda: Tracker(config, ids.next_id))
         journal = Journal(
             folder,
             link,
-            text,
+            attachments,
             settings.journal.rotate_mb,
             lambda: pack_start(Start(tracker.next_id, tracker.snapshot())),
         )
