@@ -162,6 +162,26 @@ examples:
     _logs(inspect)
     _told(inspect)
 
+    drift = command(
+        "drift",
+        "show what changed when, over seconds or hours",
+        "Tells from logs what happened to a link: alarms with their evidence, modes, losses, what the tracker did and\n"
+        "what became of the rate; and draws it. A journal is taken as the service wrote it. A log without states is\n"
+        "replayed first, and so is any log when settings are given.",
+        "  ris-tracker drift journal/*.mcap\n"
+        "  ris-tracker drift journal/yard-0001.mcap --svg tuesday.svg --json tuesday.json\n"
+        "  ris-tracker drift recording.mcap --settings slower.toml",
+    )
+    _logs(drift)
+    drift.add_argument("--settings", metavar="SETTINGS", type=Path, help="replay the logs under these settings")
+    drift.add_argument(
+        "--svg",
+        metavar="PICTURE.svg",
+        type=Path,
+        help="picture to write (default: beside the first log, under its name or the next that is free)",
+    )
+    _told(drift)
+
     suggest = command(
         "suggest",
         "suggest settings from a recorded log",
@@ -266,6 +286,13 @@ def _learn(asked: argparse.Namespace) -> int:
     return learn(asked.logs, asked.settings, asked.out, asked.size, not asked.quiet)
 
 
+def _drift(asked: argparse.Namespace) -> int:
+    from tracker.offline.drift import drift
+
+    _one_blas_thread()
+    return drift(asked.logs, asked.settings, asked.svg, asked.json, not asked.quiet)
+
+
 def _suggest(asked: argparse.Namespace) -> int:
     from tracker.offline.suggest import suggest
 
@@ -280,6 +307,7 @@ COMMANDS = {
     "watch": _watch,
     "learn": _learn,
     "inspect": _inspect,
+    "drift": _drift,
     "suggest": _suggest,
 }
 
