@@ -44,7 +44,13 @@ KAPPAS = np.geomspace(1e-2, 1e4, 31)
 # Delays tried, from −1/4 to 1/4 of a turn from tone to tone.
 DELAYS = 1025
 # Largest share of the elements that may fail together and still be a few.
-FEW = 1 / 16
+FEW = 1 / 8
+# Rates at which motion turns a path, Hz: 5 m/s at 3.75 GHz, there and back.
+MOTION_HZ = np.linspace(-125.0, 125.0, 251)
+# Factors of a receiver's gain tried.
+GAINS = np.geomspace(0.05, 20.0, 241)
+# Frames that a verdict needs at least.
+LEAST_FRAMES = 8
 # Lags of the panel tried, frames.
 LAGS = (1, 2, 3)
 
@@ -105,6 +111,8 @@ class Verdict:
         Those that fail, for kind "elements".
     scores : dict
         Gain less price of each kind, nats.
+    frames : int
+        That it rests on.
     """
 
     kind: str
@@ -114,6 +122,7 @@ class Verdict:
     mend: tuple[Complex, Complex] | None = None
     elements: NDArray[np.intp] = field(default_factory=lambda: np.zeros(0, dtype=np.intp))
     scores: dict[str, float] = field(default_factory=dict)
+    frames: int = 0
 
 
 def judge(evidence: Evidence) -> Verdict:
@@ -123,11 +132,14 @@ def judge(evidence: Evidence) -> Verdict:
     ----------
     evidence : Evidence
     """
-    case = _Case(evidence)
+    onset = _onset(evidence)
+    case = _Case(evidence, onset)
+    # What grows has no onset: it is held against all frames.
+    gradual = max(case.motion(), _Case(evidence, 0).motion()) if onset else case.motion()
     scores = {
         "direct-path": case.direct(),
         "channel": case.channel(),
-        "motion": case.motion(),
+        "motion": gradual,
         "noise": case.noise(),
         "mismatch": case.mismatch(),
         "timing": case.timing(),
@@ -142,31 +154,47 @@ def judge(evidence: Evidence) -> Verdict:
     first, second = order[:2]
     margin = scores[first] - max(scores[second], 0.0)
     if margin < CLEAR:
-        return Verdict("unclear", first, margin, scores=scores)
+        return Verdict("unclear", first, margin, scores=scores, frames=case.frames)
     mend = {"phase": turned, "gain": amplified}.get(first)
     receiver = int(np.argmax(tones)) if first == "interference" and np.count_nonzero(tones) == 1 else None
     elements = failed if first == "elements" else np.zeros(0, dtype=np.intp)
-    return Verdict(first, second, margin, receiver, mend, elements, scores)
+    return Verdict(first, second, margin, receiver, mend, elements, scores, case.frames)
+
+
+def _onset(evidence: Evidence) -> int:
+    """Frame from which on the errors are larger, or smaller, than before."""
+    error = evidence.outputs - evidence.model[0] - np.tensordot(evidence.regressors[:, 1:], evidence.model[1:], axes=1)
+    power = _power_rows(error.reshape(error.shape[0], -1)) / (1.0 + evidence.doubt.diagonal().real)
+    size = error[0].size
+    count = size * np.arange(error.shape[0], 0, -1)
+    level = np.maximum(np.cumsum(power[::-1])[::-1] / count, 1e-9)
+    # What came before the onset was as ever; a few frames must be left to judge by.
+    gain = count * (level - 1.0 - np.log(level))
+    return int(np.argmax(gain[: max(error.shape[0] - LEAST_FRAMES, 1)]))
 
 
 class _Case:
     """What several explanations share; the methods give gain less price."""
 
-    def __init__(self, evidence: Evidence) -> None:
+    def __init__(self, evidence: Evidence, onset: int) -> None:
         self.evidence = evidence
-        self.frames, self.receivers, self.size = evidence.outputs.shape
+        self.heard = evidence.outputs[onset:]
+        self.frames, self.receivers, self.size = self.heard.shape
+        self.regressors, self.states = evidence.regressors[onset:], evidence.states[onset:]
+        self.outside, self.time_s = evidence.outside[onset:], evidence.time_s[onset:]
         self.direct_path = evidence.model[0]
-        self.bent = np.asarray(np.tensordot(evidence.regressors[:, 1:], evidence.model[1:], axes=1))  # surface path
-        self.error = evidence.outputs - self.direct_path - self.bent
+        shown = np.tensordot(evidence.regressors[:, 1:], evidence.model[1:], axes=1)
+        self.bent, self.earlier = np.asarray(shown[onset:]), np.asarray(shown[:onset])  # surface path
+        self.error = self.heard - self.direct_path - self.bent
         # The model is an estimate: what it has wrong hangs together over frames, and is whitened away.
-        factor = np.linalg.cholesky(np.eye(self.frames) + evidence.doubt)
+        factor = np.linalg.cholesky(np.eye(self.frames) + evidence.doubt[onset:, onset:])
         self.whitener = np.linalg.inv(factor)
         self.flat = self.white(self.error).reshape(self.frames, -1)
         self.ones = self.whitener @ np.ones(self.frames)
         self.time = self._time()
         self.direct_white = self.ones[:, None, None] * self.direct_path
         self.surface_white = self.white(self.bent)
-        self.observations = 2 * evidence.outputs.size
+        self.observations = 2 * self.heard.size
 
     def white(self, values: Complex) -> Complex:
         """Whiten over frames, the first axis."""
@@ -174,7 +202,7 @@ class _Case:
 
     def gained(self, model: Complex) -> float:
         """Gain in likelihood of another model, shape (B, R, Q)."""
-        return _power(self.flat) - _power(self.white(self.evidence.outputs - model))
+        return _power(self.flat) - _power(self.white(self.heard - model))
 
     def price(self, numbers: float, places: float = 1.0) -> float:
         """Price of so many real numbers fitted, and of a choice among places."""
@@ -197,10 +225,38 @@ class _Case:
         spread, time = self._spread(), self.time
         kernels = np.minimum.outer(time, time), np.outer(time, time)
         ramp = self.whitener @ time
-        return max(self._averaged(self.whitened(spread * kernel), ramp) for kernel in kernels) - self.price(2, 2)
+        grown = max(self._averaged(self.whitened(spread * kernel), ramp) for kernel in kernels) - self.price(2, 3)
+        return max(grown, self._turning())
+
+    def _turning(self) -> float:
+        """Gain when either path turns evenly, each by its own rate, from where it stood or from some phase on."""
+        turns = np.exp(2j * np.pi * np.outer(MOTION_HZ, self.time_s - self.time_s[0]))  # (rates, B)
+        options = []
+        for free in (False, True):
+
+            def best(model: Complex, heard: Complex, free: bool = free) -> Complex:
+                """Find the turns (B, R) that fit best."""
+                spectrum = turns.conj() @ self._product(model, heard)
+                along = np.abs(spectrum) if free else spectrum.real
+                place = np.argmax(along, axis=0)
+                start = np.angle(spectrum[place, np.arange(self.receivers)]) if free else np.zeros(self.receivers)
+                return np.asarray((turns[place].T * np.exp(1j * start))[:, :, None])
+
+            turn_d = turn_s = best(self.direct_path + self.bent, self.heard)
+            for _ in range(3):
+                turn_d = best(self.direct_path + 0.0 * self.bent, self.heard - turn_s * self.bent)
+                turn_s = best(self.bent, self.heard - turn_d * self.direct_path)
+            model = turn_d * self.direct_path + turn_s * self.bent
+            options.append(self.gained(model) - self.price((4 if free else 2) * self.receivers, 4))
+        return max(options)
+
+    @staticmethod
+    def _product(model: Complex, heard: Complex) -> Complex:
+        """Sum of conj(m) y over delays, shape (B, R)."""
+        return np.asarray((model.conj() * heard).sum(axis=2))
 
     def basis(self) -> float:
-        states = self.evidence.states
+        states = self.states
         return self._averaged(self.whitened(states @ states.T), self.ones) - self.price(2)
 
     def noise(self) -> float:
@@ -213,29 +269,37 @@ class _Case:
         model = self.direct_white + self.surface_white
         model_power = np.maximum(_powers(model), 1e-12)
         shown = np.einsum("brq,brq->r", model.conj(), self.flat.reshape(model.shape)).real
+        sent = shown * shown / model_power
         factor = np.maximum(1.0 + shown / model_power, 1e-3)
-        sent = float((shown * shown / model_power).sum())
         # The receiver's own gain takes the noise along: its power then is known from the factor.
-        left = power - shown * shown / model_power
-        taken = float((power - left / factor**2 - count * np.log(factor**2)).sum())
+        tried = GAINS[:, None]
+        left = power - 2.0 * (tried - 1.0) * shown + (tried - 1.0) ** 2 * model_power
+        gains = power - left / tried**2 - 2.0 * count * np.log(tried)
+        best = np.argmax(gains, axis=0)
+        taken = gains[best, np.arange(self.receivers)]
+        if taken.sum() > sent.sum():
+            factor = GAINS[best]
         mend = factor.astype(np.complex128)
-        return max(sent, taken) - self.price(self.receivers, 2), (mend, mend)
+        return float(max(sent.sum(), taken.sum())) - self.price(self.receivers, 2), (mend, mend)
 
     def phase(self) -> tuple[float, tuple[Complex, Complex]]:
-        heard = self.white(self.evidence.outputs)
+        heard = self.white(self.heard)
         heard_d = np.einsum("brq,brq->r", self.direct_white.conj(), heard)
         heard_s = np.einsum("brq,brq->r", self.surface_white.conj(), heard)
         cross = np.einsum("brq,brq->r", self.direct_white.conj(), self.surface_white)
         turn = np.exp(1j * np.angle(heard_d + heard_s))
         model = self.direct_path + self.bent
         best = self.gained(turn[:, None] * model) - self.price(self.receivers, 3)
-        # Going on turning: the peak over rates, of the receivers together.
-        both = (model.conj() * self.evidence.outputs).sum(axis=2)
+        # Going on turning faster than by motion: the peak over rates, of the receivers together.
+        both = self._product(model, self.heard)
         index = self.time * self.frames
-        rates = np.linspace(-0.5, 0.5, 8 * self.frames, endpoint=False)
-        spectrum = np.exp(-2j * np.pi * np.outer(rates, index)) @ both
-        peak = int(np.argmax(np.abs(spectrum).sum(axis=1)))
-        going = np.exp(2j * np.pi * rates[peak] * index)[:, None] * np.exp(1j * np.angle(spectrum[peak]))
+        rates = np.linspace(-0.5, 0.5, 8 * self.frames, endpoint=False)  # turns a frame
+        span_s = float(self.time_s[-1] - self.time_s[0])
+        spectrum = np.abs(np.exp(-2j * np.pi * np.outer(rates, index)) @ both).sum(axis=1)
+        spectrum[np.abs(rates) * self.frames <= MOTION_HZ[-1] * span_s] = 0.0
+        peak = rates[int(np.argmax(spectrum))]
+        going = np.exp(2j * np.pi * peak * index)[:, None]
+        going = going * np.exp(1j * np.angle((going.conj() * both).sum(axis=0)))
         best = max(best, self.gained(going[:, :, None] * model) - self.price(self.receivers + 1, 3))
         # Each path by itself: a few rounds from the common turn.
         turn_d, turn_s = turn, turn
@@ -250,7 +314,7 @@ class _Case:
         """Delay: tones have the cross-spectrum of model and frames; a common turn is free."""
         basis = self.evidence.basis
         model = (self.direct_path + self.bent) @ basis.T
-        spectrum = (model.conj() * (self.evidence.outputs @ basis.T)).sum(axis=0)
+        spectrum = (model.conj() * (self.heard @ basis.T)).sum(axis=0)
         tones = np.arange(spectrum.shape[1])
         shifts = np.exp(-2j * np.pi * np.outer(np.linspace(-0.25, 0.25, DELAYS), tones))
         found = spectrum @ shifts.conj().T
@@ -261,16 +325,16 @@ class _Case:
 
     def mismatch(self) -> float:
         options = [self.gained(self.direct_path - self.bent)]
+        shown = np.concatenate([self.earlier, self.bent])
         for lag in LAGS:
-            if lag < self.frames:
-                late = np.concatenate([self.bent[:lag], self.bent[:-lag]])
-                options.append(self.gained(self.direct_path + late))
+            first = np.arange(len(self.earlier), len(shown)) - lag
+            options.append(self.gained(self.direct_path + shown[np.maximum(first, 0)]))
         return max(options) - self.price(0, len(options))
 
     def interference(self) -> tuple[float, Real]:
         """Noise on single tones, within and outside the delay basis together; also the gain of each receiver."""
         inside = self.flat.reshape(self.error.shape) @ self.evidence.basis.T
-        level = (np.abs(self.evidence.outside + inside) ** 2).mean(axis=0)
+        level = (np.abs(self.outside + inside) ** 2).mean(axis=0)
         toll = self.price(1, level.shape[1])
         gain = self.frames * (level - 1.0 - np.log(np.maximum(level, 1e-12)))
         gain = np.where(level > 1.0, np.maximum(gain - toll, 0.0), 0.0).sum(axis=1)
@@ -279,12 +343,12 @@ class _Case:
     def failed(self) -> tuple[float, NDArray[np.intp]]:
         """Take the elements that explain most, one after another, each with what it still follows of its bit."""
         length = float(self.ones @ self.ones)
-        states = self.whitener @ self.evidence.states
+        states = self.whitener @ self.states
         states = states - np.outer(self.ones, self.ones @ states) / length
         common = self.ones @ self.flat / length
         error = self.flat - np.outer(self.ones, common)
         elements = self.evidence.elements.reshape(states.shape[1], -1)
-        power = (states * states).sum(axis=0) * _row_powers(elements)
+        power = (states * states).sum(axis=0) * _power_rows(elements)
         shown = ((states.T @ error) * elements.conj()).real.sum(axis=1)
         toll = self.price(1, states.shape[1])
         total = 0.0
@@ -317,13 +381,13 @@ class _Case:
 
     def _time(self) -> Real:
         """Time since the change began, to 1; the first frame is already one frame in."""
-        time = self.evidence.time_s
+        time = self.time_s
         step = (time[-1] - time[0]) / max(self.frames - 1, 1) or 1.0
         return np.asarray((time - time[0] + step) / (time[-1] - time[0] + step))
 
     def _spread(self) -> Real:
         """Covariance of the frames when the surface's coefficients change, Z P₀ Zᴴ."""
-        z = self.evidence.regressors[:, 1:]
+        z = self.regressors[:, 1:]
         return np.asarray((z * self.evidence.prior[1:]) @ z.conj().T)
 
     def _factor(self, column: Real) -> float:
@@ -350,7 +414,7 @@ class _Case:
 
     def _noise_power(self) -> tuple[Real, Real]:
         """Power of what the model leaves, inside and outside the basis, and its degrees of freedom, a receiver."""
-        power = _powers(self.flat.reshape(self.error.shape)) + _powers(self.evidence.outside)
+        power = _powers(self.flat.reshape(self.error.shape)) + _powers(self.outside)
         count = self.frames * self.evidence.basis.shape[0]
         return np.maximum(power, 1e-12), np.full(self.receivers, float(count))
 
@@ -370,5 +434,5 @@ def _powers(values: Complex) -> Real:
     return np.asarray((values.real**2 + values.imag**2).sum(axis=(0, 2)))
 
 
-def _row_powers(values: Complex) -> Real:
+def _power_rows(values: Complex) -> Real:
     return np.asarray((values.real**2 + values.imag**2).sum(axis=1))

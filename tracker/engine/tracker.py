@@ -34,6 +34,8 @@ from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, sta
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
 CALM = 0.3
+# A change seen in fewer frames than this, and not clear, is looked at again with the next block: the sum stays raised.
+ENOUGH_FRAMES = 32
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -171,8 +173,9 @@ class Tracker:
         for receiver in fit.lost:
             events.append(lock_alarm(receiver, self._estimator.following[receiver].quality, KEPT, stand))
         suspicion = self._follow_drift(fit)
-        if suspicion:
-            events.append(drift_alarm(suspicion, *self._answer(suspicion), stand))
+        answer = self._answer(suspicion) if suspicion else None
+        if suspicion and answer:
+            events.append(drift_alarm(suspicion, *answer, stand))
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
         self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
@@ -256,10 +259,12 @@ class Tracker:
             self._estimator.keep()
         return None
 
-    def _answer(self, suspicion: Suspicion) -> tuple[Verdict, str]:
-        """Find out what changed, and do what is to be done about it."""
+    def _answer(self, suspicion: Suspicion) -> tuple[Verdict, str] | None:
+        """Find out what changed, and do what is to be done about it; None when the next block will tell better."""
         self._estimator.keep()
         verdict = self._estimator.judge(suspicion.since_s) or Verdict("unclear", "", 0.0)
+        if verdict.kind == "unclear" and 0 < verdict.frames < ENOUGH_FRAMES:
+            return None
         if not suspicion.change.up and suspicion.name in (INNOVATION, DIRECT):
             # A link that fits better than before has not changed: the baseline was wrong.
             verdict, action = Verdict("unclear", "", 0.0), "new baseline"
