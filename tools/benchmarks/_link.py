@@ -130,7 +130,7 @@ def play(settings_path: Path, made: list[bytes], seconds: float, idle_s: float =
     sender = get_context("spawn").Process(target=_send, args=(theirs, ends.pilots, made, count, here))
     serve = f"import os, sys; os.sched_setaffinity(0, {there}); from tracker.cli import entry; sys.exit(entry())"
     service = subprocess.Popen(
-        [sys.executable, "-c", serve, "serve", str(settings_path)], stderr=subprocess.DEVNULL, env=_environment()
+        [sys.executable, "-c", serve, "serve", str(settings_path)], stderr=subprocess.DEVNULL, env=environment()
     )
     try:
         os.sched_setaffinity(0, here)
@@ -165,7 +165,8 @@ def play(settings_path: Path, made: list[bytes], seconds: float, idle_s: float =
         context.destroy(linger=0)
 
 
-def _environment() -> dict[str, str]:
+def environment() -> dict[str, str]:
+    """Environment for a process that runs this project as this one does."""
     return {**os.environ, "OPENBLAS_NUM_THREADS": "1", "PYTHONPATH": os.pathsep.join(path for path in sys.path if path)}
 
 
