@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 # The rate before is the mean over this time, or over so many values where fewer lie in it.
 BEFORE_NS = 1_000_000_000
 LEAST_BEFORE = 5
-# Back is the mean of so many values in a row that is this share of the rate before.
+# Back is when the mean of so many values in a row is this share of the rate before.
 IN_A_ROW = 3
 BACK = 0.95
 # What did not fall within this time, and so many values, did not fall for that.
@@ -76,7 +76,8 @@ class Effect:
         if self.fell:
             together = sum(value for _, value in self._latest) / len(self._latest)
             if len(self._latest) == IN_A_ROW and together >= BACK * self.before:
-                self.back_ns, self.open = self._latest[0][0], False
+                self.back_ns = next(moment for moment, value in self._latest if value >= BACK * self.before)
+                self.open = False
         elif self._seen >= LEAST_SOON and t_ns - self.decided_ns > SOON_NS:
             self.open = False
 

@@ -1,15 +1,15 @@
 """Quantiles of a stream in bounded memory: a histogram whose steps are a fixed ratio apart.
 
-Each value falls into the step ceil(log(value) / log(1 + 2·ACCURACY)), so a quantile is right to within that accuracy
-of itself, whatever the range.
+Each value falls into the step ceil(log(value) / log(1 + ACCURACY)), and a quantile is the mean of the values in its
+step: right to within that accuracy of itself, whatever the range.
 """
 
 import math
 
-ACCURACY = 0.0025
+ACCURACY = 0.005
 # Below this, values count as zero: the number of steps stays bounded.
 SMALLEST, LARGEST = 1e-40, 1e40
-RATIO = math.log1p(2.0 * ACCURACY)
+RATIO = math.log1p(ACCURACY)
 
 
 class Spread:
@@ -18,7 +18,7 @@ class Spread:
     def __init__(self) -> None:
         self.count = 0
         self.least, self.most = math.inf, -math.inf
-        self._steps: dict[int, int] = {}
+        self._steps: dict[int, list[float]] = {}  # count and sum
         self._zeros = 0
 
     def add(self, value: float | None) -> None:
@@ -31,18 +31,19 @@ class Spread:
             self._zeros += 1
             return
         step = math.ceil(math.log(min(value, LARGEST)) / RATIO)
-        self._steps[step] = self._steps.get(step, 0) + 1
+        inside = self._steps.setdefault(step, [0, 0.0])
+        inside[0] += 1
+        inside[1] += value
 
     def quantile(self, share: float) -> float:
         """Give the least value that so large a share does not exceed; there must be a value."""
         left = max(math.ceil(share * self.count), 1) - self._zeros
         if left <= 0:
             return min(max(self.least, 0.0), self.most)
-        for step in sorted(self._steps):
-            left -= self._steps[step]
+        for _, (count, total) in sorted(self._steps.items()):
+            left -= int(count)
             if left <= 0:
-                # The middle of the step, in ratio.
-                return min(max(math.exp((step - 0.5) * RATIO), self.least), self.most)
+                return total / count
         return self.most
 
     def as_dict(self) -> dict[str, float] | None:
