@@ -82,6 +82,18 @@ def test_a_signal_ends_the_service_in_order(controller: Controller, nursery: Nur
     assert_same(replayed([path]), len(heard.pattern))
 
 
+@pytest.mark.parametrize("number", [signal.SIGTERM, signal.SIGINT])
+def test_a_signal_ends_an_idle_service(controller: Controller, nursery: Nursery, number: signal.Signals) -> None:
+    """While it waits for bursts that do not come: exit status 0, and a journal that holds nothing and is whole."""
+    service = nursery.start("serve", controller.path)
+    controller.meet()
+    os.kill(service, number)
+    assert nursery.wait(service) == 0
+    (path,) = logs(controller)
+    assert finished(path)
+    assert list(LogReader(path)) == []
+
+
 def test_the_verb_stop_ends_the_service(controller: Controller, nursery: Nursery) -> None:
     """It is answered first; then as with a signal."""
     service = nursery.start("serve", controller.path)
