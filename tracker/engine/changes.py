@@ -45,8 +45,8 @@ KAPPAS = np.geomspace(1e-2, 1e4, 31)
 DELAYS = 1025
 # Largest share of the elements that may fail together and still be a few.
 FEW = 1 / 8
-# Rates at which motion turns a path, Hz: 5 m/s at 3.75 GHz, there and back.
-MOTION_HZ = np.linspace(-125.0, 125.0, 251)
+# Rates at which motion turns a path, Hz: up to 5 m/s at 3.75 GHz.
+MOTION_HZ = np.linspace(-64.0, 64.0, 257)
 # Factors of a receiver's gain tried.
 GAINS = np.geomspace(0.05, 20.0, 241)
 # Frames that a verdict needs at least.

@@ -25,6 +25,8 @@ from .run_length import threshold_for
 WARM_UP = 64
 # Difference of the halves' means that still counts as agreement, in standard errors.
 AGREEMENT = 2.0
+# Ratio of the halves' variances that still counts as agreement: beyond the 99.9 % point of their F distribution.
+STEADY = 3.5
 # Samples over which the baseline adapts in the long run; at first it adapts over as many as it has seen.
 MEMORY = 4096
 # A sample moves the baseline by no more than this many standard deviations' worth.
@@ -210,18 +212,18 @@ class Watch:
         if len(self._first) < WARM_UP:
             return
         values, counts = np.array(self._first).T
-        halves = np.array([part.mean() for part in np.split(values, 2)])
+        late = values[WARM_UP // 2 :]
         if degrees:
             self._level = math.log(float(values @ counts) / float(counts.sum()))
-            unit = math.exp(self._level) / math.sqrt(float(counts.mean()))
         else:
-            self._level = float(values.mean())
-            self._scale = unit = max(float(values.std(ddof=1)), 1e-12)
-        spread = max(float(values.std()), unit)
-        if abs(halves[1] - halves[0]) > AGREEMENT * spread * math.sqrt(4.0 / WARM_UP):
+            self._level, self._scale = float(values.mean()), max(float(late.std(ddof=1)), 1e-12)
+        samples = np.array([self._deviate(*one)[0] for one in self._first])
+        halves = samples.reshape(2, -1)
+        means, squares = halves.mean(axis=1), np.maximum(halves.var(axis=1), 1.0)
+        error = math.sqrt(float(squares.min()) * 4.0 / WARM_UP)
+        if abs(means[1] - means[0]) > AGREEMENT * error or squares.max() > STEADY * squares.min():
             del self._first[: WARM_UP // 2]
             return
-        samples = np.array([self._deviate(*one)[0] for one in self._first])
         self._square = float((samples * samples).mean())
         self._product = float((samples[1:] * samples[:-1]).mean())
         self._before = float(samples[-1])
@@ -272,6 +274,22 @@ class Suspicion:
     name: str
     change: Change
     since_s: float
+
+    def snapshot(self) -> dict[str, Any]:
+        """All of it as plain values."""
+        change = self.change
+        return {
+            "name": self.name,
+            "change": [change.up, change.statistic, change.threshold, change.since],
+            "since_s": self.since_s,
+        }
+
+    @classmethod
+    def restore(cls, snapshot: Mapping[str, Any]) -> "Suspicion":
+        """Rebuild from a snapshot."""
+        up, statistic, threshold, since = snapshot["change"]
+        change = Change(bool(up), float(statistic), float(threshold), int(since))
+        return cls(str(snapshot["name"]), change, float(snapshot["since_s"]))
 
 
 class DriftMonitor:

@@ -21,6 +21,7 @@ from .innovation import DIRECT, INNOVATION, Innovations
 from .prior import prior_variances
 from .rls import BlockRls
 from .shrinkage import shrink
+from .standing import MOVED, Standing
 from .timing import TimingLoop
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
@@ -127,6 +128,7 @@ class Estimator:
         self._heard_degrees = 0
         # Where phases are followed each block stands at phases of its own.
         self._memory = Memory(blocks=1 if config.follow_phase else None)
+        self._standing = Standing()
         self._taken: list[Heard] = []
         self._left_out_most = 0  # frames that may yet be left out because they do not fit
         self._bank: Bank | None = None
@@ -140,7 +142,7 @@ class Estimator:
     @property
     def watched(self) -> tuple[str, ...]:
         """Names of the statistics under watch."""
-        return INNOVATION, DIRECT, *(noise_of(receiver) for receiver in range(self._config.receivers))
+        return INNOVATION, DIRECT, *MOVED, *(noise_of(receiver) for receiver in range(self._config.receivers))
 
     @property
     def ready_after(self) -> int:
@@ -325,6 +327,7 @@ class Estimator:
     def forget_calm(self) -> None:
         """Drop what changes are held against."""
         self._memory.forget()
+        self._standing.forget()
 
     def mend(self, direct: NDArray[np.complex128], surface: NDArray[np.complex128]) -> None:
         """Multiply the estimate from before the change by factors a receiver, shapes (R,), and go on from it."""
@@ -356,7 +359,7 @@ class Estimator:
     def relearn(self) -> None:
         """Throw the estimate away; the noise stays known."""
         self._bank = None
-        self._memory.forget()
+        self.forget_calm()
 
     def powers(self, frames: Frames) -> NDArray[np.float64]:
         """|H|² in units of the noise, unbiased, shape (R, K): the mean over frames."""
@@ -371,6 +374,7 @@ class Estimator:
             "noise": self._noise.snapshot(),
             "innovations": self._innovations.snapshot(),
             "memory": self._memory.snapshot(),
+            "standing": self._standing.snapshot(),
             "left_out_most": self._left_out_most,
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
@@ -382,6 +386,7 @@ class Estimator:
         self._noise.load(snapshot["noise"])
         self._innovations.load(snapshot["innovations"])
         self._memory.load(snapshot["memory"])
+        self._standing.load(snapshot["standing"])
         self._left_out_most = int(snapshot["left_out_most"])
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
@@ -416,6 +421,7 @@ class Estimator:
             outputs[:, part] = turned.outputs
             bank.turn_direct(part, turned.turn)
             self._memory.turn_direct(part, turned.turn)
+            self._standing.turn_direct(part, turned.turn)
             if turned.gain != 1.0:
                 bank.amplify(part, turned.gain)
                 self._memory.amplify(part, turned.gain)
@@ -492,6 +498,7 @@ class Estimator:
     def _readings(self) -> tuple[Reading, ...]:
         """Give samples of what is under watch from the block just taken."""
         readings = self._innovations.readings()
+        readings += self._standing.readings(self._learned().coefficients, self._noise.power)
         if self._heard_degrees:
             heard = np.maximum(self._heard / self._heard_degrees, noise.FLOOR)
             readings += [Reading(noise_of(r), float(power), self._heard_degrees) for r, power in enumerate(heard)]

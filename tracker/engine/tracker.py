@@ -31,11 +31,12 @@ from .reaction import HARMLESS, react
 from .refresh import Refresher, rate_spread
 from .refusal import Reason
 from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, states
+from .standing import DIRECT_MOVED, SURFACE_MOVED
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
 CALM = 0.3
-# A change seen in fewer frames than this, and not clear, is looked at again with the next block: the sum stays raised.
-ENOUGH_FRAMES = 32
+# A change seen in fewer frames than this, and of a kind that is less likely than this (nats), is looked at again.
+ENOUGH_FRAMES, SURE = 48, 8.0
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -81,6 +82,7 @@ class Tracker:
         self._counts = Counts()
         self._mode = Mode.ACQUIRING
         self._frames_since = 0
+        self._suspected: Suspicion | None = None
         self._pending_cause: Cause | None = None
         self._adopted: NDArray[np.int8] | None = None
         self._gap: tuple[int, int] | None = None
@@ -203,6 +205,7 @@ class Tracker:
             "counts": [getattr(counts, name) for name in Counts.__slots__],
             "mode": str(self._mode),
             "frames_since": self._frames_since,
+            "suspected": self._suspected.snapshot() if self._suspected is not None else None,
             "pending_cause": str(self._pending_cause) if self._pending_cause else None,
             "adopted": self._adopted.copy() if self._adopted is not None else None,
             "gap": list(self._gap) if self._gap else None,
@@ -218,6 +221,8 @@ class Tracker:
         self._counts = Counts(*(int(count) for count in snapshot["counts"]))
         self._mode = Mode(snapshot["mode"])
         self._frames_since = int(snapshot["frames_since"])
+        suspected = snapshot["suspected"]
+        self._suspected = Suspicion.restore(suspected) if suspected is not None else None
         cause, adopted, gap = snapshot["pending_cause"], snapshot["adopted"], snapshot["gap"]
         self._pending_cause = Cause(cause) if cause else None
         self._adopted = np.array(adopted, dtype=np.int8) if adopted is not None else None
@@ -225,6 +230,7 @@ class Tracker:
 
     def _start_over(self) -> None:
         self._frames_since = 0
+        self._suspected = None
         self._estimator.forget_calm()
         self._drift.reset()
         self._refresher.begin_afresh()
@@ -251,6 +257,8 @@ class Tracker:
         if self._mode is not Mode.TRACKING:
             return None
         suspicions = self._drift.update(fit.readings, fit.elapsed_s)
+        if self._suspected is not None:
+            return replace(self._suspected, since_s=self._suspected.since_s + fit.elapsed_s)
         if suspicions:
             return max(suspicions, key=lambda one: one.change.statistic / one.change.threshold)
         if self._drift.height < CALM:
@@ -263,9 +271,12 @@ class Tracker:
         """Find out what changed, and do what is to be done about it; None when the next block will tell better."""
         self._estimator.keep()
         verdict = self._estimator.judge(suspicion.since_s) or Verdict("unclear", "", 0.0)
-        if verdict.kind == "unclear" and 0 < verdict.frames < ENOUGH_FRAMES:
+        self._suspected = None
+        doubtful = verdict.kind == "unclear" or verdict.margin < SURE
+        if doubtful and 0 < verdict.frames < ENOUGH_FRAMES:
+            self._suspected = suspicion
             return None
-        if not suspicion.change.up and suspicion.name in (INNOVATION, DIRECT):
+        if not suspicion.change.up and suspicion.name in (INNOVATION, DIRECT, DIRECT_MOVED, SURFACE_MOVED):
             # A link that fits better than before has not changed: the baseline was wrong.
             verdict, action = Verdict("unclear", "", 0.0), "new baseline"
         else:

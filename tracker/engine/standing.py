@@ -1,0 +1,91 @@
+"""How far the estimate has moved since some blocks ago: shows changes that the filter takes in before they surprise it.
+
+Innovations show a change only until the filter has taken it in, which for a weak change that comes at once is too
+short. Where the estimate stands does not forget: held against where it stood some blocks ago, a change shows for as
+many blocks. Four things are looked at: how far the direct path moved, how far the surface did, and by how much both
+together grew (gain) or turned (phase), for which the old estimate is the matched filter.
+"""
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .drift import Reading
+
+Complex = NDArray[np.complex128]
+Real = NDArray[np.float64]
+
+# Blocks between what is compared.
+LAG = 4
+FLOOR = 1e-30
+
+MOVED = DIRECT_MOVED, SURFACE_MOVED, GREW, TURNED = ("direct path moved", "surface moved", "gain", "phase")
+
+
+class Standing:
+    """Estimates of the last blocks."""
+
+    def __init__(self) -> None:
+        self._before: list[Complex] = []
+        self._noise: list[Real] = []
+
+    def readings(self, coefficients: Complex, noise: Real) -> list[Reading]:
+        """Compare, and remember.
+
+        Parameters
+        ----------
+        coefficients : ndarray of complex, shape (n, R Q)
+            The estimate, the direct path first, in units of the noise.
+        noise : ndarray, shape (R,)
+            Its power.
+        """
+        readings: list[Reading] = []
+        if len(self._before) == LAG:
+            before = self._before.pop(0)
+            scale = np.repeat(np.sqrt(self._noise.pop(0) / noise), coefficients.shape[1] // noise.shape[0])
+            before *= scale
+            readings = _compare(coefficients, before)
+            np.copyto(before, coefficients)
+        else:
+            before = coefficients.copy()
+        self._before.append(before)
+        self._noise.append(noise)
+        return readings
+
+    def forget(self) -> None:
+        """Begin anew: the estimate was changed by hand."""
+        self._before.clear()
+        self._noise.clear()
+
+    def turn_direct(self, columns: slice, turn: complex) -> None:
+        """Turn the direct path along."""
+        for before in self._before:
+            before[0, columns] *= turn
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state."""
+        return {"before": [one.copy() for one in self._before], "noise": [one.copy() for one in self._noise]}
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot."""
+        self._before = [np.array(one, dtype=np.complex128) for one in snapshot["before"]]
+        self._noise = [np.array(one, dtype=np.float64) for one in snapshot["noise"]]
+
+
+def _compare(now: Complex, before: Complex) -> list[Reading]:
+    old = before.reshape(-1).view(np.float64)
+    moved = (now - before).reshape(-1)
+    parts = moved.view(np.float64)
+    outputs = now.shape[1]
+    direct = float(parts[: 2 * outputs] @ parts[: 2 * outputs])
+    surface = float(parts[2 * outputs :] @ parts[2 * outputs :])
+    length = float(np.sqrt(old @ old)) + FLOOR
+    along = complex(np.vdot(before.reshape(-1), moved)) / length
+    return [
+        Reading(DIRECT_MOVED, max(direct / outputs, FLOOR), outputs),
+        Reading(SURFACE_MOVED, float(np.log(max(surface, FLOOR)))),
+        Reading(GREW, along.real),
+        Reading(TURNED, along.imag),
+    ]
