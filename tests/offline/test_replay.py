@@ -25,6 +25,8 @@ from tracker.offline.errors import OfflineError
 from tracker.offline.replay import Replay
 from tracker.settings import parse
 from tracker.simulation.closed_loop import EngineInLoop, turns
+from tracker.simulation.config import SceneConfig, Terminal, ToneGrid
+from tracker.simulation.motion import Still
 from tracker.simulation.record import record
 from tracker.simulation.sounding import SoundingConfig
 from tracker.simulation.testbed import Testbed, TestbedConfig
@@ -250,20 +252,41 @@ def test_logs_continue_one_another(recorded: Path, tmp_path: Path) -> None:
     assert summary["counts"]["lost"] == 0
 
 
-def test_place_in_memory_changes_no_bit(recorded: Path) -> None:
-    """Arrays at odd addresses, among other allocations, give the same patterns to the last bit."""
+ODD = replace(
+    SCENE,
+    tones=ToneGrid(fft=64, first=9, count=37, spacing_hz=625e3),
+    panel=replace(SCENE.panel, columns=9, rows=7),
+    terminals=(*SCENE.terminals, Terminal(Still((28.0, 4.0, 2.0)))),
+)
+ODD_SETTINGS = (
+    SETTINGS.replace("columns = 4\nrows = 4", "columns = 9\nrows = 7")
+    .replace(
+        "fft = 32\nfirst = 8\ncount = 16\nspacing_khz = 1250.0", "fft = 64\nfirst = 9\ncount = 37\nspacing_khz = 625.0"
+    )
+    .replace('name = "yard"', 'name = "yard"\nreceivers = 2')
+    .replace(RESTLESS, "time_constant_ms = 20.0")
+)
+
+
+@pytest.mark.parametrize("follow", ["", "[follow]\nphase = true\n"], ids=["plain", "following"])
+@pytest.mark.parametrize(("scene", "settings"), [(SCENE, SETTINGS), (ODD, ODD_SETTINGS)], ids=["small", "odd sizes"])
+def test_place_in_memory_changes_no_bit(scene: SceneConfig, settings: str, follow: str) -> None:
+    """Arrays at odd addresses, among other allocations: the same patterns and the same estimate to the last bit."""
     rng = random.Random(23)
-    taken, want = used_in(recorded), bits(patterns_in(recorded))
-    kept = []
-    for turn in range(8):
-        tracker = Tracker(configure(parse(SETTINGS), Path()))
-        found = []
+    bed = Testbed(TestbedConfig(scene, SoundingConfig(kind="random"), frames=24), seed=3, start_ns=START)
+    taken = [bed.next_burst(START + number * bed.burst_ns) for number in range(20)]
+    config = configure(parse(settings + follow), Path())
+    kept, found = [], []
+    for turn in range(5):
+        tracker, patterns = Tracker(config), []
         for burst in taken:
             kept.append(np.empty(rng.randrange(1, 4000), np.uint8))
             moved = replace(burst, response=moved_by(burst.response, turn), patterns=moved_by(burst.patterns, turn))
             tracker.admit(moved, moved.end_ns)
-            found += [e for e in tracker.advance([moved], Steps(12)).events if isinstance(e, Pattern)]
-        assert bits(found) == want
+            patterns += [e for e in tracker.advance([moved], Steps(12)).events if isinstance(e, Pattern)]
+        found.append((bits(patterns), pack_start(Start(1, tracker.snapshot()))))
+    assert len(found[0][0]) > 2
+    assert all(each == found[0] for each in found)
 
 
 def moved_by(values: np.ndarray[Any, Any], offset: int) -> np.ndarray[Any, Any]:
