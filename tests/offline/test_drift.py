@@ -246,6 +246,13 @@ def test_the_rate_before_is_that_of_the_second_before_it_began(tmp_path: Path) -
     assert (told["rate_before"], told["fell"]) == (None, None)
 
 
+def test_a_slow_link_is_waited_for(tmp_path: Path) -> None:
+    """With a burst every ten seconds, twenty minutes are not long: the rate is back after them."""
+    events: list[Event] = [*steady(0, 100, 10.0), alarm(10, 100.0, "channel"), *steady(100, 1300, 10.0, rate=2.0)]
+    (told,) = drift(write(tmp_path / "a.mcap", [*events, *steady(1300, 1400, 10.0)]))["happenings"]
+    assert (told["rate_before"], told["rate_lowest"], told["back_s"]) == (8.0, 2.0, 1200.0)
+
+
 def test_what_is_no_alarm_is_told_too(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     """Hold, operator's patterns, faults when new, silence, a new run, a tracker that counts anew."""
     faults = ((5, "stuck+", 0.9), (7, "weak", 0.8))

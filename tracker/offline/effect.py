@@ -13,8 +13,9 @@ BACK = 0.95
 # What did not fall within this time, and so many values, did not fall for that.
 SOON_NS = 2_000_000_000
 LEAST_SOON = 8
-# Whatever was not back within this time is not waited for.
+# Whatever was not back within this time, and so many values, is not waited for.
 PATIENCE_NS = 600_000_000_000
+LEAST_PATIENT = 500
 # Effects waited for at a time; the eldest are given up when there are more.
 MOST_OPEN = 64
 # Values remembered: the beginning of a slow change lies some time back.
@@ -67,7 +68,7 @@ class Effect:
         """Take in the next measured rate."""
         if not self.open or t_ns < self.since_ns:
             return
-        if t_ns - self.since_ns > PATIENCE_NS:
+        if t_ns - self.since_ns > PATIENCE_NS and self._seen >= LEAST_PATIENT:
             self.open = False
             return
         self.lowest = rate if self.lowest is None else min(self.lowest, rate)

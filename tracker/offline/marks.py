@@ -64,24 +64,30 @@ def place_marks(bins: Bins, time: Axis) -> list[Placed]:
 
 
 def draw_marks(marks: Sequence[Placed], begin: float, end: float) -> Iterator[str]:
-    """Draw each mark from its words down through all panels, with the time that it took to tell shaded."""
+    """Draw the marks from above `begin`, where their words stand, down to `end`; words come last, over all lines."""
     seen = 0.6 if len(marks) <= MANY else 0.35
     for mark in marks:
-        x, top = mark.x, begin + 4 if mark.lane is None else begin - (mark.lane + 1) * LANE + 6
-        if x - mark.since >= 1.0:
+        if mark.x - mark.since >= 1.0:
             yield (
-                f'<rect x="{mark.since:.1f}" y="{begin + 4:g}" width="{x - mark.since:.1f}" '
+                f'<rect x="{mark.since:.1f}" y="{begin + 4:g}" width="{mark.x - mark.since:.1f}" '
                 f'height="{end - begin - 4:g}" fill="{BAD}" fill-opacity="0.10"/>'
             )
         yield (
-            f'<path class="alarm" d="M{x:.1f} {top:g}V{end:g}" stroke="{BAD}" stroke-opacity="{seen:g}">'
-            f"<title>{escape(mark.words)}</title></path>"
+            f'<path class="alarm" d="M{mark.x:.1f} {_top(mark, begin):g}V{end:g}" stroke="{BAD}" '
+            f'stroke-opacity="{seen:g}"><title>{escape(mark.words)}</title></path>'
         )
+    for mark in marks:
         if mark.lane is not None:
-            yield f'<path d="M{x - 3.5:.1f} {top - 6:g}h7l-3.5 6z" fill="{BAD}"/>'
-            at, anchor = (x - 6, "end") if mark.left else (x + 6, "start")
-            yield text(mark.words, at, top + 1, anchor=anchor, size=SMALL, colour=BAD)
+            top = _top(mark, begin)
+            yield f'<path d="M{mark.x - 3.5:.1f} {top - 6:g}h7l-3.5 6z" fill="{BAD}"/>'
+            at, anchor = (mark.x - 6, "end") if mark.left else (mark.x + 6, "start")
+            yield text(mark.words, at, top + 1, anchor=anchor, size=SMALL, colour=BAD, halo=True)
     wordless = sum(mark.lane is None for mark in marks)
     if wordless:
         words = f"{wordless} more marks, without room for their names"
         yield text(words, RIGHT, begin - LANES * LANE - 6, anchor="end", size=SMALL, colour=QUIET)
+
+
+def _top(mark: Placed, begin: float) -> float:
+    """Where a mark begins, px."""
+    return begin + 4 if mark.lane is None else begin - (mark.lane + 1) * LANE + 6

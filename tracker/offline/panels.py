@@ -104,7 +104,7 @@ def noise(bins: Bins, time: Axis, top: float, bottom: float, receivers: int) -> 
 def modes(bins: Bins, time: Axis, top: float, bottom: float) -> Iterator[str]:
     """Draw a lane a mode, filled where states were of it: the shortest stay is seen, however long the log."""
     high = (bottom - top) / len(MODES)
-    yield text("mode", LEFT, top - RAISED, weight="bold")
+    yield text("mode", LEFT, top - RAISED, weight="bold", halo=True)
     items = bins.items()
     reach = _reach([t_ns for t_ns, _ in items])
     half = bins.width_ns // 2
@@ -138,7 +138,7 @@ def _panel(
     level: tuple[float, str] | None = None,
 ) -> Iterator[str]:
     """Draw a panel: title, grid, a level of note, lines, and their names where there are several."""
-    yield text(title, LEFT, axis.end - RAISED, weight="bold")
+    yield text(title, LEFT, axis.end - RAISED, weight="bold", halo=True)
     for value, label in marks:
         y = axis.place(value)
         yield f'<path d="M{LEFT:g} {y:.1f}H{RIGHT:g}" stroke="{FAINT}"/>'
@@ -179,7 +179,7 @@ def _names(lines: Sequence[Line], y: float) -> Iterator[str]:
     """Name the lines, from the right end leftwards."""
     x = RIGHT
     for line in reversed(lines):
-        yield text(line.name, x, y, anchor="end", size=SMALL, colour=QUIET)
+        yield text(line.name, x, y, anchor="end", size=SMALL, colour=QUIET, halo=True)
         x -= NARROW * len(line.name) + 6
         dash = f' stroke-dasharray="{line.dash}"' if line.dash else ""
         yield f'<path d="M{x - 24:.1f} {y - 3.5:.1f}h24" stroke="{line.colour}" stroke-width="{line.width:g}"{dash}/>'

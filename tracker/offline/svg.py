@@ -23,10 +23,12 @@ def text(
     size: float = LABEL,
     colour: str = INK,
     weight: str = "normal",
+    halo: bool = False,
 ) -> str:
-    """Write words at a place, px."""
+    """Write words at a place, px; a halo keeps lines that run behind them off the letters."""
     more = f' text-anchor="{anchor}"' if anchor != "start" else ""
     more += f' font-size="{size:g}"' if size != LABEL else ""
     more += f' fill="{colour}"' if colour != INK else ""
     more += f' font-weight="{weight}"' if weight != "normal" else ""
+    more += f' stroke="{GROUND}" stroke-width="3" stroke-linejoin="round" paint-order="stroke"' if halo else ""
     return f'<text x="{x:.1f}" y="{y:.1f}"{more}>{escape(words)}</text>'

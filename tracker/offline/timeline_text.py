@@ -121,7 +121,8 @@ def figures(told: dict[str, Any]) -> list[tuple[str, str]]:
         lines.append(("silence", f"{duration(told['silent_s'])} without a state, in no mode"))
     kinds = ", ".join(f"{kind} {count:,}" for kind, count in told["alarms"].items())
     pace = told["alarms_per_hour"]
-    lines.append(("alarms", f"{kinds}; {pace:.3g} an hour" if kinds and pace is not None else kinds or "none"))
+    hourly = f"; {pace:,.0f} an hour" if pace and pace >= 100 else f"; {pace:.2g} an hour" if pace else ""
+    lines.append(("alarms", kinds + hourly if kinds else "none"))
     causes = ", ".join(f"{cause} {count:,}" for cause, count in told["patterns"].items())
     lines.append(("patterns", causes or "none published"))
     for name, key, unit in SPREADS:
