@@ -65,13 +65,16 @@ def decode_decision(body: bytes) -> Decision:
     Refused
     """
     fields = _fields(body)
-    try:
-        decision = Decision(tuple((int(run), int(seq)) for run, seq in fields["bursts"]), int(fields["steps"]))
-    except (KeyError, TypeError, ValueError) as error:
-        raise Refused(Reason.WRONG_TYPE, f"decision record: {error!r}") from None
-    if not decision.bursts or decision.steps < 0:
+    bursts, steps = fields.get("bursts"), fields.get("steps")
+    if type(steps) is not int or type(bursts) is not list or not all(map(_is_burst, bursts)):
+        raise Refused(Reason.WRONG_TYPE, "decision record: bursts must be a list of [run, seq], steps an integer")
+    if not bursts or steps < 0:
         raise Refused(Reason.OUT_OF_RANGE, "decision record: of no burst, or less than no step")
-    return decision
+    return Decision(tuple((run, seq) for run, seq in bursts), steps)
+
+
+def _is_burst(value: Any) -> bool:
+    return type(value) is list and len(value) == 2 and all(type(number) is int for number in value)
 
 
 def encode_command(command: Command) -> bytes:
@@ -87,10 +90,10 @@ def decode_command(body: bytes) -> Command:
     Refused
     """
     fields = _fields(body)
-    try:
-        return Command(str(fields["verb"]), bytes(fields["bits"]))
-    except (KeyError, TypeError, ValueError) as error:
-        raise Refused(Reason.WRONG_TYPE, f"command record: {error!r}") from None
+    verb, bits = fields.get("verb"), fields.get("bits")
+    if type(verb) is not str or type(bits) is not bytes:
+        raise Refused(Reason.WRONG_TYPE, "command record: verb must be a string, bits binary")
+    return Command(verb, bits)
 
 
 def _fields(body: bytes) -> dict[str, Any]:

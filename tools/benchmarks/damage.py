@@ -78,10 +78,10 @@ def _flipped(log: Log, path: Path, bit: int) -> bool:
     if used is None:
         return at < log.chunks[0][0]
     bursts, same, told = used
-    if any(start <= at < end for start, end in log.chunks):
-        return bursts == log.before(at) and same and told
-    # Outside of the chunks: in the beginning, where how the tracker started may be lost, or in an index.
-    return bursts >= log.before(at) and (same or told)
+    if at < log.chunks[0][0]:
+        return bursts == log.bursts[-1] and (same or told)  # how the tracker started may be lost
+    # All are used when the bit lies in an index, or in the times of a chunk, which nobody needs.
+    return same and (bursts == log.bursts[-1] or (bursts == log.before(at) and told))
 
 
 def _replayed(path: Path) -> tuple[int, bool, bool] | None:
