@@ -49,6 +49,10 @@ FEW = 1 / 8
 MOTION_HZ = np.linspace(-64.0, 64.0, 257)
 # Factors of a receiver's gain tried.
 GAINS = np.geomspace(0.05, 20.0, 241)
+# A change of level must be this much likelier than none, nats, for the frames before to be left out.
+CLEAR_ONSET = 6.0
+# Latest frames that are also looked at by themselves: a weak change shows no onset.
+LATEST = 64
 # Frames that a verdict needs at least.
 LEAST_FRAMES = 8
 # Lags of the panel tried, frames.
@@ -112,7 +116,7 @@ class Verdict:
     scores : dict
         Gain less price of each kind, nats.
     frames : int
-        That it rests on.
+        Since the change shows.
     """
 
     kind: str
@@ -133,44 +137,63 @@ def judge(evidence: Evidence) -> Verdict:
     evidence : Evidence
     """
     onset = _onset(evidence)
-    case = _Case(evidence, onset)
-    # What grows has no onset: it is held against all frames.
-    gradual = max(case.motion(), _Case(evidence, 0).motion()) if onset else case.motion()
+    since = len(evidence.outputs) - onset
+    # What grows has no onset, and what came at once may have come before it shows.
+    cases = [_Case(evidence, start) for start in sorted({0, onset, max(len(evidence.outputs) - LATEST, 0)})]
+    found = [_scores(case) for case in cases]
+    scores = {kind: max(one[0][kind] for one in found) for kind in found[0][0]}
+    order = sorted(scores, key=lambda kind: scores[kind], reverse=True)
+    first, second = order[:2]
+    best = max(range(len(found)), key=lambda place: found[place][0][first])
+    mends, tones, failed = found[best][1:]
+    margin = scores[first] - max(scores[second], 0.0)
+    if margin < CLEAR:
+        return Verdict("unclear", first, margin, scores=scores, frames=since)
+    mend = mends.get(first)
+    receiver = int(np.argmax(tones)) if first == "interference" and np.count_nonzero(tones) == 1 else None
+    elements = failed if first == "elements" else np.zeros(0, dtype=np.intp)
+    return Verdict(first, second, margin, receiver, mend, elements, scores, since)
+
+
+def _scores(
+    case: "_Case",
+) -> tuple[dict[str, float], dict[str, tuple[Complex, Complex]], Real, NDArray[np.intp]]:
+    """Gain less price of every kind; also what mends, where interference is, which elements fail."""
     scores = {
         "direct-path": case.direct(),
         "channel": case.channel(),
-        "motion": gradual,
+        "motion": case.motion(),
         "noise": case.noise(),
         "mismatch": case.mismatch(),
         "timing": case.timing(),
     }
-    scores["phase"], turned = case.phase()
-    scores["gain"], amplified = case.gain()
+    mends = {}
+    scores["phase"], mends["phase"] = case.phase()
+    scores["gain"], mends["gain"] = case.gain()
     scores["interference"], tones = case.interference()
     scores["elements"], failed = case.failed()
-    if evidence.regressors.shape[1] - 1 < evidence.states.shape[1]:
+    if case.regressors.shape[1] - 1 < case.states.shape[1]:
         scores["basis"] = case.basis()
-    order = sorted(scores, key=lambda kind: scores[kind], reverse=True)
-    first, second = order[:2]
-    margin = scores[first] - max(scores[second], 0.0)
-    if margin < CLEAR:
-        return Verdict("unclear", first, margin, scores=scores, frames=case.frames)
-    mend = {"phase": turned, "gain": amplified}.get(first)
-    receiver = int(np.argmax(tones)) if first == "interference" and np.count_nonzero(tones) == 1 else None
-    elements = failed if first == "elements" else np.zeros(0, dtype=np.intp)
-    return Verdict(first, second, margin, receiver, mend, elements, scores, case.frames)
+    return scores, mends, tones, failed
 
 
 def _onset(evidence: Evidence) -> int:
     """Frame from which on the errors are larger, or smaller, than before."""
     error = evidence.outputs - evidence.model[0] - np.tensordot(evidence.regressors[:, 1:], evidence.model[1:], axes=1)
     power = _power_rows(error.reshape(error.shape[0], -1)) / (1.0 + evidence.doubt.diagonal().real)
-    size = error[0].size
-    count = size * np.arange(error.shape[0], 0, -1)
-    level = np.maximum(np.cumsum(power[::-1])[::-1] / count, 1e-9)
-    # What came before the onset was as ever; a few frames must be left to judge by.
-    gain = count * (level - 1.0 - np.log(level))
-    return int(np.argmax(gain[: max(error.shape[0] - LEAST_FRAMES, 1)]))
+    size, frames = error[0].size, error.shape[0]
+    before = np.cumsum(power)[:-1]
+    count = size * np.arange(1, frames)
+    whole = size * frames
+    # Two levels against one: the likeliest place for the level to have changed.
+    gain = (
+        whole * math.log(float(power.sum()) / whole + 1e-12)
+        - count * np.log(before / count + 1e-12)
+        - (whole - count) * np.log((power.sum() - before) / (whole - count) + 1e-12)
+    )
+    gain[frames - LEAST_FRAMES :] = 0.0
+    place = int(np.argmax(gain)) if frames > LEAST_FRAMES else 0
+    return place + 1 if gain.size and gain[place] > CLEAR_ONSET else 0
 
 
 class _Case:

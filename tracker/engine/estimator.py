@@ -285,21 +285,27 @@ class Estimator:
 
     def calm(self) -> None:
         """Take note that nothing is suspected: the estimate is what changes will be held against."""
-        if self._bank is not None:
-            self._memory.calm(self._bank.chosen.coefficients, self._noise.power, self._innovations.variance)
+        self.keep()
+        oldest = self._standing.oldest
+        if oldest is None:
+            return
+        if self.following and self._bank is not None:
+            oldest = (self._bank.chosen.coefficients, self._noise.power, 0)
+        coefficients, power, blocks = oldest
+        self._memory.calm(coefficients, power, self._innovations.variance, blocks)
 
     def keep(self) -> None:
-        """Take note that something may be going on: keep the block just taken."""
+        """Keep the block just taken."""
         for heard in self._taken:
             self._memory.keep(heard)
+        self._taken = []
 
-    def judge(self, since_s: float) -> Verdict | None:
-        """Say what changed since so long ago; None when too little is known of before."""
+    def judge(self) -> Verdict | None:
+        """Say what changed; None when too little is known of before."""
         memory, receivers = self._memory, self._config.receivers
         if memory.before is None or not memory.heard or self._bank is None:
             return None
-        from_ns = int(memory.heard[-1].time_ns[0]) - round(since_s * 1e9)
-        blocks = [heard for heard in memory.heard if heard.time_ns[0] >= from_ns] or memory.heard[-1:]
+        blocks = memory.heard
         frames = Frames(*(np.concatenate([getattr(one, name) for one in blocks]) for name in Frames.__slots__))
         unit = np.sqrt(memory.noise)[:, None]
         outputs = [one.outputs * (np.sqrt(one.noise)[:, None] / unit) for one in blocks]
@@ -476,16 +482,10 @@ class Estimator:
             self._bank.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
 
     def _doubt(self, regressors: NDArray[Any]) -> NDArray[Any]:
-        """Work out how wrong the surface's part of frames was expected before they were taken in.
-
-        With S the covariance Z P Zᴴ from before, it is S (I + S)⁻¹ now; forgetting in between is small.
-        """
+        """Work out how wrong the surface's part of frames may be: what P promises, and what really comes of it."""
         surface = regressors.copy()
         surface[:, 0] = 0.0
-        values, vectors = np.linalg.eigh(self._learned().predicted_covariance(surface))
-        values = np.clip(values, 0.0, 0.95)
-        # P promises what it promises; what really comes of it is measured.
-        return np.asarray((vectors * (self._innovations.excess * values / (1.0 - values))) @ vectors.conj().T)
+        return np.asarray(self._innovations.excess * self._learned().predicted_covariance(surface))
 
     def _fits(self, bank: Bank, regressors: NDArray[Any], outputs: NDArray[np.complex128]) -> bool:
         error = outputs - regressors @ bank.chosen.coefficients

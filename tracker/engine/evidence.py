@@ -1,7 +1,7 @@
 """What is kept to tell changes apart: the model from before anything was suspected, and the frames heard since.
 
-While all is calm the model is copied with every block and no frame is kept. Once a sum rises the copy stays as it is
-and frames gather; when an alarm follows, both are at hand.
+While all is calm the model kept is the one of a few blocks ago, with the blocks since: a change may have gone unseen for
+as long. Once a sum rises the model stays as it is and frames gather; when an alarm follows, both are at hand.
 """
 
 from collections.abc import Mapping
@@ -15,7 +15,7 @@ Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
 # Frames kept at most: more would tell no more, and take long to judge.
-MOST_FRAMES = 256
+MOST_FRAMES = 192
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -66,14 +66,14 @@ class Memory:
         self.variance = 1.0
         self.heard: list[Heard] = []
 
-    def calm(self, coefficients: Complex, noise: Real, variance: float) -> None:
-        """Take the model as it is: nothing is suspected."""
+    def calm(self, coefficients: Complex, noise: Real, variance: float, blocks: int) -> None:
+        """Take a model from so many blocks ago: nothing is suspected."""
         if self.before is None:
             self.before = coefficients.copy()
         else:
             np.copyto(self.before, coefficients)
         self.noise, self.variance = noise, variance
-        self.heard.clear()
+        del self.heard[: len(self.heard) - blocks]
 
     def keep(self, heard: Heard) -> None:
         """Keep a block: something may be going on."""

@@ -54,6 +54,11 @@ class Standing:
         self._noise.append(noise)
         return readings
 
+    @property
+    def oldest(self) -> tuple[Complex, Real, int] | None:
+        """Estimate of some blocks ago, its unit of noise, and how many blocks."""
+        return (self._before[0], self._noise[0], len(self._before) - 1) if self._before else None
+
     def forget(self) -> None:
         """Begin anew: the estimate was changed by hand."""
         self._before.clear()

@@ -35,8 +35,9 @@ from .standing import DIRECT_MOVED, SURFACE_MOVED
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
 CALM = 0.3
-# A change seen in fewer frames than this, and of a kind that is less likely than this (nats), is looked at again.
-ENOUGH_FRAMES, SURE = 48, 8.0
+# A change seen in so few frames, or of a kind likelier than the next by less than so much (nats), is looked at again
+# with the blocks that follow, for no more than so many frames.
+FEW_FRAMES, SURE, MOST_WAIT = 24, 8.0, 64
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -83,6 +84,7 @@ class Tracker:
         self._mode = Mode.ACQUIRING
         self._frames_since = 0
         self._suspected: Suspicion | None = None
+        self._waited = 0
         self._pending_cause: Cause | None = None
         self._adopted: NDArray[np.int8] | None = None
         self._gap: tuple[int, int] | None = None
@@ -175,7 +177,7 @@ class Tracker:
         for receiver in fit.lost:
             events.append(lock_alarm(receiver, self._estimator.following[receiver].quality, KEPT, stand))
         suspicion = self._follow_drift(fit)
-        answer = self._answer(suspicion) if suspicion else None
+        answer = self._answer(suspicion, sum(burst.frames for burst in bursts)) if suspicion else None
         if suspicion and answer:
             events.append(drift_alarm(suspicion, *answer, stand))
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
@@ -205,6 +207,7 @@ class Tracker:
             "counts": [getattr(counts, name) for name in Counts.__slots__],
             "mode": str(self._mode),
             "frames_since": self._frames_since,
+            "waited": self._waited,
             "suspected": self._suspected.snapshot() if self._suspected is not None else None,
             "pending_cause": str(self._pending_cause) if self._pending_cause else None,
             "adopted": self._adopted.copy() if self._adopted is not None else None,
@@ -221,7 +224,7 @@ class Tracker:
         self._counts = Counts(*(int(count) for count in snapshot["counts"]))
         self._mode = Mode(snapshot["mode"])
         self._frames_since = int(snapshot["frames_since"])
-        suspected = snapshot["suspected"]
+        self._waited, suspected = int(snapshot["waited"]), snapshot["suspected"]
         self._suspected = Suspicion.restore(suspected) if suspected is not None else None
         cause, adopted, gap = snapshot["pending_cause"], snapshot["adopted"], snapshot["gap"]
         self._pending_cause = Cause(cause) if cause else None
@@ -230,7 +233,7 @@ class Tracker:
 
     def _start_over(self) -> None:
         self._frames_since = 0
-        self._suspected = None
+        self._suspected, self._waited = None, 0
         self._estimator.forget_calm()
         self._drift.reset()
         self._refresher.begin_afresh()
@@ -267,14 +270,15 @@ class Tracker:
             self._estimator.keep()
         return None
 
-    def _answer(self, suspicion: Suspicion) -> tuple[Verdict, str] | None:
+    def _answer(self, suspicion: Suspicion, frames: int) -> tuple[Verdict, str] | None:
         """Find out what changed, and do what is to be done about it; None when the next block will tell better."""
         self._estimator.keep()
-        verdict = self._estimator.judge(suspicion.since_s) or Verdict("unclear", "", 0.0)
+        verdict = self._estimator.judge() or Verdict("unclear", "", 0.0)
         self._suspected = None
-        doubtful = verdict.kind == "unclear" or verdict.margin < SURE
-        if doubtful and 0 < verdict.frames < ENOUGH_FRAMES:
+        doubtful = verdict.margin < SURE or 0 < verdict.frames < FEW_FRAMES
+        if doubtful and self._waited < MOST_WAIT:
             self._suspected = suspicion
+            self._waited += frames
             return None
         if not suspicion.change.up and suspicion.name in (INNOVATION, DIRECT, DIRECT_MOVED, SURFACE_MOVED):
             # A link that fits better than before has not changed: the baseline was wrong.
