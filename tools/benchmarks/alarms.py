@@ -87,7 +87,7 @@ def _hours(runs: int) -> Iterator[Row]:
     """Rate at the thresholds set for hours, ten bursts a second and bursts of 64 at 28 000 frames a second."""
     for rate_hz in (10.0, 28_000 / 64):
         for hours in (1 / 3600 * 300 / rate_hz, 1.0, 10.0, 100.0):
-            watches = 3
+            watches = len(Estimator(Link(0, 3).config(TEN_HOURS_S)).watched)
             samples = hours * 3600.0 * rate_hz
             rate = sum(
                 2 * _rate(samples * watches * len(SLACKS), slack, runs, seed) for seed, slack in enumerate(SLACKS)

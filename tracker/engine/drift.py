@@ -74,6 +74,7 @@ class Watch:
         self._square = 1.0  # mean squared deviate
         self._product = 0.0  # mean product of neighbouring deviates
         self._before = 0.0  # the last deviate
+        self._together, self._whitening, self._shrinking = 0.0, 1.0, 1.0  # scales in use, see _set_scales
         self._sum, self._summed, self._long_square = 0.0, 0, 1.0  # white deviates over LONG samples: mean² · LONG
         self._first: list[tuple[float, int]] = []
         self.clear()
@@ -91,7 +92,8 @@ class Watch:
     @property
     def height(self) -> float:
         """The higher sum over its threshold; 1 raises an alarm."""
-        return max(cusum.statistic / cusum.threshold for cusum in self._cusums)
+        small, large = self._cusums
+        return max(small.statistic / small.threshold, large.statistic / large.threshold)
 
     @property
     def highest(self) -> tuple[float, float]:
@@ -125,13 +127,14 @@ class Watch:
             return None
         before = self._before
         sample, unit = self._deviate(value, degrees)
-        together = self._correlation()
-        white = (sample - together * before) / math.sqrt(1.0 - together * together) / self._spread(degrees)
+        white = (sample - self._together * before) * self._whitening
+        tested = white * self._shrinking
         change = None
         for cusum in self._cusums:
-            change = cusum.update(white / self._long_spread()) or change
-        self._adapt(sample, white, unit)
-        self._before = _bounded(sample, BOUND * math.sqrt(self._square))
+            change = cusum.update(tested) or change
+        self._before = self._adapt(sample, white, unit)
+        if self._count % LONG == 0:
+            self._set_scales(degrees)
         return change
 
     def snapshot(self) -> dict[str, Any]:
@@ -159,29 +162,24 @@ class Watch:
             return deviate(value * math.exp(-self._level), degrees), 1.0 / math.sqrt(degrees)
         return (value - self._level) / self._scale, self._scale
 
-    def _correlation(self) -> float:
-        """Correlation of neighbouring samples, where it is beyond doubt."""
+    def _set_scales(self, degrees: int) -> None:
+        """Take what was measured of correlation and spread into use, where theory is beyond doubt wrong."""
+        gathered = self._gathered
         together = self._product / self._square
-        return _bounded(together, 0.9) if abs(together) > BELIEF / math.sqrt(self._gathered) else 0.0
-
-    def _spread(self, degrees: int) -> float:
-        """Give the standard deviation of the deviates, where theory is beyond doubt too small or there is none."""
-        doubtless = not degrees or self._square > 1.0 + BELIEF * math.sqrt(2.0 / self._gathered)
-        return math.sqrt(self._square) if doubtless else 1.0
-
-    def _long_spread(self) -> float:
-        """Give the same over longer, where white deviates are beyond doubt not as white as all that."""
-        batches = max(self._gathered // LONG, 1)
-        return (
-            math.sqrt(max(self._long_square, 1.0)) if self._long_square > 1 + BELIEF * math.sqrt(2 / batches) else 1.0
-        )
+        self._together = _bounded(together, 0.9) if abs(together) > BELIEF / math.sqrt(gathered) else 0.0
+        wider = not degrees or self._square > 1.0 + BELIEF * math.sqrt(2.0 / gathered)
+        spread = self._square if wider else 1.0
+        self._whitening = 1.0 / math.sqrt(spread * (1.0 - self._together**2))
+        batches = max(gathered // LONG, 1)
+        longer = self._long_square > 1.0 + BELIEF * math.sqrt(2.0 / batches)
+        self._shrinking = 1.0 / math.sqrt(self._long_square) if longer else 1.0
 
     @property
     def _gathered(self) -> int:
         return min(self._count, MEMORY)
 
-    def _adapt(self, sample: float, white: float, unit: float) -> None:
-        """Let the baseline follow, slowly and bounded."""
+    def _adapt(self, sample: float, white: float, unit: float) -> float:
+        """Let the baseline follow, slowly and bounded; give back the sample as it was bounded."""
         self._count += 1
         gain = 1.0 / self._gathered
         bounded = _bounded(sample, BOUND * math.sqrt(self._square))
@@ -197,6 +195,7 @@ class Watch:
             self._sum, self._summed = 0.0, 0
         if self._count <= MEMORY and self._count & (self._count - 1) == 0:
             self._set_thresholds()
+        return bounded
 
     def _set_thresholds(self) -> None:
         """Set thresholds that give the false alarms wanted, as far as the baseline is known."""
@@ -229,10 +228,14 @@ class Watch:
         self._before = float(samples[-1])
         self._first = []
         self._count = WARM_UP
+        self._set_scales(degrees)
         self._set_thresholds()
 
 
-_NUMBERS = ("_elapsed_s", "_level", "_scale", "_square", "_product", "_before", "_sum", "_long_square")
+_NUMBERS = (
+    *("_elapsed_s", "_level", "_scale", "_square", "_product", "_before", "_sum", "_long_square"),
+    *("_together", "_whitening", "_shrinking"),
+)
 _COUNTS = ("_count", "_samples", "_summed")
 
 

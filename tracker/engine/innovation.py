@@ -13,6 +13,7 @@ A change of the direct path is the same in all frames. The mean of Y − Z C ove
 power of all innovations, and shows it even if the filter, granting the direct path much, has followed it after a frame.
 """
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -46,7 +47,7 @@ class Innovations:
     """
 
     def __init__(self, receivers: int, size: int) -> None:
-        self._shape = (receivers, size)
+        self._most_ratio = 1.0 + BOUND / math.sqrt(receivers * size)
         self._moments = np.zeros(2)  # of the regression for α
         self._blocks = 0
         self.excess = 1.0
@@ -65,16 +66,19 @@ class Innovations:
         whitener : ndarray, shape (B, B)
             L⁻¹.
         """
-        spread = 1.0 / whitener.diagonal().real ** 2  # L_bb²
-        expected = 1.0 + self.excess * (spread - 1.0)
+        diagonal = whitener.diagonal().real
+        spread = 1.0 / (diagonal * diagonal)  # L_bb²
+        predicted = spread - 1.0
+        inverse = 1.0 / (1.0 + self.excess * predicted)
         parts = white.view(np.float64)
-        power = np.einsum("bd,bd->b", parts, parts) * (spread / white.shape[1])
-        self._power += float((power / expected).sum())
-        self._frames += white.shape[0]
+        ratio = np.einsum("bd,bd->b", parts, parts) * (spread * inverse / white.shape[1])
+        frames = white.shape[0]
+        self._power += float(ratio.sum())
+        self._frames += frames
         self._common += innovation.sum(axis=0)
-        self._common_frames += white.shape[0]
-        self.variance = float(expected.mean())
-        self._calibrate(power, spread - 1.0, expected)
+        self._common_frames += frames
+        self.variance = 1.0 + self.excess * float(predicted.sum()) / frames
+        self._calibrate(ratio, predicted, inverse)
 
     def readings(self) -> list[Reading]:
         """Say what the block showed, and begin the next."""
@@ -107,13 +111,14 @@ class Innovations:
         self._common = np.array(snapshot["common"], dtype=np.complex128)
         self._common_frames = int(snapshot["common_frames"])
 
-    def _calibrate(self, power: Real, predicted: Real, expected: Real) -> None:
+    def _calibrate(self, ratio: Real, predicted: Real, inverse: Real) -> None:
         """Regress the innovations' power beyond the noise on what the covariance predicts, weighted by its spread."""
         self._blocks += 1
         gain = 1.0 / min(self._blocks, MEMORY)
-        bounded = np.minimum(power, expected * (1.0 + BOUND / np.sqrt(self._common.shape[0])))
-        weight = predicted / expected**2
-        moments = np.array([weight @ (bounded - 1.0), weight @ predicted])
-        self._moments += (moments - self._moments) * gain
+        bounded = np.minimum(ratio, self._most_ratio)
+        scaled = predicted * inverse
+        # Both sides of power = 1 + α s over the expected power, which is how far either may spread.
+        shown, known = float(scaled @ (bounded - inverse)), float(scaled @ scaled)
+        self._moments += (np.array((shown, known)) - self._moments) * gain
         if self._moments[1] > 0.0:
             self.excess = float(min(max(self._moments[0] / self._moments[1], 0.0), MOST))

@@ -6,6 +6,7 @@ many blocks. Four things are looked at: how far the direct path moved, how far t
 together grew (gain) or turned (phase), for which the old estimate is the matched filter.
 """
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -43,10 +44,8 @@ class Standing:
         """
         readings: list[Reading] = []
         if len(self._before) == LAG:
-            before = self._before.pop(0)
-            scale = np.repeat(np.sqrt(self._noise.pop(0) / noise), coefficients.shape[1] // noise.shape[0])
-            before *= scale
-            readings = _compare(coefficients, before)
+            before, power = self._before.pop(0), self._noise.pop(0)
+            readings = _compare(coefficients, before, math.sqrt(float((power / noise).mean())))
             np.copyto(before, coefficients)
         else:
             before = coefficients.copy()
@@ -79,18 +78,23 @@ class Standing:
         self._noise = [np.array(one, dtype=np.float64) for one in snapshot["noise"]]
 
 
-def _compare(now: Complex, before: Complex) -> list[Reading]:
-    old = before.reshape(-1).view(np.float64)
-    moved = (now - before).reshape(-1)
-    parts = moved.view(np.float64)
+def _compare(now: Complex, before: Complex, scale: float) -> list[Reading]:
+    """Compare two estimates, the older to be multiplied by a scale; |a − b|² by its three products, with no copy."""
     outputs = now.shape[1]
-    direct = float(parts[: 2 * outputs] @ parts[: 2 * outputs])
-    surface = float(parts[2 * outputs :] @ parts[2 * outputs :])
-    length = float(np.sqrt(old @ old)) + FLOOR
-    along = complex(np.vdot(before.reshape(-1), moved)) / length
+    new, old = now.reshape(-1), before.reshape(-1)
+    direct_new, direct_old, direct_both = (np.vdot(a[:outputs], b[:outputs]).real for a, b in _pairs(new, old))
+    square_new, square_old = np.vdot(new, new).real, np.vdot(old, old).real
+    both = complex(np.vdot(old, new))
+    direct = direct_new + scale * (scale * direct_old - 2.0 * direct_both)
+    surface = square_new + scale * (scale * square_old - 2.0 * both.real) - direct
+    length = math.sqrt(square_old) + FLOOR
     return [
-        Reading(DIRECT_MOVED, max(direct / outputs, FLOOR), outputs),
-        Reading(SURFACE_MOVED, float(np.log(max(surface, FLOOR)))),
-        Reading(GREW, along.real),
-        Reading(TURNED, along.imag),
+        Reading(DIRECT_MOVED, max(float(direct) / outputs, FLOOR), outputs),
+        Reading(SURFACE_MOVED, math.log(max(float(surface), FLOOR))),
+        Reading(GREW, float(both.real / length - scale * length)),
+        Reading(TURNED, both.imag / length),
     ]
+
+
+def _pairs(new: Complex, old: Complex) -> tuple[tuple[Complex, Complex], ...]:
+    return (new, new), (old, old), (old, new)
