@@ -60,7 +60,7 @@ class Completion:
         self._count = 0
         self._row_sums = np.zeros((STEPS.shape[0], rows.shape[1]))
         self._phantom_sums = np.zeros((STEPS.shape[0], self._phantom_size))
-        self._add(rows, phantoms)
+        self._add(rows, phantoms, np.ones(rows.shape[0], dtype=np.bool_))
 
     def take(self, rows: Real) -> NDArray[np.bool_]:
         """Take in those of further rows that are orthogonal to all known and to each other; say which, shape (k,)."""
@@ -70,10 +70,11 @@ class Completion:
             fits &= ~taken
             beyond = fits & (lacking > TOLERANCE)
             if not beyond.any():
-                chosen = np.flatnonzero(fits)
-                chosen = chosen[_orthogonal(rows[chosen], phantoms[chosen])]
-                self._add(rows[chosen], phantoms[chosen])
-                taken[chosen] = True
+                if not fits.all():
+                    rows, phantoms = rows[fits], phantoms[fits]
+                accepted = _orthogonal(rows, phantoms)
+                self._add(rows, phantoms, accepted)
+                taken[np.flatnonzero(fits)[accepted]] = True
                 break
             # What this row has beyond the phantom directions known so far is a direction of its own.
             first = int(np.argmax(beyond))
@@ -81,7 +82,7 @@ class Completion:
             self._rank += 1
             self._anchors = np.concatenate([self._anchors, rows[first : first + 1]])
             self._phantoms = np.concatenate([self._phantoms, phantoms[first : first + 1]])
-            self._add(rows[first : first + 1], phantoms[first : first + 1])
+            self._add(rows[first : first + 1], phantoms[first : first + 1], np.ones(1, dtype=np.bool_))
             taken[first] = True
         return taken
 
@@ -100,13 +101,13 @@ class Completion:
             fits &= lacking < TOLERANCE
         return phantoms, lacking, fits
 
-    def _add(self, rows: Real, phantoms: Real) -> None:
-        """Add rows to the weighted sums."""
-        number = self._count + np.arange(1, rows.shape[0] + 1)
-        weights = 2.0 * (STEPS[:, None] * number % 1.0) - 1.0
+    def _add(self, rows: Real, phantoms: Real, accepted: NDArray[np.bool_]) -> None:
+        """Add those rows that were accepted to the weighted sums."""
+        weights = np.zeros((STEPS.shape[0], rows.shape[0]))
+        weights[:, accepted] = 2.0 * (STEPS[:, None] * (self._count + np.arange(1, accepted.sum() + 1)) % 1.0) - 1.0
         self._row_sums += weights @ rows
         self._phantom_sums += weights @ phantoms
-        self._count += rows.shape[0]
+        self._count += int(accepted.sum())
 
 
 def begin(rows: Real) -> tuple[Completion, NDArray[np.intp]] | None:
@@ -152,13 +153,10 @@ def _friends(conflict: NDArray[np.bool_], least: int) -> NDArray[np.intp]:
     return np.zeros(0, dtype=np.intp)
 
 
-def _orthogonal(rows: Real, phantoms: Real) -> NDArray[np.intp]:
-    """Rows that are orthogonal to all before them that are."""
+def _orthogonal(rows: Real, phantoms: Real) -> NDArray[np.bool_]:
+    """Which rows are orthogonal to all before them that are."""
     conflict = np.tril(np.abs(rows @ rows.T + phantoms @ phantoms.T) > TOLERANCE, -1)
-    if not conflict.any():
-        return np.arange(rows.shape[0])
-    accepted: list[int] = []
-    for index in range(rows.shape[0]):
-        if not conflict[index, accepted].any():
-            accepted.append(index)
-    return np.array(accepted, dtype=np.intp)
+    accepted = np.ones(rows.shape[0], dtype=np.bool_)
+    for index in np.flatnonzero(conflict.any(axis=1)):
+        accepted[index] = not (conflict[index] & accepted).any()
+    return accepted

@@ -1,0 +1,136 @@
+"""Sweeps of orthogonal patterns against the dense filter, and kept products against worked-out ones, in one run."""
+
+import time
+from collections.abc import Callable, Iterator
+
+import numpy as np
+from numpy.typing import NDArray
+
+from benchmarks.row import Row
+from tracker.engine import panel
+from tracker.engine.cycle import SweepDetector
+from tracker.engine.products import ProductCache
+from tracker.engine.rls import BlockRls, forgetting
+from tracker.engine.sweeps import SweepRls
+from tracker.simulation.sounding import sweep
+
+FRAMES = 64
+SPACING_S = 1 / 28_000
+TIME_CONSTANT_S = 0.2
+FORGOTTEN = forgetting("resetting", FRAMES * SPACING_S, TIME_CONSTANT_S)
+
+
+def rows(quick: bool) -> Iterator[Row]:
+    """Measure."""
+    for elements, outputs, turns in ((256, 16, 40), (256, 32, 40), (1024, 16, 20), (1024, 32, 20), (4096, 16, 4)):
+        if quick and elements == 4096:
+            continue
+        yield from _against_dense(elements, outputs, turns // 4 if quick else turns)
+    yield from _products(1024 if quick else 4096, 64 if quick else 128, 10 if quick else 30)
+
+
+def _against_dense(elements: int, outputs: int, turns: int) -> Iterator[Row]:
+    """Take the same frames in both filters in turn, from packed patterns to the estimate; and copying beside it."""
+    rng = np.random.default_rng(elements + outputs)
+    states = sweep(elements, rng)
+    packed, order = panel.pack(states), states.shape[0]
+    prior = np.full(elements + 1, 3.0 / elements)
+    prior[0] = 6.0
+    detector = SweepDetector(elements)
+    heard = (rng.normal(size=(8, FRAMES, outputs)) + 1j * rng.normal(size=(8, FRAMES, outputs))).astype(np.complex128)
+
+    def numbers(block: int) -> NDArray[np.intp]:
+        found = detector.rows(packed[(block * FRAMES + np.arange(FRAMES)) % order])
+        if found is None:
+            raise RuntimeError("the sweep was not found")
+        return found
+
+    first = _seconds(lambda: [numbers(block) for block in range(-(-order // FRAMES))])
+    filters = SweepRls(prior, outputs, detector), BlockRls(prior, outputs)
+
+    def diagonal(block: int) -> None:
+        found = numbers(block)
+        filters[0].forget(*FORGOTTEN)
+        filters[0].update(found, heard[block % 8])
+
+    def dense(block: int) -> None:
+        z = np.ones((FRAMES, elements + 1))
+        z[:, 1:] = panel.unpack(packed[(block * FRAMES + np.arange(FRAMES)) % order], elements)
+        filters[1].forget(*FORGOTTEN)
+        filters[1].update(z, heard[block % 8])
+
+    # What any filter must move a frame: read what is heard, read and write the row's state, write both innovations.
+    source, target = np.ones((5, FRAMES, outputs), dtype=np.complex128), np.empty((5, FRAMES, outputs), np.complex128)
+    took: dict[str, list[float]] = {"sweep": [], "dense": [], "read": [], "copy": []}
+    for turn in range(turns):
+        for part in range(8):
+            block = turn * 8 + part
+            took["sweep"].append(_seconds(lambda block=block: diagonal(block)))  # type: ignore[misc]
+            took["read"].append(_seconds(lambda: filters[0].coefficients))
+            took["copy"].append(_seconds(lambda: np.copyto(target, source)))
+        took["dense"].append(_seconds(lambda turn=turn: dense(turn)))  # type: ignore[misc]
+    speed = {name: FRAMES / float(np.median(times)) for name, times in took.items()}
+    both = FRAMES / float(np.median(np.add(took["sweep"], took["read"])))
+    name = f"N {elements}, D {outputs}, B {FRAMES}"
+    note = f"{speed['sweep']:,.0f} against {speed['dense']:,.0f} frames/s; M = {order}"
+    ratio = speed["sweep"] / speed["dense"]
+    yield Row(f"sweeps over dense filter, {name}", ratio, "times", "> 1", ratio > 1, note)
+    note = f"{both:,.0f} frames/s when the estimate is read after each block"
+    ratio = both / speed["dense"]
+    yield Row(f"the same with the estimate read, {name}", ratio, "times", "> 1", ratio > 1, note)
+    yield Row(
+        f"sweeps over copying the data, {name}",
+        speed["sweep"] / speed["copy"],
+        "ratio",
+        note=f"{speed['copy']:,.0f} frames/s moved at most; calls into numpy, not memory, bound blocks of {FRAMES}",
+    )
+    note = "looking patterns up and proving them orthogonal, once, in the first sweep"
+    yield Row(f"finding the sweep, N {elements}", order / first, "frames/s", "> 28 000", order / first > 28_000, note)
+
+
+def _products(elements: int, size: int, turns: int) -> Iterator[Row]:
+    """Products of a sweep's patterns: worked out, found, and as a plain matrix product of states at hand."""
+    rng = np.random.default_rng(1)
+    columns = np.linalg.qr(rng.normal(size=(elements, size)) + 1j * rng.normal(size=(elements, size)))[0]
+    states = sweep(elements, rng)
+    packed = panel.pack(states)
+    full = ProductCache(columns, 100.0)
+    for start in range(0, packed.shape[0], 256):
+        full.products(packed[start : start + 256])
+    empty = ProductCache(columns, 0.0)
+    parts = np.ascontiguousarray(columns).view(np.float64)
+    took: dict[str, list[float]] = {"found": [], "worked out": [], "multiplied": [], "copied": []}
+    target = np.empty((FRAMES, size), dtype=np.complex128)
+    for turn in range(turns):
+        index = (turn * FRAMES + np.arange(FRAMES)) % packed.shape[0]
+        block, shown = packed[index], states[index].astype(np.float64)
+        took["found"].append(_seconds(lambda block=block: full.products(block)))  # type: ignore[misc]
+        took["worked out"].append(_seconds(lambda block=block: empty.products(block)))  # type: ignore[misc]
+        took["multiplied"].append(_seconds(lambda shown=shown: shown @ parts))  # type: ignore[misc]
+        kept = full.products(block)
+        took["copied"].append(_seconds(lambda kept=kept: np.copyto(target, kept)))  # type: ignore[misc]
+    same = float(np.abs(full.products(packed[:FRAMES]) - states[:FRAMES] @ columns).max())
+    speed = {name: FRAMES / float(np.median(times)) for name, times in took.items()}
+    name = f"N {elements}, r {size}, B {FRAMES}"
+    ratio = speed["found"] / speed["worked out"]
+    note = f"{speed['found']:,.0f} against {speed['worked out']:,.0f} frames/s"
+    yield Row(f"products found over worked out, {name}", ratio, "times", "> 1", ratio > 1, note)
+    yield Row(
+        f"products found over copying them, {name}",
+        speed["found"] / speed["copied"],
+        "ratio",
+        note=f"{speed['copied']:,.0f} frames/s copied",
+    )
+    yield Row(
+        f"products worked out over a plain matrix product, {name}",
+        speed["worked out"] / speed["multiplied"],
+        "ratio",
+        note="the rest unpacks the patterns",
+    )
+    yield Row(f"exact products, {name}", same, "largest difference", "<= 1e-10", same <= 1e-10, "to plain ones")
+
+
+def _seconds(work: Callable[[], object]) -> float:
+    began = time.perf_counter()
+    work()
+    return time.perf_counter() - began
