@@ -28,12 +28,15 @@ spacing_khz = 156.25
 [sockets]
 publish = "tcp://127.0.0.1:9"
 """
+QUIET = str(ROOT / "replay_logs" / "quiet-start.mcap")
 ARGUMENTS = {
     "serve": ["SETTINGS", "--log"],
     "replay": ["LOG", "--settings", "--out", "--json", "--quiet"],
     "check": ["SETTINGS"],
     "watch": ["SETTINGS", "--publish", "--link", "--plain", "--seconds"],
+    "learn": ["LOG", "--settings", "--out", "--size", "--quiet"],
     "inspect": ["LOG", "--json", "--quiet"],
+    "drift": ["LOG", "--settings", "--svg", "--json", "--quiet"],
     "suggest": ["LOG", "--quiet"],
 }
 
@@ -79,7 +82,7 @@ def test_help_names_every_command(capsys: pytest.CaptureFixture[str]) -> None:
     text = capsys.readouterr().out
     for wanted in (*ARGUMENTS, "examples:", "exit status:", "ICNIRP 2020", "licence", "Local rules"):
         assert wanted in text
-    assert set(ARGUMENTS) <= set(cli.COMMANDS)
+    assert set(ARGUMENTS) == set(cli.COMMANDS)
 
 
 @pytest.mark.parametrize("command", cli.COMMANDS)
@@ -87,7 +90,7 @@ def test_help_of_each_command_is_complete(command: str, capsys: pytest.CaptureFi
     """Each command tells all its arguments, shows an example that begins with itself, and repeats the caution."""
     assert left_with([command, "--help"]) == 0
     text = capsys.readouterr().out
-    for wanted in (*ARGUMENTS.get(command, []), f"  ris-tracker {command} ", "ICNIRP 2020"):
+    for wanted in (*ARGUMENTS[command], f"  ris-tracker {command} ", "ICNIRP 2020"):
         assert wanted in text
     assert max(map(len, text.splitlines())) <= 120
 
@@ -105,6 +108,12 @@ def test_help_of_each_command_is_complete(command: str, capsys: pytest.CaptureFi
         (["replay"], "LOG"),
         (["replay", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
         (["replay", "."], "folder"),
+        (["learn", "nowhere.mcap", "--out", "basis.npz"], "nowhere.mcap: there is no such file"),
+        (["learn", QUIET], "--out"),
+        (["learn", QUIET, "--out", "basis.npz", "--size", "0"], "'0'"),
+        (["learn", QUIET, "--out", "basis.txt"], ".npz"),
+        (["drift"], "LOG"),
+        (["drift", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
         (["inspect", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
         (["suggest", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
         (["watch"], "--publish"),

@@ -50,6 +50,7 @@ examples:
   ris-tracker check yard.toml            what these settings mean, before anything runs
   ris-tracker serve yard.toml            take bursts of pilot frames, publish refreshed patterns
   ris-tracker watch yard.toml            see how a running service does
+  ris-tracker drift journal/*.mcap       what changed when, and what became of the rate
   ris-tracker replay journal/*.mcap      work off recorded bursts again, with the same result bit by bit
 
 {EXIT_STATUS}
@@ -75,7 +76,8 @@ examples:
         "run the service for one link",
         "Takes bursts of pilot frames from the testbed controller, keeps the channel estimate, and publishes\n"
         "refreshed patterns, the state and alarms. Runs until it is told to stop (Ctrl-C, SIGTERM or the control\n"
-        "socket) and goes on from its last checkpoint when it is started again.",
+        "socket). Ended so and started again under the same settings, it goes on with the estimate that it had;\n"
+        "after a crash, or under other settings, it estimates afresh.",
         "  ris-tracker serve yard.toml",
     )
     _settings(serve)
@@ -90,9 +92,9 @@ examples:
     replay = command(
         "replay",
         "work off recorded logs as the service would",
-        "Feeds recorded bursts to the same engine as the service does. The same log under the same settings gives\n"
-        "the same patterns bit by bit; under other settings it shows what these would have done.",
-        "  ris-tracker replay journal/yard-0001.mcap\n"
+        "Feeds recorded bursts to the same engine as the service does. A journal under its own settings gives the\n"
+        "same patterns bit by bit, which is checked; under other settings it shows what these would have done.",
+        "  ris-tracker replay journal/yard-20260101T120000Z-000.mcap\n"
         "  ris-tracker replay journal/*.mcap --settings slower.toml --out slower.mcap --json slower.json",
     )
     _logs(replay)
@@ -105,8 +107,8 @@ examples:
     check = command(
         "check",
         "say what settings mean, and whether they can be used",
-        "Reads settings as the service would and prints what they amount to: unknowns, memory, work a frame.\n"
-        "Opens no socket and writes nothing.",
+        "Reads settings, and the files that they name, as the service would and prints what they amount to: delays,\n"
+        "unknowns, memory, work a frame, least frame rate, queue. Opens no socket and writes nothing.",
         "  ris-tracker check yard.toml",
     )
     _settings(check)
@@ -133,8 +135,9 @@ examples:
         "learn an aperture basis from recorded logs",
         "Finds the few columns in which the responses of all elements lie, as far as the logs show them: the engine\n"
         "then estimates those instead of every element, and follows a moving terminal with far fewer frames. Frames\n"
-        "held out say how many columns to keep and how good they are. Writes a picture beside the basis.",
-        "  ris-tracker learn journal/yard-0001.mcap --out yard-basis.npz\n"
+        "held out say how many columns to keep and how good they are. Writes a picture beside the basis (.svg); what\n"
+        'stood there is replaced. To use it: aperture.basis = "learned", aperture.file = "BASIS.npz".',
+        "  ris-tracker learn journal/yard-20260101T120000Z-000.mcap --out yard-basis.npz\n"
         "  ris-tracker learn journal/*.mcap --settings yard.toml --out yard-basis.npz --size 16",
     )
     _logs(learn)
@@ -144,19 +147,22 @@ examples:
         type=Path,
         help="use these settings (default: those recorded in the first log)",
     )
-    learn.add_argument("--out", metavar="BASIS.npz", type=Path, required=True, help="basis to write")
+    learn.add_argument(
+        "--out", metavar="BASIS.npz", type=Path, required=True, help="basis to write; the name ends in .npz"
+    )
     learn.add_argument(
         "--size",
         metavar="R",
         type=_count,
-        help="keep this many columns (default: aperture.size, or what held-out frames say)",
+        help="keep this many columns (default: aperture.size where the settings give it, else as held-out frames say)",
     )
     _quiet(learn)
 
     inspect = command(
         "inspect",
         "say what recorded logs hold",
-        "Reads logs and tells what lies in them: links, runs, bursts, frames, gaps, damage, patterns, alarms.",
+        "Reads logs and tells what lies in them: links, runs, bursts, frames, gaps, sizes, levels of signal and\n"
+        "noise, patterns, alarms, damage. Replays nothing.",
         "  ris-tracker inspect journal/*.mcap",
     )
     _logs(inspect)
@@ -169,7 +175,7 @@ examples:
         "what became of the rate; and draws it. A journal is taken as the service wrote it. A log without states is\n"
         "replayed first, and so is any log when settings are given.",
         "  ris-tracker drift journal/*.mcap\n"
-        "  ris-tracker drift journal/yard-0001.mcap --svg tuesday.svg --json tuesday.json\n"
+        "  ris-tracker drift journal/yard-20260101T120000Z-000.mcap --svg tuesday.svg --json tuesday.json\n"
         "  ris-tracker drift recording.mcap --settings slower.toml",
     )
     _logs(drift)
@@ -178,7 +184,8 @@ examples:
         "--svg",
         metavar="PICTURE.svg",
         type=Path,
-        help="picture to write (default: beside the first log, under its name or the next that is free)",
+        help="picture to write, which must not exist (default: beside the first log, under its name or the next that "
+        "is free)",
     )
     _told(drift)
 
@@ -186,8 +193,8 @@ examples:
         "suggest",
         "suggest settings from a recorded log",
         "Estimates from a log what fits it, such as the length of the channel and how fast it moves, and prints\n"
-        "settings to start from.",
-        "  ris-tracker suggest journal/yard-0001.mcap > yard.toml",
+        "settings to start from, each with the reason why. What a log cannot tell is marked CORRECT THIS.",
+        "  ris-tracker suggest journal/yard-20260101T120000Z-000.mcap > suggested.toml",
     )
     suggest.add_argument("log", metavar="LOG", type=_existing, help="a log, as the service records it")
     _quiet(suggest)
