@@ -28,8 +28,8 @@ filter (Friedland, IEEE Trans. Automatic Control 14, 1969). Within a block this 
 v_i) + q 1 1ᵀ, q the variance of g. From block to block the correlation between the errors of g and of x_i is dropped
 and their variances are kept: no more than that keeps the filter from being the exact one when γ > 0. In trials that
 cost 0 to 3 % of the error of the elements against the dense filter, over all speeds of change and blocks of 1 to 256
-frames; a prior that leaves the direct path as weak as an element cost up to 40 %, and 15 times the error of the direct
-path.
+frames; a prior that leaves the direct path as weak as an element cost up to 40 %, and 4 to 100 times the error of the
+direct path.
 
 Patterns outside of the sweep are kept apart, see `references`.
 """
