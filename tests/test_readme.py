@@ -1,4 +1,4 @@
-"""README.md and DEVELOPERS.md against the program: examples run, tables match the code, links and commands exist."""
+"""The pages against the program: examples run, tables match the code, links and commands exist."""
 
 import ast
 import os
@@ -16,28 +16,38 @@ from dataclasses import fields
 from functools import cache
 from importlib import import_module
 from pathlib import Path
-from typing import Any
+from typing import Any, get_args
+from unittest.mock import Mock, create_autospec
 from xml.etree import ElementTree
 
 import msgpack
 import numpy as np
 import pytest
 import zmq
+from numpy.typing import NDArray
+from pydantic import BaseModel
 from rich.text import Text
 
 from tracker.assembly import configure
+from tracker.basis_file import LearnedBasis, pack_basis
 from tracker.cli import COMMANDS
 from tracker.engine.burst import Burst
+from tracker.engine.changes import Evidence, Verdict, judge
+from tracker.engine.estimator import Estimator
 from tracker.engine.events import Alarm, Cause, Mode, Pattern, State
+from tracker.engine.reaction import react
 from tracker.engine.refusal import Reason
+from tracker.engine.report import Stand, gap_alarm, lock_alarm
 from tracker.messages import Verb, encode_alarm, encode_pattern, encode_pilots, encode_state
+from tracker.service.notices import Notices
 from tracker.settings import Settings, SettingsError, parse
 
 ROOT = Path(__file__).resolve().parent.parent
-PAGES = {name: (ROOT / name).read_text(encoding="utf-8") for name in ("README.md", "DEVELOPERS.md")}
-README = PAGES["README.md"]
+PAGES = {name: (ROOT / name).read_text(encoding="utf-8") for name in ("README.md", "MESSAGES.md", "DEVELOPERS.md")}
+README, MESSAGES = PAGES["README.md"], PAGES["MESSAGES.md"]
 PATIENCE_S = 60.0
-UNITS = {"_s": "s", "_ms": "ms", "_khz": "kHz", "_mb": "MB", "_hours": "h"}
+UNITS = {"_s": "s", "_ms": "ms", "_khz": "kHz", "_ghz": "GHz", "_mb": "MB", "_hours": "h"}
+UNITS |= {"_mm": "mm", "_m": "m", "_db": "dB"}
 
 
 def blocks(page: str, language: str) -> list[str]:
@@ -46,10 +56,14 @@ def blocks(page: str, language: str) -> list[str]:
 
 
 def section(heading: str) -> str:
-    """What stands in the README under a heading, up to the next of any level."""
-    found = re.search(rf"^#+ {re.escape(heading)}\n(.*?)(?=^#|\Z)", README, re.MULTILINE | re.DOTALL)
-    assert found, f"the README has no heading {heading!r}"
-    return found[1]
+    """What stands under a heading that one page for users has, up to the next of any level."""
+    found = [
+        each[1]
+        for page in (README, MESSAGES)
+        for each in re.finditer(rf"^#+ {re.escape(heading)}\n(.*?)(?=^#|\Z)", page, re.MULTILINE | re.DOTALL)
+    ]
+    assert len(found) == 1, f"{len(found)} headings {heading!r}"
+    return found[0]
 
 
 def rows(heading: str) -> list[list[str]]:
@@ -69,27 +83,38 @@ def names(cell: str) -> list[str]:
     return re.findall(r"`([^`]+)`", cell)
 
 
-CONTROLLER, ASKING = blocks(README, "python")
-SETTINGS = blocks(README, "toml")[0]
+(CONTROLLER,), (ASKING,) = blocks(README, "python"), blocks(MESSAGES, "python")
+SETTINGS, REGION = blocks(README, "toml")
 
 
 # Links and pictures
 
 
+def without_code(page: str) -> str:
+    """Take the code blocks out of a page."""
+    return re.sub(r"^```.*?^```$", "", page, flags=re.MULTILINE | re.DOTALL)
+
+
+def anchors(page: str) -> set[str]:
+    """What a link may name of a page: its headings, as they are made into anchors."""
+    headings = re.findall(r"^#+ (.+)$", without_code(page), re.MULTILINE)
+    return {re.sub(r"[^\w\- ]", "", heading.lower()).replace(" ", "-") for heading in headings}
+
+
 @pytest.mark.parametrize("page", PAGES)
 def test_every_link_leads_somewhere(page: str) -> None:
-    """Links and pictures name files of the checkout, or headings that the page has."""
-    text = re.sub(r"^```.*?^```$", "", PAGES[page], flags=re.MULTILINE | re.DOTALL)
+    """Links and pictures name files of the checkout, and headings that the page has or the other page."""
+    text = without_code(PAGES[page])
     targets = re.findall(r"\]\(([^)\s]+)\)|(?:src|srcset)=\"([^\"]+)\"", text)
-    headings = re.findall(r"^#+ (.+)$", text, re.MULTILINE)
-    anchors = {re.sub(r"[^\w\- ]", "", heading.lower()).replace(" ", "-") for heading in headings}
     found = [link or picture for link, picture in targets]
     assert len(found) > 10
     for target in found:
         if target.startswith("https://"):
             continue
         path, _, anchor = target.partition("#")
-        assert (ROOT / path).exists() if path else anchor in anchors, target
+        assert (ROOT / path).exists(), target
+        if anchor:
+            assert anchor in anchors(PAGES[page] if not path else (ROOT / path).read_text(encoding="utf-8")), target
 
 
 @pytest.mark.parametrize("picture", sorted((ROOT / "tools" / "pictures").glob("*.svg")), ids=lambda path: path.stem)
@@ -216,6 +241,9 @@ def allowed(schema: dict[str, Any]) -> str | None:
         return ", ".join(f'`"{value}"`' for value in values)
     if schema.get("type") == "boolean":
         return "`true`, `false`"
+    if schema.get("type") == "array" and schema.get("minItems") == schema.get("maxItems", 0):
+        count, inner = schema["minItems"], schema["items"]
+        return f"{count} numbers" if inner["type"] == "number" else f"{count} × {allowed(inner)}"
     if schema.get("exclusiveMinimum") == 0:
         return "above 0"
     if "minimum" in schema and "maximum" in schema:
@@ -232,17 +260,33 @@ def toml(value: object) -> str:
     return f'`"{value}"`' if isinstance(value, str) else f"`{value!r}`"
 
 
+def models(annotation: Any) -> list[type[BaseModel]]:
+    """Tables of the file that an annotation is made of, such as `Site` for `Site | None` or `list[Site]`."""
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        return [annotation]
+    return [model for part in get_args(annotation) for model in models(part)]
+
+
+def keys(name: str, model: type[BaseModel]) -> Iterator[tuple[str, str | None, str, str | None]]:
+    """Keys of a table and of the tables in it: key, unit, default, what is allowed."""
+    properties = model.model_json_schema()["properties"]
+    for key, inner in model.model_fields.items():
+        default = "required" if inner.is_required() else toml(inner.get_default(call_default_factory=True))
+        unit = next((unit for ending, unit in UNITS.items() if key.endswith(ending)), None)
+        below = models(inner.annotation)
+        may = f"tables `[[{name}.{key}]]`" if below else allowed(plain(properties[key]))
+        yield f"`{name}.{key}`", unit, default, may
+        for each in below:
+            yield from keys(f"{name}.{key}", each)
+
+
 def test_the_table_of_settings_is_the_settings() -> None:
     """Each key stands there once, in the order of the file, with its unit, its default and what is allowed."""
     table = rows("Settings")
-    wanted = []
+    wanted: list[tuple[str, str | None, str, str | None]] = []
     for name, field in Settings.model_fields.items():
-        model: Any = field.annotation
-        properties = model.model_json_schema()["properties"]
-        for key, inner in model.model_fields.items():
-            default = "required" if inner.is_required() else toml(inner.get_default(call_default_factory=True))
-            unit = next((unit for ending, unit in UNITS.items() if key.endswith(ending)), None)
-            wanted.append((f"`{name}.{key}`", unit, default, allowed(plain(properties[key]))))
+        (model,) = models(field.annotation)
+        wanted += keys(name, model)
     assert [cells[0] for cells in table] == [key for key, *_ in wanted]
     for (key, unit, default, may), cells in zip(wanted, table, strict=True):
         assert len(cells) == 5, key
@@ -251,15 +295,102 @@ def test_the_table_of_settings_is_the_settings() -> None:
         assert len(cells[4]) > 10, key
 
 
-@pytest.mark.parametrize("basis", ["learned", "region"])
-def test_what_the_table_calls_refused_is_refused(basis: str) -> None:
-    """A basis that the README says this version refuses cannot be had; when it can, the README has to say so."""
+@pytest.mark.parametrize("basis", ["elements", "tiles", "learned", "region"])
+def test_each_basis_can_be_had_as_the_readme_says(basis: str, tmp_path: Path) -> None:
+    """The table of bases names those that the settings allow, and each has the unknowns that it gives."""
     (row,) = (cells for cells in rows("Settings") if cells[0] == "`aperture.basis`")
-    assert row[3].endswith('`"learned"`, `"region"`')
-    assert "this version refuses the other two" in row[4]
-    text = f'{SETTINGS}\n[aperture]\nbasis = "{basis}"\nfile = "basis.npz"\n'
-    with pytest.raises(SettingsError, match=basis):
-        configure(parse(text), Path())
+    assert row[3] == ", ".join(cells[0] for cells in rows("Which basis"))
+    (unknowns,) = (cells[1] for cells in rows("Which basis") if cells[0] == f'`"{basis}"`')
+    text = f'{SETTINGS}\n[aperture]\nbasis = "{basis}"\n'
+    if basis == "region":
+        parts = re.split(r"(?m)^(?=\[panel\]|\[tones\])", SETTINGS)
+        text = f"{parts[0]}{REGION}\n{parts[2]}"
+    if basis == "learned":
+        learned = LearnedBasis(
+            columns=np.linalg.qr(np.random.default_rng(1).normal(size=(64, 5)) + 0j)[0],
+            variances=np.ones(5),
+            eigenvalues=np.ones(5),
+            noise=0.1,
+            panel=(8, 8),
+            logs=(),
+            sha256=(),
+            span_ns=(0, 1),
+            frames=1,
+            settings="",
+            version="",
+            held=0.9,
+            held_deviation=0.1,
+            sizes=(5,),
+            errors=(1.0,),
+            elements_error=1.0,
+        )
+        (tmp_path / "basis.npz").write_bytes(pack_basis(learned))
+        text += 'file = "basis.npz"\n'
+    found = configure(parse(text), tmp_path).aperture
+    told = {"N + 1": 64, "tiles + 1": 16, "columns kept + 1": 5, "`aperture.size` + 1": 16}
+    assert (found.elements, found.size) == (64, told[unknowns])
+
+
+@pytest.mark.parametrize(("basis", "missing"), [("learned", "aperture.file"), ("region", r"\[site\]")])
+def test_a_basis_that_lacks_what_the_readme_asks_for_is_refused(basis: str, missing: str) -> None:
+    """The error names the key or the table that the table of settings says it needs."""
+    with pytest.raises(SettingsError, match=missing):
+        configure(parse(f'{SETTINGS}\n[aperture]\nbasis = "{basis}"\n'), Path())
+
+
+def kinds() -> dict[str, set[str]]:
+    """Every kind of alarm that the program can send, each with the actions that it can name."""
+    rng = np.random.default_rng(2)
+
+    def draw(*shape: int) -> NDArray[np.complex128]:
+        return rng.normal(size=shape).astype(np.complex128)
+
+    frames, elements, tones, size = 24, 4, 12, 3
+    states = np.sign(draw(frames, elements).real)
+    z = np.ones((frames, elements))  # one column less than the elements, so that the basis can be wrong
+    z[:, 1:] = states[:, : elements - 1]
+    model = draw(elements, 1, size)
+    verdict = judge(
+        Evidence(
+            outputs=np.tensordot(z, model, axes=1) + draw(frames, 1, size),
+            regressors=z,
+            states=states,
+            model=model,
+            elements=draw(elements, 1, size),
+            prior=np.ones(elements),
+            outside=draw(frames, 1, tones),
+            basis=np.linalg.qr(draw(tones, size))[0],
+            doubt=np.zeros((frames, frames)),
+            time_s=np.arange(frames) / 1e3,
+        )
+    )
+    mend = np.ones(1, np.complex128), np.ones(1, np.complex128)
+    estimator = create_autospec(Estimator, instance=True)
+    found = {kind: {react(estimator, Verdict(kind, "", 9.0, mend=mend))} for kind in (*verdict.scores, "unclear")}
+    found["unclear"].add("new baseline")
+    stand = Stand(1, 2, 3)
+    alarms = [lock_alarm(0, 0.1, 0.3, stand), gap_alarm(1, 2, stand)]
+    for required in (True, False):
+        notices = Notices(Mock(), required=required)
+        for _ in range(8):
+            notices.load(full=True)
+        notices.clock("")
+        notices.disk("")
+        alarms += notices.take(1, 2)
+    for alarm in alarms:
+        found.setdefault(alarm.kind, set()).add(alarm.action)
+    return found
+
+
+def test_the_table_of_alarms_is_complete() -> None:
+    """Every kind that can be sent has one row, with every action that it can name, and evidence and advice."""
+    table = {names(cells[0])[0]: cells for cells in rows("Alarms")}
+    assert len(table) == len(rows("Alarms"))
+    sent_kinds = kinds()
+    assert set(table) == set(sent_kinds)
+    for kind, actions in sent_kinds.items():
+        assert actions <= set(names(table[kind][3])), kind
+        assert all(len(cells) > 0 for cells in table[kind]), kind
 
 
 def sent() -> dict[str, dict[str, Any]]:
