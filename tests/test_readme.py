@@ -170,6 +170,17 @@ def test_every_file_that_is_named_exists(page: str) -> None:
         assert (ROOT / path).exists(), path
 
 
+def test_constants_stand_where_developers_are_sent() -> None:
+    """Each constant in the table of the most consequential is given its value at the head of the file named."""
+    table = PAGES["DEVELOPERS.md"].partition("## How numbers were chosen")[2]
+    lines = [names(line) for line in table.splitlines() if line.startswith("| `")]
+    assert len(lines) > 5
+    for *constants, path in lines:
+        text = (ROOT / path).read_text(encoding="utf-8")
+        given = {name for heads in re.findall(r"^([A-Z_, ]+) = ", text, re.MULTILINE) for name in heads.split(", ")}
+        assert set(constants) <= given, path
+
+
 # Commands
 
 
