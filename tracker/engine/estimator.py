@@ -1,28 +1,28 @@
 """From frames to channel estimate: delay basis, noise, prior, least squares, shrinkage, in this order."""
 
-from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from . import noise, panel
+from . import panel
 from .aperture import Elements
 from .bank import Bank, time_constants
-from .burst import Burst
 from .changes import Evidence, Verdict, judge
 from .channel import Channel
 from .config import Config
 from .drift import Reading
 from .evidence import Heard, Memory
-from .following import Following, Lock
+from .following import Lock
+from .frames import Fit, Frames
 from .innovation import DIRECT, INNOVATION, Innovations
 from .prior import prior_variances
+from .reception import Reception, noise_of
 from .rls import BlockRls
 from .shrinkage import shrink
 from .standing import MOVED, Standing
-from .timing import TimingLoop
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
 MOST_FRAMES = 256
@@ -30,85 +30,6 @@ MOST_FRAMES = 256
 STRETCH_NS = 10_000_000
 # Frames that were left out fit again when their error is at most this many times what it was before.
 FITS = 1.5
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Frames:
-    """Frames of one burst, without those left out.
-
-    Parameters
-    ----------
-    patterns : ndarray of uint8, shape (B, ceil(N/8))
-    response : ndarray of complex64, shape (B, R, K)
-    time_ns : ndarray of int64, shape (B,)
-        Time of each frame, rising.
-    """
-
-    patterns: NDArray[np.uint8]
-    response: NDArray[np.complex64]
-    time_ns: NDArray[np.int64]
-
-    @classmethod
-    def of(cls, burst: Burst) -> "Frames":
-        """Take the frames of a burst that are fit for use."""
-        kept = np.flatnonzero(burst.keep)
-        return cls(burst.patterns[kept], burst.response[kept], burst.t_ns + kept * burst.dt_ns)
-
-    def showing(self, pattern: NDArray[np.uint8]) -> "Frames":
-        """Take the frames that sounded a packed pattern."""
-        same = np.flatnonzero((self.patterns == pattern).all(axis=1))
-        return Frames(self.patterns[same], self.response[same], self.time_ns[same])
-
-    def stretches(self, most_ns: int) -> Iterator["Frames"]:
-        """Cut into parts that span no more than a time."""
-        start = 0
-        while start < self.time_ns.shape[0]:
-            stop = int(np.searchsorted(self.time_ns, self.time_ns[start] + most_ns, side="right"))
-            yield Frames(self.patterns[start:stop], self.response[start:stop], self.time_ns[start:stop])
-            start = stop
-
-    @classmethod
-    def together(cls, parts: Sequence["Frames"]) -> "Frames":
-        """Put bursts one behind the other."""
-        if len(parts) == 1:
-            return parts[0]
-        return cls(
-            np.concatenate([part.patterns for part in parts]),
-            np.concatenate([part.response for part in parts]),
-            np.concatenate([part.time_ns for part in parts]),
-        )
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Fit:
-    """How a block of frames fitted the estimate that it met.
-
-    Parameters
-    ----------
-    ratio : ndarray, shape (R,)
-        Measured over expected innovation power.
-    degrees : int
-        Complex degrees of freedom behind each ratio: frames times delay directions.
-    elapsed_s : float
-        From the end of the block before to the end of this one, s.
-    error : float
-        Mean squared error of predicting the frames from the estimate before them, in units of the noise on a delay
-        direction; 1 is all that can be had. Unlike `ratio` it can be compared between settings.
-    lost : tuple of int
-        Receivers whose lock was lost at this block.
-    left_out : int
-        Frames that a receiver had to leave out, being without lock.
-    readings : tuple of Reading
-        Samples of the statistics under watch, see `Estimator.watched`.
-    """
-
-    ratio: NDArray[np.float64]
-    degrees: int
-    elapsed_s: float
-    error: float
-    lost: tuple[int, ...] = ()
-    left_out: int = 0
-    readings: tuple[Reading, ...] = ()
 
 
 class Estimator:
@@ -121,11 +42,8 @@ class Estimator:
 
     def __init__(self, config: Config) -> None:
         self._config = config
-        self._adjoint = np.ascontiguousarray(config.delay.conj())
-        self._noise = noise.NoiseEstimate(config.receivers)
+        self.reception = Reception(config)
         self._innovations = Innovations(config.receivers, config.delay.shape[1])
-        self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
-        self._heard_degrees = 0
         # Where phases are followed each block stands at phases of its own.
         self._memory = Memory(blocks=1 if config.follow_phase else None)
         self._standing = Standing()
@@ -134,10 +52,6 @@ class Estimator:
         self._bank: Bank | None = None
         self._end_ns = 0
         self._constants_s = time_constants(config.time_constant_s, config.bank)
-        patience = config.aperture.size + 1
-        self.following = []
-        if config.follow_phase:
-            self.following = [Following(patience, self._timing()) for _ in range(config.receivers)]
 
     @property
     def watched(self) -> tuple[str, ...]:
@@ -150,25 +64,9 @@ class Estimator:
         return self._config.aperture.size + 1
 
     @property
-    def noise_power(self) -> NDArray[np.float64]:
-        """Noise power on a tone, shape (R,), in the units of |response|²."""
-        return self._noise.power
-
-    @property
     def time_constant_s(self) -> float:
         """Time constant in use, s."""
         return self._bank.time_constant_s if self._bank is not None else self._config.time_constant_s
-
-    @property
-    def lock(self) -> Lock:
-        """The worst lock of all receivers; locked when nothing is followed."""
-        locks = [following.lock for following in self.following]
-        return next((lock for lock in (Lock.LOST, Lock.SEARCHING) if lock in locks), Lock.LOCKED)
-
-    @property
-    def phase(self) -> tuple[float, tuple[float, float]]:
-        """Frequency offset, Hz, and phases of direct and surface path, rad, of the first receiver followed."""
-        return (self.following[0].offset_hz, self.following[0].phases) if self.following else (0.0, (0.0, 0.0))
 
     def update(self, bursts: Sequence[Frames]) -> Fit:
         """Take in the frames of a block.
@@ -182,7 +80,7 @@ class Estimator:
         self._taken = []
         if self._bank is None:
             self._bank = self._begin(together)
-        if not self.following:
+        if not self.reception.following:
             return replace(self._take(self._bank, together), readings=self._readings())
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
@@ -199,10 +97,7 @@ class Estimator:
 
     def _begin(self, frames: Frames) -> Bank:
         """Start from the first block: how strong the paths may be."""
-        tones, coefficients = self._project(frames)
-        if not self._noise.known:
-            self._measure_noise(frames.patterns, tones, coefficients)
-        outputs = self._in_noise_units(coefficients)
+        outputs = self.reception.first(frames)
         self._end_ns = int(frames.time_ns[0])
         aperture = self._config.aperture
         prior = prior_variances(self._regressors(frames), outputs, aperture.weights)
@@ -212,21 +107,22 @@ class Estimator:
 
     def _take(self, bank: Bank, taken: Frames) -> Fit:
         """Take in frames that one model of the phases serves."""
-        for following in self.following:
-            following.begin(taken.time_ns)
-        tones, coefficients = self._project(taken)
-        self._measure_noise(taken.patterns, tones, coefficients)
-        outputs, regressors = self._in_noise_units(coefficients), self._regressors(taken)
+        self.reception.begin(taken.time_ns)
+        outputs, changed = self.reception.take(taken)
+        if changed is not None:
+            amplitude = np.repeat(np.sqrt(changed), self.reception.directions)
+            bank.rescale(amplitude, float(np.exp(np.log(changed).mean())))
+        regressors = self._regressors(taken)
         frames, end_ns = outputs.shape[0], int(taken.time_ns[-1])
         elapsed_s = max(end_ns - self._end_ns, 0) / 1e9
         self._end_ns = end_ns
         bank.forget_for(elapsed_s)
         lost = self._follow(bank, taken, regressors, outputs)
         heard = outputs.reshape(frames, self._config.receivers, -1)
-        self._taken.append(Heard(taken.patterns, taken.response, heard, taken.time_ns, self._noise.power))
+        self._taken.append(Heard(taken.patterns, taken.response, heard, taken.time_ns, self.reception.noise_power))
         if self._left_out_most and not self._fits(bank, regressors, outputs):
             self._left_out_most = max(self._left_out_most - frames, 0)
-            degrees = frames * self._adjoint.shape[1]
+            degrees = frames * self.reception.directions
             return Fit(np.ones(self._config.receivers), degrees, elapsed_s, 1.0, lost, frames)
         self._left_out_most = 0
         power = np.zeros(self._config.receivers)
@@ -237,8 +133,8 @@ class Estimator:
             self._innovations.take(innovation, white, bank.chosen.whitener)
             power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
             error += float(_power(innovation).sum())
-        degrees = frames * self._adjoint.shape[1]
-        left_out = frames if self.lock is Lock.LOST else 0
+        degrees = frames * self.reception.directions
+        left_out = frames if self.reception.lock is Lock.LOST else 0
         return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost, left_out)
 
     def channel(self, time_ns: int | None = None) -> Channel:
@@ -255,12 +151,12 @@ class Estimator:
             Before the first frame.
         """
         rls = self._learned()
-        receivers, size = self._config.receivers, self._adjoint.shape[1]
+        receivers, size = self._config.receivers, self.reception.directions
         prior = float(rls.prior[1:].mean())
         surface = shrink(rls.coefficients[1:], float(rls.variances[1:].mean()), prior)
         direct = rls.coefficients[0].reshape(receivers, size).copy()
         if time_ns is not None:
-            for receiver, following in enumerate(self.following):
+            for receiver, following in enumerate(self.reception.following):
                 direct[receiver] *= np.exp(1j * following.lead(time_ns))
         return Channel(
             basis=self._config.delay,
@@ -289,8 +185,8 @@ class Estimator:
         oldest = self._standing.oldest
         if oldest is None:
             return
-        if self.following and self._bank is not None:
-            oldest = (self._bank.chosen.coefficients, self._noise.power, 0)
+        if self.reception.following and self._bank is not None:
+            oldest = (self._bank.chosen.coefficients, self.reception.noise_power, 0)
         coefficients, power, blocks = oldest
         self._memory.calm(coefficients, power, self._innovations.variance, blocks)
 
@@ -314,7 +210,7 @@ class Estimator:
         model = memory.before.copy()
         model[1:] = shrink(model[1:], float(rls.variances[1:].mean()), float(rls.prior[1:].mean()))
         elements = self._config.aperture.surface(model[1:])
-        model = model.reshape(-1, receivers, self._adjoint.shape[1])
+        model = model.reshape(-1, receivers, self.reception.directions)
         regressors = self._regressors(frames)
         evidence = Evidence(
             outputs=np.concatenate(outputs),
@@ -323,7 +219,7 @@ class Estimator:
             model=model,
             elements=elements.reshape(-1, *model.shape[1:]),
             prior=rls.prior,
-            outside=tones - (tones @ self._adjoint) @ self._config.delay.T,
+            outside=tones - (tones @ self._config.delay.conj()) @ self._config.delay.T,
             basis=self._config.delay,
             doubt=self._doubt(regressors),
             time_s=(frames.time_ns - frames.time_ns[0]) / 1e9,
@@ -339,7 +235,7 @@ class Estimator:
         """Multiply the estimate from before the change by factors a receiver, shapes (R,), and go on from it."""
         self.roll_back()
         if self._bank is not None:
-            size = self._adjoint.shape[1]
+            size = self.reception.directions
             self._bank.scale(np.repeat(direct, size), np.repeat(surface, size))
 
     def renew(self, elements: NDArray[np.intp]) -> None:
@@ -355,8 +251,8 @@ class Estimator:
         """Go back to the estimate from before the change."""
         memory = self._memory
         if self._bank is not None and memory.before is not None:
-            scale = np.sqrt(memory.noise / self._noise.power)
-            self._bank.put(memory.before * np.repeat(scale, self._adjoint.shape[1]))
+            scale = np.sqrt(memory.noise / self.reception.noise_power)
+            self._bank.put(memory.before * np.repeat(scale, self.reception.directions))
 
     def leave_out(self, most: int) -> None:
         """Leave out frames until they fit the estimate again, but no more than so many."""
@@ -367,29 +263,21 @@ class Estimator:
         self._bank = None
         self.forget_calm()
 
-    def powers(self, frames: Frames) -> NDArray[np.float64]:
-        """|H|² in units of the noise, unbiased, shape (R, K): the mean over frames."""
-        tones = self._project(frames)[1] @ self._config.delay.T
-        bias = (np.abs(self._config.delay) ** 2).sum(axis=1)
-        power = (np.abs(tones) ** 2).mean(axis=0) / self._noise.power[:, None] - bias
-        return np.asarray(np.maximum(power, 0.0))
-
     def snapshot(self) -> dict[str, Any]:
         """All state."""
         return {
-            "noise": self._noise.snapshot(),
+            "reception": self.reception.snapshot(),
             "innovations": self._innovations.snapshot(),
             "memory": self._memory.snapshot(),
             "standing": self._standing.snapshot(),
             "left_out_most": self._left_out_most,
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
-            "following": [following.snapshot() for following in self.following],
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
-        self._noise.load(snapshot["noise"])
+        self.reception.load(snapshot["reception"])
         self._innovations.load(snapshot["innovations"])
         self._memory.load(snapshot["memory"])
         self._standing.load(snapshot["standing"])
@@ -397,8 +285,6 @@ class Estimator:
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
         self._end_ns = int(snapshot["end_ns"])
-        for following, state in zip(self.following, snapshot["following"], strict=True):
-            following.load(state)
 
     def _follow(
         self,
@@ -408,13 +294,13 @@ class Estimator:
         outputs: NDArray[np.complex128],
     ) -> tuple[int, ...]:
         """Turn the outputs back in place, and the direct path's estimate along; return receivers that lost lock."""
-        if not self.following:
+        if not self.reception.following:
             return ()
-        rls, size = bank.chosen, self._adjoint.shape[1]
+        rls, size = bank.chosen, self.reception.directions
         surface = regressors[:, 1:] @ rls.coefficients[1:]
         weight = 1.0 / (1.0 + float(rls.variances.sum()))
         lost = []
-        for receiver, following in enumerate(self.following):
+        for receiver, following in enumerate(self.reception.following):
             part = slice(receiver * size, (receiver + 1) * size)
             turned = following.turn(
                 frames.patterns,
@@ -435,21 +321,6 @@ class Estimator:
                 lost.append(receiver)
         return tuple(lost)
 
-    def _project(self, frames: Frames) -> tuple[NDArray[np.complex128], NDArray[np.complex128]]:
-        """Bring frames to double precision: on the tones, and on the delay basis."""
-        tones = frames.response.astype(np.complex128)
-        for receiver, following in enumerate(self.following):
-            tones[:, receiver] = following.take_off_delay(tones[:, receiver])
-        return tones, tones @ self._adjoint
-
-    def _timing(self) -> TimingLoop | None:
-        frequency_hz = self._config.frequency_hz
-        return TimingLoop(self._config.delay, frequency_hz) if frequency_hz is not None else None
-
-    def _in_noise_units(self, coefficients: NDArray[np.complex128]) -> NDArray[np.complex128]:
-        scale = 1.0 / np.sqrt(self._noise.power)
-        return np.asarray((coefficients * scale[:, None]).reshape(coefficients.shape[0], -1))
-
     def _regressors(self, frames: Frames) -> NDArray[Any]:
         return self._config.aperture.regressors(panel.unpack(frames.patterns, self._config.elements))
 
@@ -457,29 +328,6 @@ class Estimator:
         if self._bank is None:
             raise ValueError("there is no estimate before the first frame")
         return self._bank.chosen
-
-    def _measure_noise(
-        self, patterns: NDArray[np.uint8], tones: NDArray[np.complex128], coefficients: NDArray[np.complex128]
-    ) -> None:
-        """Update the noise power, and carry the estimate over into the new unit."""
-        known, before = self._noise.known, self._noise.power
-        if tones.shape[2] - coefficients.shape[2] >= noise.LEAST_OUTSIDE:
-            left_over = tones.shape[2] - coefficients.shape[2]
-            power, degrees = noise.outside(tones, coefficients), tones.shape[0] * left_over
-            self._noise.update(power, tones.shape[0], degrees)
-            self._hear(power, degrees)
-        else:
-            power, degrees = noise.repeats(patterns, coefficients)
-            if degrees:
-                self._noise.update(power, degrees, degrees * coefficients.shape[2])
-                self._hear(power, degrees * coefficients.shape[2])
-            elif not known:
-                # Nothing repeats yet: take all that is heard for noise, which is cautious, until something does.
-                self._noise.update((np.abs(tones) ** 2).mean(axis=(0, 2)), 1, 1)
-        if known and self._bank is not None:
-            ratio = before / self._noise.power
-            amplitude = np.repeat(np.sqrt(ratio), self._adjoint.shape[1])
-            self._bank.rescale(amplitude, float(np.exp(np.log(ratio).mean())))
 
     def _doubt(self, regressors: NDArray[Any]) -> NDArray[Any]:
         """Work out how wrong the surface's part of frames may be: what P promises, and what really comes of it."""
@@ -491,24 +339,12 @@ class Estimator:
         error = outputs - regressors @ bank.chosen.coefficients
         return bool(_power(error).mean() / error.shape[0] < FITS * self._innovations.variance)
 
-    def _hear(self, power: NDArray[np.float64], degrees: int) -> None:
-        self._heard += power * degrees
-        self._heard_degrees += degrees
-
     def _readings(self) -> tuple[Reading, ...]:
         """Give samples of what is under watch from the block just taken."""
         readings = self._innovations.readings()
-        readings += self._standing.readings(self._learned().coefficients, self._noise.power)
-        if self._heard_degrees:
-            heard = np.maximum(self._heard / self._heard_degrees, noise.FLOOR)
-            readings += [Reading(noise_of(r), float(power), self._heard_degrees) for r, power in enumerate(heard)]
-        self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
+        readings += self._standing.readings(self._learned().coefficients, self.reception.noise_power)
+        readings += self.reception.readings()
         return tuple(readings)
-
-
-def noise_of(receiver: int) -> str:
-    """Name of the statistic that watches a receiver's noise."""
-    return f"noise {receiver}"
 
 
 def _power(values: NDArray[np.complex128]) -> NDArray[np.float64]:

@@ -1,7 +1,7 @@
 """What is kept to tell changes apart: the model from before anything was suspected, and the frames heard since.
 
-While all is calm the model kept is the one of a few blocks ago, with the blocks since: a change may have gone unseen for
-as long. Once a sum rises the model stays as it is and frames gather; when an alarm follows, both are at hand.
+While all is calm the model kept is the one of a few blocks ago, with the blocks since: a change may have gone unseen
+for as long. Once a sum rises the model stays as it is and frames gather; when an alarm follows, both are at hand.
 """
 
 from collections.abc import Mapping

@@ -6,8 +6,8 @@ from dataclasses import dataclass
 from .burst import Burst
 from .changes import Verdict
 from .drift import DriftMonitor, Suspicion
-from .estimator import Fit
 from .events import Alarm, Mode, State
+from .frames import Fit
 
 
 @dataclass(frozen=True, slots=True)

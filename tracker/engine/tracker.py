@@ -21,9 +21,10 @@ from .changes import Verdict
 from .channel import Channel
 from .config import Config
 from .drift import DriftMonitor, Suspicion
-from .estimator import Estimator, Fit, Frames
+from .estimator import Estimator
 from .events import Cause, Event, Mode, Pattern
 from .following import KEPT, Lock
+from .frames import Fit, Frames
 from .innovation import DIRECT, INNOVATION
 from .lifecycle import Happening, after
 from .rate import rate
@@ -175,7 +176,7 @@ class Tracker:
             events.append(gap_alarm(*self._gap, stand))
             self._gap = None
         for receiver in fit.lost:
-            events.append(lock_alarm(receiver, self._estimator.following[receiver].quality, KEPT, stand))
+            events.append(lock_alarm(receiver, self._estimator.reception.following[receiver].quality, KEPT, stand))
         suspicion = self._follow_drift(fit)
         answer = self._answer(suspicion, sum(burst.frames for burst in bursts)) if suspicion else None
         if suspicion and answer:
@@ -191,7 +192,7 @@ class Tracker:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
             promised = self._calibration.promise(pattern.id, pattern.rate, spread)
             events.append(replace(pattern, rate_low=promised))
-        noise, time_constant_s = self._estimator.noise_power.tolist(), self._estimator.time_constant_s
+        noise, time_constant_s = self._estimator.reception.noise_power.tolist(), self._estimator.time_constant_s
         events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
         return Outcome(events, steps, fit.error)
 
@@ -297,7 +298,7 @@ class Tracker:
             adopted, self._adopted = self._adopted, None
             return self._refresher.adopt(channel, adopted, stand), 0
         # Without lock nothing is known of what another pattern would give: the one in use stays.
-        if self._mode is Mode.HELD or self._estimator.lock is Lock.LOST:
+        if self._mode is Mode.HELD or self._estimator.reception.lock is Lock.LOST:
             return None, 0
         if not (self._refresher.due(bursts) or self._pending_cause):
             return None, 0
@@ -317,10 +318,10 @@ class Tracker:
         in_use = told if told is not None else self._refresher.latest
         chosen = self._refresher.states(in_use)
         if chosen is None:
-            return Link(in_use, None, None, *self._estimator.phase)
+            return Link(in_use, None, None, *self._estimator.reception.phase)
         sounded = Frames.together([part.showing(panel.pack(chosen)) for part in frames])
         measured = None
         if sounded.time_ns.size:
-            measured = float(np.log2(1.0 + self._estimator.powers(sounded)).mean())
-        predicted = rate(channel, chosen) if self._estimator.lock is not Lock.LOST else None
-        return Link(in_use, measured, predicted, *self._estimator.phase)
+            measured = float(np.log2(1.0 + self._estimator.reception.powers(sounded)).mean())
+        predicted = rate(channel, chosen) if self._estimator.reception.lock is not Lock.LOST else None
+        return Link(in_use, measured, predicted, *self._estimator.reception.phase)

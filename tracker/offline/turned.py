@@ -12,8 +12,9 @@ from numpy.typing import NDArray
 
 from tracker.engine import panel
 from tracker.engine.config import Config
-from tracker.engine.estimator import Estimator, Frames
+from tracker.engine.estimator import Estimator
 from tracker.engine.following import Lock
+from tracker.engine.frames import Frames
 
 from .recorded import Piece
 
@@ -99,7 +100,7 @@ def turn(pieces: Iterable[Piece], config: Config, estimate_every: int) -> Turnin
         count = piece.frames.time_ns.shape[0]
         frames, warm = frames + count, warm + count
         first_ns, last_ns = first_ns or int(piece.frames.time_ns[0]), int(piece.frames.time_ns[-1])
-        if warm <= estimator.ready_after or estimator.lock is not Lock.LOCKED:
+        if warm <= estimator.ready_after or estimator.reception.lock is not Lock.LOCKED:
             continue
         channel = estimator.channel()
         stretches.append(_turned(piece, fit.error, estimator, config, channel.direct))
@@ -120,9 +121,9 @@ def _turned(piece: Piece, error: float, estimator: Estimator, config: Config, di
     middle_ns = int(frames.time_ns[0] + (frames.time_ns[-1] - frames.time_ns[0]) // 2)
     time_s = (frames.time_ns - middle_ns) / 1e9
     outputs = []
-    for receiver, following in enumerate(estimator.following):
+    for receiver, following in enumerate(estimator.reception.following):
         tones = following.take_off_delay(frames.response[:, receiver].astype(np.complex128))
-        heard = (tones @ config.delay.conj()) / np.sqrt(estimator.noise_power[receiver])
+        heard = (tones @ config.delay.conj()) / np.sqrt(estimator.reception.noise_power[receiver])
         phase_d, phase_s = following.loops.phases(time_s)
         difference = phase_d - phase_s
         # The estimate of the direct path stands where the path stood at the last frame.

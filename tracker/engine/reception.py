@@ -1,0 +1,154 @@
+"""Reception: from responses on the tones to outputs on the delay basis, in units of the noise, each delay in place."""
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from . import noise
+from .config import Config
+from .drift import Reading
+from .following import Following, Lock
+from .frames import Frames
+from .timing import TimingLoop
+
+
+class Reception:
+    """What is known of the receivers apart from the channel: noise, and where followed, phases and clocks.
+
+    Parameters
+    ----------
+    config : Config
+    """
+
+    def __init__(self, config: Config) -> None:
+        self._delay, self._adjoint = config.delay, np.ascontiguousarray(config.delay.conj())
+        self._frequency_hz = config.frequency_hz
+        self._noise = noise.NoiseEstimate(config.receivers)
+        self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
+        self._heard_degrees = 0
+        self.following: list[Following] = []
+        if config.follow_phase:
+            patience = config.aperture.size + 1
+            self.following = [Following(patience, self._timing()) for _ in range(config.receivers)]
+
+    @property
+    def directions(self) -> int:
+        """Q, directions of the delay basis."""
+        return int(self._adjoint.shape[1])
+
+    @property
+    def noise_power(self) -> NDArray[np.float64]:
+        """Noise power on a tone, shape (R,), in the units of |response|²."""
+        return self._noise.power
+
+    @property
+    def lock(self) -> Lock:
+        """The worst lock of all receivers; locked when nothing is followed."""
+        locks = [following.lock for following in self.following]
+        return next((lock for lock in (Lock.LOST, Lock.SEARCHING) if lock in locks), Lock.LOCKED)
+
+    @property
+    def phase(self) -> tuple[float, tuple[float, float]]:
+        """Frequency offset, Hz, and phases of direct and surface path, rad, of the first receiver followed."""
+        return (self.following[0].offset_hz, self.following[0].phases) if self.following else (0.0, (0.0, 0.0))
+
+    def begin(self, time_ns: NDArray[np.int64]) -> None:
+        """Go forward to frames of these times, shape (B,)."""
+        for following in self.following:
+            following.begin(time_ns)
+
+    def take(self, frames: Frames) -> tuple[NDArray[np.complex128], NDArray[np.float64] | None]:
+        """Measure the noise of frames, and bring them to the delay basis in its unit.
+
+        Parameters
+        ----------
+        frames : Frames
+
+        Returns
+        -------
+        outputs : ndarray of complex, shape (B, R Q)
+        changed : ndarray, shape (R,), or None
+            Noise power before over noise power now: by this an estimate in the old unit is out; None at first.
+        """
+        tones, coefficients = self._project(frames)
+        known, before = self._noise.known, self._noise.power
+        self._measure(frames.patterns, tones, coefficients)
+        return self._in_noise_units(coefficients), before / self._noise.power if known else None
+
+    def first(self, frames: Frames) -> NDArray[np.complex128]:
+        """Bring the first frames of all to outputs as `take` does, without yet counting their noise."""
+        tones, coefficients = self._project(frames)
+        kept = self._noise.snapshot()
+        if not self._noise.known:
+            self._measure(frames.patterns, tones, coefficients)
+        outputs = self._in_noise_units(coefficients)
+        self._noise.load(kept)
+        self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
+        return outputs
+
+    def powers(self, frames: Frames) -> NDArray[np.float64]:
+        """|H|² in units of the noise, unbiased, shape (R, K): the mean over frames."""
+        tones = self._project(frames)[1] @ self._delay.T
+        bias = (np.abs(self._delay) ** 2).sum(axis=1)
+        power = (np.abs(tones) ** 2).mean(axis=0) / self._noise.power[:, None] - bias
+        return np.asarray(np.maximum(power, 0.0))
+
+    def readings(self) -> list[Reading]:
+        """Give samples of the noise heard since the last call, one a receiver."""
+        if not self._heard_degrees:
+            return []
+        heard = np.maximum(self._heard / self._heard_degrees, noise.FLOOR)
+        degrees = self._heard_degrees
+        self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
+        return [Reading(noise_of(receiver), float(power), degrees) for receiver, power in enumerate(heard)]
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state."""
+        return {
+            "noise": self._noise.snapshot(),
+            "following": [following.snapshot() for following in self.following],
+        }
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot."""
+        self._noise.load(snapshot["noise"])
+        for following, state in zip(self.following, snapshot["following"], strict=True):
+            following.load(state)
+
+    def _timing(self) -> TimingLoop | None:
+        return TimingLoop(self._delay, self._frequency_hz) if self._frequency_hz is not None else None
+
+    def _project(self, frames: Frames) -> tuple[NDArray[np.complex128], NDArray[np.complex128]]:
+        """Bring frames to double precision: on the tones, and on the delay basis."""
+        tones = frames.response.astype(np.complex128)
+        for receiver, following in enumerate(self.following):
+            tones[:, receiver] = following.take_off_delay(tones[:, receiver])
+        return tones, tones @ self._adjoint
+
+    def _in_noise_units(self, coefficients: NDArray[np.complex128]) -> NDArray[np.complex128]:
+        scale = 1.0 / np.sqrt(self._noise.power)
+        return np.asarray((coefficients * scale[:, None]).reshape(coefficients.shape[0], -1))
+
+    def _measure(
+        self, patterns: NDArray[np.uint8], tones: NDArray[np.complex128], coefficients: NDArray[np.complex128]
+    ) -> None:
+        frames, left_over = tones.shape[0], tones.shape[2] - coefficients.shape[2]
+        if left_over >= noise.LEAST_OUTSIDE:
+            power, degrees = noise.outside(tones, coefficients), frames * left_over
+        else:
+            power, frames = noise.repeats(patterns, coefficients)
+            degrees = frames * coefficients.shape[2]
+        if frames:
+            self._noise.update(power, frames, degrees)
+            self._heard += power * degrees
+            self._heard_degrees += degrees
+        elif not self._noise.known:
+            # Nothing repeats yet: take all that is heard for noise, which is cautious, until something does.
+            self._noise.update((np.abs(tones) ** 2).mean(axis=(0, 2)), 1, 1)
+
+
+def noise_of(receiver: int) -> str:
+    """Name of the statistic that watches a receiver's noise."""
+    return f"noise {receiver}"
