@@ -433,6 +433,8 @@ def test_lists_of_words_on_the_wire_are_complete() -> None:
     """Reasons of refusal, verbs, causes and modes are those that the program knows."""
     assert [names(cells[0])[0] for cells in rows("Why a burst is refused")] == [str(reason) for reason in Reason]
     assert [names(cells[0])[0] for cells in rows("Control: REQ to REP")] == [str(verb) for verb in Verb]
+    control = next(cells for cells in rows("Messages") if cells[0].startswith("[control]"))
+    assert names(control[1]) == [str(verb) for verb in Verb]
     causes = next(cells for cells in rows("`pattern/LINK`: tracker to controller") if cells[0] == "`cause`")
     assert names(causes[2]) == [str(cause) for cause in Cause]
     modes = next(cells for cells in rows("`state/LINK`: one a burst") if cells[0] == "`mode`")
