@@ -171,6 +171,7 @@ def test_a_journal_that_cannot_begin_says_why(tmp_path: Path) -> None:
 
 def test_a_failing_sync_is_a_failing_disk(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """What the device did not take may be lost: the file is given up, and the next write says so."""
+    monkeypatch.setattr(syncing, "LOOK_S", 0.01)
     monkeypatch.setattr(syncing, "SYNC_S", 0.01)
 
     def broken(file: int) -> None:

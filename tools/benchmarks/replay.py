@@ -22,7 +22,7 @@ LEAST_TIMES_REAL = 3.0
 
 def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
-    scene, seconds = scenario("quiet"), 4.0 if quick else 60.0
+    scene, seconds = scenario("quiet"), 2.0 if quick else 60.0
     with work_folder() as folder:
         play(write_settings(scene, folder), bodies(scene, 200), seconds)
         logs = sorted((folder / "journal").glob("*.mcap"))

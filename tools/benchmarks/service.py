@@ -23,9 +23,9 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     still = replace(scenario("quiet"), time_constant_ms=500.0)
     moving = replace(scenario("slow-carrier"), time_constant_ms=20.0)
-    yield from _run("still", still, 5.0 if quick else 60.0, 1.0 if quick else 5.0, "")
+    yield from _run("still", still, 3.0 if quick else 60.0, 0.5 if quick else 5.0, "")
     # A short memory and no least gain: noise alone makes nearly every burst publish.
-    yield from _run("restless", moving, 3.0 if quick else 30.0, 0.0, "[refresh]\nleast_gain = 0.0")
+    yield from _run("restless", moving, 2.0 if quick else 30.0, 0.0, "[refresh]\nleast_gain = 0.0")
 
 
 def _run(name: str, scene: Scenario, seconds: float, idle_s: float, more: str) -> Iterator[Row]:

@@ -96,7 +96,7 @@ class Journal:
         except OSError as error:
             self._give_up(_said(error))
             return False
-        self._syncer.dirty = True
+        self._syncer.wrote(sum(len(body) for _, body, _, _ in entries))
         return True
 
     @property

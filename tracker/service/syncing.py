@@ -1,14 +1,19 @@
 """Syncs the journal to the device from a thread of its own, where it may block for as long as it likes.
 
-A killed process loses nothing without this; a machine that loses power does.
+A killed process loses nothing without this; a machine that loses power does. Little is synced at a time: while much is
+under way, a write to the same file waits for it, and with it the loop (measured on ext4: up to 14 ms with 30 MB a
+sync, 1 ms with 4 MB).
 """
 
 import os
 import threading
+import time
 from pathlib import Path
 
-# Distance of syncs, s.
+# A sync is due after so many bytes, or after so long, s; the thread looks so often whether one is, s.
+SYNC_BYTES = 1_000_000
 SYNC_S = 1.0
+LOOK_S = 0.05
 # Closing waits no longer than this for a device that hangs, s.
 PATIENCE_S = 10.0
 
@@ -21,18 +26,16 @@ class Syncer:
 
     Attributes
     ----------
-    dirty : bool
-        Set by whoever has written; cleared before a sync.
     fault : str
         Why the device did not take the file in hand; empty while it does.
     """
 
     def __init__(self) -> None:
-        self.dirty = False
         self.fault = ""
         self._lock = threading.Lock()
         self._file: int | None = None
         self._ended: list[int] = []  # files synced a last time, and closed, by the thread
+        self._unsynced = 0
         self._closing = threading.Event()
         self._thread = threading.Thread(target=self._run, name="journal-sync", daemon=True)
         self._thread.start()
@@ -52,6 +55,10 @@ class Syncer:
             self._file = file
             self.fault = ""
 
+    def wrote(self, size: int) -> None:
+        """Note that so many bytes were written to the file in hand."""
+        self._unsynced += size
+
     def close(self) -> None:
         """Sync a last time and end the thread."""
         self.watch(None)
@@ -59,26 +66,33 @@ class Syncer:
         self._thread.join(PATIENCE_S)
 
     def _run(self) -> None:
-        while not self._closing.wait(SYNC_S):
-            self._sync_all()
+        last_s = time.monotonic()
+        while not self._closing.wait(LOOK_S):
+            if self._ended or self._unsynced >= SYNC_BYTES or time.monotonic() - last_s >= SYNC_S:
+                self._sync_all()
+                last_s = time.monotonic()
         self._sync_all()
 
     def _sync_all(self) -> None:
         with self._lock:
             ended, self._ended = self._ended, []
-            file, dirty = self._file, self.dirty
-            self.dirty = False
+            file, unsynced = self._file, self._unsynced
+            self._unsynced = 0
         for each in ended:
-            self._try(each, None)
+            self._try(each)
             os.close(each)
-        if file is not None and dirty:
+        if file is not None and unsynced:
             # Outside of the lock: only this thread closes files, so `file` stays valid.
-            self._try(file, file)
+            fault = self._try(file)
+            with self._lock:
+                if fault and self._file == file:
+                    self.fault = fault
 
-    def _try(self, file: int, in_hand: int | None) -> None:
+    @staticmethod
+    def _try(file: int) -> str:
+        """Sync a file; why it failed, if it did."""
         try:
             _sync(file)
         except OSError as error:
-            with self._lock:
-                if in_hand is not None and self._file == in_hand:
-                    self.fault = error.strerror or str(error)
+            return error.strerror or str(error)
+        return ""
