@@ -1,4 +1,4 @@
-"""How good the pattern in force is while things move, and what a basis of few columns brings, against the best there is.
+"""How good the pattern in force is while things move, with bases of all kinds, against the best there is.
 
 The engine and the stand-in testbed in simulated time: the container yard in the shadow of the stacks, 28 000 frames a
 second in bursts of 64 unless told otherwise, 128 of 256 tones, one receiver; Hadamard sweeps, every eighth frame sounds
