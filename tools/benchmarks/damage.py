@@ -47,7 +47,7 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     scene, count = scenario("quiet"), 10 if quick else 100
     with work_folder() as folder:
-        play(write_settings(scene, folder), bodies(scene, 100), 0.5 if quick else 1.0)
+        play(write_settings(scene, folder), bodies(scene, 450), 0.5 if quick else 1.0)
         (path,) = (folder / "journal").glob("*.mcap")
         log, spoilt = _read(path), folder / "spoilt.mcap"
         rng = random.Random(41)

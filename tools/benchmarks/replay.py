@@ -24,7 +24,7 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     scene, seconds = scenario("quiet"), 2.0 if quick else 60.0
     with work_folder() as folder:
-        play(write_settings(scene, folder), bodies(scene, 200), seconds)
+        play(write_settings(scene, folder), bodies(scene), seconds)
         logs = sorted((folder / "journal").glob("*.mcap"))
         size_mb = sum(log.stat().st_size for log in logs) / 1e6
         runs = [_replayed(logs, folder / f"{turn}.mcap") for turn in range(2 if quick else 3)]
