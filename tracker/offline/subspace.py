@@ -30,9 +30,9 @@ Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
 # Turns; after the first the columns hardly move.
-TURNS = 4
+TURNS = 3
 # Steps of conjugate gradients a turn.
-STEPS = 5
+STEPS = 4
 # Variance that a column is granted at least, relative to the strongest.
 LEAST_VARIANCE = 1e-5
 
