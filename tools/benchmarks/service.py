@@ -22,7 +22,7 @@ MOST_P99_MS = 5.0
 
 def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
-    yield from _run("still", scenario("quiet"), 3.0 if quick else 60.0, 0.5 if quick else 5.0, "")
+    yield from _run("still", scenario("quiet"), 3.0 if quick else 60.0, 1.0 if quick else 5.0, "")
     # A short memory and no least gain: nearly every burst publishes.
     swaying = yard((Sway(Still(lane(0.0)[0]), (0.0, 0.02, 0.0), (CYCLE_S,) * 3),), shadow_db=42.0, snr_db=-8.0)
     restless = Scenario("restless", "a carrier sways", TestbedConfig(swaying), time_constant_ms=20.0)
