@@ -20,8 +20,8 @@ from tracker.assembly import configure
 from tracker.engine.budget import Steps
 from tracker.engine.drift import MEMORY, SLACKS, DriftMonitor
 from tracker.engine.estimator import Estimator
-from tracker.engine.frames import Frames
 from tracker.engine.events import Alarm, Event, Pattern
+from tracker.engine.frames import Frames
 from tracker.engine.run_length import threshold_for
 from tracker.engine.tracker import Tracker
 from tracker.settings import parse
