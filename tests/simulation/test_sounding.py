@@ -3,30 +3,8 @@
 import numpy as np
 import pytest
 
-from tracker.simulation.sounding import Sounder, SoundingConfig, hadamard, hadamard_order, one_by_one, sweep
-
-
-@pytest.mark.parametrize("order", [1, 2, 4, 8, 12, 20, 24, 40, 48, 44, 64, 104, 132])
-def test_hadamard_matrices_are_orthogonal(order: int) -> None:
-    """HᵀH = order · I, entries ±1 (definition; Sylvester, Paley 1933 and their doubling), column 0 all ones."""
-    matrix = hadamard(order).astype(int)
-    assert set(np.unique(matrix)) <= {-1, 1}
-    np.testing.assert_array_equal(matrix.T @ matrix, order * np.eye(order, dtype=int))
-    np.testing.assert_array_equal(matrix[:, 0], 1)
-
-
-def test_orders_lie_close_above_the_unknowns() -> None:
-    """For 1 025 unknowns 1 032 patterns do, 1 031 being a prime of 3 mod 4; a power of two would take 2 048."""
-    assert hadamard_order(1025) == 1032
-    assert hadamard_order(257) == 264
-    assert hadamard_order(65) == 68
-    assert hadamard_order(64) == 64
-
-
-def test_order_that_cannot_be_made_is_refused() -> None:
-    """92 needs a construction that is not here (Baumert, Golomb & Hall 1962)."""
-    with pytest.raises(ValueError, match="92"):
-        hadamard(92)
+from tracker.engine.hadamard import hadamard_order
+from tracker.simulation.sounding import Sounder, SoundingConfig, one_by_one, sweep
 
 
 @pytest.mark.parametrize("elements", [7, 64, 100])

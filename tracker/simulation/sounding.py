@@ -1,53 +1,16 @@
 """Which patterns the frames sound: sweeps of orthogonal patterns, random ones, one element at a time.
 
 With unknowns [1, s] the patterns of one sweep are the rows of a Hadamard matrix: column 0, all ones, sounds the
-direct path, one column each an element, and columns left over belong to phantom elements that no panel has. Orders
-come from Sylvester (powers of two), from Paley's first construction (q + 1, q a prime of 3 mod 4) and from doubling
-either, so that one lies close above N + 1.
+direct path, one column each an element, and columns left over belong to phantom elements that no panel has.
 """
 
 from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
-import scipy.linalg
 from numpy.typing import NDArray
 
-
-def hadamard_order(least: int) -> int:
-    """Smallest order of at least `least` that `hadamard` can make."""
-    order = max(least, 1)
-    while not _makeable(order):
-        order += 1
-    return order
-
-
-def hadamard(order: int) -> NDArray[np.int8]:
-    """Make a Hadamard matrix whose column 0 is all ones.
-
-    Parameters
-    ----------
-    order : int
-        As given by `hadamard_order`.
-
-    Returns
-    -------
-    ndarray of int8, shape (order, order)
-        Entries ±1; its columns are orthogonal.
-
-    Raises
-    ------
-    ValueError
-        When no construction here has this order.
-    """
-    if not _makeable(order):
-        raise ValueError(f"no Hadamard matrix of order {order} can be made here")
-    if order & (order - 1) == 0:
-        return np.asarray(scipy.linalg.hadamard(order), dtype=np.int8)
-    if _paley(order):
-        return _paley_matrix(order)
-    half = hadamard(order // 2)
-    return np.block([[half, half], [half, -half]])
+from tracker.engine.hadamard import hadamard, hadamard_order
 
 
 def sweep(elements: int, rng: np.random.Generator) -> NDArray[np.int8]:
@@ -157,31 +120,3 @@ class Sounder:
         self._place = (self._place + count) % self._cycle.shape[0]
         patterns: NDArray[np.int8] = self._cycle[places]
         return patterns
-
-
-def _prime(number: int) -> bool:
-    return number > 1 and all(number % divisor for divisor in range(2, int(number**0.5) + 1))
-
-
-def _paley(order: int) -> bool:
-    return order % 4 == 0 and _prime(order - 1)
-
-
-def _makeable(order: int) -> bool:
-    if order < 1:
-        return False
-    if order & (order - 1) == 0 or _paley(order):
-        return True
-    return order % 4 == 0 and _makeable(order // 2)
-
-
-def _paley_matrix(order: int) -> NDArray[np.int8]:
-    q = order - 1
-    character = np.full(q, -1, dtype=np.int8)
-    character[np.arange(1, q, dtype=np.int64) ** 2 % q] = 1
-    character[0] = 0
-    index = np.arange(q)
-    matrix = np.ones((order, order), dtype=np.int8)
-    # −(Q + I) below a row of ones: the rows are negated to make column 0 all ones.
-    matrix[1:, 1:] = -(character[(index[:, None] - index) % q] + np.eye(q, dtype=np.int8))
-    return matrix
