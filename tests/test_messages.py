@@ -393,6 +393,26 @@ def test_plans_travel() -> None:
     assert (found.event.elements, found.event.reference, found.link) == (20, 5, "yard")
 
 
+def test_how_often_and_with_what_service_travels() -> None:
+    """Share, flags and net rate come back; the flags are bits as in patterns, decoded here by NumPy alone."""
+    served = np.arange(11) % 3 == 1
+    body = encode_plan("yard", Plan(1, 2, 3, 9, np.zeros((11, 2), np.uint8), 0, 14, served, 2.5))
+    found = decode_plan(body).event
+    assert (found.every, found.net_rate) == (14, 2.5)
+    assert np.array_equal(found.in_service, served)
+    bits = np.frombuffer(msgpack.unpackb(body)["in_service"], np.uint8)
+    assert np.array_equal(np.unpackbits(bits, count=11, bitorder="little"), served)
+
+
+def test_a_plan_that_says_only_what_to_sound_is_understood() -> None:
+    """Every frame is sounded then, and none is in service."""
+    raw = msgpack.unpackb(encode_plan("yard", Plan(1, 2, 3, 9, np.zeros((2, 2), np.uint8), 1, 5)))
+    for key in ("every", "in_service", "net_rate"):
+        del raw[key]
+    found = decode_plan(msgpack.packb(raw)).event
+    assert (found.every, found.net_rate, found.in_service.size) == (1, None, 0)
+
+
 def test_whole_numbers_stand_for_floats() -> None:
     """Languages without a difference between 1 and 1.0 send integers where the format says float."""
     raw = msgpack.unpackb(encode_alarm("yard", ALARM)) | {"statistic": 5, "threshold": 4}
@@ -435,6 +455,9 @@ REPORT_CHANGES: list[tuple[Decoder, bytes, str, Any, Reason]] = [
     (decode_plan, PLAN_BODY, "reference", 2, Reason.OUT_OF_RANGE),
     (decode_plan, PLAN_BODY, "patterns", b"abc", Reason.SIZES),
     (decode_plan, PLAN_BODY, "patterns", [1, 2], Reason.WRONG_TYPE),
+    (decode_plan, PLAN_BODY, "every", 0, Reason.OUT_OF_RANGE),
+    (decode_plan, PLAN_BODY, "in_service", b"abc", Reason.SIZES),
+    (decode_plan, PLAN_BODY, "net_rate", "much", Reason.WRONG_TYPE),
     (decode_request, encode_request("status"), "do", "dance", Reason.OUT_OF_RANGE),
     (decode_request, encode_request("status"), "do", 1, Reason.WRONG_TYPE),
     (decode_request, encode_request("status"), "v", 3, Reason.VERSION),

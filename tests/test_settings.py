@@ -212,3 +212,11 @@ def test_settings_go_through_toml_unharmed() -> None:
     for table, values in tomllib.loads(WHOLE).items():
         for key, value in values.items():
             assert dumped[table][key] == value
+
+
+def test_shares_of_a_sounding_plan_must_be_in_order() -> None:
+    """One line names the table, both values and what is wrong with them; by default nothing is planned."""
+    assert parse(LEAST).sounding.plan is False
+    with pytest.raises(SettingsError) as raised:
+        parse(LEAST + "[sounding]\nplan = true\nleast_share = 0.6\nmost_share = 0.5\n")
+    assert str(raised.value) == ("settings.toml: sounding: least_share = 0.6 must not be above most_share = 0.5")

@@ -6,7 +6,7 @@ from pathlib import Path
 
 from tracker.basis_file import BasisError, unpack_basis
 from tracker.engine.aperture import ApertureBasis, Columns, Elements, Tiles
-from tracker.engine.config import Config
+from tracker.engine.config import Config, PlanConfig
 from tracker.engine.delay import delay_basis, frequencies
 from tracker.engine.panel import Limits
 from tracker.engine.region import Mirror, RegionBasis, Site, Vector, region_basis
@@ -49,6 +49,7 @@ def configure(settings: Settings, folder: Path, basis: bytes | None = None) -> C
         least_gain=refresh.least_gain,
         clock_skew_ns=round(settings.link.clock_skew_s * 1e9),
         limits=_limits(settings),
+        plan=_plan(settings),
     )
 
 
@@ -138,6 +139,21 @@ def _worked_out(site: Site, size: int) -> RegionBasis:
 def _vector(values: list[float]) -> Vector:
     x, y, z = values
     return x, y, z
+
+
+def _plan(settings: Settings) -> PlanConfig | None:
+    sounding = settings.sounding
+    if not sounding.plan:
+        return None
+    return PlanConfig(
+        frames_per_s=1e6 / sounding.frame_us,
+        most_frames=sounding.most_frames,
+        burst_s=sounding.burst_ms / 1e3,
+        least_share=sounding.least_share,
+        most_share=sounding.most_share,
+        in_service=sounding.in_service,
+        least_service=sounding.least_service,
+    )
 
 
 def _limits(settings: Settings) -> Limits:

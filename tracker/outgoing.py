@@ -2,8 +2,8 @@
 
 from collections.abc import Mapping
 
-from tracker.engine.events import Alarm, Event, Pattern
-from tracker.messages import encode_alarm, encode_pattern, encode_state
+from tracker.engine.events import Alarm, Event, Pattern, Plan
+from tracker.messages import encode_alarm, encode_pattern, encode_plan, encode_state
 
 
 def encode(link: str, event: Event, latency_us: int, stages_us: Mapping[str, int]) -> tuple[str, bytes, int]:
@@ -21,7 +21,7 @@ def encode(link: str, event: Event, latency_us: int, stages_us: Mapping[str, int
     Returns
     -------
     kind : str
-        ``pattern``, ``alarm`` or ``state``; the topic is kind/link.
+        ``pattern``, ``alarm``, ``plan`` or ``state``; the topic is kind/link.
     body : bytes
     t_ns : int
     """
@@ -29,4 +29,6 @@ def encode(link: str, event: Event, latency_us: int, stages_us: Mapping[str, int
         return "pattern", encode_pattern(link, event, latency_us), event.t_ns
     if isinstance(event, Alarm):
         return "alarm", encode_alarm(link, event), event.t_ns
+    if isinstance(event, Plan):
+        return "plan", encode_plan(link, event), event.t_ns
     return "state", encode_state(link, event, stages_us), event.t_ns

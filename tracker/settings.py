@@ -156,6 +156,25 @@ class Refresh(Table):
     most_changes: Positive | None = None
 
 
+class Sounding(Table):
+    """Whether the tracker plans what is sounded, and within what limits."""
+
+    plan: bool = False
+    frame_us: PositiveFloat = 35.714
+    burst_ms: PositiveFloat = 20.0
+    most_frames: Annotated[int, Field(ge=2, le=4096)] = 64
+    least_share: Annotated[float, Field(gt=0, le=1)] = 0.005
+    most_share: Annotated[float, Field(gt=0, le=1)] = 0.5
+    in_service: bool = False
+    least_service: Annotated[float, Field(ge=0, le=1)] = 0.8
+
+    @model_validator(mode="after")
+    def _ordered(self) -> "Sounding":
+        if self.least_share > self.most_share:
+            raise ValueError(f"least_share = {self.least_share} must not be above most_share = {self.most_share}")
+        return self
+
+
 class Sockets(Table):
     """Where bursts come from and patterns go to."""
 
@@ -194,6 +213,7 @@ class Settings(Table):
     follow: Follow = Follow()
     drift: Drift = Drift()
     refresh: Refresh = Refresh()
+    sounding: Sounding = Sounding()
     sockets: Sockets = Sockets()
     journal: Journal = Journal()
 

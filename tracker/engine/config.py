@@ -9,6 +9,35 @@ from .aperture import ApertureBasis
 from .panel import Limits
 
 
+@dataclass(frozen=True, slots=True)
+class PlanConfig:
+    """How the tracker may plan the sounding.
+
+    Parameters
+    ----------
+    frames_per_s : float
+        Frames a second, sounding and payload together.
+    most_frames : int
+        Frames of a plan.
+    burst_s : float
+        Time that a plan is to last: it has as many frames as fit in.
+    least_share, most_share : float
+        Of the frames, to be sounded.
+    in_service : bool
+        Whether the controller measures frames that carry payload.
+    least_service : float
+        Part of the rate in use that a frame in service must keep.
+    """
+
+    frames_per_s: float
+    most_frames: int = 64
+    burst_s: float = 0.02
+    least_share: float = 0.005
+    most_share: float = 0.5
+    in_service: bool = False
+    least_service: float = 0.8
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Config:
     """Settings of the engine, in its own terms.
@@ -40,6 +69,8 @@ class Config:
         Largest difference allowed between a burst's time and its arrival.
     limits : Limits
         What the panel cannot do.
+    plan : PlanConfig or None
+        How the sounding is planned; None leaves it to the controller.
     """
 
     receivers: int
@@ -55,6 +86,7 @@ class Config:
     least_gain: float = 0.01
     clock_skew_ns: int = 60_000_000_000
     limits: Limits = field(default_factory=Limits)
+    plan: PlanConfig | None = None
 
     @property
     def elements(self) -> int:

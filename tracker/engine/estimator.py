@@ -64,6 +64,18 @@ class Estimator:
         return self._config.aperture.size + 1
 
     @property
+    def surface_variances(self) -> tuple[float, float]:
+        """Mean variance of the surface's coefficients before any data, and now, in units of the noise.
+
+        Raises
+        ------
+        ValueError
+            Before the first frame.
+        """
+        rls = self._learned()
+        return float(rls.prior[1:].mean()), float(rls.variances[1:].mean())
+
+    @property
     def time_constant_s(self) -> float:
         """Time constant in use, s."""
         return self._bank.time_constant_s if self._bank is not None else self._config.time_constant_s

@@ -1,6 +1,6 @@
-"""What the engine says: a refreshed pattern, the state after a burst, an alarm."""
+"""What the engine says: a refreshed pattern, the state after a burst, an alarm, what to sound next."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import StrEnum
 
 import numpy as np
@@ -158,4 +158,37 @@ class Alarm:
     action: str
 
 
-Event = Pattern | State | Alarm
+@dataclass(frozen=True, slots=True, eq=False)
+class Plan:
+    """Patterns to sound next, in order, over and over until another plan comes.
+
+    Parameters
+    ----------
+    run, seq, t_ns : int
+        The last burst that the plan rests on, and the time of its last frame.
+    elements : int
+        N.
+    patterns : ndarray of uint8, shape (P, ceil(N/8))
+        Packed as in a burst; one burst has one frame for each.
+    reference : int
+        Which of them is the reference, the pattern in use. Patterns equal to it are references too.
+    every : int
+        One frame in so many is sounded, at even distances; the others carry payload under the pattern in use.
+    in_service : ndarray of bool, shape (P,), or empty for none
+        Frames that are to carry payload all the same, because their patterns are near the one in use.
+    net_rate : float or None
+        Predicted rate of payload over all frames, bit/s/Hz; None while nothing can be said.
+    """
+
+    run: int
+    seq: int
+    t_ns: int
+    elements: int
+    patterns: NDArray[np.uint8]
+    reference: int
+    every: int = 1
+    in_service: NDArray[np.bool_] = field(default_factory=lambda: np.zeros(0, dtype=np.bool_))
+    net_rate: float | None = None
+
+
+Event = Pattern | State | Alarm | Plan

@@ -22,11 +22,12 @@ from .channel import Channel
 from .config import Config
 from .drift import DriftMonitor, Suspicion
 from .estimator import Estimator
-from .events import Cause, Event, Mode, Pattern
+from .events import Cause, Event, Mode, Pattern, Plan
 from .following import KEPT, Lock
 from .frames import Fit, Frames
 from .innovation import DIRECT, INNOVATION
 from .lifecycle import Happening, after
+from .plan import Planner, Situation
 from .rate import rate
 from .reaction import HARMLESS, react
 from .refresh import Refresher, rate_spread
@@ -52,7 +53,7 @@ class Outcome:
     Parameters
     ----------
     events : list of Event
-        Alarms, then the pattern if one is published, then one state a burst.
+        Alarms, then the pattern if one is published, then the plan if one is, then one state a burst.
     steps : int
         Optimizer steps taken, 0 when none was due; a replay passes them back as its budget.
     error : float
@@ -81,6 +82,7 @@ class Tracker:
         self._drift = DriftMonitor(config.false_alarm_s, self._estimator.watched)
         self._refresher = Refresher(config, first_id)
         self._calibration = Calibration()
+        self._planner = Planner(config, config.plan) if config.plan is not None else None
         self._counts = Counts()
         self._mode = Mode.ACQUIRING
         self._frames_since = 0
@@ -192,6 +194,8 @@ class Tracker:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
             promised = self._calibration.promise(pattern.id, pattern.rate, spread)
             events.append(replace(pattern, rate_low=promised))
+        if self._planner is not None and (plan := self._plan(self._planner, channel, fit, frames, stand)):
+            events.append(plan)
         noise, time_constant_s = self._estimator.reception.noise_power.tolist(), self._estimator.time_constant_s
         events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
         return Outcome(events, steps, fit.error)
@@ -205,6 +209,7 @@ class Tracker:
             "drift": self._drift.snapshot(),
             "refresher": self._refresher.snapshot(),
             "calibration": self._calibration.snapshot(),
+            "planner": self._planner.snapshot() if self._planner is not None else None,
             "counts": [getattr(counts, name) for name in Counts.__slots__],
             "mode": str(self._mode),
             "frames_since": self._frames_since,
@@ -222,6 +227,8 @@ class Tracker:
         self._drift.load(snapshot["drift"])
         self._refresher.load(snapshot["refresher"])
         self._calibration.load(snapshot["calibration"])
+        if self._planner is not None:
+            self._planner.load(snapshot["planner"])
         self._counts = Counts(*(int(count) for count in snapshot["counts"]))
         self._mode = Mode(snapshot["mode"])
         self._frames_since = int(snapshot["frames_since"])
@@ -307,6 +314,29 @@ class Tracker:
             cause = Cause.FIRST
         self._pending_cause = None
         return self._refresher.choose(channel, cause, budget, stand)
+
+    def _plan(
+        self, planner: Planner, channel: Channel, fit: Fit, frames: Sequence[Frames], stand: Stand
+    ) -> Plan | None:
+        """Say what to sound next, when that is due."""
+        prior, variance = self._estimator.surface_variances
+        situation = Situation(
+            mode=self._mode,
+            lock=self._estimator.reception.lock,
+            in_use=self._refresher.states(self._refresher.latest),
+            channel=channel,
+            prior=prior,
+            variance=variance,
+            time_constant_s=self._estimator.time_constant_s,
+            fit=fit,
+            frames=sum(part.time_ns.size for part in frames),
+        )
+        before = planner.choice
+        plan = planner.advance(situation, stand)
+        if planner.choice != before:
+            # Frames sounded in another way fit the estimate in another way: the drift test needs a new baseline.
+            self._drift.reset()
+        return plan
 
     def _link(
         self,

@@ -4,12 +4,12 @@ Decoders take bytes from strangers: they raise `Refused` with a reason code or r
 the bytes are, and allocate no more than a small multiple of the body. Encoders are their exact inverse.
 """
 
+from tracker.engine.events import Plan
 from tracker.engine.refusal import Reason, Refused
 from tracker.messages.control import Reply, Request, Verb, decode_reply, decode_request, encode_reply, encode_request
 from tracker.messages.fields import MOST_BODY, VERSION
 from tracker.messages.patterns import (
     PatternMessage,
-    Plan,
     PlanMessage,
     decode_pattern,
     decode_plan,

@@ -6,15 +6,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.engine import events
+from tracker.engine.events import Plan
 from tracker.engine.panel import pack
-from tracker.messages.fields import MOST_ELEMENTS, UINT64, Body, encode, read_flat
+from tracker.messages.fields import MOST_ELEMENTS, UINT64, Body, Fields, encode, read_flat
 
 MOST_PLANNED = 65536
 
 _HEAD = ("v", "link", "run", "seq", "t_ns", "elements")
 _RATES = ("rate", "rate_low", "rate_before", "rate_bound")
 _PATTERN_KEYS = frozenset((*_HEAD, *_RATES, "id", "bits", "cause", "steps", "latency_us"))
-_PLAN_KEYS = frozenset((*_HEAD, "frames", "patterns", "reference"))
+_PLAN_KEYS = frozenset((*_HEAD, "frames", "patterns", "reference", "every", "in_service", "net_rate"))
 
 
 @dataclass(frozen=True, slots=True)
@@ -24,30 +25,6 @@ class PatternMessage:
     link: str
     event: events.Pattern
     latency_us: int
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Plan:
-    """Patterns to sound next, in order.
-
-    Parameters
-    ----------
-    run, seq, t_ns : int
-        The last burst that the plan rests on, and the time of its last frame.
-    elements : int
-        N.
-    patterns : ndarray of uint8, shape (P, ceil(N/8))
-        Packed as in a burst.
-    reference : int
-        Which of them is the reference, the one repeated within every burst.
-    """
-
-    run: int
-    seq: int
-    t_ns: int
-    elements: int
-    patterns: NDArray[np.uint8]
-    reference: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -111,11 +88,14 @@ def encode_plan(link: str, plan: Plan) -> bytes:
         elements=plan.elements,
         patterns=plan.patterns.tobytes(),
         reference=int(plan.reference),
+        every=int(plan.every),
+        in_service=np.packbits(plan.in_service, bitorder="little").tobytes(),
+        net_rate=None if plan.net_rate is None else float(plan.net_rate),
     )
 
 
 def decode_plan(body: Body) -> PlanMessage:
-    """Decode a sounding plan.
+    """Decode a sounding plan; keys that say how often and with what service may be missing.
 
     Raises
     ------
@@ -127,5 +107,21 @@ def decode_plan(body: Body) -> PlanMessage:
     elements = fields.integer("elements", 1, MOST_ELEMENTS)
     reference = fields.integer("reference", 0, frames - 1)
     patterns = fields.packed("patterns", frames, elements)
-    plan = Plan(**head, elements=elements, patterns=patterns, reference=reference)
+    plan = Plan(
+        **head,
+        elements=elements,
+        patterns=patterns,
+        reference=reference,
+        every=1 if fields.values.get("every") is None else fields.integer("every", 1, UINT64),
+        in_service=_flags(fields, frames),
+        net_rate=fields.optional_number("net_rate"),
+    )
     return PlanMessage(fields.check_link(), plan)
+
+
+def _flags(fields: Fields, frames: int) -> NDArray[np.bool_]:
+    """Which frames are in service, shape (frames,); empty when the sender says nothing of it."""
+    if not fields.values.get("in_service"):
+        return np.zeros(0, dtype=np.bool_)
+    packed = fields.packed("in_service", 1, frames)[0]
+    return np.unpackbits(packed, count=frames, bitorder="little").view(np.bool_)

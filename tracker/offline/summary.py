@@ -56,7 +56,7 @@ class Account:
             self.patterns += 1
         elif isinstance(event, Alarm):
             self.alarms[event.kind] += 1
-        else:
+        elif isinstance(event, State):
             self._take_state(event)
 
     def _take_state(self, state: State) -> None:

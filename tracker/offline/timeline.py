@@ -73,7 +73,7 @@ class Timeline:
             self._take_state(event)
         elif isinstance(event, Alarm):
             self._take_alarm(event)
-        else:
+        elif isinstance(event, Pattern):
             self._take_pattern(event)
 
     @property

@@ -9,7 +9,7 @@ from typing import Any
 
 import structlog
 
-from tracker.engine.events import Alarm, Event, Pattern
+from tracker.engine.events import Alarm, Event, Pattern, State
 
 # While patterns come thick and fast, one line tells of all of them so often, ns.
 TELL_EVERY_NS = 1_000_000_000
@@ -80,7 +80,7 @@ class Account:
                     threshold=round(event.threshold, 2),
                     action=event.action,
                 )
-            else:
+            elif isinstance(event, State):
                 self._log.debug("burst", seq=event.seq, mode=str(event.mode), together=event.together, **stages_us)
         self.tell()
 
