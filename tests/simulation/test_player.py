@@ -17,9 +17,9 @@ import pytest
 import zmq
 
 from tracker.engine.burst import Burst
-from tracker.engine.events import Cause, Pattern
+from tracker.engine.events import Cause, Pattern, Plan
 from tracker.engine.panel import unpack
-from tracker.messages import decode_pilots, encode_pattern
+from tracker.messages import decode_pilots, encode_pattern, encode_plan
 from tracker.simulation.__main__ import main
 from tracker.simulation.player import Endpoints, Player
 from tracker.simulation.searcher import Searcher
@@ -86,6 +86,30 @@ def test_bursts_go_out_and_patterns_come_into_force(wires: SimpleNamespace) -> N
     assert set(truth) == {"v", "link", "run", "seq", "t_ns", "pattern", "rate", "best", "event"}
     assert (truth["v"], truth["link"], truth["run"], truth["event"]) == (1, "yard", burst.run, None)
     assert 0 < truth["rate"] < truth["best"]
+
+
+def test_plans_are_obeyed_and_truth_says_what_is_left_for_payload(wires: SimpleNamespace) -> None:
+    """A plan published shows bit by bit in the bursts of scene `payload`, one frame in 7, and in the net rate."""
+    patterns = np.random.default_rng(2).integers(0, 256, (16, 32), dtype=np.uint8)
+    plan = encode_plan("yard", Plan(1, 0, 0, 256, patterns, 0, 7))
+    process = play(wires, "payload", "--truth-every", "0.05")
+    try:
+        burst, truth = None, None
+        while burst is None or burst.frames != 16 or truth is None or not truth["net"]:
+            wires.publishing.send_multipart([b"plan/yard", plan])
+            topic, body = wires.listening.recv_multipart()
+            if topic == b"pilots/yard":
+                burst = decode_pilots(body, "yard", None)
+            else:
+                truth = msgpack.unpackb(body)
+        process.send_signal(signal.SIGTERM)
+        process.communicate(timeout=PATIENCE_MS / 1e3)
+    finally:
+        process.kill()
+    assert process.returncode == 0
+    np.testing.assert_array_equal(burst.patterns, patterns)
+    assert burst.dt_ns == 7 * scenario("payload").testbed.frame_ns
+    assert truth["net"] == pytest.approx(6 / 7 * truth["rate"])
 
 
 def test_play_ends_by_itself_after_the_bursts_asked_for(wires: SimpleNamespace) -> None:

@@ -7,7 +7,7 @@ from pathlib import Path
 from tracker.assembly import configure
 from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
-from tracker.engine.events import Event, Pattern
+from tracker.engine.events import Event, Pattern, Plan
 from tracker.engine.tracker import Tracker
 from tracker.settings import Settings
 from tracker.simulation.testbed import Testbed
@@ -54,7 +54,7 @@ class EngineInLoop:
 def turns(
     testbed: Testbed, start_ns: int, bursts_per_s: float, count: int, engine: EngineInLoop | None = None
 ) -> Iterator[Turn]:
-    """Sound bursts at a pace; patterns that the engine publishes are in force from the next burst on.
+    """Sound bursts at a pace; patterns and plans that the engine publishes are in force from the next burst on.
 
     Parameters
     ----------
@@ -62,17 +62,20 @@ def turns(
     start_ns : int
         Time of the first frame, ns since the Unix epoch.
     bursts_per_s : float
-        Slower when a burst takes longer than that.
+        Slower when a burst takes longer than that; of no effect on a testbed that obeys plans, which never pauses.
     count : int
         Bursts to sound.
     engine : EngineInLoop or None
     """
-    period_ns = max(round(1e9 / bursts_per_s), testbed.burst_ns)
-    for number in range(count):
-        burst = testbed.next_burst(start_ns + number * period_ns)
+    pause_ns = 0 if testbed.config.obeys else max(round(1e9 / bursts_per_s) - testbed.burst_ns, 0)
+    arrival_ns = start_ns - pause_ns
+    for _ in range(count):
+        burst = testbed.next_burst(arrival_ns + pause_ns)
         arrival_ns = burst.t_ns + testbed.burst_ns
         events = engine.take(burst, arrival_ns) if engine is not None else ()
         yield Turn(burst, arrival_ns, events)
         for event in events:
             if isinstance(event, Pattern):
                 testbed.apply(event.id, event.states)
+            elif isinstance(event, Plan):
+                testbed.obey(event)

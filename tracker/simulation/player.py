@@ -1,4 +1,4 @@
-"""Plays a testbed in real time: bursts out, patterns in, like the controller of a real one."""
+"""Plays a testbed in real time: bursts out, patterns and plans in, like the controller of a real one."""
 
 import time
 from collections.abc import Callable
@@ -9,7 +9,7 @@ from typing import Any
 import msgpack
 import zmq
 
-from tracker.messages import Refused, decode_pattern, encode_pilots, topic
+from tracker.messages import Refused, decode_pattern, decode_plan, encode_pilots, topic
 from tracker.simulation.searcher import Known, Searcher
 from tracker.simulation.testbed import Testbed
 
@@ -38,7 +38,7 @@ class Endpoints:
     pilots : str
         Where to bind for bursts and truth.
     publish : str
-        The tracker's endpoint, to connect to for patterns; it need not be there yet.
+        The tracker's endpoint, to connect to for patterns and plans; it need not be there yet.
     link : str
 
     Raises
@@ -53,7 +53,9 @@ class Endpoints:
         self.out.setsockopt(zmq.SNDHWM, QUEUED)
         self.patterns = self._context.socket(zmq.SUB)
         self.pattern_topic = topic("pattern", link)
-        self.patterns.setsockopt(zmq.SUBSCRIBE, self.pattern_topic)
+        self.plan_topic = topic("plan", link)
+        for name in (self.pattern_topic, self.plan_topic):
+            self.patterns.setsockopt(zmq.SUBSCRIBE, name)
         for action, option, endpoint in (
             (self.out.bind, "--pilots", pilots),
             (self.patterns.connect, "--publish", publish),
@@ -84,23 +86,24 @@ class Played:
 
     Parameters
     ----------
-    bursts, patterns, truths : int
-        Sent, applied, sent.
+    bursts, patterns, plans, truths : int
+        Sent, applied, obeyed, sent.
     refused : int
-        Patterns that could not be used.
+        Patterns and plans that could not be used.
     late : int
         Bursts that began later than the pace asked for.
     """
 
     bursts: int = 0
     patterns: int = 0
+    plans: int = 0
     truths: int = 0
     refused: int = 0
     late: int = 0
 
 
 class Player:
-    """Sends bursts at a pace and applies the patterns that come back.
+    """Sends bursts at a pace, or as plans ask for them, and applies the patterns that come back.
 
     Frames carry the times at which they would have been on the air. When the machine is too slow for the pace, bursts
     begin later and say so in their times; it never sends old times.
@@ -134,7 +137,7 @@ class Player:
         self._testbed, self._endpoints, self._link = testbed, endpoints, link
         self._now_ns, self._say = now_ns, say
         self._searcher, self._truth_every_ns = searcher, round(truth_every_s * 1e9)
-        self._period_ns = max(round(1e9 / bursts_per_s), testbed.burst_ns)
+        self._period_ns = 0 if testbed.config.obeys else round(1e9 / bursts_per_s)
         self._pilots_topic, self._truth_topic = topic("pilots", link), topic("truth", link)
         self._stopping = False
         self._truth_due_ns = 0
@@ -163,34 +166,37 @@ class Player:
             self._wait(due_ns)
             if self._stopping:
                 return
-            self._burst(due_ns)
+            took_ns = self._burst(due_ns)
             self._truth()
-            due_ns += self._period_ns
+            due_ns += max(self._period_ns, took_ns)
             now_ns = self._now_ns()
             if now_ns > due_ns:
                 self.played.late += 1
                 due_ns = now_ns
             self._look_at_pace(now_ns)
 
-    def _burst(self, t_ns: int) -> None:
+    def _burst(self, t_ns: int) -> int:
+        """Sound a burst and send it; return how long it took on the air, ns."""
+        took_ns = self._testbed.burst_ns
         burst = self._testbed.next_burst(t_ns)
         body = encode_pilots(self._link, burst)
         if len(body) > MOST_BURST:
             raise PlayerError(f"a burst has {len(body)} bytes, at most {MOST_BURST} travel well; use fewer --frames")
         # The last frame has to be on the air before the burst can be complete.
-        self._wait(t_ns + self._testbed.burst_ns)
+        self._wait(t_ns + took_ns)
         self._endpoints.out.send_multipart([self._pilots_topic, body])
         self.played.bursts += 1
         self._last = (burst.run, burst.seq)
+        return took_ns
 
     def _wait(self, until_ns: int) -> None:
-        """Take in patterns until a time; at least those that are there already."""
+        """Take in patterns and plans until a time; at least those that are there already."""
         while True:
             left_s = (until_ns - self._now_ns()) / 1e9
             # Poll waits whole milliseconds; the last one is slept away.
             wait_ms = int(min(max(left_s, 0.0), LONGEST_POLL_S) * 1e3)
             while self._endpoints.patterns.poll(wait_ms):
-                self._pattern(self._endpoints.patterns.recv_multipart())
+                self._take(self._endpoints.patterns.recv_multipart())
                 wait_ms = 0
             if self._stopping or left_s <= 0:
                 return
@@ -198,18 +204,22 @@ class Player:
                 time.sleep(max((until_ns - self._now_ns()) / 1e9, 0.0))
                 return
 
-    def _pattern(self, parts: list[bytes]) -> None:
-        if len(parts) != 2 or parts[0] != self._endpoints.pattern_topic:
+    def _take(self, parts: list[bytes]) -> None:
+        """Apply a pattern, obey a plan; pass by what is neither."""
+        if len(parts) != 2:
             return
         try:
-            event = decode_pattern(parts[1]).event
-            self._testbed.apply(event.id, event.states)
+            if parts[0] == self._endpoints.pattern_topic:
+                event = decode_pattern(parts[1]).event
+                self._testbed.apply(event.id, event.states)
+                self.played.patterns += 1
+            elif parts[0] == self._endpoints.plan_topic:
+                self._testbed.obey(decode_plan(parts[1]).event)
+                self.played.plans += 1
         except (Refused, ValueError) as error:
             if not self.played.refused:
-                self._say(f"a pattern cannot be used and the one in force stays: {error}")
+                self._say(f"a pattern or plan cannot be used and the one in force stays: {error}")
             self.played.refused += 1
-            return
-        self.played.patterns += 1
 
     def _truth(self) -> None:
         searcher = self._searcher
@@ -222,7 +232,7 @@ class Player:
             now_ns = self._now_ns()
             if now_ns >= self._truth_due_ns and not searcher.busy:
                 self._truth_due_ns = now_ns + self._truth_every_ns
-                searcher.ask(now_ns, self._testbed.pattern_id, self._testbed.states)
+                searcher.ask(now_ns, self._testbed.pattern_id, self._testbed.states, self._testbed.plan)
         except (EOFError, OSError):
             self._searcher = None
             self._say("the search for the best rate ended by itself; bursts go on, what is true is no longer sent")
@@ -240,6 +250,8 @@ class Player:
             "best": known.best,
             "event": known.happening,
         }
+        if known.net is not None:
+            values["net"] = known.net
         self._endpoints.out.send_multipart([self._truth_topic, msgpack.packb(values)])
         self.played.truths += 1
 
@@ -253,8 +265,9 @@ class Player:
             return
         bursts, late = now[1] - self._looked[1], now[2] - self._looked[2]
         self._looked = now
-        if late > LATE_SHARE * bursts:
-            asked = 1e9 / self._period_ns
+        asked = 1e9 / max(self._period_ns, self._testbed.burst_ns)
+        # A stream has no pause to catch up in: there bursts may be late by a little without falling behind.
+        if late > LATE_SHARE * bursts and bursts / took_s < (1.0 - LATE_SHARE) * asked:
             self._say(
                 f"this machine gives {bursts / took_s:.0f} bursts/s where {asked:.0f} were asked for; times stay true"
             )

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 from threadpoolctl import threadpool_limits
 
+from tracker.engine.events import Plan
 from tracker.simulation.best import best_pattern
 from tracker.simulation.testbed import Testbed, TestbedConfig
 
@@ -36,6 +37,8 @@ class Known:
         The best rate found with the channel known exactly; not below `rate`.
     happening : str or None
         What the scene does, in words.
+    net : float or None
+        Rate of payload over all frames of the stream, bit/s/Hz; None when there is no stream.
     """
 
     t_ns: int
@@ -43,6 +46,7 @@ class Known:
     rate: float
     best: float
     happening: str | None
+    net: float | None = None
 
 
 class Searcher:
@@ -66,15 +70,15 @@ class Searcher:
         theirs.close()
         self.busy = False
 
-    def ask(self, t_ns: int, pattern_id: int | None, states: NDArray[np.int8]) -> None:
-        """Ask what is true at a time with this pattern in force.
+    def ask(self, t_ns: int, pattern_id: int | None, states: NDArray[np.int8], plan: Plan | None = None) -> None:
+        """Ask what is true at a time with this pattern, and this plan, in force.
 
         Raises
         ------
         OSError
             When the process has ended.
         """
-        self._pipe.send((t_ns, pattern_id, states))
+        self._pipe.send((t_ns, pattern_id, states, plan))
         self.busy = True
 
     def wait(self, seconds: float) -> bool:
@@ -112,9 +116,10 @@ def _answer(pipe: Connection, config: TestbedConfig, seed: int, start_ns: int, s
     testbed = Testbed(config, seed, start_ns=start_ns)
     with threadpool_limits(limits=1), contextlib.suppress(EOFError, ConnectionError):
         while True:
-            t_ns, pattern_id, states = pipe.recv()
+            t_ns, pattern_id, states, plan = pipe.recv()
             testbed.apply(pattern_id, states)
+            testbed.obey(plan)
             report = testbed.report(t_ns)
             best = best_pattern(report.channel, states, steps)[1]
             # Both are the same number, rounded differently, when the pattern in force is the best.
-            pipe.send(Known(t_ns, pattern_id, report.rate, max(best, report.rate), report.happening))
+            pipe.send(Known(t_ns, pattern_id, report.rate, max(best, report.rate), report.happening, report.net))

@@ -92,13 +92,29 @@ time_constant_ms = {float(self.time_constant_ms)}
 [follow]
 phase = {str(self.follow_phase).lower()}
 
-[sockets]
+{self._sounding()}[sockets]
 pilots = "{pilots}"
 publish = "{publish}"
 control = "{control}"
 
 [journal]
 folder = "{journal}"
+"""
+
+    def _sounding(self) -> str:
+        """Write the table of the sounding plan, for a testbed that obeys one."""
+        testbed = self.testbed
+        if not testbed.obeys:
+            return ""
+        return f"""\
+[sounding]
+plan = true
+frame_us = {testbed.frame_ns / 1e3}
+most_frames = {testbed.frames}
+most_share = 0.25
+in_service = true
+least_service = {testbed.least_service}
+
 """
 
 
@@ -188,6 +204,17 @@ def _moving() -> Scenario:
     )
 
 
+def _payload() -> Scenario:
+    moving = _moving()
+    return replace(
+        moving,
+        name="payload",
+        text="as moving, but frames carry payload and only those that the tracker plans are sounded",
+        testbed=replace(moving.testbed, obeys=True),
+        time_constant_ms=800.0,
+    )
+
+
 def _two_carriers() -> Scenario:
     idling = Sway(Still(lane(-4.0)[0]), amplitude=(0.001, 0.001, 0.002), period_s=(3.1, 2.3, 1.7))
     driving = Waypoints(lane(2.0, 5.0), 0.1, from_s=10.0, around=True)
@@ -206,6 +233,7 @@ SCENARIOS: dict[str, Callable[[], Scenario]] = {
     "slow-carrier": _slow_carrier,
     "blocked": _blocked,
     "moving": _moving,
+    "payload": _payload,
     "two-carriers": _two_carriers,
 }
 
