@@ -18,13 +18,14 @@ import zmq
 
 from tracker.assembly import configure
 from tracker.engine.burst import Burst
-from tracker.engine.events import Alarm, Event, Pattern, State
+from tracker.engine.events import Alarm, Event, Pattern, Plan, State
 from tracker.engine.tracker import Tracker
 from tracker.logs import LogWriter
 from tracker.messages import (
     Reply,
     decode_alarm,
     decode_pattern,
+    decode_plan,
     decode_reply,
     decode_state,
     encode_pilots,
@@ -50,6 +51,7 @@ DECODERS: Mapping[str, Callable[[bytes], Any]] = {
     "pattern": decode_pattern,
     "state": decode_state,
     "alarm": decode_alarm,
+    "plan": decode_plan,
 }
 
 # Keys of [estimator] under which noise alone makes every other burst publish a pattern.
@@ -111,6 +113,7 @@ class Heard:
     pattern: list[Pattern] = field(default_factory=list)
     state: list[State] = field(default_factory=list)
     alarm: list[Alarm] = field(default_factory=list)
+    plan: list[Plan] = field(default_factory=list)
     latency_us: list[int] = field(default_factory=list)
 
 
