@@ -162,6 +162,8 @@ def tell(model: LinkModel, scene: str, folder: Path) -> None:
     lines.append(("patterns", f"{model.patterns:,} published"))
     if model.achieved_so_far is not None:
         lines.append(("rate", f"{100 * model.achieved_so_far:.1f} % of the best possible, from the first burst on"))
+    if model.net_so_far is not None:
+        lines.append(("net rate", f"{100 * model.net_so_far:.1f} % of it, what sounding takes left out"))
     if latency is not None:
         lines.append(("latency", f"{latency[0]:.2f} ms median, {latency[1]:.2f} ms p99, from burst to pattern"))
     lines.append(("alarms", ", ".join(f"{count} {kind}" for kind, count in model.alarms.most_common()) or "none"))

@@ -16,8 +16,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 from rich.console import Console
 
-from tracker.engine.events import Alarm, Cause, Mode, Pattern, State
-from tracker.messages import encode_alarm, encode_pattern, encode_state
+from tracker.engine.events import Alarm, Cause, Mode, Pattern, Plan, State
+from tracker.messages import encode_alarm, encode_pattern, encode_plan, encode_state
 from tracker.view import plain
 from tracker.view.model import LinkModel
 from tracker.view.sections import Scene
@@ -101,6 +101,29 @@ def shown(
     scene = Scene(model, "tcp://127.0.0.1:5601", shape, since=90.0, now=now)
     console.print(screen(scene, width, height), height=height)
     return console.export_text()
+
+
+def test_what_sounding_takes_is_shown_beside_the_rate() -> None:
+    """One frame in 12, 6 of 8 planned ones in service, the net rate by the plan and by the testbed; in one line too."""
+    model = full_model()
+    served = np.arange(8) >= 2
+    plan = Plan(7, 1200, 0, 12, np.zeros((8, 2), np.uint8), 0, 12, served, 4.95)
+    take(model, "plan", encode_plan("yard", plan), 100.0)
+    take(model, "truth", truth(net=5.05), 100.0)
+    text = shown(model, 140, 44)
+    assert "net of sounding 5.05" in text
+    assert "1 frame in 12, 75 % in service" in text
+    assert "net rate 4.95 predicted" in text
+    line = plain.line(model, 100.5, 90.0)
+    assert "net 5.05" in line
+    assert "sounding 1 frame in 12, 75 % in service" in line
+    assert model.net_so_far == pytest.approx(5.05 / 5.2)
+
+
+def test_nothing_is_said_of_sounding_where_nothing_is_planned() -> None:
+    """Neither a net rate nor a share."""
+    text = shown(full_model(), 140, 44) + plain.line(full_model(), 100.5, 90.0)
+    assert "sounding" not in text
 
 
 def test_the_screen_shows_the_numbers_that_were_published() -> None:

@@ -10,7 +10,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from tracker.engine import events
-from tracker.messages import AlarmMessage, PatternMessage, StateMessage
+from tracker.messages import AlarmMessage, PatternMessage, PlanMessage, StateMessage
 from tracker.view.trace import History
 
 REMEMBERED_PATTERNS = 256
@@ -36,12 +36,15 @@ class Truth:
         Best rate found with the channel known exactly, bit/s/Hz.
     event : str or None
         What happens to the channel now.
+    net : float or None
+        Rate of payload over all frames, those that are sounded included, bit/s/Hz; None when it does not say.
     """
 
     pattern: int | None
     rate: float
     best: float
     event: str | None
+    net: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,6 +90,7 @@ class LinkModel:
     state: events.State | None = None
     stages_us: dict[str, int] = field(default_factory=dict)
     pattern: events.Pattern | None = None
+    plan: events.Plan | None = None
     truth: Truth | None = None
     patterns: int = 0
     alarms: Counter[str] = field(default_factory=Counter)
@@ -100,7 +104,10 @@ class LinkModel:
     best: History = field(default_factory=History)
     innovation: History = field(default_factory=History)
     drift: History = field(default_factory=History)
+    net: History = field(default_factory=History)
     achieved_sum: float = 0.0
+    net_sum: float = 0.0
+    gross_sum: float = 0.0
     best_sum: float = 0.0
     _latencies: deque[tuple[float, int]] = field(default_factory=deque)
     _published: dict[int, events.Pattern] = field(default_factory=dict)
@@ -149,6 +156,11 @@ class LinkModel:
         size = f"{alarm.statistic:.3g} against {alarm.threshold:.3g}"
         self.note(now, "alarm", f"{alarm.kind}{where}{runner_up}: {size}{since}; {alarm.action}", grave=True)
 
+    def take_plan(self, message: PlanMessage, now: float) -> None:
+        """Take in a sounding plan."""
+        self.heard_at = now
+        self.plan = message.event
+
     def take_truth(self, truth: Truth, now: float) -> None:
         """Take in what the stand-in testbed knows."""
         if truth.event and (self.truth is None or truth.event != self.truth.event):
@@ -160,6 +172,10 @@ class LinkModel:
         if math.isfinite(truth.rate) and math.isfinite(truth.best):
             self.achieved_sum += truth.rate
             self.best_sum += truth.best
+        if truth.net is not None and math.isfinite(truth.net) and math.isfinite(truth.rate):
+            self.net.add(now, truth.net)
+            self.net_sum += truth.net
+            self.gross_sum += truth.rate
 
     def take_unreadable(self, why: str, now: float) -> None:
         """Count a message that could not be read, and say so the first time."""
@@ -197,6 +213,11 @@ class LinkModel:
     def achieved_so_far(self) -> float | None:
         """The same over all that was heard, as the ratio of the sums."""
         return self.achieved_sum / self.best_sum if self.best_sum > 0 else None
+
+    @property
+    def net_so_far(self) -> float | None:
+        """Rate of payload over all frames, over the rate in force, as the ratio of the sums."""
+        return self.net_sum / self.gross_sum if self.gross_sum > 0 else None
 
     def latency_ms(self, now: float) -> tuple[float, float] | None:
         """Median and 99th percentile of burst-to-pattern latency over `latency_span_s`, ms."""

@@ -4,6 +4,9 @@ import time
 from collections.abc import Callable
 from typing import TextIO
 
+import numpy as np
+
+from tracker.engine.events import Plan
 from tracker.view.model import LinkModel
 from tracker.view.stream import Stream
 
@@ -13,6 +16,12 @@ SILENT_S = 3.0
 def figure(value: float | None, digits: int = 2) -> str:
     """Write a number with so many digits after the point, or a dash when it is not known."""
     return "–" if value is None else f"{value:,.{digits}f}"
+
+
+def sounding(plan: Plan) -> str:
+    """Say how a plan has frames sounded."""
+    served = int(np.count_nonzero(plan.in_service))
+    return f"1 frame in {plan.every}" + (f", {100 * served // len(plan.patterns)} % in service" if served else "")
 
 
 def silence(model: LinkModel, now: float, since: float) -> str | None:
@@ -51,6 +60,8 @@ def line(model: LinkModel, now: float, since: float) -> str:
     rate = f"rate {figure(model.measured.last)} predicted {figure(model.predicted.last)}"
     if model.truth is not None:
         rate += f" best {figure(model.truth.best)}"
+    if model.truth is not None and model.truth.net is not None:
+        rate += f" net {figure(model.truth.net)}"
     if model.achieved is not None:
         rate += f" achieved {100 * model.achieved:.1f} %"
     parts.append(rate)
@@ -59,6 +70,8 @@ def line(model: LinkModel, now: float, since: float) -> str:
     if latency := model.latency_ms(now):
         parts.append(f"latency {latency[0]:.1f} / {latency[1]:.1f} ms")
     parts.append(f"patterns {model.patterns}")
+    if model.plan is not None:
+        parts.append(f"sounding {sounding(model.plan)}")
     parts.append(f"lost {state.lost} refused {state.refused}")
     parts.append(f"alarms {model.alarms.total()}")
     return ", ".join(parts)

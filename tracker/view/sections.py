@@ -15,7 +15,7 @@ from rich.text import Text
 from tracker.engine.events import Mode
 from tracker.view.model import LinkModel, clean
 from tracker.view.palette import BAD, CAUTION, FILL, GOOD, QUIET
-from tracker.view.plain import figure, silence
+from tracker.view.plain import figure, silence, sounding
 from tracker.view.surface import panel_map, shape_guess
 from tracker.view.trace import AXIS, Column, History, Line, draw, scale
 
@@ -26,7 +26,7 @@ MODES = {
     Mode.REACQUIRING: ("◍", BAD),
     Mode.HELD: ("■", CAUTION),
 }
-MEASURED, PREDICTED, EXACT, BEST, LIMIT = "█", "┄", "•", "━", "┄"
+MEASURED, PREDICTED, EXACT, BEST, NET, LIMIT = "█", "┄", "•", "━", "◦", "┄"
 MOST_RECEIVERS = 6  # shown one by one; of more, the noisiest
 
 
@@ -165,6 +165,9 @@ def rate(scene: Scene) -> RenderableType:
         legend.append((f"{EXACT} in force {figure(model.truth.rate)}", ""))
         legend.append((f"{BEST} best {figure(model.truth.best)}", ""))
         lines += [(model.exact, EXACT), (model.best, BEST)]
+        if model.truth.net is not None:
+            legend.append((f"{NET} net of sounding {figure(model.truth.net)}", ""))
+            lines.append((model.net, NET))
     details: list[str | tuple[str, str]] = [f"bit/s/Hz, last {SPAN_S:.0f} s"]
     if model.achieved is not None:
         details.append((f"{100 * model.achieved:.1f} % of the best possible", "bold"))
@@ -246,6 +249,10 @@ def figures(scene: Scene) -> Table:
     if model.pattern is not None:
         gain = model.pattern.rate - model.pattern.rate_before
         grid.add_row("", f"the last gains {gain:.2f}, holds {model.pattern.rate_low:.2f}")
+    if model.plan is not None:
+        grid.add_row("sounding", sounding(model.plan))
+        if model.plan.net_rate is not None:
+            grid.add_row("", f"net rate {figure(model.plan.net_rate)} predicted")
     grid.add_row("time constant", f"{state.time_constant_ms:,.0f} ms")
     grid.add_row("offset", f"{state.offset_hz:+.1f} Hz")
     return grid

@@ -6,11 +6,11 @@ from types import TracebackType
 import zmq
 
 from tracker.engine.refusal import Refused
-from tracker.messages import decode_alarm, decode_pattern, decode_state, topic
+from tracker.messages import decode_alarm, decode_pattern, decode_plan, decode_state, topic
 from tracker.messages.fields import UINT64, read_nested
 from tracker.view.model import LinkModel, Truth
 
-KINDS = ("pattern", "state", "alarm", "truth")
+KINDS = ("pattern", "state", "alarm", "plan", "truth")
 # A view that falls behind loses messages rather than memory; a minute at the fastest pace is a few thousand.
 MOST_QUEUED = 10_000
 
@@ -95,6 +95,8 @@ def take(model: LinkModel, kind: str, body: bytes, now: float) -> None:
             model.take_pattern(decode_pattern(body), now)
         elif kind == "alarm":
             model.take_alarm(decode_alarm(body), now)
+        elif kind == "plan":
+            model.take_plan(decode_plan(body), now)
         else:
             model.take_truth(decode_truth(body), now)
     except Refused as refused:
@@ -114,4 +116,5 @@ def decode_truth(body: bytes) -> Truth:
         rate=fields.number("rate"),
         best=fields.number("best"),
         event=None if fields.values.get("event") is None else fields.text("event"),
+        net=fields.optional_number("net"),
     )
