@@ -96,16 +96,7 @@ class Estimator:
             return replace(self._take(self._bank, together), readings=self._readings())
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
-        degrees = sum(fit.degrees for fit in fits)
-        return Fit(
-            ratio=np.asarray(sum(fit.ratio * fit.degrees for fit in fits) / degrees),
-            degrees=degrees,
-            elapsed_s=sum(fit.elapsed_s for fit in fits),
-            error=sum(fit.error * fit.degrees for fit in fits) / degrees,
-            lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
-            left_out=sum(fit.left_out for fit in fits),
-            readings=self._readings(),
-        )
+        return replace(Fit.together(fits), readings=self._readings())
 
     def _begin(self, frames: Frames) -> Bank:
         """Start from the first block: how strong the paths may be."""

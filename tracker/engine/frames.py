@@ -87,3 +87,16 @@ class Fit:
     lost: tuple[int, ...] = ()
     left_out: int = 0
     readings: tuple[Reading, ...] = ()
+
+    @classmethod
+    def together(cls, fits: Sequence["Fit"]) -> "Fit":
+        """Put fits of one part after the other into one, without readings: those belong to each part."""
+        degrees = sum(fit.degrees for fit in fits)
+        return cls(
+            ratio=np.asarray(sum(fit.ratio * fit.degrees for fit in fits) / degrees),
+            degrees=degrees,
+            elapsed_s=sum(fit.elapsed_s for fit in fits),
+            error=sum(fit.error * fit.degrees for fit in fits) / degrees,
+            lost=tuple(sorted({receiver for fit in fits for receiver in fit.lost})),
+            left_out=sum(fit.left_out for fit in fits),
+        )

@@ -24,7 +24,7 @@ THOROUGH_EVERY = 256
 # Bursts after which a controller that still shows another pattern than the latest is sent it again.
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
-WORTH_A_LOOK = 0.6
+WORTH_A_LOOK = 0.8
 
 
 class Refresher:

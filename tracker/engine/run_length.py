@@ -37,7 +37,7 @@ def one_sided(threshold: float, slack: float, shift: float) -> float:
     shift : float
         Mean of the samples, in standard deviations.
     """
-    points, weights = np.polynomial.legendre.leggauss(NODES)
+    points, weights = _quadrature()
     node = np.concatenate(([0.0], 0.5 * threshold * (points + 1.0)))
     gap = node[None, :] + slack - node[:, None] - shift
     kernel = np.exp(-0.5 * gap * gap) / math.sqrt(2.0 * math.pi)
@@ -88,6 +88,13 @@ def threshold_for(run_length: float, slack: float, doubt: float = 0.0) -> float:
         return sure
     inside = slack * slack - 4.0 * doubt * slack * sure
     return (slack - math.sqrt(inside)) / (2.0 * doubt) if inside >= 0.0 else math.inf
+
+
+@lru_cache(maxsize=1)
+def _quadrature() -> tuple[Real, Real]:
+    """Nodes and weights on [−1, 1]; finding them takes longer than all the rest."""
+    points, weights = np.polynomial.legendre.leggauss(NODES)
+    return np.asarray(points), np.asarray(weights)
 
 
 @lru_cache(maxsize=16)

@@ -170,19 +170,17 @@ class Tracker:
         """
         stand = Stand(bursts[-1].run, bursts[-1].seq, bursts[-1].end_ns)
         frames = [Frames.of(burst) for burst in bursts]
-        fit = self._estimator.update(frames)
-        self._count(bursts)
-        self._counts.dropped_frames += fit.left_out
         events: list[Event] = []
         if self._gap:
             events.append(gap_alarm(*self._gap, stand))
             self._gap = None
-        for receiver in fit.lost:
-            events.append(lock_alarm(receiver, self._estimator.reception.following[receiver].quality, KEPT, stand))
-        suspicion = self._follow_drift(fit)
-        answer = self._answer(suspicion, sum(burst.frames for burst in bursts)) if suspicion else None
-        if suspicion and answer:
-            events.append(drift_alarm(suspicion, *answer, stand))
+        # Bursts are estimated and watched one by one, so that neither depends on how many had to wait together; the
+        # search for a pattern, and all that follows, is done once for the block.
+        fits = []
+        for burst, part in zip(bursts, frames, strict=True):
+            fits.append(self._estimator.update([part]))
+            events.extend(self._watch(burst, fits[-1]))
+        fit = Fit.together(fits)
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
         self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
@@ -246,13 +244,21 @@ class Tracker:
         self._drift.reset()
         self._refresher.begin_afresh()
 
-    def _count(self, bursts: Sequence[Burst]) -> None:
-        for burst in bursts:
-            kept = int(np.count_nonzero(burst.keep))
-            self._counts.bursts += 1
-            self._counts.frames += kept
-            self._counts.dropped_frames += burst.frames - kept
-            self._frames_since += kept
+    def _watch(self, burst: Burst, fit: Fit) -> list[Event]:
+        """Count a burst that was taken in, and see whether it fits; return alarms."""
+        kept = int(np.count_nonzero(burst.keep))
+        self._counts.bursts += 1
+        self._counts.frames += kept
+        self._counts.dropped_frames += burst.frames - kept + fit.left_out
+        self._frames_since += kept
+        stand = Stand(burst.run, burst.seq, burst.end_ns)
+        following = self._estimator.reception.following
+        alarms: list[Event] = [lock_alarm(one, following[one].quality, KEPT, stand) for one in fit.lost]
+        suspicion = self._follow_drift(fit)
+        answer = self._answer(suspicion, burst.frames) if suspicion else None
+        if suspicion and answer:
+            alarms.append(drift_alarm(suspicion, *answer, stand))
+        return alarms
 
     def _follow_drift(self, fit: Fit) -> Suspicion | None:
         """Move through the lifecycle; return a change that calls for an alarm."""
