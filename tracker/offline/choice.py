@@ -19,6 +19,8 @@ from .turned import Stretch
 # Every so many blocks of stretches one is held out.
 HELD_OUT_EVERY = 10
 HELD_OUT_AT = 5
+# A share of the energy that is no better known than this is none.
+WORST_KNOWN = 0.25
 # Frames of a block, in columns: they have to tell the coefficients of the columns and what is left over.
 FRAMES_A_COLUMN = 2
 
@@ -134,15 +136,13 @@ def share_held(stretches: Sequence[Stretch], space: Subspace, blocks: Blocks) ->
     Returns
     -------
     Held or None
-        None when no block has more frames than unknowns, or the surface is not heard.
+        None when no block has more frames than unknowns, or too little is heard of the surface.
     """
     outside = heard = freedom = count = 0.0
     for members in _held_out(stretches, blocks):
-        rows = [_unrepeated(stretch.patterns) for stretch in members]
-        z = np.concatenate(
-            [regressors(stretch, space.columns)[row] for stretch, row in zip(members, rows, strict=True)]
-        )
-        outputs = np.concatenate([stretch.outputs[row] for stretch, row in zip(members, rows, strict=True)])
+        rows = _unrepeated(np.concatenate([stretch.patterns for stretch in members]))
+        z = np.concatenate([regressors(stretch, space.columns) for stretch in members])[rows]
+        outputs = np.concatenate([stretch.outputs for stretch in members])[rows]
         if z.shape[0] <= z.shape[1]:
             continue
         orthonormal = np.linalg.qr(z)[0]
@@ -155,7 +155,8 @@ def share_held(stretches: Sequence[Stretch], space: Subspace, blocks: Blocks) ->
     if not freedom or surface <= 0.0:
         return None
     share = 1.0 - (outside / freedom - 1.0) / surface
-    return Held(float(np.clip(share, 0.0, 1.0)), float(outside / freedom / np.sqrt(freedom) / surface))
+    deviation = float(outside / freedom / np.sqrt(freedom) / surface)
+    return Held(float(np.clip(share, 0.0, 1.0)), deviation) if deviation < WORST_KNOWN else None
 
 
 def _held_out(stretches: Sequence[Stretch], blocks: Blocks) -> Iterator[list[Stretch]]:

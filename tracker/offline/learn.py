@@ -142,9 +142,7 @@ def render(basis: LearnedBasis, out: Path, picture: Path) -> str:
             f"give or take {100 * basis.held_deviation:.1f}."
         )
     else:
-        lines.append(
-            "How much of the surface's energy the columns hold cannot be told: blocks of frames are too short."
-        )
+        lines.append("How much of the surface's energy the columns hold cannot be told: too little of it is heard.")
     if min(basis.errors) >= basis.elements_error:
         lines.append("They predict no better than every element for itself: record a longer log, or keep to elements.")
     lines.append(f"{out} is written, {picture} shows it.")
