@@ -123,6 +123,7 @@ def states(
     drift: DriftMonitor,
 ) -> list[State]:
     """One state for each burst of a block; they differ in what names the burst alone."""
+    statistic, threshold = drift.highest
     return [
         State(
             run=burst.run,
@@ -145,8 +146,8 @@ def states(
             pattern=link.pattern,
             faults=(),
             together=len(bursts),
-            statistic=drift.highest[0],
-            threshold=drift.highest[1],
+            statistic=statistic,
+            threshold=threshold,
             promise_kept=link.promise_kept,
         )
         for burst in bursts
