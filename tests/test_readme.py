@@ -34,11 +34,11 @@ from tracker.cli import COMMANDS
 from tracker.engine.burst import Burst
 from tracker.engine.changes import Evidence, Verdict, judge
 from tracker.engine.estimator import Estimator
-from tracker.engine.events import Alarm, Cause, Mode, Pattern, State
+from tracker.engine.events import Alarm, Cause, Mode, Pattern, Plan, State
 from tracker.engine.reaction import react
 from tracker.engine.refusal import Reason
 from tracker.engine.report import Stand, gap_alarm, lock_alarm
-from tracker.messages import Verb, encode_alarm, encode_pattern, encode_pilots, encode_state
+from tracker.messages import Verb, encode_alarm, encode_pattern, encode_pilots, encode_plan, encode_state
 from tracker.service.notices import Notices
 from tracker.settings import Settings, SettingsError, parse
 
@@ -46,7 +46,7 @@ ROOT = Path(__file__).resolve().parent.parent
 PAGES = {name: (ROOT / name).read_text(encoding="utf-8") for name in ("README.md", "MESSAGES.md", "DEVELOPERS.md")}
 README, MESSAGES = PAGES["README.md"], PAGES["MESSAGES.md"]
 PATIENCE_S = 60.0
-UNITS = {"_s": "s", "_ms": "ms", "_khz": "kHz", "_ghz": "GHz", "_mb": "MB", "_hours": "h"}
+UNITS = {"_s": "s", "_ms": "ms", "_us": "µs", "_khz": "kHz", "_ghz": "GHz", "_mb": "MB", "_hours": "h"}
 UNITS |= {"_mm": "mm", "_m": "m", "_db": "dB"}
 
 
@@ -256,7 +256,7 @@ def allowed(schema: dict[str, Any]) -> str | None:
         count, inner = schema["minItems"], schema["items"]
         return f"{count} numbers" if inner["type"] == "number" else f"{count} × {allowed(inner)}"
     if schema.get("exclusiveMinimum") == 0:
-        return "above 0"
+        return "above 0" + (f", at most {schema['maximum']:g}" if "maximum" in schema else "")
     if "minimum" in schema and "maximum" in schema:
         return f"{schema['minimum']} to {schema['maximum']}"
     return f"{schema['minimum']} or more" if "minimum" in schema else None
@@ -413,9 +413,11 @@ def sent() -> dict[str, dict[str, Any]]:
     values |= {"mode": Mode.TRACKING, "noise": (1.0,), "innovation": (1.0,), "phase_rad": (0.0, 0.0), "faults": ()}
     state = State(**values)
     alarm = Alarm(1, 2, 3, 3, "channel", None, 1.0, 1.0, "", "none")
+    plan = Plan(1, 2, 3, 8, np.zeros((1, 1), np.uint8), 0, 4, np.ones(1, np.bool_), 1.0)
     bodies = {
         "`pilots/LINK`: controller to tracker": encode_pilots("bench", burst),
         "`pattern/LINK`: tracker to controller": encode_pattern("bench", pattern, 1),
+        "`plan/LINK`: tracker to controller": encode_plan("bench", plan),
         "`state/LINK`: one a burst": encode_state("bench", state, {}),
         "`alarm/LINK`": encode_alarm("bench", alarm),
     }
