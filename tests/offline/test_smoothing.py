@@ -26,7 +26,9 @@ def stretches(outputs: int, gap: int = 4) -> list[Seen]:
 
 def test_it_is_the_smoother_of_rauch_tung_and_striebel() -> None:
     """Real values and one output: filterpy's Kalman filter and `rts_smoother` give the same means and covariances."""
-    real = [Seen(one.time_s, np.asarray(one.regressors.real + 0j), one.outputs.real + 0j, one.used) for one in stretches(1)]
+    real = [
+        Seen(one.time_s, np.asarray(one.regressors.real + 0j), one.outputs.real + 0j, one.used) for one in stretches(1)
+    ]
     track = smooth(real, VARIANCES, CONSTANT_S)
     peer = filterpy.kalman.KalmanFilter(dim_x=SIZE, dim_z=1)
     peer.x, peer.P = np.zeros((SIZE, 1)), np.diag(VARIANCES)

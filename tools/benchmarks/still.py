@@ -56,13 +56,15 @@ def rows(quick: bool) -> Iterator[Row]:
         ("N 320, 200 of 256 tones, two receivers", WIDE, 0.95),
     ):
         yield _row(f"still, {size}, two Hadamard sweeps: rate over the best", scene, "hadamard", seeds, target)
-        yield _row(f"still, {size}, as many random patterns: rate over the best", scene, "random", seeds, target)
+        yield _row(f"still, {size}, as many random patterns: rate over the best", scene, "random", seeds, None)
 
 
-def _row(name: str, scene: SceneConfig, kind: Literal["hadamard", "random"], seeds: range, target: float) -> Row:
+def _row(name: str, scene: SceneConfig, kind: Literal["hadamard", "random"], seeds: range, target: float | None) -> Row:
     scenario = Scenario("still", "nothing moves", TestbedConfig(scene, SoundingConfig(kind), FRAMES))
     ours, told = zip(*(after_two_sweeps(scenario, seed) for seed in seeds), strict=True)
     note = f"worst of {len(ours)} seeds {min(ours):.4f}; told noise and powers: mean {mean(told):.4f}"
+    if target is None:  # random patterns are no sweep: shown for what they cost
+        return Row(name, mean(ours), "ratio", note=note)
     return Row(name, mean(ours), "ratio", f">= {target}", mean(ours) >= target, note)
 
 
