@@ -1,5 +1,6 @@
 """The engine through its front door: bursts in, events out."""
 
+import warnings
 from dataclasses import replace
 from typing import Any
 
@@ -8,7 +9,7 @@ import pytest
 from numpy.typing import NDArray
 
 from tracker.engine import panel
-from tracker.engine.aperture import Elements, Tiles
+from tracker.engine.aperture import Columns, Elements, Tiles
 from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.channel import Channel
@@ -327,3 +328,17 @@ def test_tiles_estimate_fewer_unknowns() -> None:
     tracker = Tracker(_config(aperture=Tiles(16, 2, 1, 2)))
     events = _run(tracker, link, 45)
     assert rate(link.channel, _patterns(events)[-1].states) >= 0.97 * link.best()
+
+
+def test_a_sudden_change_is_noticed_in_a_complex_basis() -> None:
+    """With given complex columns a new channel raises an alarm too, and nothing complex is taken for real on the way."""
+    columns = np.linalg.qr(np.exp(2j * np.pi * np.random.default_rng(0).random((ELEMENTS, ELEMENTS))))[0]
+    link = Link(15)
+    tracker = Tracker(_config(aperture=Columns(columns, np.ones(ELEMENTS)), false_alarm_s=600.0))
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        _run(tracker, link, 250)
+        link.renew()
+        events = _run(tracker, link, 40)
+    assert _alarms(events)
+    assert rate(link.channel, _patterns(events)[-1].states) >= 0.95 * link.best()

@@ -365,14 +365,14 @@ class _Case:
 
     def failed(self) -> tuple[float, NDArray[np.intp]]:
         """Take the elements that explain most, one after another, each with what it still follows of its bit."""
-        length = float(self.ones @ self.ones)
+        length = float(np.vdot(self.ones, self.ones).real)
         states = self.whitener @ self.states
-        states = states - np.outer(self.ones, self.ones @ states) / length
-        common = self.ones @ self.flat / length
+        states = states - np.outer(self.ones, self.ones.conj() @ states) / length
+        common = self.ones.conj() @ self.flat / length
         error = self.flat - np.outer(self.ones, common)
         elements = self.evidence.elements.reshape(states.shape[1], -1)
-        power = (states * states).sum(axis=0) * _power_rows(elements)
-        shown = ((states.T @ error) * elements.conj()).real.sum(axis=1)
+        power = (np.abs(states) ** 2).sum(axis=0) * _power_rows(elements)
+        shown = ((states.conj().T @ error) * elements.conj()).real.sum(axis=1)
         toll = self.price(1, states.shape[1])
         total = 0.0
         chosen: list[int] = []
@@ -386,7 +386,7 @@ class _Case:
                 break
             chosen.append(best)
             total += float(gain[best]) - toll
-            overlap = (states.T @ states[:, best]) * (elements @ elements[best].conj()).real
+            overlap = ((states.conj().T @ states[:, best]) * (elements.conj() @ elements[best])).real
             shown = shown - (shown[best] / power[best]) * overlap
         for row in elements[chosen]:
             # Stuck elements also add to the direct path, or take away from it.
@@ -415,8 +415,8 @@ class _Case:
 
     def _factor(self, column: Real) -> float:
         """Gain when any D numbers times one column of frames are added."""
-        power = float(column @ column)
-        return float(_free(_power(column @ self.flat) / power, self.flat.shape[1]))
+        power = float(np.vdot(column, column).real)
+        return float(_free(_power(column.conj() @ self.flat) / power, self.flat.shape[1]))
 
     def _averaged(self, covariance: NDArray[Any], column: Real | None) -> float:
         """Gain when the errors have an additional covariance over frames, of the best scale, and a column is free."""

@@ -241,14 +241,12 @@ class Estimator:
             size = self.reception.directions
             self._bank.scale(np.repeat(direct, size), np.repeat(surface, size))
 
-    def renew(self, elements: NDArray[np.intp]) -> None:
-        """Forget how well some elements are known; all, where the basis does not tell elements apart."""
-        if self._bank is None:
-            return
-        if isinstance(self._config.aperture, Elements):
-            self._bank.reset(1 + elements)
-        else:
-            self.loosen(0.5)
+    def renew(self, elements: NDArray[np.intp]) -> bool:
+        """Forget how well some elements are known; False where the basis does not tell elements apart."""
+        if self._bank is None or not isinstance(self._config.aperture, Elements):
+            return False
+        self._bank.reset(1 + elements)
+        return True
 
     def roll_back(self) -> None:
         """Go back to the estimate from before the change."""

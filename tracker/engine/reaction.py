@@ -36,8 +36,10 @@ def react(estimator: Estimator, verdict: Verdict) -> str:
         estimator.renew_direct()
         return "renew direct path"
     if kind == "elements":
-        estimator.renew(verdict.elements)
-        return "renew elements"
+        if estimator.renew(verdict.elements):
+            return "renew elements"
+        estimator.loosen(LOOSEN)
+        return "forget faster"
     if kind in ("phase", "gain") and verdict.mend is not None:
         estimator.mend(*verdict.mend)
         return "turn" if kind == "phase" else "amplify"
