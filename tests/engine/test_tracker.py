@@ -331,7 +331,7 @@ def test_tiles_estimate_fewer_unknowns() -> None:
 
 
 def test_a_sudden_change_is_noticed_in_a_complex_basis() -> None:
-    """With given complex columns a new channel raises an alarm too, and nothing complex is taken for real on the way."""
+    """With complex columns a new channel raises an alarm too, and nothing complex is taken for real on the way."""
     columns = np.linalg.qr(np.exp(2j * np.pi * np.random.default_rng(0).random((ELEMENTS, ELEMENTS))))[0]
     link = Link(15)
     tracker = Tracker(_config(aperture=Columns(columns, np.ones(ELEMENTS)), false_alarm_s=600.0))
