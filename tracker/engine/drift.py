@@ -309,6 +309,8 @@ class DriftMonitor:
     def __init__(self, false_alarm_s: float, names: Sequence[str]) -> None:
         self._watches = {name: Watch(false_alarm_s * len(names)) for name in names}
         self._silent_s = dict.fromkeys(names, 0.0)  # since the last reading of each
+        for slack in SLACKS:
+            threshold_for(2.0, slack)  # makes the tables now: later a burst would wait for them
 
     def reset(self) -> None:
         """Forget all baselines."""
