@@ -337,7 +337,8 @@ def test_each_basis_can_be_had_as_the_readme_says(basis: str, tmp_path: Path) ->
             held_deviation=0.1,
             sizes=(5,),
             errors=(1.0,),
-            elements_error=1.0,
+            followed="elements",
+            followed_error=1.0,
         )
         (tmp_path / "basis.npz").write_bytes(pack_basis(learned))
         text += 'file = "basis.npz"\n'

@@ -18,7 +18,7 @@ held, held_deviation      float64: share of the surface's energy in held-out fra
                           deviation; NaN when it could not be told
 sizes, errors             int64, float64 (m,): numbers of columns tried, and the mean squared error of predicting
                           held-out frames with each, in units of the noise
-elements_error            float64: the same with every element for itself
+followed, followed_error   str, float64: aperture basis that the logs were followed in to learn, and the same with it
 ========================  ==========================================================================================
 """
 
@@ -57,7 +57,8 @@ class LearnedBasis:
     held_deviation: float
     sizes: tuple[int, ...]
     errors: tuple[float, ...]
-    elements_error: float
+    followed: str
+    followed_error: float
 
     def held_by(self, size: int) -> float:
         """Share of the energy that the first columns hold."""
@@ -101,7 +102,8 @@ def unpack_basis(data: bytes) -> LearnedBasis:
             held_deviation=float(found["held_deviation"]),
             sizes=tuple(found["sizes"].tolist()),
             errors=tuple(found["errors"].tolist()),
-            elements_error=float(found["elements_error"]),
+            followed=str(found["followed"]),
+            followed_error=float(found["followed_error"]),
         )
     except (OSError, ValueError, TypeError, LookupError, EOFError, zipfile.BadZipFile, NotImplementedError) as error:
         raise BasisError(

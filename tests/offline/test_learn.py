@@ -111,7 +111,7 @@ def test_held_out_frames_are_predicted_better_than_element_by_element(noisy: Pas
     """The number of columns chosen predicts about as well as the best of those tried, and better than all elements."""
     basis = learn(noisy)
     chosen = basis.errors[basis.sizes.index(basis.columns.shape[1])]
-    assert 1.0 < chosen < basis.elements_error
+    assert 1.0 < chosen < basis.followed_error
     assert chosen < min(basis.errors) * 1.01
     assert share(basis.columns, noisy.responses()) > 0.97
 

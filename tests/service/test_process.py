@@ -264,7 +264,8 @@ def basis(seed: int) -> bytes:
             held_deviation=0.01,
             sizes=(6,),
             errors=(1.1,),
-            elements_error=1.2,
+            followed="elements",
+            followed_error=1.2,
         )
     )
 

@@ -68,7 +68,7 @@ def _eigenvalues(basis: LearnedBasis, x: float, y: float, width: float) -> Itera
 
 def _errors(basis: LearnedBasis, x: float, y: float, width: float) -> Iterator[str]:
     """Prediction error of held-out frames against the number of columns."""
-    excess = [error for error in (*basis.errors, basis.elements_error) if math.isfinite(error)]
+    excess = [error for error in (*basis.errors, basis.followed_error) if math.isfinite(error)]
     most = max([*excess, 1.05])
     step = 10.0 ** math.floor(math.log10(most - 1.0)) * (0.5 if math.log10(most - 1.0) % 1.0 < 0.5 else 1.0)
     low, high = _ticks(1.0, most, step)
@@ -77,9 +77,15 @@ def _errors(basis: LearnedBasis, x: float, y: float, width: float) -> Iterator[s
     yield from chart.frame("Error of predicting held-out frames", "columns", "1 is noise alone", step, [])
     for place, size in zip(sizes, basis.sizes, strict=True):
         yield _text(chart.at(place, low)[0], chart.at(place, low)[1] + 18, str(size), QUIET, "middle")
-    if math.isfinite(basis.elements_error):
-        yield chart.line([min(sizes) - 0.5, max(sizes) + 0.5], [basis.elements_error] * 2, OTHER, "4 3")
-        yield _text(x + width, chart.at(0, basis.elements_error)[1] - 5, "every element for itself", OTHER, "end")
+    if math.isfinite(basis.followed_error):
+        yield chart.line([min(sizes) - 0.5, max(sizes) + 0.5], [basis.followed_error] * 2, OTHER, "4 3")
+        yield _text(
+            x + width,
+            chart.at(0, basis.followed_error)[1] - 5,
+            f"with the basis &quot;{basis.followed}&quot;",
+            OTHER,
+            "end",
+        )
     yield chart.line(sizes, list(basis.errors), MARK)
     for place, error in zip(sizes, basis.errors, strict=True):
         yield chart.dot(place, error, MARK)

@@ -1,6 +1,7 @@
 """Learn: an aperture basis from recorded pilots, for panels with more elements than a burst has frames.
 
-1. The engine follows the logs and turns their frames back (`turned`); its own estimates give columns to start from.
+1. The engine follows the logs, in the basis that the settings name, and turns their frames back (`turned`); its own
+   estimates give columns to start from.
 2. All frames but those held out say together which columns explain them best (`subspace`).
 3. The engine predicts the held-out frames with more and fewer of the columns: that says how many to keep (`choice`).
 """
@@ -9,19 +10,17 @@ import os
 import sys
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import suppress
-from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 from threadpoolctl import threadpool_limits
 
 from tracker import __version__
-from tracker.assembly import configure, shape
+from tracker.assembly import BASIS, configure, shape
 from tracker.basis_file import LearnedBasis, pack_basis
-from tracker.engine.aperture import Elements
 from tracker.engine.config import Config
 from tracker.logs import LogReader
-from tracker.settings import Aperture, Settings, load, parse
+from tracker.settings import Aperture, Settings, SettingsError, load, parse
 
 from .choice import Blocks, Trials, share_held, try_sizes
 from .drawing import draw
@@ -74,7 +73,7 @@ def learn(paths: Sequence[Path], settings_path: Path | None, out: Path, size: in
     """
     if out.suffix != ".npz":
         raise OfflineError(f"{out}: the name of a basis must end in .npz")
-    settings, text = _settings(paths[0], settings_path)
+    settings, text, attached = _settings(paths[0], settings_path)
     if size is None and "size" in settings.aperture.model_fields_set:
         size = settings.aperture.size
     if size is not None and size >= settings.panel.elements:
@@ -82,7 +81,8 @@ def learn(paths: Sequence[Path], settings_path: Path | None, out: Path, size: in
             f"{size} columns for {settings.panel.elements} elements: a basis must have fewer columns than elements"
         )
     with threadpool_limits(limits=1), progress_bar(progress, len(paths)) as bars:
-        basis = work_out(paths, settings, text, size, bars)
+        folder = (settings_path or paths[0]).parent
+        basis = work_out(paths, settings, text, size, bars, folder, attached)
     _write(out, pack_basis(basis))
     picture = out.with_suffix(".svg")
     _write(picture, draw(basis).encode())
@@ -90,21 +90,32 @@ def learn(paths: Sequence[Path], settings_path: Path | None, out: Path, size: in
     return 0
 
 
-def work_out(paths: Sequence[Path], settings: Settings, text: str, size: int | None, bars: Bars) -> LearnedBasis:
+def work_out(
+    paths: Sequence[Path],
+    settings: Settings,
+    text: str,
+    size: int | None,
+    bars: Bars,
+    folder: Path = Path(),
+    attached: bytes | None = None,
+) -> LearnedBasis:
     """Learn a basis; see `learn`.
 
     Parameters
     ----------
     paths : sequence of Path
     settings : Settings
-        Theirs is the panel; the aperture basis that they name is not used.
+        The logs are followed in the aperture basis that they name, or element by element where its file is not there.
     text : str
         The same as text, to be kept.
     size : int or None
     bars : Bars
+    folder : Path
+        Where relative paths of the settings start.
+    attached : bytes or None
+        Learned basis that lies in the first log, to be used in place of a file.
     """
-    config = configure(settings.model_copy(update={"aperture": Aperture()}), Path())
-    config = replace(config, aperture=Elements(settings.panel.elements))
+    config, followed = _config(settings, folder, attached)
     link, sizes = settings.link.name, shape(settings)
     logs = [take_stock(path, link, sizes, bars.begin(f"{path.name}, contents")) for path in paths]
     width = size if size is not None else min(WIDTH, settings.panel.elements // 2)
@@ -121,7 +132,7 @@ def work_out(paths: Sequence[Path], settings: Settings, text: str, size: int | N
     held_out = {stretch.number for stretch in turning.stretches if blocks.held_out(stretch.number) is not None}
     tried = [size] if size is not None else [number for number in SIZES if number <= width]
     trials = try_sizes(pieces("trying columns"), config, space, tried, held_out)
-    return _basis(turning, space, trials, blocks, settings, text, logs)
+    return _basis(turning, space, trials, blocks, logs, settings, text, followed)
 
 
 def render(basis: LearnedBasis, out: Path, picture: Path) -> str:
@@ -133,7 +144,7 @@ def render(basis: LearnedBasis, out: Path, picture: Path) -> str:
         "",
         f"{'columns':>10}  error of predicting held-out frames (1 is noise alone)",
         *(f"{size:>10}  {error:.4f}" for size, error in zip(basis.sizes, basis.errors, strict=True)),
-        f"{'elements':>10}  {basis.elements_error:.4f}",
+        f"{basis.followed:>10}  {basis.followed_error:.4f}",
         "",
     ]
     if np.isfinite(basis.held):
@@ -143,26 +154,38 @@ def render(basis: LearnedBasis, out: Path, picture: Path) -> str:
         )
     else:
         lines.append("How much of the surface's energy the columns hold cannot be told: too little of it is heard.")
-    if min(basis.errors) >= basis.elements_error:
-        lines.append("They predict no better than every element for itself: record a longer log, or keep to elements.")
+    if min(basis.errors) >= basis.followed_error:
+        lines.append(f'They predict no better than the basis "{basis.followed}": keep to that, or record a longer log.')
     lines.append(f"{out} is written, {picture} shows it.")
     return "\n".join(lines) + "\n"
 
 
-def _settings(log: Path, path: Path | None) -> tuple[Settings, str]:
+def _settings(log: Path, path: Path | None) -> tuple[Settings, str, bytes | None]:
     if path is not None:
-        return load(path), path.read_text(encoding="utf-8")
-    data = LogReader(log).attachments.get("settings.toml")
+        return load(path), path.read_text(encoding="utf-8"), None
+    attachments = LogReader(log).attachments
+    data = attachments.get("settings.toml")
     if data is None:
         raise OfflineError(f"{log}: holds no settings; give them with --settings")
     text = data.decode(errors="replace")
-    return parse(text, f"{log}: settings.toml"), text
+    return parse(text, f"{log}: settings.toml"), text, attachments.get(BASIS)
+
+
+def _config(settings: Settings, folder: Path, attached: bytes | None) -> tuple[Config, str]:
+    """Build what the logs are followed with, and name its basis."""
+    try:
+        return configure(settings, folder, attached), settings.aperture.basis
+    except SettingsError:
+        if settings.aperture.basis != "learned":
+            raise
+        # The file that is to be learned, as a rule.
+        return configure(settings.model_copy(update={"aperture": Aperture()}), folder), Aperture().basis
 
 
 def _most_frames(config: Config, width: int, logs: Sequence[Recorded]) -> int:
     """Frames that can be worked off in bearable time and memory."""
     elements = config.elements
-    flops = 3.0 * (elements + 1) ** 2 * config.bank + 16.0 * elements * width * TURNS * (STEPS + 2)
+    flops = 3.0 * (config.aperture.size + 1) ** 2 * config.bank + 16.0 * elements * width * TURNS * (STEPS + 2)
     outputs = config.receivers * config.delay.shape[1]
     # Frames on the delay basis, and a few covariances of the coefficients a stretch.
     stretch = max(logs[0].frames / logs[0].stretches, 1.0)
@@ -175,15 +198,17 @@ def _enough(turning: Turning, config: Config, paths: Sequence[Path]) -> None:
     names = ", ".join(str(path) for path in paths)
     followed = sum(stretch.outputs.shape[0] for stretch in turning.stretches)
     least = int(LEAST_SWEEPS * (config.elements + 1))
-    if turning.frames < least + config.elements + 1:
+    with_warming = least + config.aperture.size + 1
+    if turning.frames < with_warming:
         raise OfflineError(
-            f"{names}: too short: {turning.frames} frames, at least {least + config.elements + 1} are needed for "
+            f"{names}: too short: {turning.frames} frames, at least {with_warming} are needed for "
             f"{config.elements} elements; record more"
         )
     if followed < least or len(turning.stretches) < LEAST_STRETCHES or not turning.estimates.shape[1]:
         raise OfflineError(
-            f"{names}: the phases could be followed in {followed} of {turning.frames} frames only, at least {least} "
-            f"in {LEAST_STRETCHES} bursts are needed; record more, or with the reference sounded more often"
+            f"{names}: the phases could be followed in {followed} of {turning.frames} frames only, at least {least} in "
+            f"{LEAST_STRETCHES} bursts are needed; record more, sound the reference more often, or name a basis in the "
+            'settings that follows better, such as "region"'
         )
 
 
@@ -203,9 +228,10 @@ def _basis(
     space: Subspace,
     trials: Trials,
     blocks: Blocks,
+    logs: Sequence[Recorded],
     settings: Settings,
     text: str,
-    logs: Sequence[Recorded],
+    followed: str,
 ) -> LearnedBasis:
     kept = space.cut(trials.size)
     held = share_held(turning.stretches, kept, blocks)
@@ -228,7 +254,8 @@ def _basis(
         held_deviation=held.deviation if held else float("nan"),
         sizes=trials.sizes,
         errors=trials.errors,
-        elements_error=float(np.mean(out)),
+        followed=followed,
+        followed_error=float(np.mean(out)),
     )
 
 
