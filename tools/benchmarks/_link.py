@@ -33,7 +33,7 @@ from tracker.simulation.yard import Scenario
 
 BURSTS_PER_S = 437.5  # 28 000 frames/s in bursts of 64
 PERIOD_NS = round(1e9 / BURSTS_PER_S)
-# Bursts made beforehand, each with noise of its own; they last longer than an estimate remembers, and 36 whole rounds of
+# Bursts made beforehand, each with noise of its own; they last longer than an estimate remembers, and 36 rounds of
 # 33 bursts hold a whole number of sweeps: a sweep cut off at the seam would be a change of how the link is sounded.
 CYCLE = 1188
 CYCLE_S = CYCLE / BURSTS_PER_S
