@@ -3,7 +3,7 @@
 import time
 
 # Share of the budget kept for what comes after the optimizer: bound, encoding, journal, sending.
-RESERVE = 0.25
+RESERVE = 0.4
 # Share of the budget that a search gets even when the estimate has used all of it up: else a service that is behind
 # would go on estimating and never publish.
 LEAST = 0.2
