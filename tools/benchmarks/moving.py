@@ -117,7 +117,7 @@ def walking() -> Case:
 
 def driving() -> Case:
     """Drive fast."""
-    return Case("N 256, 3 m/s, elements", 0.97, 0.985, 150.0, speed=3.0)
+    return Case("N 256, 3 m/s, elements", 0.97, 0.985, 220.0, speed=3.0)
 
 
 def driving_learned() -> Case:
@@ -166,7 +166,7 @@ def slow_bench() -> Case:
 
 def two_carriers() -> Case:
     """Serve two carriers by one pattern."""
-    return Case("N 256, two terminals, 0.5 m/s, elements", 0.96, 0.985, 150.0, speed=0.5, terminals=2)
+    return Case("N 256, two terminals, 0.5 m/s, elements", 0.96, 0.985, 300.0, speed=0.5, terminals=2)
 
 
 CASES: tuple[Callable[[], Case], ...] = (
