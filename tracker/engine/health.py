@@ -1,0 +1,227 @@
+"""Element health while in service: does each element follow its bit.
+
+The evidence comes from `appraisal`; here faults are named. Elements whose answers fit each other's place are swapped
+(`swaps`); on which side an element is stuck shows in the direct path, if anywhere (`sides`).
+
+Elements that the settings name as stuck or tied, and such as the patterns hardly sound, are not judged. Where elements
+are not estimated one by one (`aperture`: tiles, columns), nothing can be said of any.
+"""
+
+from collections.abc import Mapping
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from . import hypotheses
+from .appraisal import Appraisal
+from .channel import Channel
+from .faults import FAULTS, FINE, NOT_JUDGED, SILENT, STUCK_MINUS, STUCK_PLUS, SWAPPED, UNMOVED, WEAK, Finding
+from .fresh import Posterior
+from .hypotheses import FOLLOWS
+from .panel import Limits
+from .sides import KEPT, Sides
+from .swaps import swapped
+
+Complex = NDArray[np.complex128]
+Real = NDArray[np.float64]
+
+# Probability of not following from which an element is called faulty; below the second it is taken back.
+SURE, TAKEN_BACK = 0.97, 0.5
+# Probability from which a pair is called swapped: of many pairs, one may fit by chance.
+SURELY_SWAPPED = 0.999
+# Probability from which a side is named.
+SIDE_SURE = 0.99
+# Probability that an element does not answer from which the optimizer leaves it out.
+LEFT_OUT = 0.9
+# Probability of following from which a response counts as good to be remembered.
+GOOD = 0.99
+# Windows without another element that fell silent after which those that did count as all; and windows within which
+# they must have done so to be told apart together.
+SETTLED, TOGETHER = 3, 4
+
+
+class Health:
+    """Judges the elements of a panel.
+
+    Parameters
+    ----------
+    panel : (int, int)
+        Columns and rows; element i is column i // rows, row i % rows.
+    forgetting_kind : str
+        Of the filter whose estimates are judged, see `rls.forgetting`.
+    known : Limits or None
+        What the settings say of the panel.
+    """
+
+    def __init__(self, panel: tuple[int, int], forgetting_kind: str, known: Limits | None = None) -> None:
+        known = known or Limits()
+        columns, rows = self._shape = panel
+        self._kind = forgetting_kind
+        self._judged = np.ones(columns * rows, dtype=np.bool_)
+        self._judged[[*known.stuck, *(element for group in known.tied for element in group)]] = False
+        self.forget()
+
+    def forget(self) -> None:
+        """Throw all evidence away, and with it the faults found."""
+        elements = self._judged.size
+        self._appraisal = Appraisal(*self._shape, self._kind, self._judged)
+        self._codes = np.where(self._judged, FINE, NOT_JUDGED).astype(np.int8)
+        self._confidence = np.zeros(elements)
+        self._partner = np.full(elements, -1, dtype=np.int64)
+        self._last: Complex = np.zeros((elements, 0), dtype=np.complex128)  # good response
+        self._last_good = np.full(elements, -1, dtype=np.int64)  # window of it
+        self._unchanged = 0  # windows without another element that fell silent
+        self._sides = Sides(0)
+
+    @property
+    def faults(self) -> tuple[tuple[int, str, float], ...]:
+        """Element, fault and confidence of all that do not follow, in the order of the elements."""
+        faulty = np.flatnonzero(self._codes > FINE)
+        return tuple((int(n), FAULTS[self._codes[n]], float(self._confidence[n])) for n in faulty)
+
+    @property
+    def map(self) -> NDArray[np.int8]:
+        """Health codes over the panel, shape (columns, rows); see `FAULTS`."""
+        return self._codes.reshape(self._shape).copy()
+
+    @property
+    def windows(self) -> int:
+        """Windows of frames judged."""
+        return self._appraisal.windows
+
+    @property
+    def silent(self) -> NDArray[np.intp]:
+        """Elements that surely do not answer to their bits."""
+        return np.flatnonzero(_silent(self._codes) & (self._confidence >= LEFT_OUT))
+
+    def limits(self, base: Limits) -> Limits:
+        """Add what was found to what the panel is known not to do."""
+        silent = self.silent
+        if not silent.size:
+            return base
+        stuck = {int(n): -1 if self._codes[n] == STUCK_MINUS else 1 for n in silent}
+        return replace(base, stuck=stuck | base.stuck)
+
+    def believed(self, channel: Channel) -> Channel:
+        """Take out of the estimate what is left in it of elements that do not answer."""
+        silent = self.silent
+        if not silent.size:
+            return channel
+        surface = channel.surface.copy()
+        surface[silent] = 0.0
+        return replace(channel, surface=surface)
+
+    def begin(self, now: Posterior | None) -> None:
+        """Begin a window: the estimate starts, was loosened, or is not to be trusted.
+
+        Parameters
+        ----------
+        now : Posterior or None
+            From which the next frames go on; None to wait for the next block.
+        """
+        self._appraisal.begin(now)
+
+    def update(self, now: Posterior, frames: int, elapsed_s: float) -> tuple[Finding, ...]:
+        """Take in a block; return the faults that are newly found.
+
+        Parameters
+        ----------
+        now : Posterior
+            After the block.
+        frames : int
+        elapsed_s : float
+            Time forgotten with it, s.
+        """
+        if not self._appraisal.update(now, frames, elapsed_s, self._partner < 0):
+            return ()
+        before, beliefs = self._codes, self._appraisal.beliefs.probabilities
+        if self._appraisal.looked:
+            self._name(beliefs)
+            self._pair_up()
+        self._remember(now, beliefs[FOLLOWS], before)
+        new = np.flatnonzero((self._codes > FINE) & (before <= FINE))
+        doubt = np.maximum(1.0 - beliefs[FOLLOWS], self._confidence)
+        return tuple(Finding(int(n), FAULTS[self._codes[n]], float(self._confidence[n]), float(doubt[n])) for n in new)
+
+    def _name(self, beliefs: Real) -> None:
+        """Name what each element does by itself."""
+        before, known = self._codes, self._appraisal.known
+        doubt = 1.0 - beliefs[FOLLOWS]
+        called = known & (doubt >= np.where(before > FINE, TAKEN_BACK, SURE))
+        silent = called & (beliefs[hypotheses.UNMOVED] >= np.maximum(beliefs[hypotheses.WEAK], 0.5))
+        weak = called & (beliefs[hypotheses.WEAK] >= np.maximum(beliefs[hypotheses.UNMOVED], 0.5))
+        codes = np.where(self._judged, FINE, NOT_JUDGED).astype(np.int8)
+        codes[silent] = np.where((before == STUCK_PLUS) | (before == STUCK_MINUS), before, UNMOVED)[silent]
+        codes[weak] = WEAK
+        confidence = np.where(silent, beliefs[hypotheses.UNMOVED], np.where(weak, beliefs[hypotheses.WEAK], 0.0))
+        unheard = ~known & self._judged  # what was known stays
+        codes[unheard], confidence[unheard] = before[unheard], self._confidence[unheard]
+        self._codes, self._confidence = codes, confidence
+
+    def _pair_up(self) -> None:
+        """Name pairs that are swapped; one that was stays so while it is more likely than not."""
+        appraisal, before = self._appraisal, self._partner
+        self._partner = np.full(before.size, -1, dtype=np.int64)
+        pairs = swapped(appraisal.beliefs, appraisal.answers, appraisal.predicted, appraisal.residual, TAKEN_BACK)
+        for one, other, likely in pairs:
+            if likely >= SURELY_SWAPPED or before[one] == other:
+                self._partner[one], self._partner[other] = other, one
+                self._codes[[one, other]] = SWAPPED
+                self._confidence[[one, other]] = likely
+
+    def _remember(self, now: Posterior, follows: Real, before: NDArray[np.int8]) -> None:
+        """Keep good responses and the direct path, and see on which side elements are stuck."""
+        appraisal, outputs = self._appraisal, now.coefficients.shape[1]
+        if self._last.shape[1] != outputs:
+            self._sides = Sides(outputs)
+            self._last = np.zeros((follows.size, outputs), dtype=np.complex128)
+            self._last_good[:] = -1
+        self._last *= appraisal.amplitude
+        self._sides.rescale(appraisal.amplitude)
+        silent = _silent(self._codes) & (self._last_good >= 0)
+        age = appraisal.windows - self._last_good
+        self._sides.take(appraisal.direct, quiet=not np.any(silent & (age < KEPT)))
+        self._unchanged = 0 if np.any(silent & ~_silent(before)) else self._unchanged + 1
+        waiting = np.flatnonzero(silent & (self._codes == UNMOVED) & (age < KEPT))
+        if waiting.size and self._unchanged >= SETTLED:
+            # All that fell silent at about the same time moved the direct path together, and none may be missing.
+            first, last = int(age[waiting].max()), int(age[waiting].min())
+            sides = self._sides.decide(self._last[waiting], first, last, SIDE_SURE) if first - last <= TOGETHER else []
+            for n, (side, sure) in zip(waiting.tolist(), sides, strict=bool(sides)):
+                if side:
+                    self._codes[n] = STUCK_PLUS if side > 0 else STUCK_MINUS
+                    self._confidence[n] = min(float(self._confidence[n]), sure)
+        good = (follows >= GOOD) & (self._codes == FINE)
+        np.copyto(self._last, now.coefficients[1:], where=good[:, None])
+        self._last_good[good] = appraisal.windows
+
+    def snapshot(self) -> dict[str, Any]:
+        """All state as plain values and arrays; `load` goes on from it bit by bit."""
+        return {
+            "appraisal": self._appraisal.snapshot(),
+            "codes": self._codes.copy(),
+            "confidence": self._confidence.copy(),
+            "partner": self._partner.copy(),
+            "last": self._last.copy(),
+            "last_good": self._last_good.copy(),
+            "unchanged": self._unchanged,
+            "sides": self._sides.snapshot(),
+        }
+
+    def load(self, snapshot: Mapping[str, Any]) -> None:
+        """Take over a snapshot made with the same arguments."""
+        self._appraisal.load(snapshot["appraisal"])
+        self._codes = np.array(snapshot["codes"], dtype=np.int8)
+        self._confidence = np.array(snapshot["confidence"], dtype=np.float64)
+        self._partner = np.array(snapshot["partner"], dtype=np.int64)
+        self._last = np.array(snapshot["last"], dtype=np.complex128)
+        self._last_good = np.array(snapshot["last_good"], dtype=np.int64)
+        self._unchanged = int(snapshot["unchanged"])
+        self._sides = Sides(self._last.shape[1])
+        self._sides.load(snapshot["sides"])
+
+
+def _silent(codes: NDArray[np.int8]) -> NDArray[np.bool_]:
+    return np.asarray((codes >= SILENT[0]) & (codes <= SILENT[-1]))
