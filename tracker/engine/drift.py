@@ -83,6 +83,7 @@ class Watch:
         """Begin the sums anew on the same baseline, as after a change that left it as it was."""
         for cusum in self._cusums:
             cusum.reset()
+        self.height = 0.0  # the higher sum over its threshold; 1 raises an alarm
 
     @property
     def settled(self) -> bool:
@@ -90,17 +91,11 @@ class Watch:
         return self._count > 0
 
     @property
-    def height(self) -> float:
-        """The higher sum over its threshold; 1 raises an alarm."""
-        small, large = self._cusums
-        return max(small.statistic / small.threshold, large.statistic / large.threshold)
-
-    @property
     def highest(self) -> tuple[float, float]:
         """Statistic and threshold of the test nearest to an alarm; zeros before there is a baseline."""
         if not self.settled:
             return 0.0, 0.0
-        cusum = max(self._cusums, key=lambda one: one.statistic / one.threshold)
+        cusum = max(self._cusums, key=lambda one: one.height)
         return cusum.statistic, cusum.threshold
 
     @property
@@ -132,6 +127,7 @@ class Watch:
         change = None
         for cusum in self._cusums:
             change = cusum.update(tested) or change
+        self._measure_height()
         self._before = self._adapt(sample, white, unit)
         if self._count % LONG == 0:
             self._set_scales(degrees)
@@ -155,6 +151,10 @@ class Watch:
         self._first = [(float(value), int(degrees)) for value, degrees in snapshot["first"]]
         for cusum, state in zip(self._cusums, snapshot["cusums"], strict=True):
             cusum.load(state)
+        self._measure_height()
+
+    def _measure_height(self) -> None:
+        self.height = max(cusum.height for cusum in self._cusums)
 
     def _deviate(self, value: float, degrees: int) -> tuple[float, float]:
         """Deviate from the baseline, and what a unit of it is in the unit of the level."""
@@ -204,6 +204,7 @@ class Watch:
         doubt = 1.0 / self._count if self._count < MEMORY else 0.5 / MEMORY
         for cusum in self._cusums:
             cusum.threshold = threshold_for(samples, cusum.slack, doubt)
+        self._measure_height()
 
     def _warm_up(self, value: float, degrees: int) -> None:
         """Gather a first baseline, over a sliding window until it is steady."""

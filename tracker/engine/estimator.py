@@ -18,10 +18,11 @@ from .evidence import Heard, Memory
 from .following import Lock
 from .frames import Fit, Frames
 from .innovation import DIRECT, INNOVATION, Innovations
+from .noise import energy
 from .prior import prior_variances
 from .reception import Reception, noise_of
 from .rls import BlockRls
-from .shrinkage import shrink
+from .shrinkage import Shrinkage, shrink
 from .standing import MOVED, Standing
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
@@ -47,6 +48,7 @@ class Estimator:
         # Where phases are followed each block stands at phases of its own.
         self._memory = Memory(blocks=1 if config.follow_phase else None)
         self._standing = Standing()
+        self._shrinkage = Shrinkage()
         self._taken: list[Heard] = []
         self._left_out_most = 0  # frames that may yet be left out because they do not fit
         self._bank: Bank | None = None
@@ -90,6 +92,7 @@ class Estimator:
         """
         together = Frames.together(bursts)
         self._taken = []
+        self._shrinkage.count_block()
         if self._bank is None:
             self._bank = self._begin(together)
         if not self.reception.following:
@@ -100,6 +103,7 @@ class Estimator:
 
     def _begin(self, frames: Frames) -> Bank:
         """Start from the first block: how strong the paths may be."""
+        self._shrinkage.forget()
         outputs = self.reception.first(frames)
         self._end_ns = int(frames.time_ns[0])
         aperture = self._config.aperture
@@ -134,8 +138,8 @@ class Estimator:
             part = slice(start, start + MOST_FRAMES)
             innovation, white = bank.update(regressors[part], outputs[part])
             self._innovations.take(innovation, white, bank.chosen.whitener)
-            power += _power(white).reshape(self._config.receivers, -1).sum(axis=1)
-            error += float(_power(innovation).sum())
+            power += energy(white.reshape(white.shape[0], self._config.receivers, -1))
+            error += float(np.vdot(innovation, innovation).real)
         degrees = frames * self.reception.directions
         left_out = frames if self.reception.lock is Lock.LOST else 0
         return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost, left_out)
@@ -156,7 +160,7 @@ class Estimator:
         rls = self._learned()
         receivers, size = self._config.receivers, self.reception.directions
         prior = float(rls.prior[1:].mean())
-        surface = shrink(rls.coefficients[1:], float(rls.variances[1:].mean()), prior)
+        surface = self._shrinkage.apply(rls.coefficients[1:], float(rls.variances[1:].mean()), prior)
         direct = rls.coefficients[0].reshape(receivers, size).copy()
         if time_ns is not None:
             for receiver, following in enumerate(self.reception.following):
@@ -271,6 +275,7 @@ class Estimator:
             "innovations": self._innovations.snapshot(),
             "memory": self._memory.snapshot(),
             "standing": self._standing.snapshot(),
+            "shrinkage": self._shrinkage.snapshot(),
             "left_out_most": self._left_out_most,
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
@@ -282,6 +287,7 @@ class Estimator:
         self._innovations.load(snapshot["innovations"])
         self._memory.load(snapshot["memory"])
         self._standing.load(snapshot["standing"])
+        self._shrinkage.load(snapshot["shrinkage"])
         self._left_out_most = int(snapshot["left_out_most"])
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
@@ -338,7 +344,7 @@ class Estimator:
 
     def _fits(self, bank: Bank, regressors: NDArray[Any], outputs: NDArray[np.complex128]) -> bool:
         error = outputs - regressors @ bank.chosen.coefficients
-        return bool(_power(error).mean() / error.shape[0] < FITS * self._innovations.variance)
+        return bool(np.vdot(error, error).real / error.size < FITS * self._innovations.variance)
 
     def _readings(self) -> tuple[Reading, ...]:
         """Give samples of what is under watch from the block just taken."""
@@ -346,8 +352,3 @@ class Estimator:
         readings += self._standing.readings(self._learned().coefficients, self.reception.noise_power)
         readings += self.reception.readings()
         return tuple(readings)
-
-
-def _power(values: NDArray[np.complex128]) -> NDArray[np.float64]:
-    """Sum of |values|² over the frames, shape (D,)."""
-    return np.asarray((values.real**2 + values.imag**2).sum(axis=0))

@@ -29,12 +29,14 @@ class Frames:
     @classmethod
     def of(cls, burst: Burst) -> "Frames":
         """Take the frames of a burst that are fit for use."""
+        if burst.keep.all():
+            return cls(burst.patterns, burst.response, burst.t_ns + np.arange(burst.frames) * burst.dt_ns)
         kept = np.flatnonzero(burst.keep)
         return cls(burst.patterns[kept], burst.response[kept], burst.t_ns + kept * burst.dt_ns)
 
     def showing(self, pattern: NDArray[np.uint8]) -> "Frames":
         """Take the frames that sounded a packed pattern."""
-        same = np.flatnonzero((self.patterns == pattern).all(axis=1))
+        same = (self.patterns == pattern).all(axis=1)
         return Frames(self.patterns[same], self.response[same], self.time_ns[same])
 
     def stretches(self, most_ns: int) -> Iterator["Frames"]:

@@ -48,7 +48,7 @@ class Innovations:
 
     def __init__(self, receivers: int, size: int) -> None:
         self._most_ratio = 1.0 + BOUND / math.sqrt(receivers * size)
-        self._moments = np.zeros(2)  # of the regression for α
+        self._shown, self._known = 0.0, 0.0  # moments of the regression for α
         self._blocks = 0
         self.excess = 1.0
         self.variance = 1.0  # of an innovation, in the last block
@@ -86,7 +86,7 @@ class Innovations:
         readings = [Reading(INNOVATION, max(self._power / max(self._frames, 1), FLOOR), self._frames * size)]
         self._power, self._frames = 0.0, 0
         if self._common_frames >= COMMON_FRAMES:
-            power = float((self._common.real**2 + self._common.imag**2).sum()) / (self._common_frames * size)
+            power = np.vdot(self._common, self._common).real / (self._common_frames * size)
             readings.append(Reading(DIRECT, max(power, FLOOR), size))
             self._common = np.zeros_like(self._common)
             self._common_frames = 0
@@ -95,7 +95,7 @@ class Innovations:
     def snapshot(self) -> dict[str, Any]:
         """All state."""
         return {
-            "moments": self._moments.copy(),
+            "moments": [self._shown, self._known],
             "blocks": self._blocks,
             "excess": self.excess,
             "variance": self.variance,
@@ -105,7 +105,7 @@ class Innovations:
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot, made between blocks."""
-        self._moments = np.array(snapshot["moments"], dtype=np.float64)
+        self._shown, self._known = (float(moment) for moment in snapshot["moments"])
         self._blocks, self.excess = int(snapshot["blocks"]), float(snapshot["excess"])
         self.variance = float(snapshot["variance"])
         self._common = np.array(snapshot["common"], dtype=np.complex128)
@@ -118,7 +118,7 @@ class Innovations:
         bounded = np.minimum(ratio, self._most_ratio)
         scaled = predicted * inverse
         # Both sides of power = 1 + α s over the expected power, which is how far either may spread.
-        shown, known = float(scaled @ (bounded - inverse)), float(scaled @ scaled)
-        self._moments += (np.array((shown, known)) - self._moments) * gain
-        if self._moments[1] > 0.0:
-            self.excess = float(min(max(self._moments[0] / self._moments[1], 0.0), MOST))
+        self._shown += (float(scaled @ (bounded - inverse)) - self._shown) * gain
+        self._known += (float(scaled @ scaled) - self._known) * gain
+        if self._known > 0.0:
+            self.excess = min(max(self._shown / self._known, 0.0), MOST)

@@ -5,6 +5,7 @@ directions, frames that repeat a pattern within a burst differ by noise alone (c
 twice gives the noise from the difference).
 """
 
+import math
 from typing import Any
 
 import numpy as np
@@ -38,9 +39,9 @@ def outside(response: Complex, coefficients: Complex) -> NDArray[np.float64]:
     ndarray, shape (R,)
         Mean power on a tone.
     """
-    tones, size = response.shape[2], coefficients.shape[2]
-    left_over = _power(response) - _power(coefficients)
-    return np.asarray(left_over.mean(axis=0) / (tones - size))
+    frames, _, tones = response.shape
+    left_over = energy(response) - energy(coefficients)
+    return left_over / (frames * (tones - coefficients.shape[2]))
 
 
 def repeats(patterns: NDArray[np.uint8], coefficients: Complex) -> tuple[NDArray[np.float64], int]:
@@ -69,7 +70,7 @@ def repeats(patterns: NDArray[np.uint8], coefficients: Complex) -> tuple[NDArray
     total = np.zeros((count.shape[0], receivers, size), dtype=np.complex128)
     np.add.at(total, group, coefficients)
     spread = coefficients - (total / count[:, None, None])[group]
-    return np.asarray(_power(spread).sum(axis=0) / (degrees * size)), degrees
+    return energy(spread) / (degrees * size), degrees
 
 
 class NoiseEstimate:
@@ -91,11 +92,13 @@ class NoiseEstimate:
 
     def update(self, power: NDArray[np.float64], frames: int, degrees: int) -> None:
         """Take in what `frames` frames measured, with so many complex degrees of freedom each receiver."""
-        off = np.abs(power - self.power)
-        limit = max(JUMP_SHARE, JUMP_DEVIATIONS / np.sqrt(degrees)) * np.maximum(self.power, FLOOR)
-        self._frames = np.where(off > limit, 0.0, self._frames)
-        self._frames = np.minimum(self._frames + frames, MEMORY_FRAMES)
-        self.power = np.maximum(self.power + (power - self.power) * (frames / self._frames), FLOOR)
+        share = max(JUMP_SHARE, JUMP_DEVIATIONS / math.sqrt(degrees))
+        gathered, means = [], []
+        for heard, known, before in zip(power.tolist(), self.power.tolist(), self._frames.tolist(), strict=True):
+            jumped = abs(heard - known) > share * max(known, FLOOR)
+            gathered.append(min((0.0 if jumped else before) + frames, MEMORY_FRAMES))
+            means.append(max(known + (heard - known) * (frames / gathered[-1]), FLOOR))
+        self._frames, self.power = np.array(gathered), np.array(means)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -107,7 +110,6 @@ class NoiseEstimate:
         self.power = np.array(snapshot["power"], dtype=np.float64)
 
 
-def _power(values: Complex) -> NDArray[np.float64]:
-    """Sum of |values|² over the last axis."""
-    parts = np.ascontiguousarray(values).view(np.float64)
-    return np.asarray((parts * parts).sum(axis=-1))
+def energy(values: Complex) -> NDArray[np.float64]:
+    """Sum of |values|² of each receiver, shape (R,), of values of shape (B, R, anything)."""
+    return np.array([np.vdot(part, part).real for part in values.swapaxes(0, 1)])

@@ -91,5 +91,5 @@ def promise(channel: Channel, states: NDArray[np.generic]) -> float:
         metric = (channel.basis.T * weight[receiver]) @ channel.basis.conj()
         part = np.ascontiguousarray(channel.surface[:, receiver])
         product = part @ metric
-        gain += (product.real * part.real + product.imag * part.imag).sum(axis=1)
+        gain += np.einsum("np,np->n", product.view(np.float64), part.view(np.float64))
     return float(np.maximum(gain, 0.0).sum() * (4.0 / (np.log(2.0) * heard.size)))

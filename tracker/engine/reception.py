@@ -125,7 +125,9 @@ class Reception:
         tones = frames.response.astype(np.complex128)
         for receiver, following in enumerate(self.following):
             tones[:, receiver] = following.take_off_delay(tones[:, receiver])
-        return tones, tones @ self._adjoint
+        # One product of all rows: matmul takes a stack of matrices one by one.
+        rows = tones.reshape(-1, tones.shape[2])
+        return tones, (rows @ self._adjoint).reshape(*tones.shape[:2], -1)
 
     def _in_noise_units(self, coefficients: NDArray[np.complex128]) -> NDArray[np.complex128]:
         scale = 1.0 / np.sqrt(self._noise.power)

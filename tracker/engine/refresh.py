@@ -25,6 +25,8 @@ THOROUGH_EVERY = 256
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
 WORTH_A_LOOK = 0.8
+# Share of that below which the next refresh is passed over: what flips promise does not double from one to the next.
+FAR_FROM_IT = 0.5
 
 
 class Refresher:
@@ -46,6 +48,7 @@ class Refresher:
         self._next_thorough = 0
         self._run: int | None = None
         self._not_shown = 0
+        self._resting = False
 
     @property
     def next_id(self) -> int:
@@ -108,8 +111,9 @@ class Refresher:
         thorough = self._thorough()
         missed = self._not_shown >= PATIENCE_BURSTS
         routine = cause is Cause.REFRESH and not thorough and not missed
-        if routine and in_use is not None and promise(channel, in_use) < WORTH_A_LOOK * self._config.least_gain:
+        if routine and in_use is not None and not self._worth_a_look(channel, in_use):
             return None, 0
+        self._resting = False
         found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough)
         before = rate(channel, in_use) if in_use is not None else 0.0
         forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
@@ -134,6 +138,7 @@ class Refresher:
             "next_thorough": self._next_thorough,
             "run": self._run,
             "not_shown": self._not_shown,
+            "resting": self._resting,
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -149,6 +154,7 @@ class Refresher:
         self._next_thorough = int(snapshot["next_thorough"])
         self._run = snapshot["run"]
         self._not_shown = int(snapshot["not_shown"])
+        self._resting = bool(snapshot["resting"])
 
     def _thorough(self) -> bool:
         """Search thoroughly at refreshes 1, 2, 4, 8 … after a fresh start, then at regular distances."""
@@ -158,6 +164,16 @@ class Refresher:
         self._next_thorough = min(max(2 * self._next_thorough, 1), THOROUGH_EVERY)
         self._since_thorough = 0
         return True
+
+    def _worth_a_look(self, channel: Channel, in_use: NDArray[np.int8]) -> bool:
+        """Whether flips promise enough for a search to be begun."""
+        if self._resting:
+            self._resting = False
+            return False
+        least = WORTH_A_LOOK * self._config.least_gain
+        promised = promise(channel, in_use)
+        self._resting = promised < FAR_FROM_IT * least
+        return promised >= least
 
     def _publish(
         self,

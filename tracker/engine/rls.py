@@ -39,6 +39,8 @@ Complex = NDArray[np.complex128]
 
 # Below this factor nothing of P is left beside the prior, and dividing by it would lose digits.
 SMALLEST_FACTOR = 1e-12
+# Frames in a strip of S: narrower ones would save little more, and slow the products down.
+STRIP = 32
 
 
 class BlockRls:
@@ -191,11 +193,11 @@ class BlockRls:
     def _whitener(self, z: NDArray[Any], gain: NDArray[Any]) -> NDArray[Any]:
         """Compute L⁻¹ of S = I + Z P⁻ Zᴴ = L Lᴴ; multiplying by the inverse is faster than solving n times."""
         frames = z.shape[0]
-        half = frames // 2
-        spread = np.zeros((frames, frames), dtype=self._dtype, order="F")
-        # S is symmetric and only its lower triangle is read: the upper right quarter is left out.
-        spread[half:] = z[half:] @ gain
-        spread[:half, :half] = z[:half] @ gain[:, :half]
+        spread = np.empty((frames, frames), dtype=self._dtype, order="F")
+        # S is symmetric and only its lower triangle is read: strips of it leave out most of the upper one.
+        for start in range(0, frames, STRIP):
+            strip = slice(start, start + STRIP)
+            spread[start:, strip] = z[start:] @ gain[:, strip]
         spread.ravel(order="K")[:: frames + 1] += 1.0
         factor, invert = (lapack.zpotrf, lapack.ztrtri) if self._complex else (lapack.dpotrf, lapack.dtrtri)
         lower, info = factor(spread, lower=1, clean=1, overwrite_a=1)
