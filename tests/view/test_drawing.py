@@ -69,7 +69,7 @@ def test_a_plot_fills_its_room_exactly(values: list[float | None], width: int, h
     low, high = scale(lines)
     known = [value for value in values if value is not None]
     assert low < high
-    assert all(low <= value <= high + 1e-9 * abs(high) for value in known)
+    assert all(low - 1e-9 * abs(low) <= value <= high + 1e-9 * abs(high) for value in known)
     rows = drawn(lines, width, height, low, high)
     assert [len(row) for row in rows] == [max(width, AXIS)] * height
 

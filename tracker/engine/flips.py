@@ -48,6 +48,8 @@ KEPT = 32
 """Patterns of the survey that are polished on."""
 ROUNDS = 3
 """Rounds of polishing."""
+GLANCED, GLANCES = 32, 2
+"""Patterns of a glance, and rounds of polishing."""
 CLIMBED = 8
 """Patterns of the survey that are climbed from."""
 WAVE = 16
@@ -82,7 +84,13 @@ class Climb:
 
 
 def optimize(
-    channel: Channel, in_use: NDArray[np.generic] | None, limits: Limits, budget: Budget, *, thorough: bool
+    channel: Channel,
+    in_use: NDArray[np.generic] | None,
+    limits: Limits,
+    budget: Budget,
+    *,
+    thorough: bool,
+    glance: bool = False,
 ) -> Climb:
     """Look for the pattern with the best rate.
 
@@ -99,6 +107,9 @@ def optimize(
         Asked before each step; when it is spent, the best pattern so far is returned.
     thorough : bool
         False climbs from the pattern in use alone (if there is none, from the best of one batch of starts).
+    glance : bool
+        Climb from the best of one batch of starts besides, polished: while the channel moves, the summit that the
+        pattern in use sits on sinks below others.
 
     Returns
     -------
@@ -118,7 +129,7 @@ def optimize(
         raise ValueError("the channel holds NaN, infinity or numbers too large to square")
     search = _Search(form, allowance, Meter(budget))
     if form.lines:
-        search.run(thorough=thorough)
+        search.run(thorough=thorough, glance=glance)
     pattern = lines.spread(search.states)
     return Climb(pattern, rate(channel, pattern), search.meter.steps)
 
@@ -146,19 +157,23 @@ class _Search:
     def _strength(self) -> Real:
         return delay_strength(self._rough)
 
-    def run(self, *, thorough: bool) -> None:
+    def run(self, *, thorough: bool, glance: bool = False) -> None:
         """Search until nothing more is found or the budget is spent."""
         form = self._form
-        if self.states.size and thorough:
-            self._offer(self.states)
+        in_use = self.states
+        if in_use.size and (thorough or glance):
+            self._offer(in_use)
         if form.width == 2 and form.tones == 1 and self._reach is None:
             self._one_carrier()
             return
         if thorough:
             self._survey()
             self._waves()
-        elif not self.states.size:
+        elif not in_use.size:
             self._begin(self._draw(self._batch))
+        elif glance:
+            self._glance()
+            self._climb(in_use, pairs=False)
         self._climb(self.states, pairs=True)
 
     def _one_carrier(self) -> None:
@@ -167,6 +182,13 @@ class _Search:
             direct, elements = self._form.direct.view(np.complex128), self._form.surface.view(np.complex128)
             states, _ = one_carrier_optimum(complex(direct[0]), elements[:, 0])
             self._offer(states.astype(np.float64))
+
+    def _glance(self) -> None:
+        """Climb from the best of one batch of patterns."""
+        batch = self._begin(self._draw(min(GLANCED, self._batch)))
+        if batch is not None:
+            best = self._polished(batch, GLANCES)
+            self._climb(best.states[best.values.argmax()], pairs=False)
 
     def _survey(self) -> None:
         """Climb from the best of many patterns."""

@@ -41,7 +41,7 @@ def outside(response: Complex, coefficients: Complex) -> NDArray[np.float64]:
     """
     frames, _, tones = response.shape
     left_over = energy(response) - energy(coefficients)
-    return left_over / (frames * (tones - coefficients.shape[2]))
+    return np.asarray(left_over / (frames * (tones - coefficients.shape[2])))
 
 
 def repeats(patterns: NDArray[np.uint8], coefficients: Complex) -> tuple[NDArray[np.float64], int]:

@@ -7,7 +7,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 # The eight states in a byte of bits: looking them up is faster than working them out. Shape (256, 8).
-STATES_OF_BYTE = 2.0 * np.unpackbits(np.arange(256, dtype=np.uint8)[:, None], axis=1, bitorder="little") - 1.0
+_BITS = np.unpackbits(np.arange(256, dtype=np.uint8)[:, None], axis=1, bitorder="little")
+STATES_OF_BYTE = 2.0 * _BITS.astype(np.float64) - 1.0
 
 
 def pack(states: NDArray[np.generic]) -> NDArray[np.uint8]:

@@ -21,6 +21,9 @@ from .report import Stand
 REMEMBERED = 256
 # A search from many starts costs more than a climb; after the first, it is made again once in so many refreshes.
 THOROUGH_EVERY = 256
+# Between them glances are taken at other starts: the distance doubles after one that found nothing, up to so many
+# refreshes, and is divided by the second number after one that gained, as they do while the channel moves.
+MOST_APART, GAINED = 32, 4
 # Bursts after which a controller that still shows another pattern than the latest is sent it again.
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
@@ -49,6 +52,8 @@ class Refresher:
         self._run: int | None = None
         self._not_shown = 0
         self._resting = False
+        self._since_glance = 0
+        self._glance_every = 1
 
     @property
     def next_id(self) -> int:
@@ -110,15 +115,20 @@ class Refresher:
         in_use = self.states(self.latest)
         thorough = self._thorough()
         missed = self._not_shown >= PATIENCE_BURSTS
-        routine = cause is Cause.REFRESH and not thorough and not missed
+        glance = not thorough and self._glance()
+        routine = cause is Cause.REFRESH and not thorough and not glance and not missed
         if routine and in_use is not None and not self._worth_a_look(channel, in_use):
             return None, 0
         self._resting = False
-        found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough)
+        found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough, glance=glance)
         before = rate(channel, in_use) if in_use is not None else 0.0
         forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
         same = in_use is not None and np.array_equal(found.states, in_use)
-        if not forced and (same or found.rate - before < self._config.least_gain):
+        gains = not same and found.rate - before >= self._config.least_gain
+        if glance:
+            apart = max(self._glance_every // GAINED, 1) if gains else 2 * self._glance_every
+            self._glance_every = min(apart, MOST_APART)
+        if not forced and not gains:
             return None, found.steps
         return self._publish(channel, found.states, before, cause, stand, found.steps), found.steps
 
@@ -139,6 +149,8 @@ class Refresher:
             "run": self._run,
             "not_shown": self._not_shown,
             "resting": self._resting,
+            "since_glance": self._since_glance,
+            "glance_every": self._glance_every,
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -155,6 +167,8 @@ class Refresher:
         self._run = snapshot["run"]
         self._not_shown = int(snapshot["not_shown"])
         self._resting = bool(snapshot["resting"])
+        self._since_glance = int(snapshot["since_glance"])
+        self._glance_every = int(snapshot["glance_every"])
 
     def _thorough(self) -> bool:
         """Search thoroughly at refreshes 1, 2, 4, 8 … after a fresh start, then at regular distances."""
@@ -174,6 +188,14 @@ class Refresher:
         promised = promise(channel, in_use)
         self._resting = promised < FAR_FROM_IT * least
         return promised >= least
+
+    def _glance(self) -> bool:
+        """Look at other starts once in so many refreshes."""
+        self._since_glance += 1
+        if self._since_glance < self._glance_every:
+            return False
+        self._since_glance = 0
+        return True
 
     def _publish(
         self,
