@@ -48,7 +48,7 @@ KEPT = 32
 """Patterns of the survey that are polished on."""
 ROUNDS = 3
 """Rounds of polishing."""
-GLANCED, GLANCES = 32, 2
+GLANCED, GLANCES = 16, 2
 """Patterns of a glance, and rounds of polishing."""
 CLIMBED = 8
 """Patterns of the survey that are climbed from."""
@@ -173,7 +173,6 @@ class _Search:
             self._begin(self._draw(self._batch))
         elif glance:
             self._glance()
-            self._climb(in_use, pairs=False)
         self._climb(self.states, pairs=True)
 
     def _one_carrier(self) -> None:

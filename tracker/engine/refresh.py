@@ -1,7 +1,7 @@
 """When a refreshed pattern is worked out, and whether it is worth publishing."""
 
 import math
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import Any
 
 import numpy as np
@@ -20,10 +20,11 @@ from .report import Stand
 # Published patterns kept, to know what the controller shows when it names an id.
 REMEMBERED = 256
 # A search from many starts costs more than a climb; after the first, it is made again once in so many refreshes.
-THOROUGH_EVERY = 256
+THOROUGH_EVERY = 1024
 # Between them glances are taken at other starts: the distance doubles after one that found nothing, up to so many
-# refreshes, and is divided by the second number after one that gained, as they do while the channel moves.
-MOST_APART, GAINED = 32, 4
+# refreshes, and is one again after one that clearly gained, as they do while the channel moves: by this share of the
+# standard deviation of the rate at least.
+MOST_APART, CLEAR = 32, 0.5
 # Bursts after which a controller that still shows another pattern than the latest is sent it again.
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
@@ -92,7 +93,14 @@ class Refresher:
         """Search thoroughly next, and often again while the estimate forms."""
         self._since_thorough = self._next_thorough = 0
 
-    def choose(self, channel: Channel, cause: Cause, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
+    def choose(
+        self,
+        channel: Channel,
+        cause: Cause,
+        budget: Budget,
+        stand: Stand,
+        variance: Callable[[NDArray[np.int8]], float],
+    ) -> tuple[Pattern | None, int]:
         """Work out a refreshed pattern.
 
         Parameters
@@ -104,6 +112,8 @@ class Refresher:
         budget : Budget
         stand : Stand
             The last burst that it rests on.
+        variance : callable
+            Gives the variance of each complex delay coefficient of the response under a pattern, in units of the noise.
 
         Returns
         -------
@@ -126,8 +136,9 @@ class Refresher:
         same = in_use is not None and np.array_equal(found.states, in_use)
         gains = not same and found.rate - before >= self._config.least_gain
         if glance:
-            apart = max(self._glance_every // GAINED, 1) if gains else 2 * self._glance_every
-            self._glance_every = min(apart, MOST_APART)
+            # A gain far within the doubt of the estimate is found in a channel that stands still as well.
+            moved = gains and found.rate - before > CLEAR * rate_spread(channel, found.states, variance(found.states))
+            self._glance_every = 1 if moved else min(2 * self._glance_every, MOST_APART)
         if not forced and not gains:
             return None, found.steps
         return self._publish(channel, found.states, before, cause, stand, found.steps), found.steps

@@ -318,7 +318,7 @@ class Tracker:
         cause = self._pending_cause or Cause.REFRESH
         if self._refresher.latest is None:
             cause = Cause.FIRST
-        pattern, steps = self._refresher.choose(channel, cause, budget, stand)
+        pattern, steps = self._refresher.choose(channel, cause, budget, stand, self._estimator.variance)
         # The cause of a change stays until a pattern answers to it, or until all is well again without.
         if pattern or self._mode is Mode.TRACKING:
             self._pending_cause = None
