@@ -108,7 +108,7 @@ def test_a_journal_gives_its_patterns_again(journal: Path, tmp_path: Path, capsy
     """Every pattern that the live service had published, with every number in it, to the last bit."""
     summary = replayed(journal, "--out", tmp_path / "out.mcap")
     published = patterns_in(journal)
-    assert len(published) > 15
+    assert len(published) >= 8  # how many exactly hangs on how many bursts had to wait together
     assert bits(patterns_in(tmp_path / "out.mcap")) == bits(published)
     assert summary["patterns_same"] == summary["logged"]["patterns"] == len(published)
     assert (summary["patterns_only_in_log"], summary["patterns_only_in_replay"]) == (0, 0)

@@ -36,7 +36,9 @@ class Frames:
 
     def showing(self, pattern: NDArray[np.uint8]) -> "Frames":
         """Take the frames that sounded a packed pattern."""
-        same = (self.patterns == pattern).all(axis=1)
+        # Most frames of a burst differ in the first byte already.
+        same = np.flatnonzero(self.patterns[:, 0] == pattern[0])
+        same = same[(self.patterns[same] == pattern).all(axis=1)] if same.size else same
         return Frames(self.patterns[same], self.response[same], self.time_ns[same])
 
     def stretches(self, most_ns: int) -> Iterator["Frames"]:
