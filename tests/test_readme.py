@@ -32,9 +32,10 @@ from tracker.assembly import configure
 from tracker.basis_file import LearnedBasis, pack_basis
 from tracker.cli import COMMANDS
 from tracker.engine.burst import Burst
-from tracker.engine.changes import Evidence, Verdict, judge
+from tracker.engine.changes import Verdict, judge
 from tracker.engine.estimator import Estimator
 from tracker.engine.events import Alarm, Cause, Mode, Pattern, Plan, State
+from tracker.engine.evidence import Evidence
 from tracker.engine.reaction import react
 from tracker.engine.refusal import Reason
 from tracker.engine.report import Stand, gap_alarm, lock_alarm

@@ -10,11 +10,11 @@ from numpy.typing import NDArray
 from . import panel
 from .aperture import Elements
 from .bank import Bank, time_constants
-from .changes import Evidence, Verdict, judge
+from .changes import Verdict, judge
 from .channel import Channel
 from .config import Config
 from .drift import Reading
-from .evidence import Heard, Memory
+from .evidence import Evidence, Heard, Memory
 from .following import Lock
 from .frames import Fit, Frames
 from .innovation import DIRECT, INNOVATION, Innovations

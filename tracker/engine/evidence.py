@@ -5,17 +5,19 @@ for as long. Once a sum rises the model stays as it is and frames gather; when a
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from .likelihood import times
+
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
-# Frames kept at most: more would tell no more, and take long to judge.
-MOST_FRAMES = 192
+# Frames kept at most: more would hardly tell more, and take long to judge.
+MOST_FRAMES = 128
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -39,6 +41,49 @@ class Heard:
     outputs: Complex
     time_ns: NDArray[np.int64]
     noise: Real
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Evidence:
+    """Frames since the change, and the model before it; outputs in units of the noise before.
+
+    Parameters
+    ----------
+    outputs : ndarray of complex, shape (B, R, Q)
+        Y.
+    regressors : ndarray, shape (B, n)
+        Z.
+    states : ndarray, shape (B, N)
+    model : ndarray of complex, shape (n, R, Q)
+        C, the direct path first.
+    elements : ndarray of complex, shape (N, R, Q)
+        v.
+    prior : ndarray, shape (n,)
+        Variances before any data.
+    outside : ndarray of complex, shape (B, R, K)
+        What the frames hold outside the delay basis, on the tones.
+    basis : ndarray of complex, shape (K, Q)
+    doubt : ndarray, shape (B, B)
+        Covariance over the frames of what the model has wrong of the surface, in units of the noise.
+    time_s : ndarray, shape (B,)
+        From the start of the change.
+    """
+
+    outputs: Complex
+    regressors: NDArray[Any]
+    states: Real
+    model: Complex
+    elements: Complex
+    prior: Real
+    outside: Complex
+    basis: Complex
+    doubt: NDArray[Any]
+    time_s: Real
+    bent: Complex = field(init=False)
+
+    def __post_init__(self) -> None:
+        """Work out the surface path of every frame under the model, shape (B, R, Q)."""
+        object.__setattr__(self, "bent", times(self.regressors[:, 1:], self.model[1:]))
 
 
 class Memory:

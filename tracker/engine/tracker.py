@@ -38,8 +38,9 @@ from .standing import DIRECT_MOVED, SURFACE_MOVED
 # While no sum is beyond this share of its threshold, nothing is suspected.
 CALM = 0.3
 # A change seen in so few frames, or of a kind likelier than the next by less than so much (nats), is looked at again
-# with the blocks that follow, for no more than so many frames.
-FEW_FRAMES, SURE, MOST_WAIT = 24, 8.0, 64
+# with the blocks that follow, for no more than so many frames. To ask for more nats would not help: a kind that is a
+# special case of another is never likelier by more than what the freedom of the other costs, about 8.
+FEW_FRAMES, SURE, MOST_WAIT = 16, 6.0, 64
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
