@@ -8,6 +8,8 @@ from tracker.engine.innovation import DIRECT, INNOVATION, Innovations
 from tracker.engine.rls import BlockRls, forgetting
 
 SIZE, OUTPUTS = 24, 8
+BASIS = np.eye(OUTPUTS, dtype=np.complex128)
+DIRECT_PATH = np.ones(OUTPUTS, dtype=np.complex128)
 FRAME_S, TIME_CONSTANT_S = 1e-3, 0.2
 
 
@@ -16,7 +18,7 @@ def _play(block: int, moving: bool, frames: int = 6000, jump_at: int | None = No
     rng = np.random.default_rng(1)
     prior = np.full(SIZE, 0.3)
     rls = BlockRls(prior, OUTPUTS)
-    innovations = Innovations(1, OUTPUTS)
+    innovations = Innovations(1, BASIS)
 
     def gaussian(*shape: int) -> NDArray[np.complex128]:
         return np.asarray((rng.normal(size=shape) + 1j * rng.normal(size=shape)) / np.sqrt(2))
@@ -36,8 +38,8 @@ def _play(block: int, moving: bool, frames: int = 6000, jump_at: int | None = No
     for start in range(0, frames, block):
         rls.forget(*forgetting("resetting", block * FRAME_S, TIME_CONSTANT_S))
         innovation, white = rls.update(z[start : start + block], y[start : start + block])
-        innovations.take(innovation, white, rls.whitener)
-        readings += [one.value for one in innovations.readings() if one.name == DIRECT]
+        innovations.take(y[start : start + block] - innovation, innovation, white, rls.whitener)
+        readings += [one.value for one in innovations.readings(rls.coefficients[0]) if one.name == DIRECT]
     return innovations, readings
 
 
@@ -57,12 +59,12 @@ def test_power_of_innovations_is_consistent() -> None:
     With 2 × 16 × 8 degrees a block: 1 ± 1.96 √(2 / 25600), widened to three standard errors for what α may be off.
     """
     rng = np.random.default_rng(2)
-    innovations = Innovations(1, OUTPUTS)
+    innovations = Innovations(1, BASIS)
     powers = []
     for _ in range(100):
         white = (rng.normal(size=(16, OUTPUTS)) + 1j * rng.normal(size=(16, OUTPUTS))) / np.sqrt(2)
-        innovations.take(white, white, np.eye(16))
-        powers += [one.value for one in innovations.readings() if one.name == INNOVATION]
+        innovations.take(white, white, white, np.eye(16))
+        powers += [one.value for one in innovations.readings(DIRECT_PATH) if one.name == INNOVATION]
     assert np.mean(powers) == pytest.approx(1.0, abs=3 * np.sqrt(2 / 25_600))
 
 
@@ -82,17 +84,17 @@ def test_the_direct_path_stands_out(block: int) -> None:
 def test_snapshot_goes_on_bit_by_bit() -> None:
     """Restored statistics give the same readings."""
     rng = np.random.default_rng(3)
-    first, second = Innovations(1, OUTPUTS), Innovations(1, OUTPUTS)
+    first, second = Innovations(1, BASIS), Innovations(1, BASIS)
     for number in range(20):
         white = rng.normal(size=(5, OUTPUTS)) + 1j * rng.normal(size=(5, OUTPUTS))
         whitener = np.eye(5) * 0.8
-        first.take(white, white, whitener)
+        first.take(white, white, white, whitener)
         if number == 10:
-            first.readings()
+            first.readings(DIRECT_PATH)
             second.load(first.snapshot())
         elif number > 10:
-            second.take(white, white, whitener)
-            assert second.readings() == first.readings()
+            second.take(white, white, white, whitener)
+            assert second.readings(DIRECT_PATH) == first.readings(DIRECT_PATH)
         else:
-            first.readings()
+            first.readings(DIRECT_PATH)
     assert second.excess == first.excess

@@ -4,16 +4,20 @@ What is watched is named by the caller: powers over what is expected of them (ga
 freedom), or plain values. Each becomes a standard normal deviate from its baseline: powers exactly, through the gamma
 distribution, so that few degrees of freedom do no harm. Real links sit a little off what theory says, so the baseline
 is measured; it adapts slowly, in bounded steps and not while a sum is raised, so that a change cannot drag it along.
-Where samples are found to spread or to hang together in time more than theory has it, they are scaled and whitened.
+Where samples are found to spread or to hang together in time otherwise than theory has it, they are scaled and
+whitened.
 
 The deviates go to two two-sided CUSUM tests, one tuned to small changes, one to large. All tests of all statistics
-share the false alarms that the user allows: the sum of their rates is the rate asked for (Bonferroni).
+share the false alarms that the user allows: the sum of their rates is the rate asked for (Bonferroni). The test for
+small changes sees samples over many blocks. If these hang together its samples are scaled down; if a filter with a
+short memory makes them swing to and fro, so that sums stay small, the test hardly ever cries wolf, and its share of
+the false alarms goes to the others.
 """
 
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from scipy.special import gammainc, gammaincc, ndtri
@@ -36,9 +40,9 @@ SLACKS = (0.5, 2.0)
 # Share of a threshold beyond which the baseline stands still.
 RAISED = 0.7
 # Theory is believed until what is measured differs by this many standard errors.
-BELIEF = 4.0
-# Samples whose mean shows whether they hang together over longer than a sample.
-LONG = 16
+BELIEF = 3.0
+# Samples whose mean shows whether they hang together over longer than a sample, and how many such means are averaged.
+LONG, LONG_MEMORY = 16, 4096
 # Deviates are cut here: beyond, the distribution functions run out of digits and nothing is to be gained.
 MOST = 35.0
 
@@ -51,17 +55,27 @@ def deviate(ratio: float, degrees: int) -> float:
     return min(-float(ndtri(gammaincc(shape, at))), MOST)
 
 
+def largest(chance: float, count: int) -> float:
+    """Turn the largest of so many values to a standard normal deviate, given the chance that one value is beyond it."""
+    none = count * math.log1p(-min(chance, 1.0 - 1e-12))  # logarithm of the chance that all are below
+    above = -math.expm1(none)
+    deviate_of = -float(ndtri(above)) if above < 0.5 else float(ndtri(math.exp(none)))
+    return min(max(deviate_of, -MOST), MOST)
+
+
 class Watch:
     """One statistic: baseline, scale, whitening, tests.
 
     Parameters
     ----------
     false_alarm_s : float
-        Wanted mean time between false alarms of this one, s.
+        Wanted mean time between false alarms of all tests together, s.
+    tests : float
+        How many tests share them, see `tests`.
     """
 
-    def __init__(self, false_alarm_s: float) -> None:
-        self._false_alarm_s = false_alarm_s
+    def __init__(self, false_alarm_s: float, tests: float = len(SLACKS)) -> None:
+        self._false_alarm_s, self._all_tests = false_alarm_s, tests
         self._cusums = [Cusum(math.inf, slack) for slack in SLACKS]
         self.reset()
 
@@ -75,7 +89,8 @@ class Watch:
         self._product = 0.0  # mean product of neighbouring deviates
         self._before = 0.0  # the last deviate
         self._together, self._whitening, self._shrinking = 0.0, 1.0, 1.0  # scales in use, see _set_scales
-        self._sum, self._summed, self._long_square = 0.0, 0, 1.0  # white deviates over LONG samples: mean² · LONG
+        self._sum, self._summed = 0.0, 0  # white deviates over LONG samples
+        self._long_square, self._batches = 1.0, 0  # mean of such sums squared, over LONG; of how many
         self._first: list[tuple[float, int]] = []
         self.clear()
 
@@ -99,6 +114,23 @@ class Watch:
         return cusum.statistic, cusum.threshold
 
     @property
+    def tests(self) -> float:
+        """For how many tests these two count, by how often they cry wolf.
+
+        The alarm rate of a CUSUM goes with exp(−2 h k / σ²), σ² the variance of sums over their number.
+        """
+        slow = self._cusums[0]
+        if not self.settled or self._long_square >= 1.0 - self._long_doubt:
+            return float(len(SLACKS))
+        return 1.0 + math.exp(-2.0 * slow.threshold * slow.slack * (1.0 / max(self._long_square, 0.1) - 1.0))
+
+    def share(self, tests: float) -> None:
+        """Share the false alarms with so many tests in all."""
+        self._all_tests = tests
+        if self.settled:
+            self._set_thresholds()
+
+    @property
     def period_s(self) -> float:
         """Mean time between samples."""
         return max(self._elapsed_s / max(self._samples, 1), 1e-9)
@@ -117,17 +149,17 @@ class Watch:
         """
         self._samples += 1
         self._elapsed_s += elapsed_s
-        if not self.settled:
+        if not self._count:
             self._warm_up(value, degrees)
             return None
         before = self._before
         sample, unit = self._deviate(value, degrees)
         white = (sample - self._together * before) * self._whitening
-        tested = white * self._shrinking
-        change = None
-        for cusum in self._cusums:
-            change = cusum.update(tested) or change
-        self._measure_height()
+        slow, fast = self._cusums
+        change = slow.update(white * self._shrinking)
+        change = fast.update(white) or change
+        high, low = slow.statistic / slow.threshold, fast.statistic / fast.threshold
+        self.height = high if high > low else low
         self._before = self._adapt(sample, white, unit)
         if self._count % LONG == 0:
             self._set_scales(degrees)
@@ -167,21 +199,25 @@ class Watch:
         gathered = self._gathered
         together = self._product / self._square
         self._together = _bounded(together, 0.9) if abs(together) > BELIEF / math.sqrt(gathered) else 0.0
-        wider = not degrees or self._square > 1.0 + BELIEF * math.sqrt(2.0 / gathered)
-        spread = self._square if wider else 1.0
+        other = not degrees or abs(self._square - 1.0) > BELIEF * math.sqrt(2.0 / gathered)
+        spread = self._square if other else 1.0
         self._whitening = 1.0 / math.sqrt(spread * (1.0 - self._together**2))
-        batches = max(gathered // LONG, 1)
-        longer = self._long_square > 1.0 + BELIEF * math.sqrt(2.0 / batches)
+        longer = self._long_square > 1.0 + self._long_doubt
         self._shrinking = 1.0 / math.sqrt(self._long_square) if longer else 1.0
 
     @property
     def _gathered(self) -> int:
         return min(self._count, MEMORY)
 
+    @property
+    def _long_doubt(self) -> float:
+        """How far the variance of long sums may be off by chance."""
+        return BELIEF * math.sqrt(2.0 / max(self._batches, 1))
+
     def _adapt(self, sample: float, white: float, unit: float) -> float:
         """Let the baseline follow, slowly and bounded; give back the sample as it was bounded."""
         self._count += 1
-        gain = 1.0 / self._gathered
+        gain = 1.0 / (self._count if self._count < MEMORY else MEMORY)
         bounded = _bounded(sample, BOUND * math.sqrt(self._square))
         if self.height < RAISED:
             self._level += bounded * unit * gain
@@ -191,7 +227,9 @@ class Watch:
         self._summed += 1
         if self._summed == LONG:
             square = min(self._sum**2 / LONG, BOUND**2 * max(self._long_square, 1.0))
-            self._long_square += (square - self._long_square) * min(gain * LONG, 1.0)
+            self._batches = min(self._batches + 1, LONG_MEMORY)
+            # What theory says counts as a few.
+            self._long_square += (square - self._long_square) / (self._batches + 4)
             self._sum, self._summed = 0.0, 0
         if self._count <= MEMORY and self._count & (self._count - 1) == 0:
             self._set_thresholds()
@@ -199,7 +237,7 @@ class Watch:
 
     def _set_thresholds(self) -> None:
         """Set thresholds that give the false alarms wanted, as far as the baseline is known."""
-        samples = max(self._false_alarm_s / self.period_s * len(SLACKS), 2.0)
+        samples = max(self._false_alarm_s / self.period_s * self._all_tests, 2.0)
         # In the long run the level is a moving average, which knows the mean as well as twice as many samples do.
         doubt = 1.0 / self._count if self._count < MEMORY else 0.5 / MEMORY
         for cusum in self._cusums:
@@ -235,18 +273,17 @@ class Watch:
 
 _NUMBERS = (
     *("_elapsed_s", "_level", "_scale", "_square", "_product", "_before", "_sum", "_long_square"),
-    *("_together", "_whitening", "_shrinking"),
+    *("_together", "_whitening", "_shrinking", "_all_tests"),
 )
-_COUNTS = ("_count", "_samples", "_summed")
+_COUNTS = ("_count", "_samples", "_summed", "_batches")
 
 
 def _bounded(value: float, limit: float) -> float:
     return min(max(value, -limit), limit)
 
 
-@dataclass(frozen=True, slots=True)
-class Reading:
-    """A sample of a statistic under watch.
+class Reading(NamedTuple):
+    """A sample of a statistic under watch; a tuple, as many are made a burst.
 
     Parameters
     ----------
@@ -304,11 +341,12 @@ class DriftMonitor:
     false_alarm_s : float
         Wanted mean time between false alarms of all together, s.
     names : sequence of str
-        Of the statistics; each has the same share of false alarms.
+        Of the statistics.
     """
 
     def __init__(self, false_alarm_s: float, names: Sequence[str]) -> None:
-        self._watches = {name: Watch(false_alarm_s * len(names)) for name in names}
+        self._watches = {name: Watch(false_alarm_s, len(SLACKS) * len(names)) for name in names}
+        self._blocks = 0
         self._silent_s = dict.fromkeys(names, 0.0)  # since the last reading of each
         for slack in SLACKS:
             threshold_for(2.0, slack)  # makes the tables now: later a burst would wait for them
@@ -352,6 +390,11 @@ class DriftMonitor:
             self._silent_s[reading.name] = 0.0
             if change is not None:
                 suspicions.append(Suspicion(reading.name, change, change.since * watch.period_s))
+        self._blocks += 1
+        if self._blocks & (self._blocks - 1) == 0 or self._blocks % MEMORY == 0:
+            tests = sum(watch.tests for watch in self._watches.values())
+            for watch in self._watches.values():
+                watch.share(tests)
         return suspicions
 
     def snapshot(self) -> dict[str, Any]:
@@ -359,10 +402,12 @@ class DriftMonitor:
         return {
             "watches": {name: watch.snapshot() for name, watch in self._watches.items()},
             "silent_s": dict(self._silent_s),
+            "blocks": self._blocks,
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
+        self._blocks = int(snapshot["blocks"])
         for name, watch in self._watches.items():
             watch.load(snapshot["watches"][name])
             self._silent_s[name] = float(snapshot["silent_s"][name])

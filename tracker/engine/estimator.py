@@ -18,9 +18,10 @@ from .evidence import Evidence, Heard, Memory
 from .following import Lock
 from .frames import Fit, Frames
 from .innovation import DIRECT, INNOVATION, Innovations
+from .matched import MATCHED
 from .noise import energy
 from .prior import prior_variances
-from .reception import Reception, noise_of
+from .reception import Reception
 from .rls import BlockRls
 from .shrinkage import Shrinkage, shrink
 from .standing import MOVED, Standing
@@ -44,7 +45,7 @@ class Estimator:
     def __init__(self, config: Config) -> None:
         self._config = config
         self.reception = Reception(config)
-        self._innovations = Innovations(config.receivers, config.delay.shape[1])
+        self._innovations = Innovations(config.receivers, config.delay)
         # Where phases are followed each block stands at phases of its own.
         self._memory = Memory(blocks=1 if config.follow_phase else None)
         self._standing = Standing()
@@ -58,7 +59,8 @@ class Estimator:
     @property
     def watched(self) -> tuple[str, ...]:
         """Names of the statistics under watch."""
-        return INNOVATION, DIRECT, *MOVED, *(noise_of(receiver) for receiver in range(self._config.receivers))
+        noise = self.reception.watched
+        return INNOVATION, DIRECT, *MATCHED, *MOVED, *noise
 
     @property
     def ready_after(self) -> int:
@@ -137,7 +139,7 @@ class Estimator:
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
             innovation, white = bank.update(regressors[part], outputs[part])
-            self._innovations.take(innovation, white, bank.chosen.whitener)
+            self._innovations.take(outputs[part] - innovation, innovation, white, bank.chosen.whitener)
             power += energy(white.reshape(white.shape[0], self._config.receivers, -1))
             error += float(np.vdot(innovation, innovation).real)
         degrees = frames * self.reception.directions
@@ -348,7 +350,8 @@ class Estimator:
 
     def _readings(self) -> tuple[Reading, ...]:
         """Give samples of what is under watch from the block just taken."""
-        readings = self._innovations.readings()
-        readings += self._standing.readings(self._learned().coefficients, self.reception.noise_power)
+        coefficients = self._learned().coefficients
+        readings = self._innovations.readings(coefficients[0])
+        readings += self._standing.readings(coefficients, self.reception.noise_power)
         readings += self.reception.readings()
         return tuple(readings)

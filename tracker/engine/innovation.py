@@ -21,6 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .drift import Reading
+from .matched import Matched
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -42,11 +43,15 @@ class Innovations:
 
     Parameters
     ----------
-    receivers, size : int
-        R and Q: outputs are R × Q.
+    receivers : int
+        R: outputs are R × Q.
+    basis : ndarray of complex, shape (K, Q)
+        Delay basis.
     """
 
-    def __init__(self, receivers: int, size: int) -> None:
+    def __init__(self, receivers: int, basis: Complex) -> None:
+        size = basis.shape[1]
+        self._matched = Matched(basis)
         self._most_ratio = 1.0 + BOUND / math.sqrt(receivers * size)
         self._shown, self._known = 0.0, 0.0  # moments of the regression for α
         self._blocks = 0
@@ -56,11 +61,13 @@ class Innovations:
         self._common: Complex = np.zeros(receivers * size, dtype=np.complex128)
         self._common_frames = 0
 
-    def take(self, innovation: Complex, white: Complex, whitener: NDArray[Any]) -> None:
+    def take(self, shown: Complex, innovation: Complex, white: Complex, whitener: NDArray[Any]) -> None:
         """Take in frames worked off in one step.
 
         Parameters
         ----------
+        shown : ndarray of complex, shape (B, D)
+            Z C.
         innovation, white : ndarray of complex, shape (B, D)
             Y − Z C, and w.
         whitener : ndarray, shape (B, B)
@@ -77,17 +84,25 @@ class Innovations:
         self._frames += frames
         self._common += innovation.sum(axis=0)
         self._common_frames += frames
+        self._matched.take(shown, innovation)
         self.variance = 1.0 + self.excess * float(predicted.sum()) / frames
         self._calibrate(ratio, predicted, inverse)
 
-    def readings(self) -> list[Reading]:
-        """Say what the block showed, and begin the next."""
+    def readings(self, direct: Complex) -> list[Reading]:
+        """Say what the block showed, and begin the next.
+
+        Parameters
+        ----------
+        direct : ndarray of complex, shape (D,)
+            Estimate of the direct path.
+        """
         size = self._common.shape[0]
         readings = [Reading(INNOVATION, max(self._power / max(self._frames, 1), FLOOR), self._frames * size)]
         self._power, self._frames = 0.0, 0
         if self._common_frames >= COMMON_FRAMES:
             power = np.vdot(self._common, self._common).real / (self._common_frames * size)
             readings.append(Reading(DIRECT, max(power, FLOOR), size))
+            readings += self._matched.readings(self._common, self._common_frames, direct)
             self._common = np.zeros_like(self._common)
             self._common_frames = 0
         return readings
@@ -101,6 +116,7 @@ class Innovations:
             "variance": self.variance,
             "common": self._common.copy(),
             "common_frames": self._common_frames,
+            "matched": self._matched.snapshot(),
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -110,6 +126,7 @@ class Innovations:
         self.variance = float(snapshot["variance"])
         self._common = np.array(snapshot["common"], dtype=np.complex128)
         self._common_frames = int(snapshot["common_frames"])
+        self._matched.load(snapshot["matched"])
 
     def _calibrate(self, ratio: Real, predicted: Real, inverse: Real) -> None:
         """Regress the innovations' power beyond the noise on what the covariance predicts, weighted by its spread."""

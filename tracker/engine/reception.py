@@ -12,6 +12,7 @@ from .drift import Reading
 from .following import Following, Lock
 from .frames import Frames
 from .timing import TimingLoop
+from .tones import TONE, Tones
 
 
 class Reception:
@@ -28,10 +29,18 @@ class Reception:
         self._noise = noise.NoiseEstimate(config.receivers)
         self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
         self._heard_degrees = 0
+        left_over = config.delay.shape[0] - config.delay.shape[1]
+        self._tones = Tones(config.receivers, config.delay) if left_over >= noise.LEAST_OUTSIDE else None
         self.following: list[Following] = []
         if config.follow_phase:
             patience = config.aperture.size + 1
             self.following = [Following(patience, self._timing()) for _ in range(config.receivers)]
+
+    @property
+    def watched(self) -> tuple[str, ...]:
+        """Names of the statistics under watch."""
+        noises = tuple(noise_of(receiver) for receiver in range(self._heard.shape[0]))
+        return (*noises, TONE) if self._tones is not None else noises
 
     @property
     def directions(self) -> int:
@@ -80,9 +89,11 @@ class Reception:
     def first(self, frames: Frames) -> NDArray[np.complex128]:
         """Bring the first frames of all to outputs as `take` does, without yet counting their noise."""
         tones, coefficients = self._project(frames)
-        kept = self._noise.snapshot()
+        kept, watching = self._noise.snapshot(), self._tones
+        self._tones = None
         if not self._noise.known:
             self._measure(frames.patterns, tones, coefficients)
+        self._tones = watching
         outputs = self._in_noise_units(coefficients)
         self._noise.load(kept)
         self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
@@ -96,24 +107,28 @@ class Reception:
         return np.asarray(np.maximum(power, 0.0))
 
     def readings(self) -> list[Reading]:
-        """Give samples of the noise heard since the last call, one a receiver."""
+        """Give samples of the noise heard since the last call: one a receiver, and one of single tones."""
         if not self._heard_degrees:
             return []
         heard = np.maximum(self._heard / self._heard_degrees, noise.FLOOR)
         degrees = self._heard_degrees
         self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
-        return [Reading(noise_of(receiver), float(power), degrees) for receiver, power in enumerate(heard)]
+        powers = [Reading(noise_of(receiver), float(power), degrees) for receiver, power in enumerate(heard)]
+        return powers + self._tones.readings() if self._tones is not None else powers
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
         return {
             "noise": self._noise.snapshot(),
+            "tones": self._tones.snapshot() if self._tones is not None else None,
             "following": [following.snapshot() for following in self.following],
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
         self._noise.load(snapshot["noise"])
+        if self._tones is not None:
+            self._tones.load(snapshot["tones"])
         for following, state in zip(self.following, snapshot["following"], strict=True):
             following.load(state)
 
@@ -138,6 +153,8 @@ class Reception:
     ) -> None:
         frames, left_over = tones.shape[0], tones.shape[2] - coefficients.shape[2]
         if left_over >= noise.LEAST_OUTSIDE:
+            if self._tones is not None:
+                self._tones.take(tones, coefficients)
             power, degrees = noise.outside(tones, coefficients), frames * left_over
         else:
             power, frames = noise.repeats(patterns, coefficients)
