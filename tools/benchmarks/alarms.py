@@ -6,52 +6,36 @@ For hours, the rate of the same tests at the thresholds that the tracker sets is
 """
 
 import math
-from collections import Counter
 from collections.abc import Iterator
-from dataclasses import replace
-from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
-from benchmarks._still_link import CHANGES, FRAME_NS, Changed, Link, information, size_for
+from benchmarks._kinds import kinds
+from benchmarks._recovery import recovery
+from benchmarks._still_link import FRAME_NS, Link
 from benchmarks.row import Row
-from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.drift import MEMORY, SLACKS, DriftMonitor
 from tracker.engine.estimator import Estimator
-from tracker.engine.events import Alarm, Event, Pattern
 from tracker.engine.frames import Frames
 from tracker.engine.run_length import threshold_for
-from tracker.engine.tracker import Tracker
-from tracker.settings import parse
-from tracker.simulation.best import best_pattern
-from tracker.simulation.motion import Still
-from tracker.simulation.schedule import Block
-from tracker.simulation.testbed import Testbed, TestbedConfig
-from tracker.simulation.yard import Scenario, lane, yard
 
-ELEMENTS, FRAMES = 63, 64
-SWEEP = ELEMENTS + 1
 TEN_HOURS_S = 36_000.0
 # Blocks played before anything is counted: the estimate is formed, baselines are known to within a few percent.
 SETTLED = 1500
-QUIET_BLOCKS = 400
-# Frames in which a change must have been noticed.
-PATIENCE = 40 * FRAMES
 
 
 def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     yield from _intervals(quick)
     yield from _hours(4000 if quick else 40_000)
-    yield from _kinds(3 if quick else 40)
-    yield _recovery(1 if quick else 4)
+    yield from kinds(*((3, 3) if quick else (200, 40)))
+    yield from recovery(1 if quick else 4)
 
 
 def _intervals(quick: bool) -> Iterator[Row]:
     """Count false alarms of the whole chain."""
-    cases = [(16, 1)] if quick else [(1, 1), (16, 1), (64, 1), (128, 1), (1, 2), (16, 2), (64, 2), (16, 4), (64, 4)]
+    cases = [(16, 1)] if quick else [(frames, receivers) for receivers in (1, 2, 4) for frames in (1, 16, 64, 128)]
     for frames, receivers in cases:
         wanted, blocks = 300, 6000 if quick else 24_000
         alarms = _count(frames, receivers, wanted, blocks)
@@ -140,113 +124,3 @@ def _mean_length(rng: np.random.Generator, slack: float, runs: int) -> float:
         length += running
         running &= total > 0.0
     return float(length.mean())
-
-
-def _kinds(seeds: int) -> Iterator[Row]:
-    """Delay of every kind at two sizes, beside that of a test that knows the change; confusion at the larger."""
-    needed = math.log(TEN_HOURS_S * 1e9 / FRAME_NS)  # nats, Lorden
-    delays: dict[tuple[str, float], list[float]] = {}
-    bounds: dict[tuple[str, float], list[float]] = {}
-    told: dict[str, Counter[str]] = {kind: Counter() for kind in CHANGES}
-    for seed in range(seeds):
-        link = Link(seed, ELEMENTS, surface=3.0)
-        tracker = Tracker(link.config(TEN_HOURS_S))
-        for number in range(QUIET_BLOCKS):
-            _advance(tracker, link, number, link.states(FRAMES))
-        settled = tracker.snapshot()
-        place = link.place
-        for kind in CHANGES:
-            for level in (1.0, 10.0):
-                link.place = place
-                size = size_for(link, kind, needed * level, SWEEP)
-                tracker = Tracker(link.config(TEN_HOURS_S))
-                tracker.load(settled)
-                known = np.cumsum(information(link, kind, size, PATIENCE))
-                bounds.setdefault((kind, level), []).append(float(np.searchsorted(known, needed) + 1))
-                kind_told, delay = _change(tracker, link, kind, size)
-                delays.setdefault((kind, level), []).append(delay)
-                if level > 1.0:
-                    told[kind][kind_told] += 1
-    for (kind, level), values in delays.items():
-        bound = float(np.median(bounds[kind, level]))
-        median, late = np.percentile(values, [50, 95])
-        # A burst is worked off as a whole: half of one is waited for on average.
-        allowed = 2.0 * (bound + FRAMES / 2)
-        yield Row(
-            f"{kind}, {10 * math.log10(level):.0f} dB: frames until the alarm",
-            float(median),
-            "frames",
-            f"<= {allowed:.0f}",
-            bool(median <= allowed),
-            f"95 %: {late:.0f}; a test that knows the change (Lorden): {bound:.0f}, and bursts of {FRAMES}",
-        )
-    right = 0.0
-    for kind, found in told.items():
-        share = (found[kind] + 0.5 * found["unclear"]) / seeds
-        right += share / len(told)
-        others = ", ".join(f"{name} {count}" for name, count in found.most_common() if name != kind)
-        yield Row(f"{kind}, 10 dB: told right", 100 * share, "%", ">= 95", share >= 0.95, others or "no other")
-    yield Row("all kinds, 10 dB: told right", 100 * right, "%", ">= 95", right >= 0.95, f"{seeds} links")
-
-
-def _advance(
-    tracker: Tracker, link: Link, number: int, states: NDArray[np.float64], changed: Changed | None = None
-) -> list[Event]:
-    burst = link.burst(number, states, changed)
-    tracker.admit(burst, burst.end_ns)
-    return tracker.advance([burst], Steps(20)).events
-
-
-def _change(tracker: Tracker, link: Link, kind: str, size: float) -> tuple[str, float]:
-    """Play a change that begins anywhere in a burst; what the alarm says, and frames until then."""
-    begins = int(link.rng.integers(0, FRAMES))
-    for number in range(PATIENCE // FRAMES):
-        states = link.states(FRAMES)
-        since = number * FRAMES - begins + np.arange(FRAMES)
-        changed = CHANGES[kind][0](link, states, since * FRAME_NS / 1e9, size)
-        if number == 0:
-            before = link.shown(states)
-            response = np.where((since >= 0)[:, None, None], changed.response, before)
-            noise = np.where((since >= 0)[:, None, None], changed.noise, 1.0)
-            changed = Changed(response, noise)
-        events = _advance(tracker, link, QUIET_BLOCKS + number, states, changed)
-        for event in events:
-            if isinstance(event, Alarm):
-                return event.kind, float((number + 1) * FRAMES - begins)
-    return "none", float(PATIENCE)
-
-
-def _recovery(seeds: int) -> Row:
-    """Frames after the direct path is blocked until the rate is back at 0.97 of the best possible."""
-    took = []
-    blocked_s = 0.6
-    for seed in range(seeds):
-        scene = yard((Still(lane(0.0)[0]),), shadow_db=26.0, snr_db=6.0)
-        block = Block(blocked_s, math.inf, 25.0, 0.0)
-        scene = replace(scene, direct=replace(scene.direct, blocks=(block,)))
-        scenario = Scenario("blocked", "", TestbedConfig(scene), time_constant_ms=300.0)
-        tracker = Tracker(configure(parse(scenario.settings()), Path()))
-        testbed = Testbed(scenario.testbed, seed)
-        first = int(blocked_s * 1e9 / testbed.burst_ns)
-        best, recovered = None, None
-        for number in range(first + 24):
-            burst = testbed.next_burst(number * testbed.burst_ns)
-            tracker.admit(burst, burst.end_ns)
-            for event in tracker.advance([burst], Steps(400)).events:
-                if isinstance(event, Pattern):
-                    testbed.apply(event.id, event.states)
-            if number >= first and recovered is None:
-                report = testbed.report((number + 1) * testbed.burst_ns)
-                best, most = best_pattern(report.channel, best if best is not None else report.states, 600)
-                if report.rate >= 0.97 * most:
-                    recovered = (number + 1) * FRAMES - blocked_s * 1e9 / FRAME_NS
-        took.append(math.inf if recovered is None else round(recovered))
-    sweep = 257
-    return Row(
-        "direct path blocked, N 256, 28 000 frames/s: frames until 0.97 of the best rate",
-        float(np.median(took)),
-        "frames",
-        f"<= {2 * sweep} (two sweeps)",
-        bool(np.median(took) <= 2 * sweep),
-        f"each: {took}",
-    )

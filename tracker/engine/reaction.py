@@ -33,6 +33,7 @@ def react(estimator: Estimator, verdict: Verdict) -> str:
     if kind in ("noise", "interference"):
         return "none"
     if kind == "direct-path":
+        estimator.roll_back()
         estimator.renew_direct()
         return "renew direct path"
     if kind == "elements":

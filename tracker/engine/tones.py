@@ -21,6 +21,8 @@ Real = NDArray[np.float64]
 FRAMES = 16
 # Samples over which the level of a tone is averaged, and what one sample may count at most.
 MEMORY, BOUND = 1024, 4.0
+# Once the level is known one sample in so many is enough to follow it.
+RARELY = 8
 FLOOR = 1e-30
 
 TONE = "tone"
@@ -55,13 +57,16 @@ class Tones:
         """Give a sample once enough frames are in."""
         if self._frames < FRAMES:
             return []
-        power = self._power / (self._power.mean(axis=1, keepdims=True) + FLOOR)
+        power = self._power * (self._power.shape[1] / (self._power.sum(axis=1)[:, None] + FLOOR))
         ratio = power / self._level
         chance = float(gammaincc(self._frames, self._frames * float(ratio.max())))
         self._samples += 1
-        self._level += (np.minimum(power, BOUND * self._level) - self._level) / min(self._samples, MEMORY)
-        np.maximum(self._level, FLOOR, out=self._level)
-        self._power, self._frames = np.zeros_like(self._power), 0
+        if self._samples < MEMORY or self._samples % RARELY == 0:
+            gain = max(1.0 / self._samples, RARELY / MEMORY if self._samples >= MEMORY else 0.0)
+            self._level += (np.minimum(power, BOUND * self._level) - self._level) * gain
+            np.maximum(self._level, FLOOR, out=self._level)
+        self._power.fill(0.0)
+        self._frames = 0
         return [Reading(TONE, largest(chance, ratio.size))]
 
     def snapshot(self) -> dict[str, Any]:
