@@ -183,10 +183,23 @@ class Estimator:
         if self._bank is not None:
             self._bank.forget(1.0 - share, share)
 
-    def renew_direct(self) -> None:
-        """Forget how well the direct path is known, and that alone."""
-        if self._bank is not None:
-            self._bank.reset(np.array([0]))
+    def renew_direct(self, frames: int) -> None:
+        """Learn the direct path anew, and that alone, from the last so many frames: those since it changed.
+
+        The estimate from before comes back first: until the change was seen, it bent the surface's part as well.
+        """
+        self.roll_back()
+        if self._bank is None:
+            return
+        self._bank.reset(np.array([0]))
+        if not self._memory.heard or not frames:
+            return
+        unit = self.reception.noise_power
+        outputs = [one.outputs * np.sqrt(one.noise / unit)[:, None] for one in self._memory.heard]
+        last = np.concatenate(outputs)[-frames:].reshape(-1, unit.size * self.reception.directions)
+        patterns = np.concatenate([one.patterns for one in self._memory.heard])[-frames:]
+        states = panel.unpack(patterns, self._config.elements)
+        self._bank.update(self._config.aperture.regressors(states), last)
 
     def calm(self) -> None:
         """Take note that nothing is suspected: the estimate is what changes will be held against."""

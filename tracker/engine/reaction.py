@@ -8,7 +8,7 @@ channel       reacquire: nearly all that was known counts for nothing
 timing        reacquire
 basis         reacquire
 unclear       reacquire, or only a new baseline when innovations became smaller
-direct-path   renew direct path: that alone is learned anew, within a few frames
+direct-path   renew direct path: that alone is learned anew, from the frames since it changed
 elements      renew elements: those alone are learned anew
 phase         turn: the estimate from before is turned by what was found
 gain          amplify: the estimate from before grows or shrinks by what was found
@@ -33,8 +33,7 @@ def react(estimator: Estimator, verdict: Verdict) -> str:
     if kind in ("noise", "interference"):
         return "none"
     if kind == "direct-path":
-        estimator.roll_back()
-        estimator.renew_direct()
+        estimator.renew_direct(verdict.frames)
         return "renew direct path"
     if kind == "elements":
         if estimator.renew(verdict.elements):
