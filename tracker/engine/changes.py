@@ -27,6 +27,9 @@ Real = NDArray[np.float64]
 CLEAR = 2.0
 # By so much (nats) from so many frames, no other choice of frames would change the verdict.
 FAR, FAR_FRAMES = 15.0, 24
+# Kinds with those that they are a special case of: however many frames are heard, these fit as well, and the kind is
+# likelier by no more than what their freedom costs.
+GENERAL = {"direct-path": ("channel",), "phase": ("timing",)}
 # A change of level must be this much likelier than none, nats, for the frames before to be left out.
 CLEAR_ONSET = 6.0
 # Latest frames that are also looked at by themselves: a weak change shows no onset.
@@ -65,6 +68,11 @@ class Verdict:
     elements: NDArray[np.intp] = field(default_factory=lambda: np.zeros(0, dtype=np.intp))
     scores: dict[str, float] = field(default_factory=dict)
     frames: int = 0
+
+    @property
+    def limited(self) -> bool:
+        """Whether more frames would not make it likelier: the runner-up holds it as a special case."""
+        return self.next_kind in GENERAL.get(self.kind, ())
 
 
 def judge(evidence: Evidence) -> Verdict:

@@ -351,10 +351,13 @@ class DriftMonitor:
         for slack in SLACKS:
             threshold_for(2.0, slack)  # makes the tables now: later a burst would wait for them
 
-    def reset(self) -> None:
-        """Forget all baselines."""
-        for watch in self._watches.values():
-            watch.reset()
+    def reset(self, kept: Sequence[str] = ()) -> None:
+        """Forget all baselines but those named, whose sums begin anew."""
+        for name, watch in self._watches.items():
+            if name in kept:
+                watch.clear()
+            else:
+                watch.reset()
 
     def clear(self) -> None:
         """Begin all sums anew on the same baselines."""

@@ -98,7 +98,8 @@ class Explanations:
 
     def channel(self) -> float:
         """Say that all coefficients are others."""
-        return averaged(self.whitened(self._spread()), self.flat, self.ones) - self.price(2)
+        # Five times as rare as another direct path, which is priced for the five forms it comes in.
+        return averaged(self.whitened(self._spread()), self.flat, self.ones) - self.price(2, 5)
 
     def motion(self) -> float:
         """Let the channel depart more and more, or either path turn."""

@@ -37,10 +37,11 @@ from .standing import DIRECT_MOVED, SURFACE_MOVED
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
 CALM = 0.3
-# A change seen in so few frames, or of a kind likelier than the next by less than so much (nats), is looked at again
-# with the blocks that follow, for no more than so many frames. To ask for more nats would not help: a kind that is a
-# special case of another is never likelier by more than what the freedom of the other costs, about 8.
+# A change seen in so few frames, or of a kind likelier than the next by less than so much (nats) where more frames may
+# tell, is looked at again with the blocks that follow, for no more than so many frames.
 FEW_FRAMES, SURE, MOST_WAIT = 16, 6.0, 64
+# Kinds after which the noise has the same baseline: not even what fractional delays leak into it has changed.
+DELAYS_STAY = ("phase", "mismatch", "elements")
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -238,11 +239,12 @@ class Tracker:
         self._adopted = np.array(adopted, dtype=np.int8) if adopted is not None else None
         self._gap = (int(gap[0]), int(gap[1])) if gap else None
 
-    def _start_over(self) -> None:
+    def _start_over(self, kept: Sequence[str] = ()) -> None:
+        """Begin anew but for the baselines of the statistics named."""
         self._frames_since = 0
         self._suspected, self._waited = None, 0
         self._estimator.forget_calm()
-        self._drift.reset()
+        self._drift.reset(kept)
         self._refresher.begin_afresh()
 
     def _watch(self, burst: Burst, fit: Fit) -> list[Event]:
@@ -290,7 +292,8 @@ class Tracker:
         self._estimator.keep()
         verdict = self._estimator.judge() or Verdict("unclear", "", 0.0)
         self._suspected = None
-        doubtful = verdict.margin < SURE or 0 < verdict.frames < FEW_FRAMES
+        doubtful = verdict.margin < SURE and not verdict.limited
+        doubtful = doubtful or 0 < verdict.frames < FEW_FRAMES
         if doubtful and self._waited < MOST_WAIT:
             self._suspected = suspicion
             self._waited += frames
@@ -303,7 +306,7 @@ class Tracker:
         if action not in HARMLESS:
             self._mode = after(self._mode, Happening.CHANGE)
             self._pending_cause = Cause.DRIFT
-        self._start_over()
+        self._start_over(self._estimator.reception.watched if verdict.kind in DELAYS_STAY else ())
         return verdict, action
 
     def _consider(self, channel: Channel, bursts: int, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
