@@ -384,7 +384,6 @@ def kinds() -> dict[str, set[str]]:
     mend = np.ones(1, np.complex128), np.ones(1, np.complex128)
     estimator = create_autospec(Estimator, instance=True)
     found = {kind: {react(estimator, Verdict(kind, "", 9.0, mend=mend))} for kind in (*verdict.scores, "unclear")}
-    found["unclear"].add("new baseline")
     stand = Stand(1, 2, 3)
     alarms = [lock_alarm(0, 0.1, 0.3, stand), gap_alarm(1, 2, stand)]
     for required in (True, False):

@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 import scipy.stats
 import statsmodels.api as sm
+from statsmodels.stats.diagnostic import breaks_cusumolsresid
 
 from tracker.engine.cusum import Cusum
 from tracker.engine.run_length import by_chain, gamma_threshold, one_sided, threshold_for, two_sided
@@ -72,6 +73,20 @@ def test_nile(threshold: float, year: int) -> None:
             assert int(when) - change.since + 1 == 1899
             return
     pytest.fail("no alarm")
+
+
+@pytest.mark.parametrize(("years", "broken"), [(slice(None), True), (slice(28), False), (slice(28, None), False)])
+def test_agrees_with_the_test_of_breaks_in_statsmodels(years: slice, broken: bool) -> None:
+    """The Nile as a whole breaks, either part by itself does not: so say OLS-CUSUM at 5 % and the test at h = 5.
+
+    Ploberger & Kraemer (Econometrica 60, 1992) as statsmodels has it; both take mean and spread from the same years.
+    """
+    flow = sm.datasets.nile.load_pandas().data["volume"].to_numpy(dtype=float)[years]
+    residuals = flow - flow.mean()
+    assert (breaks_cusumolsresid(residuals, ddof=1)[1] < 0.05) == broken
+    cusum = Cusum(5.0)
+    alarms = [cusum.update(float(value)) for value in residuals / residuals.std(ddof=1)]
+    assert any(alarms) == broken
 
 
 def test_one_sided_is_about_twice_two_sided_without_shift() -> None:

@@ -29,7 +29,7 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     yield from _intervals(quick)
     yield from _hours(4000 if quick else 40_000)
-    yield from kinds(*((3, 3) if quick else (200, 40)))
+    yield from kinds(*((3, 3) if quick else (200, 20)))
     yield from recovery(1 if quick else 4)
 
 

@@ -359,6 +359,10 @@ class DriftMonitor:
             else:
                 watch.reset()
 
+    def renew(self, name: str) -> None:
+        """Forget the baseline of one statistic."""
+        self._watches[name].reset()
+
     def clear(self) -> None:
         """Begin all sums anew on the same baselines."""
         for watch in self._watches.values():

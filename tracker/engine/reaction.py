@@ -7,7 +7,7 @@ motion        forget faster: half of what was known counts for nothing
 channel       reacquire: nearly all that was known counts for nothing
 timing        reacquire
 basis         reacquire
-unclear       reacquire, or only a new baseline when innovations became smaller
+unclear       reacquire
 direct-path   renew direct path: that alone is learned anew, from the frames since it changed
 elements      renew elements: those alone are learned anew
 phase         turn: the estimate from before is turned by what was found
@@ -24,7 +24,7 @@ from .estimator import Estimator
 # Share of the way back to the prior that P goes.
 LOOSEN, REACQUIRE = 0.5, 0.9
 # Actions that leave the estimate as good as it was: the tracker need not call itself reacquiring.
-HARMLESS = ("none", "new baseline", "turn", "amplify")
+HARMLESS = ("none", "turn", "amplify")
 
 
 def react(estimator: Estimator, verdict: Verdict) -> str:

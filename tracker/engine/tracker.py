@@ -42,6 +42,8 @@ CALM = 0.3
 FEW_FRAMES, SURE, MOST_WAIT = 16, 6.0, 64
 # Kinds after which the noise has the same baseline: not even what fractional delays leak into it has changed.
 DELAYS_STAY = ("phase", "mismatch", "elements")
+# Statistics that only grow with a change.
+MISFITS = (INNOVATION, DIRECT, DIRECT_MOVED, SURFACE_MOVED)
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -276,7 +278,14 @@ class Tracker:
             self._mode = after(self._mode, Happening.READY)
         if self._mode is not Mode.TRACKING:
             return None
-        suspicions = self._drift.update(fit.readings, fit.elapsed_s)
+        suspicions = []
+        for one in self._drift.update(fit.readings, fit.elapsed_s):
+            if one.change.up or one.name not in MISFITS:
+                suspicions.append(one)
+            else:
+                # A link that fits better than before has not changed: patterns came again sooner than usual, as when
+                # a sweep was cut off, or the baseline was wrong.
+                self._drift.renew(one.name)
         if self._suspected is not None:
             return replace(self._suspected, since_s=self._suspected.since_s + fit.elapsed_s)
         if suspicions:
@@ -298,11 +307,7 @@ class Tracker:
             self._suspected = suspicion
             self._waited += frames
             return None
-        if not suspicion.change.up and suspicion.name in (INNOVATION, DIRECT, DIRECT_MOVED, SURFACE_MOVED):
-            # A link that fits better than before has not changed: the baseline was wrong.
-            verdict, action = Verdict("unclear", "", 0.0), "new baseline"
-        else:
-            action = react(self._estimator, verdict)
+        action = react(self._estimator, verdict)
         if action not in HARMLESS:
             self._mode = after(self._mode, Happening.CHANGE)
             self._pending_cause = Cause.DRIFT
