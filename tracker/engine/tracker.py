@@ -107,15 +107,17 @@ class Tracker:
         """Id that the next pattern will have."""
         return self._refresher.next_id
 
-    def admit(self, burst: Burst, arrival_ns: int) -> None:
+    def admit(self, burst: Burst, arrival_ns: int, *, vouched: bool = False) -> None:
         """Let a burst in, to be worked off by the next `advance`; count what was lost before it.
+
+        See `Admission.admit` for the parameters.
 
         Raises
         ------
         Refused
             The burst is not to be used; see `Admission.admit`. It is not counted here: call `refuse`.
         """
-        lost = self._admission.admit(burst, arrival_ns)
+        lost = self._admission.admit(burst, arrival_ns, vouched=vouched)
         if lost:
             self._counts.lost += lost
             self._gap = ((self._gap[0] if self._gap else 0) + lost, self._gap[1] if self._gap else burst.t_ns)
