@@ -96,7 +96,7 @@ def settings_text(pilots: str, name: str = "yard", **changes: str) -> str:
         "tones": "fft = 32\nfirst = 8\ncount = 16\nspacing_khz = 1250.0",
         "delay": "taps = 8",
         # So many steps whatever the clock says: results must not depend on how busy the machine is.
-        "refresh": "budget_ms = 20000.0\nmost_steps = 12\nleast_gain = 0.0",
+        "refresh": "budget_ms = 20000.0\nmost_steps = 12\nleast_gain = 0.0\nswitching_ms = 0.0",
         "sockets": f'pilots = "{pilots}"\n'
         + "\n".join(f'{key} = "tcp://127.0.0.1:{free_port()}"' for key in ("publish", "control")),
     }

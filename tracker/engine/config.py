@@ -65,6 +65,8 @@ class Config:
         Whether the phases of direct and surface path are followed.
     least_gain : float
         Predicted gain below which the pattern in use stays, bit/s/Hz.
+    switching_s : float
+        Time that the link loses when the panel switches, s.
     clock_skew_ns : int
         Largest difference allowed between a burst's time and its arrival.
     limits : Limits
@@ -84,6 +86,7 @@ class Config:
     follow_phase: bool = False
     every_bursts: int = 1
     least_gain: float = 0.01
+    switching_s: float = 0.0
     clock_skew_ns: int = 60_000_000_000
     limits: Limits = field(default_factory=Limits)
     plan: PlanConfig | None = None

@@ -189,7 +189,7 @@ class Tracker:
         link = self._link(channel, bursts[-1].pattern_id, frames)
         self._calibration.observe(link.pattern, link.measured)
         link = replace(link, promise_kept=self._calibration.kept_share)
-        pattern, steps = self._consider(channel, len(bursts), budget, stand)
+        pattern, steps = self._consider(channel, link, len(bursts), budget, stand)
         if pattern:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
             promised = self._calibration.promise(pattern.id, pattern.rate, spread)
@@ -307,7 +307,9 @@ class Tracker:
         self._start_over()
         return verdict, action
 
-    def _consider(self, channel: Channel, bursts: int, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
+    def _consider(
+        self, channel: Channel, link: Link, bursts: int, budget: Budget, stand: Stand
+    ) -> tuple[Pattern | None, int]:
         """Publish a pattern if one is due and worth it; also say how many optimizer steps were taken."""
         if self._adopted is not None:
             adopted, self._adopted = self._adopted, None
@@ -320,7 +322,8 @@ class Tracker:
         cause = self._pending_cause or Cause.REFRESH
         if self._refresher.latest is None:
             cause = Cause.FIRST
-        pattern, steps = self._refresher.choose(channel, cause, budget, stand, self._estimator.variance)
+        before = link.predicted if link.pattern == self._refresher.latest else None
+        pattern, steps = self._refresher.choose(channel, cause, budget, stand, self._estimator.variance, before)
         # The cause of a change stays until a pattern answers to it, or until all is well again without.
         if pattern or self._mode is Mode.TRACKING:
             self._pending_cause = None
