@@ -71,6 +71,9 @@ class Config:
         Largest difference allowed between a burst's time and its arrival.
     limits : Limits
         What the panel cannot do.
+    sweeps_from : int or None
+        Elements times frames of a block from which sweeps of orthogonal patterns are noticed, to estimate at less cost
+        while they are sounded: in smaller blocks there is nothing to be gained. None for never.
     plan : PlanConfig or None
         How the sounding is planned; None leaves it to the controller.
     """
@@ -89,6 +92,7 @@ class Config:
     switching_s: float = 0.0
     clock_skew_ns: int = 60_000_000_000
     limits: Limits = field(default_factory=Limits)
+    sweeps_from: int | None = 16_384
     plan: PlanConfig | None = None
 
     @property

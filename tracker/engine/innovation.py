@@ -21,6 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .drift import Reading
+from .filter import Surprise
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -56,18 +57,9 @@ class Innovations:
         self._common: Complex = np.zeros(receivers * size, dtype=np.complex128)
         self._common_frames = 0
 
-    def take(self, innovation: Complex, white: Complex, whitener: NDArray[Any]) -> None:
-        """Take in frames worked off in one step.
-
-        Parameters
-        ----------
-        innovation, white : ndarray of complex, shape (B, D)
-            Y − Z C, and w.
-        whitener : ndarray, shape (B, B)
-            L⁻¹.
-        """
-        diagonal = whitener.diagonal().real
-        spread = 1.0 / (diagonal * diagonal)  # L_bb²
+    def take(self, surprise: Surprise) -> None:
+        """Take in frames worked off in one step; their spread is L_bb²."""
+        innovation, white, spread = surprise.innovation, surprise.white, surprise.spread
         predicted = spread - 1.0
         inverse = 1.0 / (1.0 + self.excess * predicted)
         parts = white.view(np.float64)
