@@ -136,7 +136,7 @@ def test_no_pattern_exceeds_the_bound(seed: int) -> None:
 
 
 def test_bound_is_the_exact_optimum_tone_by_tone() -> None:
-    """The bound equals the mean over tones of what each reaches with the best pattern for itself, to single precision."""
+    """The bound equals the mean over tones of what each reaches with the best pattern for itself, single precision."""
     rng = np.random.default_rng(8)
     for elements, receivers, tones, delays in ((1, 1, 1, 1), (60, 2, 11, 4), (700, 1, 40, 6)):
         basis = np.linalg.qr(_gauss(rng, tones, delays))[0]
