@@ -49,6 +49,7 @@ def configure(settings: Settings, folder: Path, basis: bytes | None = None) -> C
         least_gain=refresh.least_gain,
         clock_skew_ns=round(settings.link.clock_skew_s * 1e9),
         limits=_limits(settings),
+        panel=(settings.panel.columns, settings.panel.rows),
         plan=_plan(settings),
     )
 

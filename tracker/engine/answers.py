@@ -1,9 +1,9 @@
 """What each element answers to its bit, followed over windows of frames, with an eye on sudden changes.
 
-A window shows x = v + noise of variance r (see `fresh`). The answer v is followed by a random walk of variance q a
-window, per direction over the delays::
+A window of w sweeps shows x = v + noise of variance r (see `fresh`). The answer v is followed by a random walk of
+variance q a sweep, per direction over the delays::
 
-    s ← s + q,    K = s / (s + r),    y ← y + K (x − y),    s ← (1 − K) s
+    s ← s + q w,    K = s / (s + r),    y ← y + K (x − y),    s ← (1 − K) s
 
 q is measured on all elements together, by the median, so that a channel that moves or changes moves q, and single
 elements do not. What is left are elements that change by themselves. Beside each goes a second account of it, begun
@@ -75,7 +75,7 @@ class Answers:
         self.variance = share @ self.variance + unseen[:, None]
         self._second_variance = share @ self._second_variance + unseen[:, None]
 
-    def take(self, heard: Complex, noise: Real, power: Real) -> NDArray[np.bool_]:
+    def take(self, heard: Complex, noise: Real, power: Real, sweeps: float) -> NDArray[np.bool_]:
         """Take in a window; tell which elements changed by themselves, shape (N,).
 
         Parameters
@@ -86,6 +86,8 @@ class Answers:
             r; very large for elements of which the window says nothing.
         power : ndarray, shape (k,)
             Mean power of a response.
+        sweeps : float
+            w.
         """
         if not self._taken:
             self._taken = 1
@@ -100,7 +102,7 @@ class Answers:
             self._second *= together / abs(together)
         ahead = heard - self.mean
         off = _power(ahead)
-        walk, noisier = self._moved(off, self.variance + noise)
+        walk, noisier = self._moved(off, self.variance + noise, sweeps)
         noise = noise * noisier[:, None]
         self.variance += walk[:, None]
         both = self.variance + noise
@@ -122,13 +124,15 @@ class Answers:
         self._second_variance = np.where(begun, before * (noise / both), noise)
         changed = self._gained > CHANGED
         if changed.any():
+            # The window in which an element changes shows part of either answer: the next one is to count for more.
+            step = _power(self._second[:, changed] - self.mean[:, changed])
             self.mean[:, changed] = self._second[:, changed]
-            self.variance[:, changed] = self._second_variance[:, changed]
+            self.variance[:, changed] = self._second_variance[:, changed] + step
             self._gained[changed] = 0.0
         return np.asarray(changed)
 
-    def _moved(self, off: Real, expected: Real) -> tuple[Real, Real]:
-        """Measure q, shape (k,), and the factor by which this window is noisier than it says, shape (k,)."""
+    def _moved(self, off: Real, expected: Real, sweeps: float) -> tuple[Real, Real]:
+        """Measure q w, shape (k,), and the factor by which this window is noisier than it says, shape (k,)."""
         middle = off.shape[1] // 2
         beyond = np.partition(off / expected, middle, axis=1)[:, middle] / MEDIAN
         # The harmonic mean leaves out elements that were not heard.
@@ -136,8 +140,8 @@ class Answers:
         self._taken += 1
         if np.any(beyond > CHANGED_ALL):
             return np.maximum(moved, 0.0), np.ones(beyond.size)
-        self._walk = self._walk + (moved - self._walk) / min(self._taken - 1, MEMORY)
-        return np.maximum(self._walk, 0.0), np.where(beyond > NOISY, beyond, 1.0)
+        self._walk = self._walk + (moved / sweeps - self._walk) / min(self._taken - 1, MEMORY)
+        return np.maximum(self._walk * sweeps, 0.0), np.where(beyond > NOISY, beyond, 1.0)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""

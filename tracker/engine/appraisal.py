@@ -1,9 +1,9 @@
 """Holds what the newest frames say of every element against what its neighbours predict, window after window.
 
-About once a sweep: the view of the newest frames (`fresh`), on the directions that carry the responses
-(`directions`), is followed (`answers`) and compared with the prediction (`neighbours`) as evidence (`hypotheses`). What
-all elements show alike is no fault of any: a gain, phase or fade common to all is taken off the prediction. How far
-healthy elements lie from the prediction, and how much of that stays (`staying`), is measured along.
+About once a sweep, and later more seldom: the view of the newest frames (`fresh`), on the directions that carry the
+responses (`directions`), is followed (`answers`) and compared with the prediction (`neighbours`) as evidence
+(`hypotheses`). What all elements show alike is no fault of any: a gain, phase or fade common to all is taken off the
+prediction. How far healthy elements lie from the prediction, and how much of that stays (`staying`), is measured along.
 """
 
 from collections.abc import Mapping
@@ -25,12 +25,16 @@ Real = NDArray[np.float64]
 
 # Share of the frames of a sweep after which what they say is looked at; more when nothing at all is known yet, because
 # elements can then only be told apart once there are more patterns than elements.
-WINDOW_SHARE, FIRST_SHARE = 0.875, 1.2
+WINDOW_SHARE, FIRST_SHARE = 0.75, 1.2
+# The same once nothing was found for so many windows: judging costs time, and there is little left to find.
+LATER_SHARE, LATER = 5.0, 8
+# Times that the estimate is read within a window.
+READS = 4
 # Windows up to which directions and weights are learned anew each time, and after how many they are later.
 LEARN_OFTEN, LEARN_EVERY = 4, 8
-# The same for holding the answers against the predictions, which is done too while anything stirs, and while the doubt
-# about any element lies between these.
-LOOK_OFTEN, LOOK_EVERY, OPEN = 8, 4, (0.5, 0.97)
+# One window in so many in which the answers are held against the predictions even when nothing stirs, and doubts about
+# an element between which something does.
+LOOK_EVERY, OPEN = 4, (0.5, 0.95)
 # Noise of a window, over that of as many frames of orthogonal patterns, above which elements are not told apart.
 MOST_NOISE = 16.0
 # Share of what the filter expects other elements to leak into one that they do: of much it only fears that it moved.
@@ -78,12 +82,13 @@ class Appraisal:
     def __init__(self, columns: int, rows: int, forgetting_kind: str, judged: NDArray[np.bool_]) -> None:
         self._kind = forgetting_kind
         self._judged = judged
-        self._least_frames = max(int(WINDOW_SHARE * (judged.size + 1)), 1)
-        self._first_frames = max(int(FIRST_SHARE * (judged.size + 1)), 2)
+        self._sweep = judged.size + 1
+        self._unread = (0, 0.0)  # frames and seconds since the estimate was last read
+        self._since = 0  # windows since the last beginning or finding
         self._started = False
         self._window: Window | None = None
-        self._direct: Complex | None = None  # sum over the blocks of the window
-        self._blocks = 0
+        self._direct: Complex | None = None  # sum over the reads of the window
+        self._reads = 0
         self._noise: Real | None = None
         self._directions: Directions | None = None
         self._neighbours = Neighbours(columns, rows)
@@ -102,43 +107,71 @@ class Appraisal:
 
     def begin(self, now: Posterior | None) -> None:
         """Begin a window; None to wait for the next block."""
-        self._started = True
-        self._window = Window(self._kind, now) if now is not None else None
-        self._direct, self._blocks = None, 0
+        self._since = 0
+        self._begin_window(now)
 
-    def update(self, now: Posterior, frames: int, elapsed_s: float, trusted: NDArray[np.bool_]) -> bool:
-        """Take in a block; True when it completed a window.
+    def attend(self) -> None:
+        """Look closely at the next windows: something was found."""
+        self._since = 0
+
+    def due(self, frames: int, elapsed_s: float) -> bool:
+        """Count a block; say whether the estimate is to be read now, with `update`.
+
+        Parameters
+        ----------
+        frames : int
+        elapsed_s : float
+            Time forgotten with it, s.
+        """
+        self._unread = (self._unread[0] + frames, self._unread[1] + elapsed_s)
+        return self._window is None or READS * self._unread[0] >= self._least_frames
+
+    def update(self, now: Posterior, trusted: NDArray[np.bool_]) -> bool:
+        """Read the estimate; True when that completed a window.
 
         Parameters
         ----------
         now : Posterior
-            After the block.
-        frames : int
-        elapsed_s : float
-            Time forgotten with it, s.
+            After the blocks counted since the last time.
         trusted : ndarray of bool, shape (N,)
             Elements that may be asked as neighbours, as far as the evidence lets them.
         """
         if not self._started:
-            self.begin(now.unlearned)
+            unread = self._unread
+            self._begin_window(now.unlearned)
+            self._unread = unread
         if self._window is None or not self._window.follows(now):
-            self.begin(now)
+            self._begin_window(now)
             return False
-        self._window.add(now, frames, elapsed_s)
-        self._direct = now.coefficients[0] if self._direct is None else self._direct + now.coefficients[0]
-        self._blocks += 1
-        if self._window.frames < (self._least_frames if self.windows else self._first_frames):
+        self._window.add(now, *self._unread)
+        self._unread = (0, 0.0)
+        self._direct = now.coefficients[0].copy() if self._direct is None else self._direct + now.coefficients[0]
+        self._reads += 1
+        if self._window.frames < self._least_frames:
             return False
-        view, count = self._window.view(now), self._window.frames
-        self.direct = self._direct / self._blocks
-        self.begin(now)
-        if view is None or np.median(view.noise) * count > MOST_NOISE:
+        view, frames = self._window.view(now), self._window.frames
+        self.direct = self._direct / self._reads
+        self._begin_window(now)
+        if view is None or np.median(view.noise) * frames > MOST_NOISE:
             return False
-        self._appraise(now, view, trusted)
+        self._appraise(now, view, frames / self._sweep, trusted)
         return True
 
-    def _appraise(self, now: Posterior, view: View, trusted: NDArray[np.bool_]) -> None:
-        """Take in what a window showed."""
+    @property
+    def _least_frames(self) -> int:
+        """Frames that make a window."""
+        if not self.windows:
+            return max(int(FIRST_SHARE * self._sweep), 2)
+        return max(int((LATER_SHARE if self._since >= LATER else WINDOW_SHARE) * self._sweep), 1)
+
+    def _begin_window(self, now: Posterior | None) -> None:
+        self._started = True
+        self._unread = (0, 0.0)
+        self._window = Window(self._kind, now) if now is not None else None
+        self._direct, self._reads = None, 0
+
+    def _appraise(self, now: Posterior, view: View, sweeps: float, trusted: NDArray[np.bool_]) -> None:
+        """Take in what a window of so many sweeps showed."""
         responses = now.coefficients[1:]
         learn = self._change_unit(now) or self.windows <= LEARN_OFTEN or self.windows % LEARN_EVERY == 0
         before = found = self._directions
@@ -149,15 +182,16 @@ class Appraisal:
         power = np.maximum(_power(estimate).mean(axis=1) - spent, 0.0)
         if before is not None and before is not found:
             self._turn(before, found, power)
-        changed = self.answers.take(heard, noise, power)
-        stay = self._staying.take(heard - self.predicted, self._trust) if self.windows else 1.0
+        changed = self.answers.take(heard, noise, power, sweeps)
+        stay = self._staying.take(heard - self.predicted, self._trust, sweeps) if self.windows else 1.0
         # While nothing stirs the evidence stays what it is, and need not be worked out anew each time.
         stirs = stay < 1.0 or bool(changed.any()) or self._open
-        self.looked = learn or stirs or self.windows <= LOOK_OFTEN or self.windows % LOOK_EVERY == 0
+        self.looked = learn or stirs or self._since <= LATER or self.windows % LOOK_EVERY == 0
         if self.looked:
-            self.beliefs.settle(1.0 - stay * stay, changed)
+            self.beliefs.settle(1.0 - stay ** (2.0 * sweeps), changed)
             self._look(estimate, spent, trusted, learn=learn)
         self.windows += 1
+        self._since += 1
 
     def _noise_on(
         self, view: View, heard: Complex, responses: Complex, estimate: Complex, found: Directions
@@ -237,7 +271,9 @@ class Appraisal:
             "started": self._started,
             "window": self._window.snapshot() if self._window is not None else None,
             "sum": self._direct.copy() if self._direct is not None else None,
-            "blocks": self._blocks,
+            "reads": self._reads,
+            "unread": list(self._unread),
+            "since": self._since,
             "noise": self._noise.copy() if self._noise is not None else None,
             "directions": [found.kept.copy(), found.shows_noise] if found is not None else None,
             "neighbours": self._neighbours.snapshot(),
@@ -261,7 +297,8 @@ class Appraisal:
         self._started = bool(snapshot["started"])
         self._window = Window.restore(window, self._kind) if window is not None else None
         self._direct = np.array(total, dtype=np.complex128) if total is not None else None
-        self._blocks = int(snapshot["blocks"])
+        self._reads, self._since = int(snapshot["reads"]), int(snapshot["since"])
+        self._unread = (int(snapshot["unread"][0]), float(snapshot["unread"][1]))
         self._noise = np.array(noise, dtype=np.float64) if noise is not None else None
         self._directions = None
         if found is not None:

@@ -69,6 +69,8 @@ class Config:
         Largest difference allowed between a burst's time and its arrival.
     limits : Limits
         What the panel cannot do.
+    panel : (int, int) or None
+        Columns and rows of the panel, so that elements can be judged by their neighbours; None when not known.
     plan : PlanConfig or None
         How the sounding is planned; None leaves it to the controller.
     """
@@ -86,6 +88,7 @@ class Config:
     least_gain: float = 0.01
     clock_skew_ns: int = 60_000_000_000
     limits: Limits = field(default_factory=Limits)
+    panel: tuple[int, int] | None = None
     plan: PlanConfig | None = None
 
     @property

@@ -16,8 +16,7 @@ from numpy.typing import NDArray
 
 from . import hypotheses
 from .appraisal import Appraisal
-from .channel import Channel
-from .faults import FAULTS, FINE, NOT_JUDGED, SILENT, STUCK_MINUS, STUCK_PLUS, SWAPPED, UNMOVED, WEAK, Finding
+from .faults import FAULTS, FINE, NOT_JUDGED, SILENT, STUCK_MINUS, STUCK_PLUS, SURE, SWAPPED, UNMOVED, WEAK, Finding
 from .fresh import Posterior
 from .hypotheses import FOLLOWS
 from .panel import Limits
@@ -27,8 +26,8 @@ from .swaps import swapped
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
-# Probability of not following from which an element is called faulty; below the second it is taken back.
-SURE, TAKEN_BACK = 0.97, 0.5
+# Probability of not following below which a fault is taken back.
+TAKEN_BACK = 0.5
 # Probability from which a pair is called swapped: of many pairs, one may fit by chance.
 SURELY_SWAPPED = 0.999
 # Probability from which a side is named.
@@ -51,12 +50,21 @@ class Health:
         Columns and rows; element i is column i // rows, row i % rows.
     forgetting_kind : str
         Of the filter whose estimates are judged, see `rls.forgetting`.
-    known : Limits or None
-        What the settings say of the panel.
+    known : Limits
+        What the panel is known not to do.
+
+    Attributes
+    ----------
+    faults : tuple of (int, str, float)
+        Element, fault and confidence of all that do not follow, in the order of the elements.
+    silent : ndarray of int
+        Elements that surely do not answer to their bits.
+    limits : Limits
+        What the panel cannot do: what was known, and those.
     """
 
-    def __init__(self, panel: tuple[int, int], forgetting_kind: str, known: Limits | None = None) -> None:
-        known = known or Limits()
+    def __init__(self, panel: tuple[int, int], forgetting_kind: str, known: Limits) -> None:
+        self._known = known
         columns, rows = self._shape = panel
         self._kind = forgetting_kind
         self._judged = np.ones(columns * rows, dtype=np.bool_)
@@ -74,44 +82,12 @@ class Health:
         self._last_good = np.full(elements, -1, dtype=np.int64)  # window of it
         self._unchanged = 0  # windows without another element that fell silent
         self._sides = Sides(0)
-
-    @property
-    def faults(self) -> tuple[tuple[int, str, float], ...]:
-        """Element, fault and confidence of all that do not follow, in the order of the elements."""
-        faulty = np.flatnonzero(self._codes > FINE)
-        return tuple((int(n), FAULTS[self._codes[n]], float(self._confidence[n])) for n in faulty)
-
-    @property
-    def map(self) -> NDArray[np.int8]:
-        """Health codes over the panel, shape (columns, rows); see `FAULTS`."""
-        return self._codes.reshape(self._shape).copy()
+        self._tell()
 
     @property
     def windows(self) -> int:
         """Windows of frames judged."""
         return self._appraisal.windows
-
-    @property
-    def silent(self) -> NDArray[np.intp]:
-        """Elements that surely do not answer to their bits."""
-        return np.flatnonzero(_silent(self._codes) & (self._confidence >= LEFT_OUT))
-
-    def limits(self, base: Limits) -> Limits:
-        """Add what was found to what the panel is known not to do."""
-        silent = self.silent
-        if not silent.size:
-            return base
-        stuck = {int(n): -1 if self._codes[n] == STUCK_MINUS else 1 for n in silent}
-        return replace(base, stuck=stuck | base.stuck)
-
-    def believed(self, channel: Channel) -> Channel:
-        """Take out of the estimate what is left in it of elements that do not answer."""
-        silent = self.silent
-        if not silent.size:
-            return channel
-        surface = channel.surface.copy()
-        surface[silent] = 0.0
-        return replace(channel, surface=surface)
 
     def begin(self, now: Posterior | None) -> None:
         """Begin a window: the estimate starts, was loosened, or is not to be trusted.
@@ -123,24 +99,35 @@ class Health:
         """
         self._appraisal.begin(now)
 
-    def update(self, now: Posterior, frames: int, elapsed_s: float) -> tuple[Finding, ...]:
-        """Take in a block; return the faults that are newly found.
+    def due(self, frames: int, elapsed_s: float) -> bool:
+        """Count a block; say whether the estimate is to be read now, with `update`.
 
         Parameters
         ----------
-        now : Posterior
-            After the block.
         frames : int
         elapsed_s : float
             Time forgotten with it, s.
         """
-        if not self._appraisal.update(now, frames, elapsed_s, self._partner < 0):
+        return self._appraisal.due(frames, elapsed_s)
+
+    def update(self, now: Posterior) -> tuple[Finding, ...]:
+        """Read the estimate; return the faults that are newly found.
+
+        Parameters
+        ----------
+        now : Posterior
+            After the blocks counted since the last time.
+        """
+        if not self._appraisal.update(now, self._partner < 0):
             return ()
         before, beliefs = self._codes, self._appraisal.beliefs.probabilities
         if self._appraisal.looked:
             self._name(beliefs)
             self._pair_up()
         self._remember(now, beliefs[FOLLOWS], before)
+        self._tell()
+        if np.any(self._codes != before):
+            self._appraisal.attend()
         new = np.flatnonzero((self._codes > FINE) & (before <= FINE))
         doubt = np.maximum(1.0 - beliefs[FOLLOWS], self._confidence)
         return tuple(Finding(int(n), FAULTS[self._codes[n]], float(self._confidence[n]), float(doubt[n])) for n in new)
@@ -197,6 +184,15 @@ class Health:
         np.copyto(self._last, now.coefficients[1:], where=good[:, None])
         self._last_good[good] = appraisal.windows
 
+    def _tell(self) -> None:
+        """Put what was found in words and limits."""
+        codes, confidence = self._codes, self._confidence
+        faulty = np.flatnonzero(codes > FINE)
+        self.faults = tuple((int(n), FAULTS[codes[n]], float(confidence[n])) for n in faulty)
+        self.silent = faulty[_silent(codes[faulty]) & (confidence[faulty] >= LEFT_OUT)]
+        stuck = {int(n): -1 if codes[n] == STUCK_MINUS else 1 for n in self.silent}
+        self.limits = replace(self._known, stuck=stuck | self._known.stuck)
+
     def snapshot(self) -> dict[str, Any]:
         """All state as plain values and arrays; `load` goes on from it bit by bit."""
         return {
@@ -221,6 +217,7 @@ class Health:
         self._unchanged = int(snapshot["unchanged"])
         self._sides = Sides(self._last.shape[1])
         self._sides.load(snapshot["sides"])
+        self._tell()
 
 
 def _silent(codes: NDArray[np.int8]) -> NDArray[np.bool_]:

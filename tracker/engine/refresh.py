@@ -14,6 +14,7 @@ from .config import Config
 from .events import Cause, Pattern
 from .flips import optimize
 from .one_carrier import rate_bound
+from .panel import Limits
 from .rate import promise, rate, response
 from .report import Stand
 
@@ -99,6 +100,7 @@ class Refresher:
         cause: Cause,
         budget: Budget,
         stand: Stand,
+        limits: Limits,
         variance: Callable[[NDArray[np.int8]], float],
     ) -> tuple[Pattern | None, int]:
         """Work out a refreshed pattern.
@@ -112,6 +114,8 @@ class Refresher:
         budget : Budget
         stand : Stand
             The last burst that it rests on.
+        limits : Limits
+            What the panel cannot do, as far as is known by now.
         variance : callable
             Gives the variance of each complex delay coefficient of the response under a pattern, in units of the noise.
 
@@ -130,7 +134,7 @@ class Refresher:
         if routine and in_use is not None and not self._worth_a_look(channel, in_use):
             return None, 0
         self._resting = False
-        found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough, glance=glance)
+        found = optimize(channel, in_use, limits, budget, thorough=thorough, glance=glance)
         before = rate(channel, in_use) if in_use is not None else 0.0
         forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
         same = in_use is not None and np.array_equal(found.states, in_use)
