@@ -52,6 +52,7 @@ class Answers:
         self._gained = np.zeros(elements)  # log-likelihood that the second account gained
         self._second: Complex = np.zeros((1, elements), dtype=np.complex128)
         self._second_variance = np.ones((1, elements))
+        self._changed = np.zeros(elements, dtype=np.bool_)  # in the last window
         self.mean: Complex = np.zeros((1, elements), dtype=np.complex128)
         """y, shape (k, N)."""
         self.variance: Real = np.ones((1, elements))
@@ -107,29 +108,31 @@ class Answers:
         self.variance += walk[:, None]
         both = self.variance + noise
         likely = _density(off, both)
-        # While a change is suspected the first account is held: it must not follow what may be the new answer.
-        gain = np.where(self._gained > SUSPECTED, 0.0, self.variance / both)
+        # While a change is suspected the first account is held: it must not follow what may be the new answer. After
+        # one it begins afresh, because the window in which an element changes shows part of either answer.
+        before = self._changed
+        gain = np.where(before, 1.0, np.where(self._gained > SUSPECTED, 0.0, self.variance / both))
         self.mean += gain * ahead
-        self.variance = np.maximum(self.variance * (1.0 - gain), noise / MOST_AVERAGED)
+        self.variance = np.where(before, noise, np.maximum(self.variance * (1.0 - gain), noise / MOST_AVERAGED))
         # An account begun afresh expects any response, or none; one begun before, what it saw since.
         begun = self._gained > 0.0
         ahead = heard - np.where(begun, self._second, 0.0)
-        before = np.where(begun, self._second_variance + walk[:, None], power[:, None])
-        both, off = before + noise, _power(ahead)
+        expected = np.where(begun, self._second_variance + walk[:, None], power[:, None])
+        both, off = expected + noise, _power(ahead)
         since = _density(off, both)
         none = _density(off, noise)
         since = np.where(begun, since, np.logaddexp(since, none) - math.log(2.0))
-        self._gained = np.maximum(self._gained, 0.0) + since - likely
-        self._second = np.where(begun, self._second + (before / both) * ahead, heard)
-        self._second_variance = np.where(begun, before * (noise / both), noise)
-        changed = self._gained > CHANGED
+        self._gained = np.where(before, 0.0, np.maximum(self._gained, 0.0) + since - likely)
+        self._second = np.where(begun, self._second + (expected / both) * ahead, heard)
+        self._second_variance = np.where(begun, expected * (noise / both), noise)
+        changed = self._changed = self._gained > CHANGED
         if changed.any():
-            # The window in which an element changes shows part of either answer: the next one is to count for more.
+            # How much of the step is still to come is not known.
             step = _power(self._second[:, changed] - self.mean[:, changed])
             self.mean[:, changed] = self._second[:, changed]
             self.variance[:, changed] = self._second_variance[:, changed] + step
             self._gained[changed] = 0.0
-        return np.asarray(changed)
+        return changed.copy()
 
     def _moved(self, off: Real, expected: Real, sweeps: float) -> tuple[Real, Real]:
         """Measure q w, shape (k,), and the factor by which this window is noisier than it says, shape (k,)."""
@@ -151,6 +154,7 @@ class Answers:
             "gained": self._gained.copy(),
             "second": self._second.copy(),
             "second_variance": self._second_variance.copy(),
+            "changed": self._changed.copy(),
             "mean": self.mean.copy(),
             "variance": self.variance.copy(),
         }
@@ -162,6 +166,7 @@ class Answers:
         self._gained = np.array(snapshot["gained"], dtype=np.float64)
         self._second = np.array(snapshot["second"], dtype=np.complex128)
         self._second_variance = np.array(snapshot["second_variance"], dtype=np.float64)
+        self._changed = np.array(snapshot["changed"], dtype=np.bool_)
         self.mean = np.array(snapshot["mean"], dtype=np.complex128)
         self.variance = np.array(snapshot["variance"], dtype=np.float64)
 

@@ -27,7 +27,7 @@ Real = NDArray[np.float64]
 # elements can then only be told apart once there are more patterns than elements.
 WINDOW_SHARE, FIRST_SHARE = 0.75, 1.2
 # The same once nothing was found for so many windows: judging costs time, and there is little left to find.
-LATER_SHARE, LATER = 5.0, 8
+LATER_SHARE, LATER = 5.0, 6
 # Times that the estimate is read within a window.
 READS = 4
 # Windows up to which directions and weights are learned anew each time, and after how many they are later.
@@ -35,6 +35,8 @@ LEARN_OFTEN, LEARN_EVERY = 4, 8
 # One window in so many in which the answers are held against the predictions even when nothing stirs, and doubts about
 # an element between which something does.
 LOOK_EVERY, OPEN = 4, (0.5, 0.95)
+# Doubt about an element that has changed from which the next windows are looked at closely.
+DOUBTED = 0.1
 # Noise of a window, over that of as many frames of orthogonal patterns, above which elements are not told apart.
 MOST_NOISE = 16.0
 # Share of what the filter expects other elements to leak into one that they do: of much it only fears that it moved.
@@ -73,6 +75,8 @@ class Appraisal:
         Elements of which it said something.
     predicted, residual : ndarray, shape (k, N)
         What each element should answer, and the variance about it.
+    sweeps : float
+        Length of the last window.
     direct : ndarray of complex, shape (D,)
         Mean of the direct path's estimates over the last window, in units of the noise.
     amplitude : ndarray, shape (D,)
@@ -94,10 +98,11 @@ class Appraisal:
         self._neighbours = Neighbours(columns, rows)
         self._staying = Staying()
         self._trust = judged.astype(np.float64)
-        self._open = False
+        self._open = self._changed = False
         self.answers = Answers(judged.size)
         self.beliefs = Beliefs(judged.size)
         self.windows = 0
+        self.sweeps = 0.0
         self.looked = False
         self.known = judged.copy()
         self.predicted: Complex = np.zeros((1, judged.size), dtype=np.complex128)
@@ -154,7 +159,8 @@ class Appraisal:
         self._begin_window(now)
         if view is None or np.median(view.noise) * frames > MOST_NOISE:
             return False
-        self._appraise(now, view, frames / self._sweep, trusted)
+        self.sweeps = frames / self._sweep
+        self._appraise(now, view, self.sweeps, trusted)
         return True
 
     @property
@@ -185,11 +191,15 @@ class Appraisal:
         changed = self.answers.take(heard, noise, power, sweeps)
         stay = self._staying.take(heard - self.predicted, self._trust, sweeps) if self.windows else 1.0
         # While nothing stirs the evidence stays what it is, and need not be worked out anew each time.
-        stirs = stay < 1.0 or bool(changed.any()) or self._open
+        stirs = stay < 1.0 or bool(changed.any()) or self._open or self._changed
+        self._changed = bool(changed.any())
         self.looked = learn or stirs or self._since <= LATER or self.windows % LOOK_EVERY == 0
         if self.looked:
             self.beliefs.settle(1.0 - stay ** (2.0 * sweeps), changed)
-            self._look(estimate, spent, trusted, learn=learn)
+            doubt = self._look(estimate, spent, trusted, learn=learn)
+            self._open = bool(np.any((doubt > OPEN[0]) & (doubt < OPEN[1])))
+            if np.any(doubt[changed] > DOUBTED):
+                self._since = 0
         self.windows += 1
         self._since += 1
 
@@ -211,8 +221,8 @@ class Appraisal:
         noise *= np.where(rest < 1.0, rest + LEAKED * (1.0 - rest) * strength[:, None], rest)
         return noise, spent
 
-    def _look(self, estimate: Complex, spent: float, trusted: NDArray[np.bool_], *, learn: bool) -> None:
-        """Hold the answers against what neighbours predict."""
+    def _look(self, estimate: Complex, spent: float, trusted: NDArray[np.bool_], *, learn: bool) -> Real:
+        """Hold the answers against what neighbours predict; return the doubt about each element, 0 where unheard."""
         asked = self.known & trusted
         trust = np.where(asked, self.beliefs.probabilities[FOLLOWS] if self.windows else 1.0, 0.0)
         # Whom to ask follows from what is believed, and the other way round: twice, when nothing is known yet.
@@ -221,8 +231,7 @@ class Appraisal:
             power = self._compare(estimate, spent, trust, learn=learn)
             self.beliefs.look(self.answers, self.predicted, self.residual, power)
             trust = np.where(asked, self.beliefs.probabilities[FOLLOWS], 0.0)
-        doubt = 1.0 - trust[asked]
-        self._open = bool(np.any((doubt > OPEN[0]) & (doubt < OPEN[1])))
+        return np.where(asked, 1.0 - trust, 0.0)
 
     def _compare(self, estimate: Complex, spent: float, trust: Real, *, learn: bool) -> Real:
         """Predict every element from neighbours that follow; return the mean power of a response, shape (k,)."""
@@ -280,9 +289,11 @@ class Appraisal:
             "staying": self._staying.snapshot(),
             "trust": self._trust.copy(),
             "open": self._open,
+            "changed": self._changed,
             "answers": self.answers.snapshot(),
             "beliefs": self.beliefs.snapshot(),
             "windows": self.windows,
+            "sweeps": self.sweeps,
             "looked": self.looked,
             "known": self.known.copy(),
             "predicted": self.predicted.copy(),
@@ -306,10 +317,11 @@ class Appraisal:
         self._neighbours.load(snapshot["neighbours"])
         self._staying.load(snapshot["staying"])
         self._trust = np.array(snapshot["trust"], dtype=np.float64)
-        self._open, self.looked = bool(snapshot["open"]), bool(snapshot["looked"])
+        self._open, self._changed = bool(snapshot["open"]), bool(snapshot["changed"])
+        self.looked = bool(snapshot["looked"])
         self.answers.load(snapshot["answers"])
         self.beliefs.load(snapshot["beliefs"])
-        self.windows = int(snapshot["windows"])
+        self.windows, self.sweeps = int(snapshot["windows"]), float(snapshot["sweeps"])
         self.known = np.array(snapshot["known"], dtype=np.bool_)
         self.predicted = np.array(snapshot["predicted"], dtype=np.complex128)
         self.residual = np.array(snapshot["residual"], dtype=np.float64)

@@ -31,7 +31,7 @@ TAKEN_BACK = 0.5
 # Probability from which a pair is called swapped: of many pairs, one may fit by chance.
 SURELY_SWAPPED = 0.999
 # Probability from which a side is named.
-SIDE_SURE = 0.99
+SIDE_SURE = 0.998
 # Probability that an element does not answer from which the optimizer leaves it out.
 LEFT_OUT = 0.9
 # Probability of following from which a response counts as good to be remembered.
@@ -126,9 +126,10 @@ class Health:
             self._pair_up()
         self._remember(now, beliefs[FOLLOWS], before)
         self._tell()
-        if np.any(self._codes != before):
+        faulty, was_faulty = self._codes > FINE, before > FINE
+        if np.any(faulty != was_faulty):
             self._appraisal.attend()
-        new = np.flatnonzero((self._codes > FINE) & (before <= FINE))
+        new = np.flatnonzero(faulty & ~was_faulty)
         doubt = np.maximum(1.0 - beliefs[FOLLOWS], self._confidence)
         return tuple(Finding(int(n), FAULTS[self._codes[n]], float(self._confidence[n]), float(doubt[n])) for n in new)
 
@@ -169,14 +170,14 @@ class Health:
         self._sides.rescale(appraisal.amplitude)
         silent = _silent(self._codes) & (self._last_good >= 0)
         age = appraisal.windows - self._last_good
-        self._sides.take(appraisal.direct, quiet=not np.any(silent & (age < KEPT)))
+        self._sides.take(appraisal.direct, appraisal.sweeps, quiet=not np.any(silent & (age < KEPT)))
         self._unchanged = 0 if np.any(silent & ~_silent(before)) else self._unchanged + 1
-        waiting = np.flatnonzero(silent & (self._codes == UNMOVED) & (age < KEPT))
-        if waiting.size and self._unchanged >= SETTLED:
+        lately = np.flatnonzero(silent & (age < KEPT))
+        if np.any(self._codes[lately] == UNMOVED) and self._unchanged >= SETTLED:
             # All that fell silent at about the same time moved the direct path together, and none may be missing.
-            first, last = int(age[waiting].max()), int(age[waiting].min())
-            sides = self._sides.decide(self._last[waiting], first, last, SIDE_SURE) if first - last <= TOGETHER else []
-            for n, (side, sure) in zip(waiting.tolist(), sides, strict=bool(sides)):
+            first, last = int(age[lately].max()), int(age[lately].min())
+            sides = self._sides.decide(self._last[lately], first, last, SIDE_SURE) if first - last <= TOGETHER else []
+            for n, (side, sure) in zip(lately.tolist(), sides, strict=bool(sides)):
                 if side:
                     self._codes[n] = STUCK_PLUS if side > 0 else STUCK_MINUS
                     self._confidence[n] = min(float(self._confidence[n]), sure)
