@@ -34,7 +34,7 @@ READS = 4
 LEARN_OFTEN, LEARN_EVERY = 4, 8
 # One window in so many in which the answers are held against the predictions even when nothing stirs, and doubts about
 # an element between which something does.
-LOOK_EVERY, OPEN = 4, (0.5, 0.95)
+LOOK_EVERY, OPEN = 4, (0.5, 0.93)
 # Doubt about an element that has changed from which the next windows are looked at closely.
 DOUBTED = 0.1
 # Noise of a window, over that of as many frames of orthogonal patterns, above which elements are not told apart.

@@ -25,7 +25,7 @@ SILENT = (UNMOVED, STUCK_PLUS, STUCK_MINUS)
 """Codes of elements that do not answer."""
 MARKS = {FINE: ".", UNMOVED: "0", STUCK_PLUS: "+", STUCK_MINUS: "-", WEAK: "w", SWAPPED: "x"}
 """How each code is drawn on a map."""
-SURE = 0.95
+SURE = 0.93
 """Probability of not following from which an element is called faulty."""
 
 
