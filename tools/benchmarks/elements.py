@@ -187,7 +187,7 @@ def _in_service(seeds: range) -> Iterator[Row]:
 
 
 def _cost(columns: int, rows: int, bursts: int) -> Iterator[Row]:
-    """Time that judging takes a burst, on a still link with faults; the first half is the start."""
+    """Processor time that judging takes a burst, on a still link with faults; the first half is the start."""
     elements = columns * rows
     told = scenario(drawn("stuck", 1, elements, round(SHARE * elements)), side=columns)
     bed, config = Testbed(told.testbed, 1), configure(parse(told.settings()), Path())
@@ -196,10 +196,10 @@ def _cost(columns: int, rows: int, bursts: int) -> Iterator[Row]:
     for number in range(bursts):
         frames = Frames.of(bed.next_burst(number * bed.burst_ns))
         fit = estimator.update([frames])
-        begun = time.perf_counter()
+        begun = time.thread_time()
         if health.due(FRAMES, fit.elapsed_s) and (posterior := estimator.posterior) is not None:
             health.update(posterior)
-        took.append(1e6 * (time.perf_counter() - begun))
+        took.append(1e6 * (time.thread_time() - begun))
     later = took[bursts // 2 :]
     note = f"longest {max(later):.0f} µs; the first {bursts // 2} bursts {mean(took[: bursts // 2]):.0f} µs"
     yield Row(f"judging {elements} elements, a burst of {FRAMES}", mean(later), "µs", note=note)

@@ -70,7 +70,7 @@ class Answers:
         """
         if not self._taken:
             return
-        share = _power(onto)
+        share = power_of(onto)
         self._walk = share @ self._walk
         self.mean, self._second = onto @ self.mean, onto @ self._second
         self.variance = share @ self.variance + unseen[:, None]
@@ -102,7 +102,7 @@ class Answers:
             self.mean *= together / abs(together)
             self._second *= together / abs(together)
         ahead = heard - self.mean
-        off = _power(ahead)
+        off = power_of(ahead)
         walk, noisier = self._moved(off, self.variance + noise, sweeps)
         noise = noise * noisier[:, None]
         self.variance += walk[:, None]
@@ -118,7 +118,7 @@ class Answers:
         begun = self._gained > 0.0
         ahead = heard - np.where(begun, self._second, 0.0)
         expected = np.where(begun, self._second_variance + walk[:, None], power[:, None])
-        both, off = expected + noise, _power(ahead)
+        both, off = expected + noise, power_of(ahead)
         since = _density(off, both)
         none = _density(off, noise)
         since = np.where(begun, since, np.logaddexp(since, none) - math.log(2.0))
@@ -128,7 +128,7 @@ class Answers:
         changed = self._changed = self._gained > CHANGED
         if changed.any():
             # How much of the step is still to come is not known.
-            step = _power(self._second[:, changed] - self.mean[:, changed])
+            step = power_of(self._second[:, changed] - self.mean[:, changed])
             self.mean[:, changed] = self._second[:, changed]
             self.variance[:, changed] = self._second_variance[:, changed] + step
             self._gained[changed] = 0.0
@@ -171,7 +171,8 @@ class Answers:
         self.variance = np.array(snapshot["variance"], dtype=np.float64)
 
 
-def _power(values: Complex) -> Real:
+def power_of(values: Complex) -> Real:
+    """|values|², of any shape."""
     return np.asarray(values.real**2 + values.imag**2)
 
 

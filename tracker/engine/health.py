@@ -22,6 +22,7 @@ from .hypotheses import FOLLOWS
 from .panel import Limits
 from .sides import KEPT, Sides
 from .swaps import swapped
+from .windows import Shown, Windows
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -74,7 +75,8 @@ class Health:
     def forget(self) -> None:
         """Throw all evidence away, and with it the faults found."""
         elements = self._judged.size
-        self._appraisal = Appraisal(*self._shape, self._kind, self._judged)
+        self._windows = Windows(elements, self._kind)
+        self._appraisal = Appraisal(*self._shape, self._judged)
         self._codes = np.where(self._judged, FINE, NOT_JUDGED).astype(np.int8)
         self._confidence = np.zeros(elements)
         self._partner = np.full(elements, -1, dtype=np.int64)
@@ -84,11 +86,6 @@ class Health:
         self._sides = Sides(0)
         self._tell()
 
-    @property
-    def windows(self) -> int:
-        """Windows of frames judged."""
-        return self._appraisal.windows
-
     def begin(self, now: Posterior | None) -> None:
         """Begin a window: the estimate starts, was loosened, or is not to be trusted.
 
@@ -97,7 +94,7 @@ class Health:
         now : Posterior or None
             From which the next frames go on; None to wait for the next block.
         """
-        self._appraisal.begin(now)
+        self._windows.begin(now)
 
     def due(self, frames: int, elapsed_s: float) -> bool:
         """Count a block; say whether the estimate is to be read now, with `update`.
@@ -108,7 +105,7 @@ class Health:
         elapsed_s : float
             Time forgotten with it, s.
         """
-        return self._appraisal.due(frames, elapsed_s)
+        return self._windows.due(frames, elapsed_s)
 
     def update(self, now: Posterior) -> tuple[Finding, ...]:
         """Read the estimate; return the faults that are newly found.
@@ -118,17 +115,19 @@ class Health:
         now : Posterior
             After the blocks counted since the last time.
         """
-        if not self._appraisal.update(now, self._partner < 0):
+        shown = self._windows.take(now)
+        if shown is None:
             return ()
+        self._appraisal.take(now, shown, self._partner < 0)
         before, beliefs = self._codes, self._appraisal.beliefs.probabilities
         if self._appraisal.looked:
             self._name(beliefs)
             self._pair_up()
-        self._remember(now, beliefs[FOLLOWS], before)
+        self._remember(now, shown, beliefs[FOLLOWS], before)
         self._tell()
         faulty, was_faulty = self._codes > FINE, before > FINE
-        if np.any(faulty != was_faulty):
-            self._appraisal.attend()
+        if self._appraisal.unsettled or np.any(faulty != was_faulty):
+            self._windows.attend()
         new = np.flatnonzero(faulty & ~was_faulty)
         doubt = np.maximum(1.0 - beliefs[FOLLOWS], self._confidence)
         return tuple(Finding(int(n), FAULTS[self._codes[n]], float(self._confidence[n]), float(doubt[n])) for n in new)
@@ -159,7 +158,7 @@ class Health:
                 self._codes[[one, other]] = SWAPPED
                 self._confidence[[one, other]] = likely
 
-    def _remember(self, now: Posterior, follows: Real, before: NDArray[np.int8]) -> None:
+    def _remember(self, now: Posterior, shown: Shown, follows: Real, before: NDArray[np.int8]) -> None:
         """Keep good responses and the direct path, and see on which side elements are stuck."""
         appraisal, outputs = self._appraisal, now.coefficients.shape[1]
         if self._last.shape[1] != outputs:
@@ -170,7 +169,7 @@ class Health:
         self._sides.rescale(appraisal.amplitude)
         silent = _silent(self._codes) & (self._last_good >= 0)
         age = appraisal.windows - self._last_good
-        self._sides.take(appraisal.direct, appraisal.sweeps, quiet=not np.any(silent & (age < KEPT)))
+        self._sides.take(shown.direct, shown.sweeps, quiet=not np.any(silent & (age < KEPT)))
         self._unchanged = 0 if np.any(silent & ~_silent(before)) else self._unchanged + 1
         lately = np.flatnonzero(silent & (age < KEPT))
         if np.any(self._codes[lately] == UNMOVED) and self._unchanged >= SETTLED:
@@ -197,6 +196,7 @@ class Health:
     def snapshot(self) -> dict[str, Any]:
         """All state as plain values and arrays; `load` goes on from it bit by bit."""
         return {
+            "windows": self._windows.snapshot(),
             "appraisal": self._appraisal.snapshot(),
             "codes": self._codes.copy(),
             "confidence": self._confidence.copy(),
@@ -209,6 +209,7 @@ class Health:
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot made with the same arguments."""
+        self._windows.load(snapshot["windows"])
         self._appraisal.load(snapshot["appraisal"])
         self._codes = np.array(snapshot["codes"], dtype=np.int8)
         self._confidence = np.array(snapshot["confidence"], dtype=np.float64)

@@ -13,6 +13,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from .answers import power_of
+
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
@@ -67,7 +69,7 @@ class Sides:
         if quiet and len(self._recent) >= APART + AVERAGED:
             self._seen += 1
             change, share = self._change(AVERAGED, APART)
-            self._restless += ((change.real**2 + change.imag**2) / share - self._restless) / min(self._seen, MEMORY)
+            self._restless += (power_of(change) / share - self._restless) / min(self._seen, MEMORY)
 
     def decide(self, responses: Complex, first: int, last: int, least: float) -> list[tuple[int, float]]:
         """Say on which side elements are stuck that failed together.
@@ -93,7 +95,7 @@ class Sides:
             return unknown
         # The last good window may hold part of the failure already: up to the one before it.
         change, share = self._change(last - MIDST, first + 1)
-        size = responses.real**2 + responses.imag**2
+        size = power_of(responses)
         restless = self._restless * share * max(1.0, (first + 1) / APART)
         variance = restless + MISJUDGED**2 * size.sum(axis=0) + np.finfo(float).tiny
         ways = 1.0 - 2.0 * ((np.arange(2**count)[:, None] >> np.arange(count)) & 1)
@@ -101,7 +103,7 @@ class Sides:
         # How still the path lies was measured over few windows, and these overlap: the density of a Gaussian of unknown
         # variance after so many looks at it (Student's) has longer tails.
         looks = min(self._seen, MEMORY) / AVERAGED
-        misfit = (looks + 1.0) * np.log1p((off.real**2 + off.imag**2) / (looks * variance)).sum(axis=1)
+        misfit = (looks + 1.0) * np.log1p(power_of(off) / (looks * variance)).sum(axis=1)
         degrees = change.shape[0]
         if misfit.min() > degrees + 5.0 * np.sqrt(degrees):
             return unknown  # something else changed as well

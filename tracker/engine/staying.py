@@ -13,6 +13,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from .answers import power_of
+
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
@@ -63,7 +65,7 @@ class Staying:
         self._last = [*self._last[1 - LAGS[-1] :], off]
         compared = self._taken - LAGS[-1]
         if compared > 0:
-            own = float((off.real**2 + off.imag**2).sum(axis=0) @ trust)
+            own = float(power_of(off).sum(axis=0) @ trust)
             self._sums += (np.array([*products, own]) - self._sums) / min(compared, MEMORY)
             near, far, whole = self._sums.tolist()
             unsure = DOUBT * whole / math.sqrt(off.size * min(compared, MEMORY))
