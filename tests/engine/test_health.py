@@ -163,10 +163,10 @@ def test_a_blocked_direct_path_is_no_fault_of_elements() -> None:
 
 def test_which_way_elements_are_stuck_is_told_when_they_fail_in_service() -> None:
     """First unmoved, then stuck to the side that the jump of the direct path shows; an alarm leaves them out."""
-    faults = drawn("stuck", 0, 3, from_s=0.4)
+    faults = drawn("stuck", 0, 3, from_s=0.8)
     names, alarms = [], []
-    for number, told in enumerate(play(scenario(faults), 0, 260)):
-        if number * BURST_S < 0.4:
+    for number, told in enumerate(play(scenario(faults), 0, 440)):
+        if number * BURST_S < 0.8:
             assert not told.faults
         names.append(told.faults)
         alarms += told.alarms
@@ -180,7 +180,7 @@ def test_which_way_elements_are_stuck_is_told_when_they_fail_in_service() -> Non
 
 def test_which_way_elements_are_stuck_is_not_guessed() -> None:
     """Those that never followed, and many that fail at once, stay unmoved."""
-    for from_s, bursts in ((0.0, 80), (0.4, 230)):
+    for from_s, bursts in ((0.0, 80), (0.8, 420)):
         (*_, last) = play(scenario(drawn("stuck", 1, 13, from_s)), 1, bursts)
         assert set(last.faults.values()) == {"unmoved"}
         assert len(last.faults) >= 12

@@ -39,7 +39,7 @@ SHARE = 0.05
 STEPS, BEST_STEPS = 60, 1000
 KINDS = {"stuck": {"unmoved", "stuck+", "stuck-"}, "weak": {"weak"}, "swapped": {"swapped"}}
 # When elements fail in service, s, and how long is looked for them afterwards.
-FAILS_S, AFTER_S = 0.4, 0.25
+FAILS_S, AFTER_S = 0.8, 0.25
 
 
 def rows(quick: bool) -> Iterator[Row]:

@@ -124,7 +124,8 @@ class Health:
             self._name(beliefs)
             self._pair_up()
         self._remember(now, shown, beliefs[FOLLOWS], before)
-        self._tell()
+        if self._appraisal.looked or np.any(self._codes != before):
+            self._tell()
         faulty, was_faulty = self._codes > FINE, before > FINE
         if self._appraisal.unsettled or np.any(faulty != was_faulty):
             self._windows.attend()
@@ -165,8 +166,9 @@ class Health:
             self._sides = Sides(outputs)
             self._last = np.zeros((follows.size, outputs), dtype=np.complex128)
             self._last_good[:] = -1
-        self._last *= appraisal.amplitude
-        self._sides.rescale(appraisal.amplitude)
+        if np.any(appraisal.amplitude != 1.0):
+            self._last *= appraisal.amplitude
+            self._sides.rescale(appraisal.amplitude)
         silent = _silent(self._codes) & (self._last_good >= 0)
         age = appraisal.windows - self._last_good
         self._sides.take(shown.direct, shown.sweeps, quiet=not np.any(silent & (age < KEPT)))

@@ -99,15 +99,15 @@ class Beliefs:
             λ.
         """
         size = power_of(mean)
-        off = np.empty((4, *mean.shape), dtype=np.complex128)
-        variance = np.empty((4, *mean.shape))
-        off[FOLLOWS], variance[FOLLOWS] = answers.mean - mean, residual + HEALTHY_SPREAD**2 * size
-        off[UNMOVED], variance[UNMOVED] = answers.mean, NOTHING**2 * power[:, None]
-        off[WEAK] = answers.mean - WEAK_SHARE * mean
+        off, variance = np.empty((4, *mean.shape)), np.empty((4, *mean.shape))
+        off[FOLLOWS], variance[FOLLOWS] = power_of(answers.mean - mean), residual + HEALTHY_SPREAD**2 * size
+        off[UNMOVED], variance[UNMOVED] = power_of(answers.mean), NOTHING**2 * power[:, None]
+        off[WEAK] = power_of(answers.mean - WEAK_SHARE * mean)
         variance[WEAK] = WEAK_SHARE**2 * residual + WEAK_SPREAD**2 * size
-        off[FOREIGN], variance[FOREIGN] = answers.mean, power[:, None]
+        off[FOREIGN], variance[FOREIGN] = off[UNMOVED], power[:, None]
         variance += answers.variance
-        look = -(np.log(variance) + power_of(off) / variance).sum(axis=1)
+        off /= variance
+        look = -(np.log(variance, out=variance) + off).sum(axis=1)
         totals = self._past + look
         self._best = totals.max(axis=0)
         # Only differences count.

@@ -27,7 +27,7 @@ AVERAGED = 3
 # Windows after the last good one that may hold part of the failure.
 MIDST = 2
 # Distance in windows over which the stillness of the direct path is measured, over how many, and how many it takes.
-APART, MEMORY, LEAST_SEEN = 6, 16, 3
+APART, MEMORY, LEAST_SEEN = 6, 16, 6
 # Share of a response by which it may be misjudged: the last good window may hold part of the failure.
 MISJUDGED = 0.3
 
