@@ -31,6 +31,7 @@ from tracker.messages import (
     encode_pilots,
     encode_request,
 )
+from tracker.service.faults import FaultsFile
 from tracker.service.identity import IdFile
 from tracker.service.journal import Journal
 from tracker.service.log import configure_log
@@ -291,15 +292,9 @@ def running(controller: Controller, create: Callable[..., LogWriter] = LogWriter
             lambda: pack_start(Start(tracker.next_id, tracker.snapshot())),
             create,
         )
-        service = Service(
-            settings,
-            controller.text,
-            tracker,
-            sockets,
-            journal,
-            ids,
-            log if log is not None else configure_log("error"),
-        )
+        log = log if log is not None else configure_log("error")
+        faults = FaultsFile(folder / f"{controller.link}.faults.toml", settings, log)
+        service = Service(settings, controller.text, tracker, sockets, journal, ids, faults, log)
         this = Running(service, tracker, journal)
 
         def work() -> None:

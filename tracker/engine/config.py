@@ -74,6 +74,8 @@ class Config:
     sweeps_from : int or None
         Elements times frames of a block from which sweeps of orthogonal patterns are noticed, to estimate at less cost
         while they are sounded: in smaller blocks there is nothing to be gained. None for never.
+    panel : (int, int) or None
+        Columns and rows of the panel, so that elements can be judged by their neighbours; None when not known.
     plan : PlanConfig or None
         How the sounding is planned; None leaves it to the controller.
     """
@@ -93,6 +95,7 @@ class Config:
     clock_skew_ns: int = 60_000_000_000
     limits: Limits = field(default_factory=Limits)
     sweeps_from: int | None = 16_384
+    panel: tuple[int, int] | None = None
     plan: PlanConfig | None = None
 
     @property

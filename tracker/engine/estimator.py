@@ -16,6 +16,7 @@ from .drift import Reading
 from .filter import Filter
 from .following import Lock
 from .frames import Fit, Frames
+from .fresh import Posterior
 from .innovation import DIRECT, INNOVATION, Innovations
 from .lookout import Lookout
 from .noise import energy
@@ -79,6 +80,15 @@ class Estimator:
     def time_constant_s(self) -> float:
         """Time constant in use, s."""
         return self._bank.time_constant_s if self._bank is not None else self._config.time_constant_s
+
+    @property
+    def posterior(self) -> Posterior | None:
+        """What is believed of each coefficient; None before the first frame."""
+        if self._bank is None:
+            return None
+        rls = self._bank.chosen
+        noise = self.reception.noise_power
+        return Posterior(rls.coefficients, rls.variances, rls.prior, noise, self._bank.time_constant_s)
 
     def update(self, bursts: Sequence[Frames]) -> Fit:
         """Take in the frames of a block.
@@ -155,6 +165,11 @@ class Estimator:
         ----------
         time_ns : int or None
             Time for which it is wanted, as far as phases are followed; None for that of the last frame.
+
+        Returns
+        -------
+        Channel
+            The caller's own, to be changed at will.
 
         Raises
         ------

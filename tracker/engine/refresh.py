@@ -14,6 +14,7 @@ from .config import Config
 from .events import Cause, Pattern
 from .flips import optimize
 from .one_carrier import rate_bound
+from .panel import Limits
 from .rate import promise, rate, response
 from .report import Stand
 from .switching import Switching
@@ -101,6 +102,7 @@ class Refresher:
         cause: Cause,
         budget: Budget,
         stand: Stand,
+        limits: Limits,
         variance: Callable[[NDArray[np.int8]], float],
         before: float | None = None,
     ) -> tuple[Pattern | None, int]:
@@ -115,6 +117,8 @@ class Refresher:
         budget : Budget
         stand : Stand
             The last burst that it rests on.
+        limits : Limits
+            What the panel cannot do, as far as is known by now.
         variance : callable
             Gives the variance of each complex delay coefficient of the response under a pattern, in units of the noise.
         before : float or None
@@ -139,7 +143,7 @@ class Refresher:
         if routine and in_use is not None and not self._worth_a_look(channel, in_use, least_gain):
             return None, 0
         self._resting = False
-        found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough, glance=glance)
+        found = optimize(channel, in_use, limits, budget, thorough=thorough, glance=glance)
         forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
         same = in_use is not None and np.array_equal(found.states, in_use)
         gains = not same and found.rate - before >= least_gain

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from . import panel
 from .admission import Admission
+from .aperture import Elements
 from .budget import Budget
 from .burst import Burst
 from .calibration import Calibration
@@ -25,6 +26,7 @@ from .estimator import Estimator
 from .events import Cause, Event, Mode, Pattern, Plan
 from .following import KEPT, Lock
 from .frames import Fit, Frames
+from .health import Health
 from .innovation import DIRECT, INNOVATION
 from .lifecycle import Happening, after
 from .plan import Planner, Situation
@@ -32,7 +34,7 @@ from .rate import rate
 from .reaction import HARMLESS, react
 from .refresh import Refresher, rate_spread
 from .refusal import Reason
-from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, states
+from .report import Counts, Link, Stand, drift_alarm, elements_alarm, gap_alarm, lock_alarm, states
 from .standing import DIRECT_MOVED, SURFACE_MOVED
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
@@ -83,6 +85,9 @@ class Tracker:
         self._refresher = Refresher(config, first_id)
         self._calibration = Calibration()
         self._planner = Planner(config, config.plan) if config.plan is not None else None
+        self._health: Health | None = None
+        if config.panel is not None and isinstance(config.aperture, Elements):
+            self._health = Health(config.panel, config.forgetting, config.limits)
         self._counts = Counts()
         self._mode = Mode.ACQUIRING
         self._frames_since = 0
@@ -146,6 +151,8 @@ class Tracker:
         """Throw the estimate away and begin again."""
         self._mode = after(self._mode, Happening.RELEARN)
         self._estimator.relearn()
+        if self._health is not None:
+            self._health.forget()
         self._start_over()
 
     def adopt(self, states: NDArray[np.int8]) -> None:
@@ -181,10 +188,14 @@ class Tracker:
         fits = []
         for burst, part in zip(bursts, frames, strict=True):
             fits.append(self._estimator.update([part]))
+            if self._health is not None:
+                events.extend(self._judge_elements(self._health, burst, fits[-1]))
             events.extend(self._watch(burst, fits[-1]))
         fit = Fit.together(fits)
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
+        if self._health is not None:
+            channel.surface[self._health.silent] = 0.0
         self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
         link = self._link(channel, bursts[-1].pattern_id, frames)
         self._calibration.observe(link.pattern, link.measured)
@@ -197,7 +208,8 @@ class Tracker:
         if self._planner is not None and (plan := self._plan(self._planner, channel, fit, frames, stand)):
             events.append(plan)
         noise, time_constant_s = self._estimator.reception.noise_power.tolist(), self._estimator.time_constant_s
-        events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
+        faults = self._health.faults if self._health is not None else ()
+        events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift, faults))
         return Outcome(events, steps, fit.error)
 
     def snapshot(self) -> dict[str, Any]:
@@ -210,6 +222,7 @@ class Tracker:
             "refresher": self._refresher.snapshot(),
             "calibration": self._calibration.snapshot(),
             "planner": self._planner.snapshot() if self._planner is not None else None,
+            "health": self._health.snapshot() if self._health is not None else None,
             "counts": [getattr(counts, name) for name in Counts.__slots__],
             "mode": str(self._mode),
             "frames_since": self._frames_since,
@@ -229,6 +242,8 @@ class Tracker:
         self._calibration.load(snapshot["calibration"])
         if self._planner is not None:
             self._planner.load(snapshot["planner"])
+        if self._health is not None:
+            self._health.load(snapshot["health"])
         self._counts = Counts(*(int(count) for count in snapshot["counts"]))
         self._mode = Mode(snapshot["mode"])
         self._frames_since = int(snapshot["frames_since"])
@@ -243,8 +258,21 @@ class Tracker:
         self._frames_since = 0
         self._suspected, self._waited = None, 0
         self._estimator.forget_calm()
+        if self._health is not None:
+            self._health.begin(self._estimator.posterior)
         self._drift.reset()
         self._refresher.begin_afresh()
+
+    def _judge_elements(self, health: Health, burst: Burst, fit: Fit) -> list[Event]:
+        """See whether elements follow their bits; return an alarm when some are newly found not to."""
+        if self._estimator.reception.lock is not Lock.LOCKED or float(fit.ratio.mean()) > WORST_FIT:
+            health.begin(None)
+            return []
+        if not health.due(burst.frames - fit.left_out, fit.elapsed_s):
+            return []
+        posterior = self._estimator.posterior
+        found = health.update(posterior) if posterior is not None else ()
+        return [elements_alarm(found, Stand(burst.run, burst.seq, burst.end_ns))] if found else []
 
     def _watch(self, burst: Burst, fit: Fit) -> list[Event]:
         """Count a burst that was taken in, and see whether it fits; return alarms."""
@@ -323,7 +351,9 @@ class Tracker:
         if self._refresher.latest is None:
             cause = Cause.FIRST
         before = link.predicted if link.pattern == self._refresher.latest else None
-        pattern, steps = self._refresher.choose(channel, cause, budget, stand, self._estimator.variance, before)
+        limits = self._health.limits if self._health is not None else self._config.limits
+        variance = self._estimator.variance
+        pattern, steps = self._refresher.choose(channel, cause, budget, stand, limits, variance, before)
         # The cause of a change stays until a pattern answers to it, or until all is well again without.
         if pattern or self._mode is Mode.TRACKING:
             self._pending_cause = None

@@ -16,6 +16,7 @@ from tracker.settings import Settings
 
 from .control import Control
 from .deadline import Deadline
+from .faults import FaultsFile
 from .identity import IdFile
 from .intake import Intake
 from .journal import Journal
@@ -43,6 +44,7 @@ class Service:
     sockets : Sockets
     journal : Journal
     ids : IdFile
+    faults : FaultsFile
     log : structlog logger
     """
 
@@ -54,10 +56,11 @@ class Service:
         sockets: Sockets,
         journal: Journal,
         ids: IdFile,
+        faults: FaultsFile,
         log: Any,
     ) -> None:
         self._settings, self._tracker, self._sockets = settings, tracker, sockets
-        self._journal, self._log = journal, log
+        self._journal, self._faults, self._log = journal, faults, log
         link, required = settings.link.name, settings.journal.required
         self._refusals = Refusals(log)
         self._notices = Notices(log, required=required)
@@ -127,6 +130,7 @@ class Service:
         kept = self._outlet.block(arrivals, outcome.steps, outcome.events, self._tracker.next_id, stages_us)
         self._latencies.add((time.monotonic_ns() - first.monotonic_ns) // 1000)
         self._account.take(outcome.events, stages_us)
+        self._faults.take(outcome.events)
         if not kept:
             self._notices.disk(self._outlet.fault)
         if self._journal.full:
