@@ -112,12 +112,12 @@ class Case:
 
 def walking() -> Case:
     """Drive at walking pace."""
-    return Case("N 256, 1.2 m/s, elements", 0.96, 0.985, 150.0, speed=1.2)
+    return Case("N 256, 1.2 m/s, elements", 0.96, 0.985, 220.0, speed=1.2)
 
 
 def driving() -> Case:
     """Drive fast."""
-    return Case("N 256, 3 m/s, elements", 0.97, 0.985, 220.0, speed=3.0)
+    return Case("N 256, 3 m/s, elements", 0.97, 0.985, 120.0, speed=3.0)
 
 
 def driving_learned() -> Case:
