@@ -26,7 +26,7 @@ THOROUGH_EVERY = 1024
 # Between them glances are taken at other starts: the distance doubles after one that found nothing, up to so many
 # refreshes, and is one again after one that clearly gained, as they do while the channel moves: by this share of the
 # standard deviation of the rate at least.
-MOST_APART, CLEAR = 16, 0.5
+LEAST_APART, MOST_APART, CLEAR = 2, 16, 0.5
 # Bursts after which a controller that still shows another pattern than the latest is sent it again.
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
@@ -57,7 +57,7 @@ class Refresher:
         self._switching = Switching(config.least_gain, config.switching_s)
         self._resting = False
         self._since_glance = 0
-        self._glance_every = 1
+        self._glance_every = LEAST_APART
 
     @property
     def next_id(self) -> int:
@@ -150,7 +150,7 @@ class Refresher:
         if glance:
             # A gain far within the doubt of the estimate is found in a channel that stands still as well.
             moved = gains and found.rate - before > CLEAR * rate_spread(channel, found.states, variance(found.states))
-            self._glance_every = 1 if moved else min(2 * self._glance_every, MOST_APART)
+            self._glance_every = LEAST_APART if moved else min(2 * self._glance_every, MOST_APART)
         if not forced and not gains:
             return None, found.steps
         return self._publish(channel, found.states, before, cause, stand, found.steps), found.steps
@@ -250,6 +250,7 @@ class Refresher:
         self._next_id += 1
         self._not_shown = 0
         self._switching.published(stand.t_ns)
+        self._resting = True
         return pattern
 
 
