@@ -182,7 +182,9 @@ class Estimator:
         receivers, size = self._config.receivers, self.reception.directions
         estimate = self._learned().estimate
         prior, variance = self.surface_variances
-        surface = self._shrinkage.apply(estimate[1:], variance, prior)
+        surface = self._aperture.surface(self._shrinkage.apply(estimate[1:], variance, prior))
+        if np.may_share_memory(surface, estimate):  # the channel is its taker's, who may write to it
+            surface = surface.copy()
         direct = estimate[0].reshape(receivers, size).copy()
         if time_ns is not None:
             for receiver, following in enumerate(self.reception.following):
@@ -190,7 +192,7 @@ class Estimator:
         return Channel(
             basis=self._config.delay,
             direct=direct,
-            surface=np.ascontiguousarray(self._aperture.surface(surface).reshape(-1, receivers, size)),
+            surface=np.ascontiguousarray(surface.reshape(-1, receivers, size)),
         )
 
     def variance(self, states: NDArray[np.int8]) -> float:
