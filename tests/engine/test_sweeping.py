@@ -183,6 +183,25 @@ def test_with_phantoms_and_the_pattern_in_use_it_is_as_good(order: int, elements
     assert rates[0] > 0.98 * rates[1]
 
 
+@pytest.mark.parametrize("between", [False, True])
+def test_other_patterns_between_are_for_the_dense_filter_unless_it_takes_long(between: bool) -> None:
+    """With 255 elements and the settings' work, sweeps alone are taken by a filter of their own.
+
+    When every ninth frame sounds another pattern all is bit by bit as if no sweeps were looked for.
+    """
+    link = Link(256, 255, 12)
+    both = Both(link.config(sweeps_from=Config(1, BASIS, Elements(255)).sweeps_from))
+    other, errors = link.drawn(1), []
+    for _ in range(12):
+        states = link.swept(72)
+        if between:
+            states = np.insert(states, np.arange(0, 72, 8), other, axis=0)
+        outcomes = both.take(link.burst(states))
+        _same(outcomes)
+        errors.append([outcome.error for outcome in outcomes])
+    assert all(ours == theirs for ours, theirs in errors) == between
+
+
 def test_random_patterns_get_the_dense_filter() -> None:
     """Where no sweep is sounded all is bit by bit as if none were looked for."""
     link = Link(64, 60, 8)

@@ -73,7 +73,7 @@ class Config:
         What the panel cannot do.
     sweeps_from : int or None
         Elements times frames of a block from which sweeps of orthogonal patterns are noticed, to estimate at less cost
-        while they are sounded: in smaller blocks there is nothing to be gained. None for never.
+        while they are sounded, see `lookout`: in smaller blocks there is nothing to be gained. None for never.
     panel : (int, int) or None
         Columns and rows of the panel, so that elements can be judged by their neighbours; None when not known.
     plan : PlanConfig or None

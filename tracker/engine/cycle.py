@@ -9,8 +9,8 @@ sweep       patterns belong to one orthogonal cycle;     a block has more than a
 other       anything else, for good                      never: begin again with a new detector
 ==========  ===========================================  ======================================================
 
-The pattern in use, sounded now and then, is not of the cycle and does not speak against it; nor does sounding it alone
-for any length of time. It may change within a block, but more patterns than that are something else.
+Where that is allowed, the pattern in use, sounded now and then, does not speak against the cycle; nor does sounding it
+alone for any length of time. It may change within a block, but more patterns than that are something else.
 """
 
 from collections.abc import Mapping
@@ -25,8 +25,6 @@ from .completion import Completion, begin
 
 Real = NDArray[np.float64]
 
-# Patterns outside of the cycle in one block that do not end it.
-MOST_OUTSIDE = 2
 # Set bits of each number of 16 bits.
 ONES = np.unpackbits(np.arange(1 << 16, dtype=np.uint16).view(np.uint8).reshape(-1, 2), axis=1).sum(axis=1, dtype="u1")
 # States unpacked at a time where many rows are gone through.
@@ -48,10 +46,13 @@ class SweepDetector:
     ----------
     elements : int
         N.
+    most_outside : int
+        Patterns outside of the cycle in one block that do not end it.
     """
 
-    def __init__(self, elements: int) -> None:
+    def __init__(self, elements: int, most_outside: int = 2) -> None:
         self.elements = elements
+        self._most_outside = most_outside
         self.verdict = Verdict.UNDECIDED
         self._completion: Completion | None = None
         self._order = 0
@@ -94,7 +95,7 @@ class SweepDetector:
         if outside and self.known < self._order:
             self._learn(outside)
             outside = [key for key in keys if key not in self._numbers]
-        if len(set(outside)) > MOST_OUTSIDE:
+        if len(set(outside)) > self._most_outside:
             self.verdict = Verdict.OTHER
             return None
         return np.array([self._numbers.get(key, -1) for key in keys], dtype=np.intp)
@@ -123,6 +124,7 @@ class SweepDetector:
         """All state; `restore` goes on from it."""
         return {
             "elements": self.elements,
+            "most_outside": self._most_outside,
             "verdict": str(self.verdict),
             "order": self._order,
             "packed": self._packed[: self.known].copy(),
@@ -131,7 +133,7 @@ class SweepDetector:
     @classmethod
     def restore(cls, snapshot: Mapping[str, Any]) -> "SweepDetector":
         """Rebuild from a snapshot."""
-        detector = cls(int(snapshot["elements"]))
+        detector = cls(int(snapshot["elements"]), int(snapshot["most_outside"]))
         detector.verdict = Verdict(snapshot["verdict"])
         packed = np.asarray(snapshot["packed"], dtype=np.uint8)
         width = -(-detector.elements // 8)

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .aperture import Elements
+from .aperture import ApertureBasis, Columns, Elements
 from .bank import Bank, time_constants
 from .changes import Verdict
 from .channel import Channel
@@ -31,6 +31,9 @@ from .standing import MOVED
 MOST_FRAMES = 256
 # Time over which phases are taken to turn evenly: in it the random walks of `phases` bend them by a tenth of a radian.
 STRETCH_NS = 10_000_000
+# Elements up to which a basis that no longer fits is given up for them: with more, work and memory would be many times
+# what the settings ask for.
+MOST_ELEMENTS = 1024
 # Frames that were left out fit again when their error is at most this many times what it was before.
 FITS = 1.5
 
@@ -45,6 +48,7 @@ class Estimator:
 
     def __init__(self, config: Config) -> None:
         self._config = config
+        self._aperture: ApertureBasis = config.aperture  # in which the surface is estimated now
         self.reception = Reception(config)
         self._innovations = Innovations(config.receivers, config.delay.shape[1])
         self._past = Past(config)
@@ -62,7 +66,7 @@ class Estimator:
     @property
     def ready_after(self) -> int:
         """Frames that make one sweep: as many as there are unknowns."""
-        return self._config.aperture.size + 1
+        return self._aperture.size + 1
 
     @property
     def surface_variances(self) -> tuple[float, float]:
@@ -102,20 +106,19 @@ class Estimator:
         self._past.begin()
         self._shrinkage.count_block()
         if self._bank is None:
-            self._bank = self._begin(together)
+            self._end_ns = int(together.time_ns[0])
+            self._bank = self._begin(together.patterns, self.reception.first(together))
         if not self.reception.following:
             return replace(self._take(self._bank, together), readings=self._readings())
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
         return replace(Fit.together(fits), readings=self._readings())
 
-    def _begin(self, frames: Frames) -> Bank:
-        """Start from the first block: how strong the paths may be."""
+    def _begin(self, patterns: NDArray[np.uint8], outputs: NDArray[np.complex128]) -> Bank:
+        """Start from the first frames, (B, bytes) and (B, R Q): how strong the paths may be."""
         self._shrinkage.forget()
-        outputs = self.reception.first(frames)
-        self._end_ns = int(frames.time_ns[0])
-        aperture = self._config.aperture
-        prior = prior_variances(Sounded(frames.patterns, aperture).regressors, outputs, aperture.weights)
+        aperture = self._aperture
+        prior = prior_variances(Sounded(patterns, aperture).regressors, outputs, aperture.weights)
         least = self._config.sweeps_from if isinstance(aperture, Elements) else None
         return Bank.begin(
             prior,
@@ -123,7 +126,7 @@ class Estimator:
             self._config.forgetting,
             self._constants_s,
             complex_regressors=aperture.is_complex,
-            patterns=frames.patterns,
+            patterns=patterns,
             lookout=Lookout(aperture.elements, least) if least is not None else None,
         )
 
@@ -134,7 +137,7 @@ class Estimator:
         if changed is not None:
             amplitude = np.repeat(np.sqrt(changed), self.reception.directions)
             bank.rescale(amplitude, float(np.exp(np.log(changed).mean())))
-        sounded = bank.sound(taken.patterns, self._config.aperture)
+        sounded = bank.sound(taken.patterns, self._aperture)
         frames, end_ns = outputs.shape[0], int(taken.time_ns[-1])
         elapsed_s = max(end_ns - self._end_ns, 0) / 1e9
         self._end_ns = end_ns
@@ -179,7 +182,9 @@ class Estimator:
         receivers, size = self._config.receivers, self.reception.directions
         estimate = self._learned().estimate
         prior, variance = self.surface_variances
-        surface = self._shrinkage.apply(estimate[1:], variance, prior)
+        surface = self._aperture.surface(self._shrinkage.apply(estimate[1:], variance, prior))
+        if np.may_share_memory(surface, estimate):  # the channel is its taker's, who may write to it
+            surface = surface.copy()
         direct = estimate[0].reshape(receivers, size).copy()
         if time_ns is not None:
             for receiver, following in enumerate(self.reception.following):
@@ -187,12 +192,12 @@ class Estimator:
         return Channel(
             basis=self._config.delay,
             direct=direct,
-            surface=np.ascontiguousarray(self._config.aperture.surface(surface).reshape(-1, receivers, size)),
+            surface=np.ascontiguousarray(surface.reshape(-1, receivers, size)),
         )
 
     def variance(self, states: NDArray[np.int8]) -> float:
         """Variance of each delay coefficient of the response under a pattern, in units of the noise."""
-        regressor = self._config.aperture.regressors(states.astype(np.float64)[None, :])
+        regressor = self._aperture.regressors(states.astype(np.float64)[None, :])
         return self._learned().predicted_variance(regressor[0])
 
     def loosen(self, share: float) -> None:
@@ -220,7 +225,7 @@ class Estimator:
         """Say what changed; None when too little is known of before."""
         if self._bank is None:
             return None
-        return self._past.judge(self._bank.chosen, self._innovations.excess)
+        return self._past.judge(self._bank.chosen, self._aperture, self._innovations.excess)
 
     def forget_calm(self) -> None:
         """Drop what changes are held against."""
@@ -235,9 +240,32 @@ class Estimator:
 
     def renew(self, elements: NDArray[np.intp]) -> bool:
         """Forget how well some elements are known; False where the basis does not tell elements apart."""
-        if self._bank is None or not isinstance(self._config.aperture, Elements):
+        if self._bank is None or not isinstance(self._aperture, Elements):
             return False
         self._bank.renew(1 + elements)
+        return True
+
+    def fall_back(self, frames: int) -> bool:
+        """Estimate element by element from now on, until `relearn`: the columns do not hold the surface any more.
+
+        Parameters
+        ----------
+        frames : int
+            Heard since the change, with which the new estimate begins; 0 for all that are at hand.
+
+        Returns
+        -------
+        bool
+            False where no columns are in use, or the elements are too many.
+        """
+        heard = self._past.latest(frames, self.reception.noise_power)
+        if heard is None or not isinstance(self._aperture, Columns) or self._aperture.elements > MOST_ELEMENTS:
+            return False
+        patterns, outputs = heard
+        self._aperture = Elements(self._aperture.elements)
+        self._bank = self._begin(patterns, outputs)
+        self._bank.update(self._bank.sound(patterns, self._aperture), outputs)
+        self._innovations = Innovations(self._config.receivers, self.reception.directions)
         return True
 
     def roll_back(self) -> None:
@@ -251,8 +279,8 @@ class Estimator:
         self._left_out_most = most
 
     def relearn(self) -> None:
-        """Throw the estimate away; the noise stays known."""
-        self._bank = None
+        """Throw the estimate away, and go back to the basis of the settings; the noise stays known."""
+        self._bank, self._aperture = None, self._config.aperture
         self.forget_calm()
 
     def snapshot(self) -> dict[str, Any]:
@@ -263,6 +291,7 @@ class Estimator:
             "past": self._past.snapshot(),
             "shrinkage": self._shrinkage.snapshot(),
             "left_out_most": self._left_out_most,
+            "fell_back": self._aperture is not self._config.aperture,
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
         }
@@ -274,6 +303,7 @@ class Estimator:
         self._past.load(snapshot["past"])
         self._shrinkage.load(snapshot["shrinkage"])
         self._left_out_most = int(snapshot["left_out_most"])
+        self._aperture = Elements(self._config.elements) if snapshot["fell_back"] else self._config.aperture
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
         self._end_ns = int(snapshot["end_ns"])

@@ -1,5 +1,9 @@
 """Noticing that a sweep of orthogonal patterns is sounded, from the first block on or again later on.
 
+A filter for sweeps is exact on them, and cheaper than the dense one where blocks are large. What it makes of patterns
+between them, such as the one in use, is near the best but not exact; it is let do so only where the dense filter would
+take several times as long, and there it makes the difference between keeping up and not.
+
 The first block decides whether an estimate begins as a sweep. Later on there is an estimate already, and much to be
 lost by taking a few patterns for a sweep; so the whole cycle must have been sounded first.
 """
@@ -13,7 +17,10 @@ from numpy.typing import NDArray
 from .cycle import SweepDetector
 
 # Blocks from one look to the next: it costs as much as a block of the dense filter.
-EVERY = 16
+EVERY = 32
+# Patterns outside of a sweep that may come in a block: the one in use, which may change once; and how many times the
+# least work in a block there must be for that.
+BETWEEN, MIXED = 2, 4
 
 
 class Lookout:
@@ -35,9 +42,10 @@ class Lookout:
 
     def first(self, patterns: NDArray[np.uint8]) -> SweepDetector | None:
         """Return the cycle to which the first frames belong, packed (B, bytes); None where there is none."""
-        if self._elements * patterns.shape[0] < self._least:
+        work = self._elements * patterns.shape[0]
+        if work < self._least:
             return None
-        cycle = SweepDetector(self._elements)
+        cycle = SweepDetector(self._elements, BETWEEN if work >= MIXED * self._least else 0)
         return cycle if cycle.rows(patterns) is not None else None
 
     def later(self, patterns: NDArray[np.uint8]) -> SweepDetector | None:

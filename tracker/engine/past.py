@@ -7,6 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from . import panel
+from .aperture import ApertureBasis
 from .changes import Evidence, Verdict, judge
 from .config import Config
 from .drift import Reading
@@ -93,13 +94,31 @@ class Past:
             return None
         return np.asarray(memory.before * np.repeat(np.sqrt(memory.noise / noise), self._directions))
 
-    def judge(self, now: Filter, excess: float) -> Verdict | None:
+    def latest(self, frames: int, noise: Real) -> tuple[NDArray[np.uint8], Complex] | None:
+        """Give the latest frames kept: patterns (B, bytes) and outputs (B, R Q), in units of the noise power (R,).
+
+        Parameters
+        ----------
+        frames : int
+            How many at most; 0 for all.
+        noise : ndarray, shape (R,)
+        """
+        if not self._memory.heard:
+            return None
+        heard = self._memory.heard
+        patterns = np.concatenate([one.patterns for one in heard])[-frames:]
+        outputs = np.concatenate([one.outputs * np.sqrt(one.noise / noise)[:, None] for one in heard])[-frames:]
+        return patterns, outputs.reshape(outputs.shape[0], -1)
+
+    def judge(self, now: Filter, aperture: ApertureBasis, excess: float) -> Verdict | None:
         """Say what changed; None when too little is known of before.
 
         Parameters
         ----------
         now : Filter
             Whose variances are those of the estimate from before as well.
+        aperture : ApertureBasis
+            Of both.
         excess : float
             Share of the variances that really occurs, see `innovation`.
         """
@@ -114,10 +133,10 @@ class Past:
         prior = now.prior
         model = memory.before.copy()
         model[1:] = shrink(model[1:], float(now.variances[1:].mean()), float(prior[1:].mean()))
-        elements = config.aperture.surface(model[1:])
+        elements = aperture.surface(model[1:])
         model = model.reshape(-1, config.receivers, self._directions)
         states = panel.unpack(frames.patterns, config.elements)
-        regressors = config.aperture.regressors(states)
+        regressors = aperture.regressors(states)
         # How wrong the surface's part of the frames may be: what P promises, and what really comes of it.
         surface = regressors.copy()
         surface[:, 0] = 0.0

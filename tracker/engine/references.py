@@ -68,13 +68,27 @@ class References:
         z[1:] = panel.unpack(np.frombuffer(pattern, dtype=np.uint8), self._elements)
         return z
 
-    def joined(self, pattern: bytes, mean: Complex, variance: float) -> tuple[Complex, float]:
-        """Join the response (D,) that an estimate without these has for a pattern, and its variance, with that here."""
-        if pattern not in self._patterns:
-            return mean, variance
-        at = self._patterns.index(pattern)
-        share = variance / (variance + float(self.variances[at]))
-        return np.asarray(mean + share * (self.means[at] - mean)), (1.0 - share) * variance
+    def gain(self, regressors: Real, direct: float, element: float) -> tuple[Real, Real]:
+        """Say what the responses kept tell of those under other patterns.
+
+        Parameters
+        ----------
+        regressors : ndarray, shape (b, N + 1)
+        direct, element : float
+            Variances of the direct path and of the elements: the diagonal of P.
+
+        Returns
+        -------
+        gain : ndarray, shape (b, k)
+            By which what is heard under the patterns kept, less what was expected, goes into the others.
+        known : ndarray, shape (b,)
+            Variance that is taken away.
+        """
+        variances = np.full(self._elements + 1, element)
+        variances[0] = direct
+        across = (regressors * variances) @ self.regressors.T
+        gain = across @ self._precision(variances)
+        return gain, np.asarray((gain * across).sum(axis=1))
 
     def take(self, pattern: bytes, outputs: Complex) -> None:
         """Take in frames of a packed pattern: what was heard (k, D), in units of the noise."""
@@ -123,12 +137,10 @@ class References:
         direct, element : float
             Variances of the direct path and of the elements: the diagonal of P.
         """
+        variances = np.full(self._elements + 1, element)
+        variances[0] = direct
         z = self.regressors
-        across = element * z
-        across[:, 0] = direct
-        covariance = across @ z.T
-        covariance.ravel()[:: self.count + 1] += self.variances
-        gain = across.T @ np.linalg.inv(covariance)
+        gain = (z * variances).T @ self._precision(variances)
         return np.asarray(coefficients + product(gain, self.means - product(z, coefficients)))
 
     def snapshot(self) -> dict[str, Any]:
@@ -149,6 +161,12 @@ class References:
         references.means = means
         references.variances = np.array(snapshot["variances"], dtype=np.float64)
         return references
+
+    def _precision(self, variances: Real) -> Real:
+        """Inverse of Z P Zᴴ + diag ϱ, shape (k, k)."""
+        covariance = (self.regressors * variances) @ self.regressors.T
+        covariance.ravel()[:: self.count + 1] += self.variances
+        return np.asarray(np.linalg.inv(covariance))
 
     def _keep(self, indices: list[int]) -> None:
         self._z = None

@@ -1,11 +1,8 @@
 """The filter for sweeps, with patterns outside of them sounded now and then.
 
-Frames of the sweep go into a covariance that stays diagonal (`sweeps`), those of other patterns, as a rule the one in
-use, are followed for themselves (`references`). Both tell what is to be expected under a pattern outside::
-
-    r = z C of variance ς from the sweep, r̂ of variance ϱ from its own frames:  1 / (1 / ς + 1 / ϱ)
-
-ς is taken from the diagonal of P, which z of entries ±1 weighs alike.
+Frames of the sweep go into a covariance that needs few numbers (`sweeps`), those of other patterns, as a rule the one
+in use, are followed for themselves (`references`). Both together tell what is to be expected under a pattern outside of
+the sweep, heard before or near to one that was.
 """
 
 from collections.abc import Iterator, Mapping
@@ -14,11 +11,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
 from .cycle import SweepDetector
 from .dense import Dense
 from .filter import Surprise
 from .references import References
+from .responses import product
 from .rls import BlockRls
 from .sounded import Sounded
 from .sweeps import SweepRls
@@ -89,8 +86,11 @@ class Swept:
 
     def predicted_variance(self, regressor: NDArray[Any]) -> float:
         """See `Filter`."""
-        pattern = panel.pack(regressor[1:]).tobytes()
-        return self._references.joined(pattern, self.direct, self._sweep.predicted_variance(regressor))[1]
+        variance = self._sweep.predicted_variance(regressor)
+        if not self._references.count:
+            return variance
+        gain = self._references.gain(regressor[None, :], self._sweep.direct_variance, self._sweep.element_variance)
+        return max(variance - float(gain[1][0]), 0.0)
 
     def predicted_covariance(self, regressors: NDArray[Any]) -> NDArray[Any]:
         """See `Filter`."""
@@ -168,8 +168,15 @@ class Swept:
 
     def _expected(self, pattern: bytes) -> tuple[Complex, float]:
         """Response (D,) to be expected under a pattern outside of the sweep, and its variance."""
-        response = self._sweep.respond(self._references.regressor(pattern)[None, :])[0]
-        return self._references.joined(pattern, response, self._sweep.mean_variance)
+        references, sweep = self._references, self._sweep
+        z = references.regressor(pattern)[None, :]
+        if not references.count:
+            return sweep.respond(z)[0], sweep.mean_variance
+        responses = sweep.respond(np.concatenate([z, references.regressors]))
+        gain, known = references.gain(z, sweep.direct_variance, sweep.element_variance)
+        mean = responses[0] + product(gain, references.means - responses[1:])[0]
+        # Rounding may leave less than nothing of what is known as well as can be.
+        return np.asarray(mean), max(sweep.mean_variance - float(known[0]), 0.0)
 
 
 def _patterns(sounded: Sounded, frames: NDArray[np.intp]) -> Iterator[tuple[bytes, list[int]]]:
