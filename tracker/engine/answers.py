@@ -57,6 +57,8 @@ class Answers:
         """y, shape (k, N)."""
         self.variance: Real = np.ones((1, elements))
         """s, shape (k, N)."""
+        self.moved = 0.0
+        """Share of a response's power that a window changes now, on the strongest direction, of all elements."""
 
     def turn(self, onto: Complex, unseen: Real) -> None:
         """Go over to other directions over the delays.
@@ -104,6 +106,7 @@ class Answers:
         ahead = heard - self.mean
         off = power_of(ahead)
         walk, noisier = self._moved(off, self.variance + noise, sweeps)
+        self.moved = float(walk[0] / max(power[0], np.finfo(float).tiny))
         noise = noise * noisier[:, None]
         self.variance += walk[:, None]
         both = self.variance + noise
@@ -157,6 +160,7 @@ class Answers:
             "changed": self._changed.copy(),
             "mean": self.mean.copy(),
             "variance": self.variance.copy(),
+            "moved": self.moved,
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -169,6 +173,7 @@ class Answers:
         self._changed = np.array(snapshot["changed"], dtype=np.bool_)
         self.mean = np.array(snapshot["mean"], dtype=np.complex128)
         self.variance = np.array(snapshot["variance"], dtype=np.float64)
+        self.moved = float(snapshot["moved"])
 
 
 def power_of(values: Complex) -> Real:

@@ -29,6 +29,9 @@ LEARN_OFTEN, LEARN_EVERY = 4, 8
 # One window in so many in which the answers are held against the predictions even when nothing stirs, and doubts about
 # an element between which something does.
 LOOK_EVERY, OPEN = 4, (0.5, 0.93)
+# Share of the power of responses that a window may change: of a channel that moves more while it is sounded once, what
+# is heard are mixtures, and those of neighbours in the shade of a wave look like faults.
+MOST_MOVED = 0.12
 # Doubt about an element that has changed from which it counts as unsettled.
 DOUBTED = 0.1
 # Share of what the filter expects other elements to leak into one that they do: of much it only fears that it moved.
@@ -78,7 +81,8 @@ class Appraisal:
         self._neighbours = Neighbours(columns, rows)
         self._staying = Staying()
         self._trust = judged.astype(np.float64)
-        self._open = self._changed = False
+        self._begun = self._open = self._changed = False
+        self._outdated = False  # the weights, by directions that have changed since
         self.answers = Answers(judged.size)
         self.beliefs = Beliefs(judged.size)
         self.windows = 0
@@ -110,16 +114,20 @@ class Appraisal:
         if before is not None and before is not found:
             self._turn(before, found, power)
         changed = self.answers.take(heard, noise, power, sweeps)
-        stay = self._staying.take(heard - self.predicted, self._trust, sweeps) if self.windows else 1.0
+        stay = self._staying.take(heard - self.predicted, self._trust, sweeps) if self._begun else 1.0
         # While nothing stirs the evidence stays what it is, and need not be worked out anew each time.
         stirs = stay < 1.0 or bool(changed.any()) or self._open or self._changed
         self._changed, self.unsettled = bool(changed.any()), False
-        self.looked = learn or stirs or shown.closely or self.windows % LOOK_EVERY == 0
+        due = learn or stirs or shown.closely or self.windows % LOOK_EVERY == 0
+        # Whether the channel rests is seen from the second window on.
+        self.looked = due and self.windows > 0 and self.answers.moved < MOST_MOVED
         if self.looked:
             self.beliefs.settle(1.0 - stay ** (2.0 * sweeps), changed)
-            doubt = self._look(estimate, spent, trusted, learn=learn)
+            doubt = self._look(estimate, spent, trusted, learn=learn or self._outdated)
             self._open = bool(np.any((doubt > OPEN[0]) & (doubt < OPEN[1])))
             self.unsettled = bool(np.any(doubt[changed] > DOUBTED))
+            self._begun = True
+        self._outdated = not self.looked and (learn or self._outdated)
         self.windows += 1
 
     def _noise_on(
@@ -143,9 +151,9 @@ class Appraisal:
     def _look(self, estimate: Complex, spent: float, trusted: NDArray[np.bool_], *, learn: bool) -> Real:
         """Hold the answers against what neighbours predict; return the doubt about each element, 0 where unheard."""
         asked = self.known & trusted
-        trust = np.where(asked, self.beliefs.probabilities[FOLLOWS] if self.windows else 1.0, 0.0)
+        trust = np.where(asked, self.beliefs.probabilities[FOLLOWS] if self._begun else 1.0, 0.0)
         # Whom to ask follows from what is believed, and the other way round: twice, when nothing is known yet.
-        for _ in range(1 if self.windows else 2):
+        for _ in range(1 if self._begun else 2):
             self._trust = trust
             power = self._compare(estimate, spent, trust, learn=learn)
             self.beliefs.look(self.answers, self.predicted, self.residual, power)
@@ -181,7 +189,7 @@ class Appraisal:
             self.amplitude = amplitude
             if self._directions is not None:
                 scaled = replace(self._directions, kept=self._directions.kept * amplitude[:, None])
-                self._turn(scaled, self._directions, np.zeros(self.predicted.shape[0]))
+                self._turn(scaled, self._directions, np.zeros(scaled.kept.shape[1]))
         self._noise = now.noise.copy()
         return True
 
@@ -190,7 +198,8 @@ class Appraisal:
         turn = onto.kept.T @ before.kept.conj()
         self.answers.turn(turn, np.maximum(1.0 - power_of(turn).sum(axis=1), 0.0) * power)
         self._staying.turn(turn)
-        self.predicted = turn @ self.predicted
+        if self._begun:
+            self.predicted = turn @ self.predicted
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -201,8 +210,10 @@ class Appraisal:
             "neighbours": self._neighbours.snapshot(),
             "staying": self._staying.snapshot(),
             "trust": self._trust.copy(),
+            "begun": self._begun,
             "open": self._open,
             "changed": self._changed,
+            "outdated": self._outdated,
             "answers": self.answers.snapshot(),
             "beliefs": self.beliefs.snapshot(),
             "windows": self.windows,
@@ -224,7 +235,9 @@ class Appraisal:
         self._neighbours.load(snapshot["neighbours"])
         self._staying.load(snapshot["staying"])
         self._trust = np.array(snapshot["trust"], dtype=np.float64)
-        self._open, self._changed = bool(snapshot["open"]), bool(snapshot["changed"])
+        self._begun, self._open = bool(snapshot["begun"]), bool(snapshot["open"])
+        self._changed = bool(snapshot["changed"])
+        self._outdated = bool(snapshot["outdated"])
         self.looked, self.unsettled = bool(snapshot["looked"]), bool(snapshot["unsettled"])
         self.answers.load(snapshot["answers"])
         self.beliefs.load(snapshot["beliefs"])

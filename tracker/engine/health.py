@@ -119,7 +119,7 @@ class Health:
         if shown is None:
             return ()
         self._appraisal.take(now, shown, self._partner < 0)
-        before, beliefs = self._codes, self._appraisal.beliefs.probabilities
+        before, beliefs = self._codes.copy(), self._appraisal.beliefs.probabilities
         if self._appraisal.looked:
             self._name(beliefs)
             self._pair_up()
