@@ -6,7 +6,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
 from .aperture import ApertureBasis
 
 
@@ -32,7 +31,7 @@ class Sounded:
     @cached_property
     def regressors(self) -> NDArray[Any]:
         """Regressors z, shape (B, r + 1): worked out when first asked for, for a sweep has no need of them."""
-        return self._aperture.regressors(panel.unpack(self.patterns, self._aperture.elements))
+        return self._aperture.regressors_of_bits(self.patterns)
 
     def part(self, frames: slice | NDArray[Any]) -> "Sounded":
         """Take some of the frames."""
