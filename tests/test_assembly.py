@@ -30,6 +30,7 @@ def made(**changes: str) -> Config:
         ("drift", "false_alarm_hours = 0.5", "false_alarm_s", 1800.0),
         ("refresh", "every_bursts = 4", "every_bursts", 4),
         ("refresh", "least_gain = 0.25", "least_gain", 0.25),
+        ("refresh", "switching_ms = 3.0", "switching_s", 0.003),
         ("follow", "phase = true", "follow_phase", True),
     ],
 )

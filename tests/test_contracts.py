@@ -127,6 +127,18 @@ def test_one_benchmark_can_be_run_alone(checkout: Path) -> None:
     assert "there are: one, two" in wrong.stderr
 
 
+def test_benchmarks_that_can_be_drawn_are(checkout: Path) -> None:
+    """`--pictures` names a folder; what a benchmark draws of its rows lies there under its name, and nothing else."""
+    folder = checkout / "tools" / "benchmarks"
+    (folder / "plain.py").write_text(BENCHMARK)
+    (folder / "drawn.py").write_text(BENCHMARK + "\n\ndef picture(rows):\n    return f'<svg>{rows[0].value}</svg>'\n")
+    assert bench(checkout, "--quick").returncode == 0
+    assert not list(checkout.rglob("drawn.svg"))
+    assert bench(checkout, "--quick", "--pictures", str(checkout / "made" / "here")).returncode == 0
+    (made,) = (checkout / "made" / "here").iterdir()
+    assert (made.name, made.read_text(encoding="utf-8")) == ("drawn.svg", "<svg>2.0</svg>")
+
+
 def demo(checkout: Path, *arguments: str, path: Path = ROOT) -> subprocess.Popen[str]:
     """Start the demo of a checkout that has room for its own journal."""
     return subprocess.Popen(

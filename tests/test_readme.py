@@ -36,9 +36,10 @@ from tracker.engine.changes import Verdict, judge
 from tracker.engine.estimator import Estimator
 from tracker.engine.events import Alarm, Cause, Mode, Pattern, Plan, State
 from tracker.engine.evidence import Evidence
+from tracker.engine.faults import FAULTS, Finding
 from tracker.engine.reaction import react
 from tracker.engine.refusal import Reason
-from tracker.engine.report import Stand, gap_alarm, lock_alarm
+from tracker.engine.report import Stand, elements_alarm, gap_alarm, lock_alarm
 from tracker.messages import Verb, encode_alarm, encode_pattern, encode_pilots, encode_plan, encode_state
 from tracker.service.notices import Notices
 from tracker.settings import Settings, SettingsError, parse
@@ -386,6 +387,7 @@ def kinds() -> dict[str, set[str]]:
     found = {kind: {react(estimator, Verdict(kind, "", 9.0, mend=mend))} for kind in (*verdict.scores, "unclear")}
     stand = Stand(1, 2, 3)
     alarms = [lock_alarm(0, 0.1, 0.3, stand), gap_alarm(1, 2, stand)]
+    alarms += [elements_alarm((Finding(1, fault, 0.98, 0.99),), stand) for fault in FAULTS[1:]]
     for required in (True, False):
         notices = Notices(Mock(), required=required)
         for _ in range(8):
@@ -442,6 +444,9 @@ def test_lists_of_words_on_the_wire_are_complete() -> None:
     assert [names(cells[0])[0] for cells in rows("Control: REQ to REP")] == [str(verb) for verb in Verb]
     control = next(cells for cells in rows("Messages") if cells[0].startswith("[control]"))
     assert names(control[1]) == [str(verb) for verb in Verb]
+    faults = next(cells for cells in rows("`state/LINK`: one a burst") if cells[0] == "`faults`")
+    assert set(FAULTS[1:]) <= set(names(faults[2]))
+    assert [name for cells in rows("Element health") for name in names(cells[0])] == list(FAULTS[1:])
     causes = next(cells for cells in rows("`pattern/LINK`: tracker to controller") if cells[0] == "`cause`")
     assert names(causes[2]) == [str(cause) for cause in Cause]
     modes = next(cells for cells in rows("`state/LINK`: one a burst") if cells[0] == "`mode`")

@@ -47,8 +47,10 @@ def configure(settings: Settings, folder: Path, basis: bytes | None = None) -> C
         follow_phase=settings.follow.phase,
         every_bursts=refresh.every_bursts,
         least_gain=refresh.least_gain,
+        switching_s=refresh.switching_ms / 1e3,
         clock_skew_ns=round(settings.link.clock_skew_s * 1e9),
         limits=_limits(settings),
+        panel=(settings.panel.columns, settings.panel.rows),
         plan=_plan(settings),
     )
 

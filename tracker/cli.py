@@ -187,6 +187,12 @@ examples:
         help="picture to write, which must not exist (default: beside the first log, under its name or the next that "
         "is free)",
     )
+    drift.add_argument(
+        "--faults",
+        metavar="FAULTS.toml",
+        type=Path,
+        help="write the faulty elements found at the end as settings; what stood there is replaced",
+    )
     _told(drift)
 
     suggest = command(
@@ -297,7 +303,7 @@ def _drift(asked: argparse.Namespace) -> int:
     from tracker.offline.drift import drift
 
     _one_blas_thread()
-    return drift(asked.logs, asked.settings, asked.svg, asked.json, not asked.quiet)
+    return drift(asked.logs, asked.settings, asked.svg, asked.json, asked.faults, progress=not asked.quiet)
 
 
 def _suggest(asked: argparse.Namespace) -> int:

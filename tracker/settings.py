@@ -152,6 +152,7 @@ class Refresh(Table):
     budget_ms: PositiveFloat = 5.0
     every_bursts: Positive = 1
     least_gain: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 0.01
+    switching_ms: Annotated[float, Field(ge=0, allow_inf_nan=False)] = 0.02
     most_steps: Positive = 400
     most_changes: Positive | None = None
 

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tracker.engine.admission import Admission
+from tracker.engine.admission import INSISTED, Admission
 from tracker.engine.burst import Burst
 from tracker.engine.refusal import Reason, Refused
 
@@ -86,3 +86,39 @@ def test_snapshot_goes_on() -> None:
     copy.load(admission.snapshot())
     assert _reason(copy, _burst(1)) is Reason.DUPLICATE
     assert _admit(copy, _burst(4)) == 2
+
+
+def test_one_stray_burst_does_not_lock_the_controller_out() -> None:
+    """A burst of another run, or with a seq far ahead, costs the real controller eight bursts, not its service."""
+    admission = Admission(SKEW_NS)
+    _admit(admission, _burst(0))
+    _admit(admission, _burst(5, run=99, t_ns=START_NS + 500_000))
+    for seq in range(1, 1 + INSISTED):
+        assert _reason(admission, _burst(seq)) is Reason.OUT_OF_ORDER
+    assert [_admit(admission, _burst(seq)) for seq in (9, 10, 12)] == [0, 0, 1]
+    _admit(admission, _burst(2**60, t_ns=START_NS + 12_500_000))
+    for seq in range(13, 13 + INSISTED):
+        assert _reason(admission, _burst(seq)) is Reason.OUT_OF_ORDER
+    assert [_admit(admission, _burst(seq)) for seq in (21, 22)] == [0, 0]
+
+
+def test_old_bursts_do_not_get_in_by_being_many() -> None:
+    """Bursts from before, or such that alternate with bursts in order, stay out however many they are."""
+    admission = Admission(SKEW_NS)
+    for seq in (50, 51, 100):
+        _admit(admission, _burst(seq))
+    for seq in range(60, 99):
+        assert _reason(admission, _burst(seq)) is Reason.OUT_OF_ORDER
+    for count in range(2 * INSISTED):
+        _admit(admission, _burst(101 + 2 * count))
+        late = _burst(60 + count, t_ns=START_NS + (102 + 2 * count) * 1_000_000 - 500_000)
+        assert _reason(admission, late) is Reason.OUT_OF_ORDER
+
+
+def test_what_a_journal_vouches_for_is_let_in() -> None:
+    """A burst that was let in live is let in again though the bursts that insisted before it are not in the journal."""
+    admission = Admission(SKEW_NS)
+    _admit(admission, _burst(0))
+    _admit(admission, _burst(5, run=99, t_ns=START_NS + 500_000))
+    assert admission.admit(_burst(9), _burst(9).t_ns, vouched=True) == 0
+    assert _admit(admission, _burst(10)) == 0

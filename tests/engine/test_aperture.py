@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from tracker.engine.aperture import ApertureBasis, Columns, Elements, Tiles
+from tracker.engine.panel import pack
 
 _PHASES = np.exp(2j * np.pi * np.random.default_rng(0).uniform(size=(12, 4)))
 _COLUMNS = Columns(np.linalg.qr(_PHASES)[0], np.array([4.0, 2.0, 1.0, 1.0]))
@@ -18,6 +19,7 @@ def test_response_through_the_basis(basis: ApertureBasis) -> None:
     c = rng.normal(size=(basis.size, 3)) + 1j * rng.normal(size=(basis.size, 3))
     through = basis.regressors(states) @ np.concatenate([direct, c])
     np.testing.assert_allclose(through, direct + states @ basis.surface(c), atol=1e-12)
+    np.testing.assert_array_equal(basis.regressors_of_bits(pack(states)), basis.regressors(states))
 
 
 def test_tiles_are_orthonormal_and_constant() -> None:

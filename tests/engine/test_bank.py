@@ -3,15 +3,23 @@
 import numpy as np
 import pytest
 
+from tracker.engine.aperture import Elements
 from tracker.engine.bank import Bank, time_constants
+from tracker.engine.dense import Dense
+from tracker.engine.panel import pack
 from tracker.engine.rls import BlockRls, forgetting
+from tracker.engine.sounded import Sounded
 
 SIZE, BURST_S = 8, 0.01
 
 
 def _bank(count: int) -> Bank:
     constants_s = time_constants(0.4, count)
-    return Bank([BlockRls(np.full(SIZE, 0.5), 1) for _ in constants_s], "resetting", constants_s)
+    return Bank([Dense(BlockRls(np.full(SIZE, 0.5), 1)) for _ in constants_s], "resetting", constants_s)
+
+
+def _sounded(rng: np.random.Generator, frames: int) -> Sounded:
+    return Sounded(pack(rng.choice([-1.0, 1.0], (frames, SIZE - 1))), Elements(SIZE - 1))
 
 
 def _run(bank: Bank, rng: np.random.Generator, step: float, bursts: int) -> None:
@@ -20,10 +28,10 @@ def _run(bank: Bank, rng: np.random.Generator, step: float, bursts: int) -> None
     for _ in range(bursts):
         fresh = np.sqrt(0.25) * (rng.normal(size=(SIZE, 1)) + 1j * rng.normal(size=(SIZE, 1)))
         truth = np.sqrt(1 - step) * truth + np.sqrt(step) * fresh
-        z = rng.choice([-1.0, 1.0], (16, SIZE))
+        sounded = _sounded(rng, 16)
         noise = (rng.normal(size=(16, 1)) + 1j * rng.normal(size=(16, 1))) / np.sqrt(2)
         bank.forget_for(BURST_S)
-        bank.update(z, z @ truth + noise)
+        bank.update(sounded, sounded.regressors @ truth + noise)
 
 
 def test_constants_are_spread_about_the_middle() -> None:
@@ -58,11 +66,11 @@ def test_a_bank_of_one_is_the_filter_itself() -> None:
     rng = np.random.default_rng(3)
     bank, alone = _bank(1), BlockRls(np.full(SIZE, 0.5), 1)
     for _ in range(10):
-        z, y = rng.choice([-1.0, 1.0], (4, SIZE)), rng.normal(size=(4, 1)).astype(np.complex128)
+        sounded, y = _sounded(rng, 4), rng.normal(size=(4, 1)).astype(np.complex128)
         bank.forget_for(BURST_S)
-        bank.update(z, y)
+        bank.update(sounded, y)
         alone.forget(*forgetting("resetting", BURST_S, 0.4))
-        alone.update(z, y)
+        alone.update(sounded.regressors, y)
     assert np.array_equal(bank.chosen.coefficients, alone.coefficients)
 
 

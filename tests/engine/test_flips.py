@@ -116,7 +116,7 @@ def test_one_carrier_is_solved_exactly() -> None:
         for thorough in (False, True):
             found = optimize(channel, None, FREE, ENDLESS, thorough=thorough)
             assert found.rate == pytest.approx(np.log2(1 + power), rel=1e-12)
-            assert found.rate == pytest.approx(rate_bound(channel), rel=1e-9)
+            assert found.rate <= rate_bound(channel) <= found.rate + np.log2(1 + 1e-5 + 3e-7 * elements)
 
 
 def test_the_search_by_flips_reaches_the_exact_optimum_of_a_flat_channel() -> None:

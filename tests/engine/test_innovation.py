@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
+from tracker.engine.filter import Surprise
 from tracker.engine.innovation import DIRECT, INNOVATION, Innovations
 from tracker.engine.rls import BlockRls, forgetting
 
@@ -38,8 +39,8 @@ def _play(block: int, moving: bool, frames: int = 6000, jump_at: int | None = No
     for start in range(0, frames, block):
         rls.forget(*forgetting("resetting", block * FRAME_S, TIME_CONSTANT_S))
         innovation, white = rls.update(z[start : start + block], y[start : start + block])
-        innovations.take(y[start : start + block] - innovation, innovation, white, rls.whitener)
-        readings += [one.value for one in innovations.readings(rls.coefficients[0]) if one.name == DIRECT]
+        innovations.take(y[start : start + block], Surprise(innovation, white, rls.whitener.diagonal() ** -2.0))
+        readings += [one.value for one in innovations.readings(DIRECT_PATH) if one.name == DIRECT]
     return innovations, readings
 
 
@@ -63,7 +64,7 @@ def test_power_of_innovations_is_consistent() -> None:
     powers = []
     for _ in range(100):
         white = (rng.normal(size=(16, OUTPUTS)) + 1j * rng.normal(size=(16, OUTPUTS))) / np.sqrt(2)
-        innovations.take(white, white, white, np.eye(16))
+        innovations.take(white, Surprise(white, white, np.ones(16)))
         powers += [one.value for one in innovations.readings(DIRECT_PATH) if one.name == INNOVATION]
     assert np.mean(powers) == pytest.approx(1.0, abs=3 * np.sqrt(2 / 25_600))
 
@@ -87,13 +88,13 @@ def test_snapshot_goes_on_bit_by_bit() -> None:
     first, second = Innovations(1, BASIS), Innovations(1, BASIS)
     for number in range(20):
         white = rng.normal(size=(5, OUTPUTS)) + 1j * rng.normal(size=(5, OUTPUTS))
-        whitener = np.eye(5) * 0.8
-        first.take(white, white, white, whitener)
+        surprise = Surprise(white, white, np.full(5, 0.8**-2))
+        first.take(white, surprise)
         if number == 10:
             first.readings(DIRECT_PATH)
             second.load(first.snapshot())
         elif number > 10:
-            second.take(white, white, white, whitener)
+            second.take(white, surprise)
             assert second.readings(DIRECT_PATH) == first.readings(DIRECT_PATH)
         else:
             first.readings(DIRECT_PATH)

@@ -60,13 +60,17 @@ def test_matrices_are_hadamard(order: int) -> None:
     assert np.linalg.slogdet(matrix)[1] == pytest.approx(order / 2 * np.log(order))
 
 
+@pytest.mark.parametrize("direct", [1.0, 200.0])
 @pytest.mark.parametrize("kind", ["exponential", "resetting", "none"])
 @pytest.mark.parametrize(("order", "elements"), SHAPES)
-def test_equals_the_dense_filter(order: int, elements: int, kind: str) -> None:
-    """Over unfinished and finished sweeps, in order and scrambled, with repeats, all equals the dense filter's."""
+def test_equals_the_dense_filter(order: int, elements: int, kind: str, direct: float) -> None:
+    """Over unfinished and finished sweeps, in order and scrambled, with repeats, all equals the dense filter's.
+
+    Also with a direct path that is granted more than the elements are.
+    """
     rng = np.random.default_rng([order, elements])
     states, outputs = cycle(order, elements, rng), 3
-    sweep, dense, rows = _begun(states, 0.3, outputs)
+    sweep, dense, rows = _begun(states, 0.3, outputs, direct)
     visible = elements + 1
     place = 0
     for block in range(4 * order // 7):
@@ -83,22 +87,22 @@ def test_equals_the_dense_filter(order: int, elements: int, kind: str) -> None:
         probe = np.concatenate([[1.0], rng.choice([-1.0, 1.0], elements), np.zeros(order - visible)])
         assert sweep.predicted_variance(probe[:visible]) == pytest.approx(dense.predicted_variance(probe), rel=1e-11)
         here = _rows(sweep, states[index])
-        covariance = dense.predicted_covariance(rows[index])
-        np.testing.assert_allclose(sweep.predicted_covariance(here), covariance, rtol=0, atol=1e-12 * order)
-        surface = rows[index].copy()
-        surface[:, 0] = 0.0
-        covariance = dense.predicted_covariance(surface)
-        np.testing.assert_allclose(
-            sweep.predicted_covariance(here, surface_only=True), covariance, rtol=0, atol=1e-12 * order
-        )
-        innovation, white = sweep.update(here, heard)
+        visibly = np.concatenate([rows[index, :visible], probe[None, :visible]])
+        for asked in (visibly, visibly * (np.arange(visible) > 0)):  # with the direct path, and without
+            hidden = np.concatenate([asked, np.zeros((asked.shape[0], order - visible))], axis=1)
+            covariance = dense.predicted_covariance(hidden)
+            np.testing.assert_allclose(sweep.predicted_covariance(asked), covariance, rtol=0, atol=1e-12 * order)
+        surprise = sweep.update(here, heard)
         expected = dense.update(rows[index], heard)
-        np.testing.assert_allclose(innovation, expected[0], rtol=0, atol=1e-11)
-        np.testing.assert_allclose(white, expected[1], rtol=0, atol=1e-11)
-        np.testing.assert_allclose(sweep.spread, dense.whitener.diagonal() ** -2, rtol=1e-11)
+        np.testing.assert_allclose(surprise.innovation, expected[0], rtol=0, atol=1e-11)
+        np.testing.assert_allclose(surprise.white, expected[1], rtol=0, atol=1e-11)
+        np.testing.assert_allclose(surprise.spread, dense.whitener.diagonal() ** -2, rtol=1e-11)
         np.testing.assert_allclose(sweep.coefficients, dense.coefficients[:visible], rtol=0, atol=1e-12)
         np.testing.assert_allclose(sweep.direct, dense.coefficients[0], rtol=0, atol=1e-12)
         np.testing.assert_allclose(sweep.variances, dense.variances[:visible], rtol=1e-11)
+        assert sweep.element_variance == pytest.approx(dense.variances[1:visible].mean(), rel=1e-11)
+        assert sweep.mean_variance == pytest.approx(dense.variances[:visible].sum(), rel=1e-11)
+        np.testing.assert_allclose(sweep.respond(probe[None, :visible]), probe[None] @ dense.coefficients, atol=1e-11)
         np.testing.assert_allclose(sweep.predict(here), rows[index] @ dense.coefficients, rtol=0, atol=1e-11)
     np.testing.assert_allclose(sweep.dense().covariance, dense.covariance[:visible, :visible], rtol=0, atol=1e-13)
 
@@ -163,7 +167,7 @@ def test_a_strong_direct_path_is_exact_within_a_block(repeats: bool) -> None:
     sweep, dense, complete = _begun(states, 0.1, 2, direct=300.0)
     index = rng.integers(0, 44, 30) if repeats else rng.permutation(44)[:30]
     heard = 3.0 * _noise(rng, 30, 2)
-    _, white = sweep.update(_rows(sweep, states[index]), heard)
+    white = sweep.update(_rows(sweep, states[index]), heard).white
     prior = np.full(44, 0.1)
     prior[0] = 30.0
     stacked = np.concatenate([np.diag(prior**-0.5), complete[index]])
@@ -174,10 +178,9 @@ def test_a_strong_direct_path_is_exact_within_a_block(repeats: bool) -> None:
 
 @pytest.mark.parametrize(("frames", "time_constant_s"), [(1, 0.05), (16, 0.01), (64, 0.05)])
 def test_a_strong_direct_path_over_many_blocks(frames: int, time_constant_s: float) -> None:
-    """On a Gauss-Markov channel the elements' error stays within 6 % of the dense filter's, there the best there is.
+    """On a Gauss-Markov channel errors stay within 6 % of those of a filter that knows that 7 of 68 rows are phantoms'.
 
-    The direct path's error stays within half as much again and well below what one prior for all gives; innovations
-    are white to 8 %.
+    The direct path's error stays well below what one prior for all gives; innovations are white to 8 %.
     """
     rng = np.random.default_rng(3)
     states, outputs, spacing_s = cycle(68, 60, rng), 8, 1 / 28_000
@@ -198,7 +201,7 @@ def test_a_strong_direct_path_over_many_blocks(frames: int, time_constant_s: flo
         here = _rows(sweep, states[index])
         for one, regressors in ((sweep, here), (weak, here)):
             one.forget(*forgetting("resetting", frames * spacing_s, time_constant_s))
-            _, white = one.update(regressors, heard)
+            white = one.update(regressors, heard).white
             if one is sweep:
                 power.append(float((np.abs(white) ** 2).mean()))
         dense.forget(*forgetting("resetting", frames * spacing_s, time_constant_s))
@@ -208,9 +211,28 @@ def test_a_strong_direct_path_over_many_blocks(frames: int, time_constant_s: flo
     late = np.mean(errors[len(errors) // 4 :], axis=(0, 3))
     elements, direct = late[:, 1:].mean(axis=1), late[:, 0]
     assert elements[0] < 1.06 * elements[1]
-    assert direct[0] < 1.5 * direct[1]
+    assert direct[0] < 1.06 * direct[1]
     assert direct[0] < 0.3 * direct[2]
     assert np.mean(power) == pytest.approx(1.0, abs=0.08)
+
+
+def test_a_sweep_in_ever_new_order_stays_close_to_the_dense_filter() -> None:
+    """Where hardly two rows have the same history, what is kept for all is near enough: to 1 % of the variances.
+
+    And to 1 % of the noise in what is predicted.
+    """
+    rng = np.random.default_rng(14)
+    states = cycle(512, 511, rng)
+    sweep, dense, rows = _begun(states, 0.1, 1, direct=300.0)
+    for _ in range(60):
+        index, heard = rng.integers(0, 512, 24), 2.0 * _noise(rng, 24, 1)
+        for one in (sweep, dense):
+            one.forget(*forgetting("resetting", 0.002, 0.2))
+        sweep.update(_rows(sweep, states[index]), heard)
+        dense.update(rows[index], heard)
+    np.testing.assert_allclose(sweep.variances, dense.variances, rtol=0.01)
+    difference = sweep.respond(rows) - rows @ dense.coefficients
+    assert 0.0 < float((np.abs(difference) ** 2).mean()) < 0.01
 
 
 def test_to_the_dense_filter_and_on() -> None:
@@ -237,45 +259,6 @@ def test_to_the_dense_filter_and_on() -> None:
     np.testing.assert_allclose(turned.covariance, dense.covariance[:39, :39], rtol=0, atol=1e-13)
 
 
-def test_the_pattern_in_use_is_put_to_the_estimate() -> None:
-    """Frames of a pattern outside of the sweep join whole sweeps as scipy.linalg.lstsq on all frames has it."""
-    rng = np.random.default_rng(5)
-    states, prior = cycle(28, 26, rng), 0.3
-    sweep, _, _ = _begun(states, prior, 2)
-    in_use = rng.choice([-1.0, 1.0], (1, 26))
-    heard, aside = _noise(rng, 28, 2), 2.0 + _noise(rng, 5, 2)
-    sweep.refer(packed(np.repeat(in_use, 2, axis=0)), aside[:2])
-    sweep.update(_rows(sweep, states), heard)
-    sweep.refer(packed(np.repeat(in_use, 3, axis=0)), aside[2:])
-    rows = np.concatenate([np.ones((28, 1)), states], axis=1)
-    z = np.concatenate([[1.0], in_use[0]])
-    stacked = np.concatenate([np.eye(27) / np.sqrt(prior), rows, np.repeat(z[None, :], 5, axis=0)])
-    expected = scipy.linalg.lstsq(stacked, np.concatenate([np.zeros((27, 2)), heard, aside]))[0]
-    np.testing.assert_allclose(sweep.estimate, expected, rtol=0, atol=1e-13)
-    np.testing.assert_allclose(sweep.dense().coefficients, expected, rtol=0, atol=1e-13)
-    assert np.abs(sweep.coefficients - expected).max() > 0.01
-
-
-def test_patterns_outside_follow_a_moving_channel() -> None:
-    """A response followed outside of the sweep is scipy.linalg.lstsq's with what was heard before forgotten alike."""
-    rng = np.random.default_rng(6)
-    states = cycle(20, 19, rng)
-    sweep, _, _ = _begun(states, 1e-9, 1)  # the sweep says nothing: what is left is the pattern in use
-    in_use = rng.choice([-1.0, 1.0], (1, 19))
-    first, last = _noise(rng, 4, 1), _noise(rng, 3, 1)
-    sweep.refer(packed(np.repeat(in_use, 4, axis=0)), first)
-    sweep.forget(1 / 0.7, 0.0)
-    sweep.refer(packed(np.repeat(in_use, 3, axis=0)), last)
-    weight = np.sqrt(0.7)
-    stacked = np.concatenate([np.full((4, 1), weight), np.ones((3, 1))])
-    expected = scipy.linalg.lstsq(stacked, np.concatenate([weight * first, last]))[0]
-    np.testing.assert_allclose(sweep.references.means, expected, rtol=1e-12)
-    others = rng.choice([-1.0, 1.0], (9, 19))
-    sweep.refer(packed(others), _noise(rng, 9, 1))
-    assert sweep.references.count < 9
-    assert np.array_equal(sweep.references.regressors[-1, 1:], others[-1])
-
-
 def test_white_innovations_when_the_model_holds() -> None:
     """Over 3 000 frames the power of white innovations lies within the 95 % band of χ² (scipy.stats)."""
     rng = np.random.default_rng(7)
@@ -287,7 +270,7 @@ def test_white_innovations_when_the_model_holds() -> None:
         truth = decay * truth + np.sqrt(prior * (1 - decay**2)) * _noise(rng, 60, 2)
         index = (10 * block + np.arange(10)) % 60
         sweep.forget(*forgetting("resetting", 0.02, 1.0))
-        _, white = sweep.update(_rows(sweep, states[index]), rows[index] @ truth + _noise(rng, 10, 2))
+        white = sweep.update(_rows(sweep, states[index]), rows[index] @ truth + _noise(rng, 10, 2)).white
         total += float((np.abs(white) ** 2).sum())
     low, high = scipy.stats.chi2.ppf([0.025, 0.975], 12_000) / 12_000
     assert low < total / 6_000 < high
@@ -327,29 +310,21 @@ def test_exponential_forgetting_without_end() -> None:
 
 
 def test_changing_units_and_phases() -> None:
-    """Rescaled noise, turned and strengthened paths and a direct path set anew do what they do to the dense filter."""
+    """Rescaled noise, turned and strengthened paths do what they do to the dense filter."""
     rng = np.random.default_rng(10)
     states = cycle(28, 25, rng)
-    sweep, dense, rows = _begun(states, 0.3, 2)
+    sweep, dense, rows = _begun(states, 0.3, 2, direct=30.0)
     turn, gain = np.exp(1j * rng.uniform(0, 6, 2)), np.array([1.5, 0.8])
-    in_use = rng.choice([-1.0, 1.0], (1, 25))
-    sweep.refer(packed(in_use), np.ones((1, 2), dtype=np.complex128))
-    before = sweep.references.means[0].copy()
     for block in range(12):
         index = (7 * block + np.arange(7)) % 28
         heard = _noise(rng, 7, 2)
         sweep.update(_rows(sweep, states[index]), heard)
         dense.update(rows[index], heard)
-        response = before - dense.coefficients[0]
         sweep.scale(turn, gain)
         dense.coefficients[0] *= turn
         dense.coefficients[1:] *= gain
-        if block == 0:
-            np.testing.assert_allclose(sweep.references.means[0], response * gain + dense.coefficients[0], rtol=1e-12)
         sweep.rescale(np.array([0.9, 1.1]), 1.02)
         dense.rescale(np.array([0.9, 1.1]), 1.02)
-        sweep.direct = sweep.direct + 0.1
-        dense.coefficients[0] += 0.1
         np.testing.assert_allclose(sweep.coefficients, dense.coefficients[:26], rtol=1e-11)
         np.testing.assert_allclose(sweep.variances, dense.variances[:26], rtol=1e-11)
         np.testing.assert_allclose(sweep.prior, dense.prior[:26], rtol=1e-12)
@@ -357,20 +332,23 @@ def test_changing_units_and_phases() -> None:
     sweep.put(wanted)
     np.testing.assert_allclose(sweep.coefficients, wanted, rtol=0, atol=1e-13)
     sweep.renew_direct()
-    assert sweep.variances[0] == pytest.approx(sweep.variances[1])  # nothing beyond an element was granted to it
+    dense.reset(np.array([0]))
+    visibly = np.concatenate([rows[:9, :26], np.zeros((9, 2))], axis=1)
+    covariance = dense.predicted_covariance(visibly)
+    np.testing.assert_allclose(sweep.predicted_covariance(rows[:9, :26]), covariance, rtol=0, atol=1e-12)
 
 
 def test_resetting_never_winds_up() -> None:
     """After 20 000 blocks of one and the same pattern all variances lie between 0 and the prior."""
     states = cycle(12, 10, np.random.default_rng(11))
     sweep, _, _ = _begun(states, 0.3, 1, direct=50.0)
-    row = _rows(sweep, states[:1])
+    row, regressor = _rows(sweep, states[:1]), np.concatenate([np.ones((1, 1)), states[:1]], axis=1)
     for _ in range(20_000):
         sweep.forget(*forgetting("resetting", 0.002, 0.5))
         sweep.update(row, np.full((1, 1), 0.5 + 0.1j))
     assert (sweep.variances > 0).all()
     assert (sweep.variances <= sweep.prior * (1 + 1e-9)).all()
-    assert 0 < sweep.predicted_covariance(row)[0, 0] < 1
+    assert 0 < sweep.predicted_covariance(regressor)[0, 0] < 1
 
 
 @pytest.mark.parametrize("at", [3, 12])
@@ -379,21 +357,19 @@ def test_snapshot_goes_on_bit_by_bit(at: int) -> None:
     rng = np.random.default_rng(12)
     states = cycle(60, 55, rng)
     sweep, _, _ = _begun(states, 0.3, 2, direct=40.0)
-    in_use = packed(rng.choice([-1.0, 1.0], (1, 55)))
     other = sweep
     for block in range(20):
         if block == at:
             detector = SweepDetector.restore(sweep.cycle.snapshot())
             other = SweepRls.restore(sweep.snapshot(), detector)
-        index, heard, aside = (6 * block + np.arange(6)) % 60, _noise(rng, 6, 2), _noise(rng, 1, 2)
+        index, heard = (6 * block + np.arange(6)) % 60, _noise(rng, 6, 2)
         for one in (sweep, other) if other is not sweep else (sweep,):
             one.forget(*forgetting("resetting", 0.01, 0.5))
-            one.refer(in_use, aside)
             one.update(_rows(one, states[index]), heard)
             if block % 2:
-                assert np.isfinite(one.estimate).all()
+                assert np.isfinite(one.coefficients).all()
     assert sweep.cycle.known == other.cycle.known
-    assert np.array_equal(sweep.estimate, other.estimate)
+    assert np.array_equal(sweep.coefficients, other.coefficients)
     assert np.array_equal(sweep.variances, other.variances)
 
 
@@ -413,5 +389,5 @@ def test_what_is_no_sweep_is_refused() -> None:
         SweepRls(np.full(27, 0.3), 1, sweep.cycle)
     with pytest.raises(ValueError, match=r"\+1 or -1"):
         sweep.predicted_variance(np.full(28, 0.5))
-    innovation, white = sweep.update(np.zeros(0, dtype=np.intp), np.zeros((0, 1), dtype=np.complex128))
-    assert innovation.shape == white.shape == (0, 1)
+    surprise = sweep.update(np.zeros(0, dtype=np.intp), np.zeros((0, 1), dtype=np.complex128))
+    assert surprise.innovation.shape == surprise.white.shape == (0, 1)

@@ -31,6 +31,7 @@ from tracker.messages import (
     encode_pilots,
     encode_request,
 )
+from tracker.service.faults import FaultsFile
 from tracker.service.identity import IdFile
 from tracker.service.journal import Journal
 from tracker.service.log import configure_log
@@ -96,7 +97,7 @@ def settings_text(pilots: str, name: str = "yard", **changes: str) -> str:
         "tones": "fft = 32\nfirst = 8\ncount = 16\nspacing_khz = 1250.0",
         "delay": "taps = 8",
         # So many steps whatever the clock says: results must not depend on how busy the machine is.
-        "refresh": "budget_ms = 20000.0\nmost_steps = 12\nleast_gain = 0.0",
+        "refresh": "budget_ms = 20000.0\nmost_steps = 12\nleast_gain = 0.0\nswitching_ms = 0.0",
         "sockets": f'pilots = "{pilots}"\n'
         + "\n".join(f'{key} = "tcp://127.0.0.1:{free_port()}"' for key in ("publish", "control")),
     }
@@ -291,15 +292,9 @@ def running(controller: Controller, create: Callable[..., LogWriter] = LogWriter
             lambda: pack_start(Start(tracker.next_id, tracker.snapshot())),
             create,
         )
-        service = Service(
-            settings,
-            controller.text,
-            tracker,
-            sockets,
-            journal,
-            ids,
-            log if log is not None else configure_log("error"),
-        )
+        log = log if log is not None else configure_log("error")
+        faults = FaultsFile(folder / f"{controller.link}.faults.toml", settings, log)
+        service = Service(settings, controller.text, tracker, sockets, journal, ids, faults, log)
         this = Running(service, tracker, journal)
 
         def work() -> None:

@@ -67,7 +67,7 @@ def test_all_that_waits_is_one_block(door: Door) -> None:
 
 def test_a_block_has_a_limit(door: Door) -> None:
     """Bursts beyond the most frames of a block wait for the next one; none is lost."""
-    for burst in bursts(20, frames=64):
+    for burst in bursts(20, frames=MOST_TOGETHER // 8):
         door.send(encode_pilots("yard", burst))
     first, second, third = (door.intake.take() for _ in range(3))
     assert [len(first), len(second), len(third)] == [8, 8, 4]
@@ -109,7 +109,7 @@ def test_a_message_has_two_parts(door: Door) -> None:
 
 def test_what_has_arrived_is_worked_off_after_closing(door: Door) -> None:
     """Closed, the intake gives out what waited by then, in blocks as ever, and nothing that comes later."""
-    sent = bursts(20, frames=64)
+    sent = bursts(20, frames=MOST_TOGETHER // 8)
     for burst in sent[:18]:
         door.send(encode_pilots("yard", burst))
     door.intake.close(1000)
@@ -123,7 +123,7 @@ def test_what_has_arrived_is_worked_off_after_closing(door: Door) -> None:
 
 def test_overload_is_told_when_full_blocks_do_not_end(door: Door) -> None:
     """An alarm when so many blocks in a row were full and more was waiting; once, not with every block."""
-    for burst in bursts(8 * (FULL_IN_A_ROW + 3), frames=64):
+    for burst in bursts(8 * (FULL_IN_A_ROW + 3), frames=MOST_TOGETHER // 8):
         door.send(encode_pilots("yard", burst))
     told = []
     for _ in range(FULL_IN_A_ROW + 3):

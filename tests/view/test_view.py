@@ -227,10 +227,25 @@ def test_what_happens_is_noted_once() -> None:
     take(model, "state", encode_state("yard", replace(STATE, run=8, mode=Mode.HELD, lost=4), {}), 60.0)
     assert [(note.kind, str(note)) for note in model.notes] == [
         ("mode", "tracking"),
+        ("fault", "elements do not follow: 5 unmoved"),
         ("lost", "bursts lost on the way in (4 times)"),
         ("run", "the controller started anew"),
         ("mode", "held"),
     ]
+
+
+def test_elements_are_named_when_they_fail_and_when_they_follow_again() -> None:
+    """New ones with their fault, many cut short; a fault that only gets another name is no news."""
+    model = LinkModel("yard")
+    many = tuple((element, "weak", 0.96) for element in range(10))
+    for seq, faults in enumerate([(), STATE.faults, ((5, "stuck-", 0.99),), (), many]):
+        take(model, "state", encode_state("yard", replace(STATE, seq=seq, faults=faults), {}), float(seq))
+    assert [str(note) for note in model.notes if note.kind == "fault"] == [
+        "elements do not follow: 5 unmoved",
+        "elements follow again: 5",
+        "elements do not follow: " + ", ".join(f"{element} weak" for element in range(8)) + " and 2 more",
+    ]
+    assert "faulty elements 10" in plain.line(model, 5.0, 0.0)
 
 
 def test_messages_cannot_steer_the_terminal() -> None:

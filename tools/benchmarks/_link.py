@@ -107,7 +107,9 @@ def work_folder() -> Iterator[Path]:
         yield Path(made)
 
 
-def play(settings_path: Path, made: list[bytes], seconds: float, idle_s: float = 0.0) -> Played:
+def play(
+    settings_path: Path, made: list[bytes], seconds: float, idle_s: float = 0.0, bursts_per_s: float = BURSTS_PER_S
+) -> Played:
     """Run the service, send it bursts at full pace, and take down what it publishes.
 
     Parameters
@@ -118,6 +120,8 @@ def play(settings_path: Path, made: list[bytes], seconds: float, idle_s: float =
         See `bodies`; sent over and over.
     seconds, idle_s : float
         How long bursts are sent; and how long the service is watched before.
+    bursts_per_s : float
+        Pace.
 
     Raises
     ------
@@ -125,12 +129,12 @@ def play(settings_path: Path, made: list[bytes], seconds: float, idle_s: float =
         When a process does not answer.
     """
     ends = load(settings_path).sockets
-    count = round(seconds * BURSTS_PER_S)
+    count, period_ns = round(seconds * bursts_per_s), round(1e9 / bursts_per_s)
     cores = sorted(os.sched_getaffinity(0))
     here, there = {cores[0]}, {cores[-1]}
     context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
     mine, theirs = get_context("spawn").Pipe()
-    sender = get_context("spawn").Process(target=_send, args=(theirs, ends.pilots, made, count, here))
+    sender = get_context("spawn").Process(target=_send, args=(theirs, ends.pilots, made, count, period_ns, here))
     serve = f"import os, sys; os.sched_setaffinity(0, {there}); from tracker.cli import entry; sys.exit(entry())"
     service = subprocess.Popen(
         [sys.executable, "-c", serve, "serve", str(settings_path)], stderr=subprocess.DEVNULL, env=environment()
@@ -173,7 +177,7 @@ def environment() -> dict[str, str]:
     return {**os.environ, "OPENBLAS_NUM_THREADS": "1", "PYTHONPATH": os.pathsep.join(path for path in sys.path if path)}
 
 
-def _send(pipe: Connection, endpoint: str, made: list[bytes], count: int, cores: set[int]) -> None:
+def _send(pipe: Connection, endpoint: str, made: list[bytes], count: int, period_ns: int, cores: set[int]) -> None:
     """Send bursts when they are due; give back when each was sent."""
     os.sched_setaffinity(0, cores)
     context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
@@ -188,12 +192,12 @@ def _send(pipe: Connection, endpoint: str, made: list[bytes], count: int, cores:
     places = [(body.index(b"\xa3seq\xcf") + 5, body.index(b"\xa4t_ns\xcf") + 6) for body in made]
     sent_ns = np.zeros(count, np.int64)
     pipe.recv()
-    wall_ns, begun_ns = time.time_ns(), time.monotonic_ns() + PERIOD_NS
+    wall_ns, begun_ns = time.time_ns(), time.monotonic_ns() + period_ns
     for number in range(count):
         body, (seq, t_ns) = pool[number % len(pool)], places[number % len(pool)]
         struct.pack_into(">Q", body, seq, FIRST_SEQ + number)
-        struct.pack_into(">Q", body, t_ns, wall_ns + number * PERIOD_NS)
-        left_ns = begun_ns + number * PERIOD_NS - time.monotonic_ns()
+        struct.pack_into(">Q", body, t_ns, wall_ns + number * period_ns)
+        left_ns = begun_ns + number * period_ns - time.monotonic_ns()
         if left_ns > 0:
             time.sleep(left_ns / 1e9)
         sent_ns[number] = time.monotonic_ns()

@@ -92,6 +92,8 @@ class Case:
         Of a burst.
     basis : str
         ``elements``, ``learned`` or ``region``.
+    seeds : int
+        Runs that are averaged; more where a run is short and runs differ much.
     """
 
     name: str
@@ -108,16 +110,17 @@ class Case:
     frames: int = 64
     frame_ns: int = FAST_NS
     basis: str = "elements"
+    seeds: int = 5
 
 
 def walking() -> Case:
     """Drive at walking pace."""
-    return Case("N 256, 1.2 m/s, elements", 0.96, 0.985, 150.0, speed=1.2)
+    return Case("N 256, 1.2 m/s, elements", 0.96, 0.985, 220.0, speed=1.2, seeds=10)
 
 
 def driving() -> Case:
     """Drive fast."""
-    return Case("N 256, 3 m/s, elements", 0.97, 0.985, 220.0, speed=3.0)
+    return Case("N 256, 3 m/s, elements", 0.97, 0.985, 160.0, speed=3.0, seeds=10)
 
 
 def driving_learned() -> Case:
@@ -187,7 +190,8 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     for make in CASES:
         if not quick or make in QUICK:
-            yield from _rows(make(), range(1, 2 if quick else 6))
+            case = make()
+            yield from _rows(case, range(1, 2 if quick else 1 + case.seeds))
 
 
 def _rows(case: Case, seeds: range) -> Iterator[Row]:

@@ -24,6 +24,8 @@ class Row:
         Whether the target is met; None when there is none.
     note : str
         Where the target comes from, spread, caveats.
+    curve, x : str, float or None
+        The curve that the value is a point of, and where on it; empty and None when it is none.
     """
 
     name: str
@@ -32,3 +34,5 @@ class Row:
     target: str = ""
     met: bool | None = None
     note: str = ""
+    curve: str = ""
+    x: float | None = None

@@ -1,4 +1,4 @@
-"""Runs the benchmarks of this folder, prints one table and writes the same as JSON."""
+"""Runs the benchmarks of this folder, prints one table, writes the same as JSON, and draws what can be drawn."""
 
 import argparse
 import importlib
@@ -43,12 +43,15 @@ class Outcome:
         How long it took.
     error : str or None
         Why it failed; None when it did not.
+    picture : str or None
+        The rows as SVG, from benchmarks that have a function ``picture(rows) -> str``.
     """
 
     name: str
     rows: list[Row] = field(default_factory=list)
     seconds: float = 0.0
     error: str | None = None
+    picture: str | None = None
 
 
 def benchmarks() -> list[str]:
@@ -68,6 +71,8 @@ def measure(name: str, quick: bool, tell: Callable[[str], None]) -> Outcome | No
         for row in cast("Iterator[Row]", module.rows(quick)):
             outcome.rows.append(row)
             tell(f"{name}: {row.name}: {figure(row.value)} {row.unit}".rstrip())
+        if hasattr(module, "picture"):
+            outcome.picture = module.picture(outcome.rows)
     except Exception as error:  # noqa: BLE001 - whatever a benchmark raises, the others go on
         outcome.error = f"{type(error).__name__}: {error}".splitlines()[0]
     outcome.seconds = time.perf_counter() - begun
@@ -105,6 +110,12 @@ def table(outcomes: list[Outcome]) -> Table:
     return made
 
 
+def as_json(outcomes: list[Outcome], on: dict[str, Any], *, quick: bool) -> str:
+    """Write all figures with the machine that they were measured on."""
+    each = [{key: value for key, value in asdict(outcome).items() if key != "picture"} for outcome in outcomes]
+    return json.dumps({"machine": on, "quick": quick, "benchmarks": each}, indent=2, ensure_ascii=False) + "\n"
+
+
 def machine() -> dict[str, Any]:
     """Tell what the figures were measured on."""
     blas = sorted({f"{lib['internal_api']} {lib['version']}" for lib in threadpool_info() if lib["user_api"] == "blas"})
@@ -135,6 +146,7 @@ def arguments() -> argparse.Namespace:
     parser.add_argument("--quick", action="store_true", help="fewer repeats and sizes, under a minute for all")
     parser.add_argument("--only", metavar="NAME", action="append", help="run this benchmark alone; may be given again")
     parser.add_argument("--json", metavar="FILE", type=Path, help="where the figures go (default: bench.json here)")
+    parser.add_argument("--pictures", metavar="FOLDER", type=Path, help="where pictures go (default: none are drawn)")
     asked = parser.parse_args()
     known = benchmarks()
     if unknown := sorted(set(asked.only or []) - set(known)):
@@ -168,14 +180,13 @@ def main() -> int:
 
     path = asked.json or FOLDER.parent.parent / "bench.json"
     try:
-        path.write_text(
-            json.dumps(
-                {"machine": on, "quick": asked.quick, "benchmarks": [asdict(o) for o in outcomes]},
-                indent=2,
-                ensure_ascii=False,
-            )
-            + "\n"
-        )
+        path.write_text(as_json(outcomes, on, quick=asked.quick), encoding="utf-8")
+        if asked.pictures is not None:
+            path = asked.pictures
+            path.mkdir(parents=True, exist_ok=True)
+            for outcome in outcomes:
+                if outcome.picture is not None:
+                    (path / f"{outcome.name}.svg").write_text(outcome.picture, encoding="utf-8")
     except OSError as error:
         print(f"tools/bench: {path}: cannot be written: {error.strerror}", file=sys.stderr)
         return 2

@@ -26,7 +26,9 @@ def rows(quick: bool) -> Iterator[Row]:
     # A short memory and no least gain: nearly every burst publishes.
     swaying = yard((Sway(Still(lane(0.0)[0]), (0.0, 0.02, 0.0), (CYCLE_S,) * 3),), shadow_db=42.0, snr_db=-8.0)
     restless = Scenario("restless", "a carrier sways", TestbedConfig(swaying), time_constant_ms=20.0)
-    yield from _run("restless", restless, 2.0 if quick else 30.0, 0.0, "[refresh]\nleast_gain = 0.0")
+    yield from _run(
+        "restless", restless, 2.0 if quick else 30.0, 0.0, "[refresh]\nleast_gain = 0.0\nswitching_ms = 0.0"
+    )
 
 
 def _run(name: str, scene: Scenario, seconds: float, idle_s: float, more: str) -> Iterator[Row]:

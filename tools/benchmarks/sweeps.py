@@ -1,17 +1,26 @@
-"""Sweeps of orthogonal patterns against the dense filter, and kept products against worked-out ones, in one run."""
+"""Sweeps of orthogonal patterns against the dense filter, and kept products against worked-out ones, in one run.
+
+The filters are held against each other by themselves, and at work in the whole engine: two trackers take the same
+bursts in turn, one of which notices sweeps.
+"""
 
 import time
 from collections.abc import Callable, Iterator
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
+from benchmarks._still_link import Link
 from benchmarks.row import Row
 from tracker.engine import panel
+from tracker.engine.budget import Steps
 from tracker.engine.cycle import SweepDetector
+from tracker.engine.lookout import MIXED
 from tracker.engine.products import ProductCache
 from tracker.engine.rls import BlockRls, forgetting
 from tracker.engine.sweeps import SweepRls
+from tracker.engine.tracker import Tracker
 from tracker.simulation.sounding import sweep
 
 FRAMES = 64
@@ -26,6 +35,8 @@ def rows(quick: bool) -> Iterator[Row]:
         if quick and elements == 4096:
             continue
         yield from _against_dense(elements, outputs, turns // 4 if quick else turns)
+    for elements, in_use in ((256, False), (256, True), (1024, False), (1024, True)):
+        yield _engine(elements, in_use=in_use, bursts=60 if quick else 240)
     yield from _products(1024 if quick else 4096, 64 if quick else 128, 10 if quick else 30)
 
 
@@ -86,6 +97,31 @@ def _against_dense(elements: int, outputs: int, turns: int) -> Iterator[Row]:
     )
     note = "looking patterns up and proving them orthogonal, once, in the first sweep"
     yield Row(f"finding the sweep, N {elements}", order / first, "frames/s", "> 28 000", order / first > 28_000, note)
+
+
+def _engine(elements: int, *, in_use: bool, bursts: int) -> Row:
+    """Cost of a burst in the whole engine without a filter for sweeps over that with one."""
+    link = Link(1, elements)
+    config = link.config(36_000.0)
+    trackers = Tracker(replace(config, sweeps_from=None)), Tracker(replace(config, sweeps_from=0))
+    took: tuple[list[float], list[float]] = ([], [])
+    other = link.rng.choice([-1.0, 1.0], elements)
+    for number in range(bursts):
+        states = link.states(FRAMES - FRAMES // 8 if in_use else FRAMES)
+        if in_use:
+            states = np.insert(states, np.arange(0, states.shape[0], 7), other, axis=0)
+        burst = link.burst(number, states)
+        for tracker, times in zip(trackers, took, strict=True):
+            tracker.admit(burst, burst.end_ns)
+            times.append(_seconds(lambda tracker=tracker, burst=burst: tracker.advance([burst], Steps(50))))  # type: ignore[misc]
+    # The first sweeps are learned, and the first pattern is looked for.
+    dense, swept = (float(np.median(times[bursts // 3 :])) for times in took)
+    between = ", every eighth frame another pattern" if in_use else ""
+    note = f"{1e3 * dense:.2f} against {1e3 * swept:.2f} ms a burst of {FRAMES} frames"
+    name = f"whole engine, dense filter over sweeps, N {elements}{between}"
+    if in_use and elements * FRAMES < MIXED * (config.sweeps_from or 0):
+        return Row(name, dense / swept, "times", note=f"{note}; left to the dense filter as a rule")
+    return Row(name, dense / swept, "times", "> 1", dense / swept > 1, note)
 
 
 def _products(elements: int, size: int, turns: int) -> Iterator[Row]:

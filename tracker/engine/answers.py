@@ -1,9 +1,9 @@
 """What each element answers to its bit, followed over windows of frames, with an eye on sudden changes.
 
-A window shows x = v + noise of variance r (see `fresh`). The answer v is followed by a random walk of variance q a
-window, per direction over the delays::
+A window of w sweeps shows x = v + noise of variance r (see `fresh`). The answer v is followed by a random walk of
+variance q a sweep, per direction over the delays::
 
-    s ← s + q,    K = s / (s + r),    y ← y + K (x − y),    s ← (1 − K) s
+    s ← s + q w,    K = s / (s + r),    y ← y + K (x − y),    s ← (1 − K) s
 
 q is measured on all elements together, by the median, so that a channel that moves or changes moves q, and single
 elements do not. What is left are elements that change by themselves. Beside each goes a second account of it, begun
@@ -52,10 +52,13 @@ class Answers:
         self._gained = np.zeros(elements)  # log-likelihood that the second account gained
         self._second: Complex = np.zeros((1, elements), dtype=np.complex128)
         self._second_variance = np.ones((1, elements))
+        self._changed = np.zeros(elements, dtype=np.bool_)  # in the last window
         self.mean: Complex = np.zeros((1, elements), dtype=np.complex128)
         """y, shape (k, N)."""
         self.variance: Real = np.ones((1, elements))
         """s, shape (k, N)."""
+        self.moved = 0.0
+        """Share of a response's power that a window changes now, on the strongest direction, of all elements."""
 
     def turn(self, onto: Complex, unseen: Real) -> None:
         """Go over to other directions over the delays.
@@ -69,13 +72,13 @@ class Answers:
         """
         if not self._taken:
             return
-        share = _power(onto)
+        share = power_of(onto)
         self._walk = share @ self._walk
         self.mean, self._second = onto @ self.mean, onto @ self._second
         self.variance = share @ self.variance + unseen[:, None]
         self._second_variance = share @ self._second_variance + unseen[:, None]
 
-    def take(self, heard: Complex, noise: Real, power: Real) -> NDArray[np.bool_]:
+    def take(self, heard: Complex, noise: Real, power: Real, sweeps: float) -> NDArray[np.bool_]:
         """Take in a window; tell which elements changed by themselves, shape (N,).
 
         Parameters
@@ -86,6 +89,8 @@ class Answers:
             r; very large for elements of which the window says nothing.
         power : ndarray, shape (k,)
             Mean power of a response.
+        sweeps : float
+            w.
         """
         if not self._taken:
             self._taken = 1
@@ -99,36 +104,41 @@ class Answers:
             self.mean *= together / abs(together)
             self._second *= together / abs(together)
         ahead = heard - self.mean
-        off = _power(ahead)
-        walk, noisier = self._moved(off, self.variance + noise)
+        off = power_of(ahead)
+        walk, noisier = self._moved(off, self.variance + noise, sweeps)
+        self.moved = float(walk[0] / max(power[0], np.finfo(float).tiny))
         noise = noise * noisier[:, None]
         self.variance += walk[:, None]
         both = self.variance + noise
         likely = _density(off, both)
-        # While a change is suspected the first account is held: it must not follow what may be the new answer.
-        gain = np.where(self._gained > SUSPECTED, 0.0, self.variance / both)
+        # While a change is suspected the first account is held: it must not follow what may be the new answer. After
+        # one it begins afresh, because the window in which an element changes shows part of either answer.
+        before = self._changed
+        gain = np.where(before, 1.0, np.where(self._gained > SUSPECTED, 0.0, self.variance / both))
         self.mean += gain * ahead
-        self.variance = np.maximum(self.variance * (1.0 - gain), noise / MOST_AVERAGED)
+        self.variance = np.where(before, noise, np.maximum(self.variance * (1.0 - gain), noise / MOST_AVERAGED))
         # An account begun afresh expects any response, or none; one begun before, what it saw since.
         begun = self._gained > 0.0
         ahead = heard - np.where(begun, self._second, 0.0)
-        before = np.where(begun, self._second_variance + walk[:, None], power[:, None])
-        both, off = before + noise, _power(ahead)
+        expected = np.where(begun, self._second_variance + walk[:, None], power[:, None])
+        both, off = expected + noise, power_of(ahead)
         since = _density(off, both)
         none = _density(off, noise)
         since = np.where(begun, since, np.logaddexp(since, none) - math.log(2.0))
-        self._gained = np.maximum(self._gained, 0.0) + since - likely
-        self._second = np.where(begun, self._second + (before / both) * ahead, heard)
-        self._second_variance = np.where(begun, before * (noise / both), noise)
-        changed = self._gained > CHANGED
+        self._gained = np.where(before, 0.0, np.maximum(self._gained, 0.0) + since - likely)
+        self._second = np.where(begun, self._second + (expected / both) * ahead, heard)
+        self._second_variance = np.where(begun, expected * (noise / both), noise)
+        changed = self._changed = self._gained > CHANGED
         if changed.any():
+            # How much of the step is still to come is not known.
+            step = power_of(self._second[:, changed] - self.mean[:, changed])
             self.mean[:, changed] = self._second[:, changed]
-            self.variance[:, changed] = self._second_variance[:, changed]
+            self.variance[:, changed] = self._second_variance[:, changed] + step
             self._gained[changed] = 0.0
-        return np.asarray(changed)
+        return changed.copy()
 
-    def _moved(self, off: Real, expected: Real) -> tuple[Real, Real]:
-        """Measure q, shape (k,), and the factor by which this window is noisier than it says, shape (k,)."""
+    def _moved(self, off: Real, expected: Real, sweeps: float) -> tuple[Real, Real]:
+        """Measure q w, shape (k,), and the factor by which this window is noisier than it says, shape (k,)."""
         middle = off.shape[1] // 2
         beyond = np.partition(off / expected, middle, axis=1)[:, middle] / MEDIAN
         # The harmonic mean leaves out elements that were not heard.
@@ -136,8 +146,8 @@ class Answers:
         self._taken += 1
         if np.any(beyond > CHANGED_ALL):
             return np.maximum(moved, 0.0), np.ones(beyond.size)
-        self._walk = self._walk + (moved - self._walk) / min(self._taken - 1, MEMORY)
-        return np.maximum(self._walk, 0.0), np.where(beyond > NOISY, beyond, 1.0)
+        self._walk = self._walk + (moved / sweeps - self._walk) / min(self._taken - 1, MEMORY)
+        return np.maximum(self._walk * sweeps, 0.0), np.where(beyond > NOISY, beyond, 1.0)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -147,8 +157,10 @@ class Answers:
             "gained": self._gained.copy(),
             "second": self._second.copy(),
             "second_variance": self._second_variance.copy(),
+            "changed": self._changed.copy(),
             "mean": self.mean.copy(),
             "variance": self.variance.copy(),
+            "moved": self.moved,
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -158,11 +170,14 @@ class Answers:
         self._gained = np.array(snapshot["gained"], dtype=np.float64)
         self._second = np.array(snapshot["second"], dtype=np.complex128)
         self._second_variance = np.array(snapshot["second_variance"], dtype=np.float64)
+        self._changed = np.array(snapshot["changed"], dtype=np.bool_)
         self.mean = np.array(snapshot["mean"], dtype=np.complex128)
         self.variance = np.array(snapshot["variance"], dtype=np.float64)
+        self.moved = float(snapshot["moved"])
 
 
-def _power(values: Complex) -> Real:
+def power_of(values: Complex) -> Real:
+    """|values|², of any shape."""
     return np.asarray(values.real**2 + values.imag**2)
 
 

@@ -41,6 +41,9 @@ class ApertureBasis(Protocol):
     def regressors(self, states: Array) -> NDArray[Any]:
         """Turn states (B, N) into z (B, r + 1), the direct path first."""
 
+    def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> NDArray[Any]:
+        """Do as `regressors` does for packed patterns (B, ceil(N/8)), see `panel.pack`."""
+
     def surface(self, coefficients: Complex) -> Complex:
         """Turn coefficients (r, D) into element responses (N, D)."""
 
@@ -60,6 +63,10 @@ class Elements:
         z[:, 0] = 1.0
         z[:, 1:] = states
         return z
+
+    def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> Array:
+        """See `ApertureBasis`."""
+        return self.regressors(panel.unpack(patterns, self.elements))
 
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""
@@ -96,6 +103,10 @@ class Tiles:
         z[:, 0] = 1.0
         z[:, 1:] = states @ self._columns
         return z
+
+    def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> Array:
+        """See `ApertureBasis`."""
+        return self.regressors(panel.unpack(patterns, self.elements))
 
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""
@@ -134,9 +145,13 @@ class Columns:
 
     def regressors(self, states: Array) -> Complex:
         """See `ApertureBasis`."""
-        z = np.empty((states.shape[0], self.size + 1), dtype=np.complex128)
+        return self.regressors_of_bits(panel.pack(states))
+
+    def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> Complex:
+        """See `ApertureBasis`."""
+        z = np.empty((patterns.shape[0], self.size + 1), dtype=np.complex128)
         z[:, 0] = 1.0
-        z[:, 1:] = self._products.products(panel.pack(states))
+        z[:, 1:] = self._products.products(patterns)
         return z
 
     def surface(self, coefficients: Complex) -> Complex:

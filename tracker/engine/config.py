@@ -65,10 +65,17 @@ class Config:
         Whether the phases of direct and surface path are followed.
     least_gain : float
         Predicted gain below which the pattern in use stays, bit/s/Hz.
+    switching_s : float
+        Time that the link loses when the panel switches, s.
     clock_skew_ns : int
         Largest difference allowed between a burst's time and its arrival.
     limits : Limits
         What the panel cannot do.
+    sweeps_from : int or None
+        Elements times frames of a block from which sweeps of orthogonal patterns are noticed, to estimate at less cost
+        while they are sounded, see `lookout`: in smaller blocks there is nothing to be gained. None for never.
+    panel : (int, int) or None
+        Columns and rows of the panel, so that elements can be judged by their neighbours; None when not known.
     plan : PlanConfig or None
         How the sounding is planned; None leaves it to the controller.
     """
@@ -84,8 +91,11 @@ class Config:
     follow_phase: bool = False
     every_bursts: int = 1
     least_gain: float = 0.01
+    switching_s: float = 0.0
     clock_skew_ns: int = 60_000_000_000
     limits: Limits = field(default_factory=Limits)
+    sweeps_from: int | None = 16_384
+    panel: tuple[int, int] | None = None
     plan: PlanConfig | None = None
 
     @property

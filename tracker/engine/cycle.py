@@ -4,16 +4,15 @@
 verdict     meaning                                      left when
 ==========  ===========================================  ======================================================
 undecided   nothing was looked at yet                    the first block: sweep or other
-sweep       patterns belong to one orthogonal cycle;     patterns outside of it that are all new outnumber, of
-            its rows are learned as they come            late, the frames inside: other
+sweep       patterns belong to one orthogonal cycle;     a block has more than a few patterns outside of it: other
+            its rows are learned as they come
 other       anything else, for good                      never: begin again with a new detector
 ==========  ===========================================  ======================================================
 
-The pattern in use, sounded now and then, is not of the cycle and does not speak against it; nor does sounding it alone
-for any length of time.
+Where that is allowed, the pattern in use, sounded now and then, does not speak against the cycle; nor does sounding it
+alone for any length of time. It may change within a block, but more patterns than that are something else.
 """
 
-import math
 from collections.abc import Mapping
 from enum import StrEnum
 from typing import Any
@@ -26,8 +25,6 @@ from .completion import Completion, begin
 
 Real = NDArray[np.float64]
 
-# Frames over which frames inside and outside of the cycle are held against each other.
-MEMORY_FRAMES = 64.0
 # Set bits of each number of 16 bits.
 ONES = np.unpackbits(np.arange(1 << 16, dtype=np.uint16).view(np.uint8).reshape(-1, 2), axis=1).sum(axis=1, dtype="u1")
 # States unpacked at a time where many rows are gone through.
@@ -49,16 +46,19 @@ class SweepDetector:
     ----------
     elements : int
         N.
+    most_outside : int
+        Patterns outside of the cycle in one block that do not end it.
     """
 
-    def __init__(self, elements: int) -> None:
+    def __init__(self, elements: int, most_outside: int = 2) -> None:
         self.elements = elements
+        self._most_outside = most_outside
         self.verdict = Verdict.UNDECIDED
         self._completion: Completion | None = None
         self._order = 0
         self._numbers: dict[bytes, int] = {}
         self._packed: NDArray[np.uint8] = np.zeros((0, 0), dtype=np.uint8)  # bytes beyond the pattern's are 0
-        self._inside = self._outside = 0.0
+        self._strangers: set[bytes] = set()  # patterns of late that cannot belong to the cycle
 
     @property
     def order(self) -> int:
@@ -91,12 +91,14 @@ class SweepDetector:
         keys = [blob[at : at + width] for at in range(0, len(blob), width)]
         if self.verdict is Verdict.UNDECIDED and not self._begin(keys):
             return None
-        rows = np.fromiter((self._numbers.get(key, -1) for key in keys), dtype=np.intp, count=len(keys))
-        if self.known < self._order and (rows < 0).any():
-            self._learn([key for key, row in zip(keys, rows, strict=True) if row < 0])
-            rows = np.fromiter((self._numbers.get(key, -1) for key in keys), dtype=np.intp, count=len(keys))
-        self._judge(keys, rows)
-        return rows if self.verdict is Verdict.SWEEP else None
+        outside = [key for key in keys if key not in self._numbers]
+        if outside and self.known < self._order:
+            self._learn(outside)
+            outside = [key for key in keys if key not in self._numbers]
+        if len(set(outside)) > self._most_outside:
+            self.verdict = Verdict.OTHER
+            return None
+        return np.array([self._numbers.get(key, -1) for key in keys], dtype=np.intp)
 
     def states(self, rows: NDArray[np.intp]) -> Real:
         """States of the elements under rows of the cycle, shape (k, N)."""
@@ -122,18 +124,17 @@ class SweepDetector:
         """All state; `restore` goes on from it."""
         return {
             "elements": self.elements,
+            "most_outside": self._most_outside,
             "verdict": str(self.verdict),
             "order": self._order,
             "packed": self._packed[: self.known].copy(),
-            "balance": [self._inside, self._outside],
         }
 
     @classmethod
     def restore(cls, snapshot: Mapping[str, Any]) -> "SweepDetector":
         """Rebuild from a snapshot."""
-        detector = cls(int(snapshot["elements"]))
+        detector = cls(int(snapshot["elements"]), int(snapshot["most_outside"]))
         detector.verdict = Verdict(snapshot["verdict"])
-        detector._inside, detector._outside = (float(value) for value in snapshot["balance"])
         packed = np.asarray(snapshot["packed"], dtype=np.uint8)
         width = -(-detector.elements // 8)
         if packed.shape[0]:
@@ -169,11 +170,13 @@ class SweepDetector:
         """Take in patterns that belong to the cycle and were not seen before."""
         if self._completion is None:
             return
-        distinct = list(dict.fromkeys(keys))
+        # What cannot be completed with the rows known cannot be with more of them.
+        distinct = [key for key in dict.fromkeys(keys) if key not in self._strangers]
         for start in range(0, len(distinct), CHUNK):
             part = distinct[start : start + CHUNK]
             rows = self._regressors(np.frombuffer(b"".join(part), dtype=np.uint8).reshape(len(part), -1))
             self._number([part[index] for index in np.flatnonzero(self._completion.take(rows))])
+        self._strangers = {key for key in keys if key not in self._numbers}
         if self.known == self._order:
             self._completion = None
 
@@ -183,17 +186,6 @@ class SweepDetector:
             number = len(self._numbers)
             self._packed[number, : len(key)] = np.frombuffer(key, dtype=np.uint8)
             self._numbers[key] = number
-
-    def _judge(self, keys: list[bytes], rows: NDArray[np.intp]) -> None:
-        """Weigh frames inside against new patterns outside."""
-        strangers = len({key for key, row in zip(keys, rows, strict=True) if row < 0})
-        # One of them may be the pattern in use.
-        outside, inside = max(strangers - 1, 0), int(np.count_nonzero(rows >= 0))
-        keep = math.exp(-(inside + outside) / MEMORY_FRAMES)
-        self._inside = keep * self._inside + inside
-        self._outside = keep * self._outside + outside
-        if self._outside > self._inside:
-            self.verdict = Verdict.OTHER
 
     def _regressors(self, packed: NDArray[np.uint8]) -> Real:
         rows = np.ones((packed.shape[0], self.elements + 1))

@@ -7,29 +7,34 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
-from .aperture import Elements
+from .aperture import ApertureBasis, Columns, Elements
 from .bank import Bank, time_constants
-from .changes import Verdict, judge
+from .changes import Verdict
 from .channel import Channel
 from .config import Config
 from .drift import Reading
-from .evidence import Evidence, Heard, Memory
+from .filter import Filter
 from .following import Lock
 from .frames import Fit, Frames
+from .fresh import Posterior
 from .innovation import DIRECT, INNOVATION, Innovations
+from .lookout import Lookout
 from .matched import MATCHED
 from .noise import energy
+from .past import Past
 from .prior import prior_variances
 from .reception import Reception
-from .rls import BlockRls
-from .shrinkage import Shrinkage, shrink
-from .standing import MOVED, Standing
+from .shrinkage import Shrinkage
+from .sounded import Sounded
+from .standing import MOVED
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
 MOST_FRAMES = 256
 # Time over which phases are taken to turn evenly: in it the random walks of `phases` bend them by a tenth of a radian.
 STRETCH_NS = 10_000_000
+# Elements up to which a basis that no longer fits is given up for them: with more, work and memory would be many times
+# what the settings ask for.
+MOST_ELEMENTS = 1024
 # Frames that were left out fit again when their error is at most this many times what it was before.
 FITS = 1.5
 
@@ -44,13 +49,11 @@ class Estimator:
 
     def __init__(self, config: Config) -> None:
         self._config = config
+        self._aperture: ApertureBasis = config.aperture  # in which the surface is estimated now
         self.reception = Reception(config)
         self._innovations = Innovations(config.receivers, config.delay)
-        # Where phases are followed each block stands at phases of its own.
-        self._memory = Memory(blocks=1 if config.follow_phase else None)
-        self._standing = Standing()
+        self._past = Past(config)
         self._shrinkage = Shrinkage()
-        self._taken: list[Heard] = []
         self._left_out_most = 0  # frames that may yet be left out because they do not fit
         self._bank: Bank | None = None
         self._end_ns = 0
@@ -59,13 +62,12 @@ class Estimator:
     @property
     def watched(self) -> tuple[str, ...]:
         """Names of the statistics under watch."""
-        noise = self.reception.watched
-        return INNOVATION, DIRECT, *MATCHED, *MOVED, *noise
+        return INNOVATION, DIRECT, *MATCHED, *MOVED, *self.reception.watched
 
     @property
     def ready_after(self) -> int:
         """Frames that make one sweep: as many as there are unknowns."""
-        return self._config.aperture.size + 1
+        return self._aperture.size + 1
 
     @property
     def surface_variances(self) -> tuple[float, float]:
@@ -77,12 +79,21 @@ class Estimator:
             Before the first frame.
         """
         rls = self._learned()
-        return float(rls.prior[1:].mean()), float(rls.variances[1:].mean())
+        return float(rls.prior[1:].mean()), rls.surface_variance
 
     @property
     def time_constant_s(self) -> float:
         """Time constant in use, s."""
         return self._bank.time_constant_s if self._bank is not None else self._config.time_constant_s
+
+    @property
+    def posterior(self) -> Posterior | None:
+        """What is believed of each coefficient; None before the first frame."""
+        if self._bank is None:
+            return None
+        rls = self._bank.chosen
+        noise = self.reception.noise_power
+        return Posterior(rls.coefficients, rls.variances, rls.prior, noise, self._bank.time_constant_s)
 
     def update(self, bursts: Sequence[Frames]) -> Fit:
         """Take in the frames of a block.
@@ -93,26 +104,32 @@ class Estimator:
             One or more, in order.
         """
         together = Frames.together(bursts)
-        self._taken = []
+        self._past.begin()
         self._shrinkage.count_block()
         if self._bank is None:
-            self._bank = self._begin(together)
+            self._end_ns = int(together.time_ns[0])
+            self._bank = self._begin(together.patterns, self.reception.first(together))
         if not self.reception.following:
             return replace(self._take(self._bank, together), readings=self._readings())
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
         return replace(Fit.together(fits), readings=self._readings())
 
-    def _begin(self, frames: Frames) -> Bank:
-        """Start from the first block: how strong the paths may be."""
+    def _begin(self, patterns: NDArray[np.uint8], outputs: NDArray[np.complex128]) -> Bank:
+        """Start from the first frames, (B, bytes) and (B, R Q): how strong the paths may be."""
         self._shrinkage.forget()
-        outputs = self.reception.first(frames)
-        self._end_ns = int(frames.time_ns[0])
-        aperture = self._config.aperture
-        prior = prior_variances(self._regressors(frames), outputs, aperture.weights)
-        constants_s = self._constants_s
-        filters = [BlockRls(prior, outputs.shape[1], complex_regressors=aperture.is_complex) for _ in constants_s]
-        return Bank(filters, self._config.forgetting, constants_s)
+        aperture = self._aperture
+        prior = prior_variances(Sounded(patterns, aperture).regressors, outputs, aperture.weights)
+        least = self._config.sweeps_from if isinstance(aperture, Elements) else None
+        return Bank.begin(
+            prior,
+            outputs.shape[1],
+            self._config.forgetting,
+            self._constants_s,
+            complex_regressors=aperture.is_complex,
+            patterns=patterns,
+            lookout=Lookout(aperture.elements, least) if least is not None else None,
+        )
 
     def _take(self, bank: Bank, taken: Frames) -> Fit:
         """Take in frames that one model of the phases serves."""
@@ -121,15 +138,14 @@ class Estimator:
         if changed is not None:
             amplitude = np.repeat(np.sqrt(changed), self.reception.directions)
             bank.rescale(amplitude, float(np.exp(np.log(changed).mean())))
-        regressors = self._regressors(taken)
+        sounded = bank.sound(taken.patterns, self._aperture)
         frames, end_ns = outputs.shape[0], int(taken.time_ns[-1])
         elapsed_s = max(end_ns - self._end_ns, 0) / 1e9
         self._end_ns = end_ns
         bank.forget_for(elapsed_s)
-        lost = self._follow(bank, taken, regressors, outputs)
-        heard = outputs.reshape(frames, self._config.receivers, -1)
-        self._taken.append(Heard(taken.patterns, taken.response, heard, taken.time_ns, self.reception.noise_power))
-        if self._left_out_most and not self._fits(bank, regressors, outputs):
+        lost = self._follow(bank, sounded, taken, outputs)
+        self._past.take(taken, outputs, self.reception.noise_power)
+        if self._left_out_most and not self._fits(bank.chosen, sounded, outputs):
             self._left_out_most = max(self._left_out_most - frames, 0)
             degrees = frames * self.reception.directions
             return Fit(np.ones(self._config.receivers), degrees, elapsed_s, 1.0, lost, frames)
@@ -138,10 +154,10 @@ class Estimator:
         error = 0.0
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
-            innovation, white = bank.update(regressors[part], outputs[part])
-            self._innovations.take(outputs[part] - innovation, innovation, white, bank.chosen.whitener)
-            power += energy(white.reshape(white.shape[0], self._config.receivers, -1))
-            error += float(np.vdot(innovation, innovation).real)
+            surprise = bank.update(sounded.part(part), outputs[part])
+            self._innovations.take(outputs[part], surprise)
+            power += energy(surprise.white.reshape(surprise.white.shape[0], self._config.receivers, -1))
+            error += float(np.vdot(surprise.innovation, surprise.innovation).real)
         degrees = frames * self.reception.directions
         left_out = frames if self.reception.lock is Lock.LOST else 0
         return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost, left_out)
@@ -154,28 +170,35 @@ class Estimator:
         time_ns : int or None
             Time for which it is wanted, as far as phases are followed; None for that of the last frame.
 
+        Returns
+        -------
+        Channel
+            The caller's own, to be changed at will.
+
         Raises
         ------
         ValueError
             Before the first frame.
         """
-        rls = self._learned()
         receivers, size = self._config.receivers, self.reception.directions
-        prior = float(rls.prior[1:].mean())
-        surface = self._shrinkage.apply(rls.coefficients[1:], float(rls.variances[1:].mean()), prior)
-        direct = rls.coefficients[0].reshape(receivers, size).copy()
+        estimate = self._learned().estimate
+        prior, variance = self.surface_variances
+        surface = self._aperture.surface(self._shrinkage.apply(estimate[1:], variance, prior))
+        if np.may_share_memory(surface, estimate):  # the channel is its taker's, who may write to it
+            surface = surface.copy()
+        direct = estimate[0].reshape(receivers, size).copy()
         if time_ns is not None:
             for receiver, following in enumerate(self.reception.following):
                 direct[receiver] *= np.exp(1j * following.lead(time_ns))
         return Channel(
             basis=self._config.delay,
             direct=direct,
-            surface=np.ascontiguousarray(self._config.aperture.surface(surface).reshape(-1, receivers, size)),
+            surface=np.ascontiguousarray(surface.reshape(-1, receivers, size)),
         )
 
     def variance(self, states: NDArray[np.int8]) -> float:
         """Variance of each delay coefficient of the response under a pattern, in units of the noise."""
-        regressor = self._config.aperture.regressors(states.astype(np.float64)[None, :])
+        regressor = self._aperture.regressors(states.astype(np.float64)[None, :])
         return self._learned().predicted_variance(regressor[0])
 
     def loosen(self, share: float) -> None:
@@ -191,67 +214,34 @@ class Estimator:
         self.roll_back()
         if self._bank is None:
             return
-        self._bank.reset(np.array([0]))
-        if not self._memory.heard or not frames:
-            return
-        unit = self.reception.noise_power
-        outputs = [one.outputs * np.sqrt(one.noise / unit)[:, None] for one in self._memory.heard]
-        last = np.concatenate(outputs)[-frames:].reshape(-1, unit.size * self.reception.directions)
-        patterns = np.concatenate([one.patterns for one in self._memory.heard])[-frames:]
-        states = panel.unpack(patterns, self._config.elements)
-        self._bank.update(self._config.aperture.regressors(states), last)
+        self._bank.renew_direct()
+        noise = self.reception.noise_power
+        before, heard = self._past.before(noise), self._past.latest(frames, noise)
+        if before is not None and heard is not None and frames:
+            patterns, outputs = heard
+            before[0] += (outputs - self._bank.chosen.predict(Sounded(patterns, self._aperture))).mean(axis=0)
+            self._bank.put(before)
 
     def calm(self) -> None:
         """Take note that nothing is suspected: the estimate is what changes will be held against."""
-        self.keep()
-        oldest = self._standing.oldest
-        if oldest is None:
-            return
-        if self.reception.following and self._bank is not None:
-            oldest = (self._bank.chosen.coefficients, self.reception.noise_power, 0)
-        coefficients, power, blocks = oldest
-        self._memory.calm(coefficients, power, self._innovations.variance, blocks)
+        # Where phases are followed the estimate stands at the phases of now.
+        now = self._bank.chosen.coefficients if self._bank is not None and self.reception.following else None
+        current = (now, self.reception.noise_power) if now is not None else None
+        self._past.calm(self._innovations.variance, current)
 
     def keep(self) -> None:
         """Keep the block just taken."""
-        for heard in self._taken:
-            self._memory.keep(heard)
-        self._taken = []
+        self._past.keep()
 
     def judge(self) -> Verdict | None:
         """Say what changed; None when too little is known of before."""
-        memory, receivers = self._memory, self._config.receivers
-        if memory.before is None or not memory.heard or self._bank is None:
+        if self._bank is None:
             return None
-        blocks = memory.heard
-        frames = Frames(*(np.concatenate([getattr(one, name) for one in blocks]) for name in Frames.__slots__))
-        unit = np.sqrt(memory.noise)[:, None]
-        outputs = [one.outputs * (np.sqrt(one.noise)[:, None] / unit) for one in blocks]
-        tones = frames.response.astype(np.complex128) / unit
-        rls = self._bank.chosen
-        model = memory.before.copy()
-        model[1:] = shrink(model[1:], float(rls.variances[1:].mean()), float(rls.prior[1:].mean()))
-        elements = self._config.aperture.surface(model[1:])
-        model = model.reshape(-1, receivers, self.reception.directions)
-        regressors = self._regressors(frames)
-        evidence = Evidence(
-            outputs=np.concatenate(outputs),
-            regressors=regressors,
-            states=panel.unpack(frames.patterns, self._config.elements),
-            model=model,
-            elements=elements.reshape(-1, *model.shape[1:]),
-            prior=rls.prior,
-            outside=tones - (tones @ self._config.delay.conj()) @ self._config.delay.T,
-            basis=self._config.delay,
-            doubt=self._doubt(regressors),
-            time_s=(frames.time_ns - frames.time_ns[0]) / 1e9,
-        )
-        return judge(evidence)
+        return self._past.judge(self._bank.chosen, self._aperture, self._innovations.excess)
 
     def forget_calm(self) -> None:
         """Drop what changes are held against."""
-        self._memory.forget()
-        self._standing.forget()
+        self._past.forget()
 
     def mend(self, direct: NDArray[np.complex128], surface: NDArray[np.complex128]) -> None:
         """Multiply the estimate from before the change by factors a receiver, shapes (R,), and go on from it."""
@@ -262,25 +252,47 @@ class Estimator:
 
     def renew(self, elements: NDArray[np.intp]) -> bool:
         """Forget how well some elements are known; False where the basis does not tell elements apart."""
-        if self._bank is None or not isinstance(self._config.aperture, Elements):
+        if self._bank is None or not isinstance(self._aperture, Elements):
             return False
-        self._bank.reset(1 + elements)
+        self._bank.renew(1 + elements)
+        return True
+
+    def fall_back(self, frames: int) -> bool:
+        """Estimate element by element from now on, until `relearn`: the columns do not hold the surface any more.
+
+        Parameters
+        ----------
+        frames : int
+            Heard since the change, with which the new estimate begins; 0 for all that are at hand.
+
+        Returns
+        -------
+        bool
+            False where no columns are in use, or the elements are too many.
+        """
+        heard = self._past.latest(frames, self.reception.noise_power)
+        if heard is None or not isinstance(self._aperture, Columns) or self._aperture.elements > MOST_ELEMENTS:
+            return False
+        patterns, outputs = heard
+        self._aperture = Elements(self._aperture.elements)
+        self._bank = self._begin(patterns, outputs)
+        self._bank.update(self._bank.sound(patterns, self._aperture), outputs)
+        self._innovations = Innovations(self._config.receivers, self._config.delay)
         return True
 
     def roll_back(self) -> None:
         """Go back to the estimate from before the change."""
-        memory = self._memory
-        if self._bank is not None and memory.before is not None:
-            scale = np.sqrt(memory.noise / self.reception.noise_power)
-            self._bank.put(memory.before * np.repeat(scale, self.reception.directions))
+        before = self._past.before(self.reception.noise_power)
+        if self._bank is not None and before is not None:
+            self._bank.put(before)
 
     def leave_out(self, most: int) -> None:
         """Leave out frames until they fit the estimate again, but no more than so many."""
         self._left_out_most = most
 
     def relearn(self) -> None:
-        """Throw the estimate away; the noise stays known."""
-        self._bank = None
+        """Throw the estimate away, and go back to the basis of the settings; the noise stays known."""
+        self._bank, self._aperture = None, self._config.aperture
         self.forget_calm()
 
     def snapshot(self) -> dict[str, Any]:
@@ -288,10 +300,10 @@ class Estimator:
         return {
             "reception": self.reception.snapshot(),
             "innovations": self._innovations.snapshot(),
-            "memory": self._memory.snapshot(),
-            "standing": self._standing.snapshot(),
+            "past": self._past.snapshot(),
             "shrinkage": self._shrinkage.snapshot(),
             "left_out_most": self._left_out_most,
+            "fell_back": self._aperture is not self._config.aperture,
             "bank": self._bank.snapshot() if self._bank is not None else None,
             "end_ns": self._end_ns,
         }
@@ -300,71 +312,52 @@ class Estimator:
         """Take over a snapshot."""
         self.reception.load(snapshot["reception"])
         self._innovations.load(snapshot["innovations"])
-        self._memory.load(snapshot["memory"])
-        self._standing.load(snapshot["standing"])
+        self._past.load(snapshot["past"])
         self._shrinkage.load(snapshot["shrinkage"])
         self._left_out_most = int(snapshot["left_out_most"])
+        self._aperture = Elements(self._config.elements) if snapshot["fell_back"] else self._config.aperture
         bank = snapshot["bank"]
         self._bank = Bank.restore(bank, self._config.forgetting, self._constants_s) if bank is not None else None
         self._end_ns = int(snapshot["end_ns"])
 
-    def _follow(
-        self,
-        bank: Bank,
-        frames: Frames,
-        regressors: NDArray[Any],
-        outputs: NDArray[np.complex128],
-    ) -> tuple[int, ...]:
+    def _follow(self, bank: Bank, sounded: Sounded, frames: Frames, outputs: NDArray[np.complex128]) -> tuple[int, ...]:
         """Turn the outputs back in place, and the direct path's estimate along; return receivers that lost lock."""
         if not self.reception.following:
             return ()
-        rls, size = bank.chosen, self.reception.directions
-        surface = regressors[:, 1:] @ rls.coefficients[1:]
-        weight = 1.0 / (1.0 + float(rls.variances.sum()))
+        chosen, size = bank.chosen, self.reception.directions
+        path = chosen.direct.copy()
+        surface = chosen.predict(sounded) - path
+        weight = 1.0 / (1.0 + float(chosen.variances.sum()))
+        turns, gains = np.ones_like(path), np.ones_like(path)
         lost = []
         for receiver, following in enumerate(self.reception.following):
             part = slice(receiver * size, (receiver + 1) * size)
             turned = following.turn(
-                frames.patterns,
-                outputs[:, part],
-                rls.coefficients[0, part],
-                surface[:, part],
-                frames.time_ns,
-                weight,
+                frames.patterns, outputs[:, part], path[part], surface[:, part], frames.time_ns, weight
             )
             outputs[:, part] = turned.outputs
-            bank.turn_direct(part, turned.turn)
-            self._memory.turn_direct(part, turned.turn)
-            self._standing.turn_direct(part, turned.turn)
+            turns[part], gains[part] = turned.turn, turned.gain
+            self._past.turn_direct(part, turned.turn)
             if turned.gain != 1.0:
-                bank.amplify(part, turned.gain)
-                self._memory.amplify(part, turned.gain)
+                self._past.amplify(part, turned.gain)
             if turned.lost:
                 lost.append(receiver)
+        bank.scale(turns * gains, gains)
         return tuple(lost)
 
-    def _regressors(self, frames: Frames) -> NDArray[Any]:
-        return self._config.aperture.regressors(panel.unpack(frames.patterns, self._config.elements))
-
-    def _learned(self) -> BlockRls:
+    def _learned(self) -> Filter:
         if self._bank is None:
             raise ValueError("there is no estimate before the first frame")
         return self._bank.chosen
 
-    def _doubt(self, regressors: NDArray[Any]) -> NDArray[Any]:
-        """Work out how wrong the surface's part of frames may be: what P promises, and what really comes of it."""
-        surface = regressors.copy()
-        surface[:, 0] = 0.0
-        return np.asarray(self._innovations.excess * self._learned().predicted_covariance(surface))
-
-    def _fits(self, bank: Bank, regressors: NDArray[Any], outputs: NDArray[np.complex128]) -> bool:
-        error = outputs - regressors @ bank.chosen.coefficients
+    def _fits(self, chosen: Filter, sounded: Sounded, outputs: NDArray[np.complex128]) -> bool:
+        error = outputs - chosen.predict(sounded)
         return bool(np.vdot(error, error).real / error.size < FITS * self._innovations.variance)
 
     def _readings(self) -> tuple[Reading, ...]:
         """Give samples of what is under watch from the block just taken."""
-        coefficients = self._learned().coefficients
-        readings = self._innovations.readings(coefficients[0])
-        readings += self._standing.readings(coefficients, self.reception.noise_power)
+        chosen = self._learned()
+        readings = self._innovations.readings(chosen.direct)
+        readings += self._past.readings(chosen.coefficients, self.reception.noise_power)
         readings += self.reception.readings()
         return tuple(readings)

@@ -23,8 +23,10 @@ FAULTS = ("", "unmoved", "stuck+", "stuck-", "weak", "swapped")
 NOT_JUDGED, FINE, UNMOVED, STUCK_PLUS, STUCK_MINUS, WEAK, SWAPPED = range(-1, 6)
 SILENT = (UNMOVED, STUCK_PLUS, STUCK_MINUS)
 """Codes of elements that do not answer."""
-MARKS = {NOT_JUDGED: "?", FINE: ".", UNMOVED: "0", STUCK_PLUS: "+", STUCK_MINUS: "-", WEAK: "w", SWAPPED: "x"}
+MARKS = {FINE: ".", UNMOVED: "0", STUCK_PLUS: "+", STUCK_MINUS: "-", WEAK: "w", SWAPPED: "x"}
 """How each code is drawn on a map."""
+SURE = 0.93
+"""Probability of not following from which an element is called faulty."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,6 +75,6 @@ def fault_map(faults: Iterable[tuple[int, str, float]], columns: int, rows: int)
 def map_text(codes: NDArray[np.integer[Any]]) -> str:
     """Draw a map of codes, shape (columns, rows), one character an element, row 0 on top.
 
-    ``.`` follows, ``0`` unmoved, ``+`` and ``-`` stuck, ``w`` weak, ``x`` swapped, ``?`` not judged.
+    ``.`` follows, ``0`` unmoved, ``+`` and ``-`` stuck, ``w`` weak, ``x`` swapped.
     """
     return "\n".join("".join(MARKS[int(code)] for code in line) for line in codes.T)

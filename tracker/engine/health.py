@@ -16,23 +16,23 @@ from numpy.typing import NDArray
 
 from . import hypotheses
 from .appraisal import Appraisal
-from .channel import Channel
-from .faults import FAULTS, FINE, NOT_JUDGED, SILENT, STUCK_MINUS, STUCK_PLUS, SWAPPED, UNMOVED, WEAK, Finding
+from .faults import FAULTS, FINE, NOT_JUDGED, SILENT, STUCK_MINUS, STUCK_PLUS, SURE, SWAPPED, UNMOVED, WEAK, Finding
 from .fresh import Posterior
 from .hypotheses import FOLLOWS
 from .panel import Limits
 from .sides import KEPT, Sides
 from .swaps import swapped
+from .windows import Shown, Windows
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
 
-# Probability of not following from which an element is called faulty; below the second it is taken back.
-SURE, TAKEN_BACK = 0.97, 0.5
+# Probability of not following below which a fault is taken back.
+TAKEN_BACK = 0.5
 # Probability from which a pair is called swapped: of many pairs, one may fit by chance.
 SURELY_SWAPPED = 0.999
 # Probability from which a side is named.
-SIDE_SURE = 0.99
+SIDE_SURE = 0.998
 # Probability that an element does not answer from which the optimizer leaves it out.
 LEFT_OUT = 0.9
 # Probability of following from which a response counts as good to be remembered.
@@ -51,12 +51,21 @@ class Health:
         Columns and rows; element i is column i // rows, row i % rows.
     forgetting_kind : str
         Of the filter whose estimates are judged, see `rls.forgetting`.
-    known : Limits or None
-        What the settings say of the panel.
+    known : Limits
+        What the panel is known not to do.
+
+    Attributes
+    ----------
+    faults : tuple of (int, str, float)
+        Element, fault and confidence of all that do not follow, in the order of the elements.
+    silent : ndarray of int
+        Elements that surely do not answer to their bits.
+    limits : Limits
+        What the panel cannot do: what was known, and those.
     """
 
-    def __init__(self, panel: tuple[int, int], forgetting_kind: str, known: Limits | None = None) -> None:
-        known = known or Limits()
+    def __init__(self, panel: tuple[int, int], forgetting_kind: str, known: Limits) -> None:
+        self._known = known
         columns, rows = self._shape = panel
         self._kind = forgetting_kind
         self._judged = np.ones(columns * rows, dtype=np.bool_)
@@ -66,7 +75,8 @@ class Health:
     def forget(self) -> None:
         """Throw all evidence away, and with it the faults found."""
         elements = self._judged.size
-        self._appraisal = Appraisal(*self._shape, self._kind, self._judged)
+        self._windows = Windows(elements, self._kind)
+        self._appraisal = Appraisal(*self._shape, self._judged)
         self._codes = np.where(self._judged, FINE, NOT_JUDGED).astype(np.int8)
         self._confidence = np.zeros(elements)
         self._partner = np.full(elements, -1, dtype=np.int64)
@@ -74,44 +84,7 @@ class Health:
         self._last_good = np.full(elements, -1, dtype=np.int64)  # window of it
         self._unchanged = 0  # windows without another element that fell silent
         self._sides = Sides(0)
-
-    @property
-    def faults(self) -> tuple[tuple[int, str, float], ...]:
-        """Element, fault and confidence of all that do not follow, in the order of the elements."""
-        faulty = np.flatnonzero(self._codes > FINE)
-        return tuple((int(n), FAULTS[self._codes[n]], float(self._confidence[n])) for n in faulty)
-
-    @property
-    def map(self) -> NDArray[np.int8]:
-        """Health codes over the panel, shape (columns, rows); see `FAULTS`."""
-        return self._codes.reshape(self._shape).copy()
-
-    @property
-    def windows(self) -> int:
-        """Windows of frames judged."""
-        return self._appraisal.windows
-
-    @property
-    def silent(self) -> NDArray[np.intp]:
-        """Elements that surely do not answer to their bits."""
-        return np.flatnonzero(_silent(self._codes) & (self._confidence >= LEFT_OUT))
-
-    def limits(self, base: Limits) -> Limits:
-        """Add what was found to what the panel is known not to do."""
-        silent = self.silent
-        if not silent.size:
-            return base
-        stuck = {int(n): -1 if self._codes[n] == STUCK_MINUS else 1 for n in silent}
-        return replace(base, stuck=stuck | base.stuck)
-
-    def believed(self, channel: Channel) -> Channel:
-        """Take out of the estimate what is left in it of elements that do not answer."""
-        silent = self.silent
-        if not silent.size:
-            return channel
-        surface = channel.surface.copy()
-        surface[silent] = 0.0
-        return replace(channel, surface=surface)
+        self._tell()
 
     def begin(self, now: Posterior | None) -> None:
         """Begin a window: the estimate starts, was loosened, or is not to be trusted.
@@ -121,27 +94,42 @@ class Health:
         now : Posterior or None
             From which the next frames go on; None to wait for the next block.
         """
-        self._appraisal.begin(now)
+        self._windows.begin(now)
 
-    def update(self, now: Posterior, frames: int, elapsed_s: float) -> tuple[Finding, ...]:
-        """Take in a block; return the faults that are newly found.
+    def due(self, frames: int, elapsed_s: float) -> bool:
+        """Count a block; say whether the estimate is to be read now, with `update`.
 
         Parameters
         ----------
-        now : Posterior
-            After the block.
         frames : int
         elapsed_s : float
             Time forgotten with it, s.
         """
-        if not self._appraisal.update(now, frames, elapsed_s, self._partner < 0):
+        return self._windows.due(frames, elapsed_s)
+
+    def update(self, now: Posterior) -> tuple[Finding, ...]:
+        """Read the estimate; return the faults that are newly found.
+
+        Parameters
+        ----------
+        now : Posterior
+            After the blocks counted since the last time.
+        """
+        shown = self._windows.take(now)
+        if shown is None:
             return ()
-        before, beliefs = self._codes, self._appraisal.beliefs.probabilities
+        self._appraisal.take(now, shown, self._partner < 0)
+        before, beliefs = self._codes.copy(), self._appraisal.beliefs.probabilities
         if self._appraisal.looked:
             self._name(beliefs)
             self._pair_up()
-        self._remember(now, beliefs[FOLLOWS], before)
-        new = np.flatnonzero((self._codes > FINE) & (before <= FINE))
+        self._remember(now, shown, beliefs[FOLLOWS], before)
+        if self._appraisal.looked or np.any(self._codes != before):
+            self._tell()
+        faulty, was_faulty = self._codes > FINE, before > FINE
+        if self._appraisal.unsettled or np.any(faulty != was_faulty):
+            self._windows.attend()
+        new = np.flatnonzero(faulty & ~was_faulty)
         doubt = np.maximum(1.0 - beliefs[FOLLOWS], self._confidence)
         return tuple(Finding(int(n), FAULTS[self._codes[n]], float(self._confidence[n]), float(doubt[n])) for n in new)
 
@@ -171,25 +159,26 @@ class Health:
                 self._codes[[one, other]] = SWAPPED
                 self._confidence[[one, other]] = likely
 
-    def _remember(self, now: Posterior, follows: Real, before: NDArray[np.int8]) -> None:
+    def _remember(self, now: Posterior, shown: Shown, follows: Real, before: NDArray[np.int8]) -> None:
         """Keep good responses and the direct path, and see on which side elements are stuck."""
         appraisal, outputs = self._appraisal, now.coefficients.shape[1]
         if self._last.shape[1] != outputs:
             self._sides = Sides(outputs)
             self._last = np.zeros((follows.size, outputs), dtype=np.complex128)
             self._last_good[:] = -1
-        self._last *= appraisal.amplitude
-        self._sides.rescale(appraisal.amplitude)
+        if np.any(appraisal.amplitude != 1.0):
+            self._last *= appraisal.amplitude
+            self._sides.rescale(appraisal.amplitude)
         silent = _silent(self._codes) & (self._last_good >= 0)
         age = appraisal.windows - self._last_good
-        self._sides.take(appraisal.direct, quiet=not np.any(silent & (age < KEPT)))
+        self._sides.take(shown.direct, shown.sweeps, quiet=not np.any(silent & (age < KEPT)))
         self._unchanged = 0 if np.any(silent & ~_silent(before)) else self._unchanged + 1
-        waiting = np.flatnonzero(silent & (self._codes == UNMOVED) & (age < KEPT))
-        if waiting.size and self._unchanged >= SETTLED:
+        lately = np.flatnonzero(silent & (age < KEPT))
+        if np.any(self._codes[lately] == UNMOVED) and self._unchanged >= SETTLED:
             # All that fell silent at about the same time moved the direct path together, and none may be missing.
-            first, last = int(age[waiting].max()), int(age[waiting].min())
-            sides = self._sides.decide(self._last[waiting], first, last, SIDE_SURE) if first - last <= TOGETHER else []
-            for n, (side, sure) in zip(waiting.tolist(), sides, strict=bool(sides)):
+            first, last = int(age[lately].max()), int(age[lately].min())
+            sides = self._sides.decide(self._last[lately], first, last, SIDE_SURE) if first - last <= TOGETHER else []
+            for n, (side, sure) in zip(lately.tolist(), sides, strict=bool(sides)):
                 if side:
                     self._codes[n] = STUCK_PLUS if side > 0 else STUCK_MINUS
                     self._confidence[n] = min(float(self._confidence[n]), sure)
@@ -197,9 +186,19 @@ class Health:
         np.copyto(self._last, now.coefficients[1:], where=good[:, None])
         self._last_good[good] = appraisal.windows
 
+    def _tell(self) -> None:
+        """Put what was found in words and limits."""
+        codes, confidence = self._codes, self._confidence
+        faulty = np.flatnonzero(codes > FINE)
+        self.faults = tuple((int(n), FAULTS[codes[n]], float(confidence[n])) for n in faulty)
+        self.silent = faulty[_silent(codes[faulty]) & (confidence[faulty] >= LEFT_OUT)]
+        stuck = {int(n): -1 if codes[n] == STUCK_MINUS else 1 for n in self.silent}
+        self.limits = replace(self._known, stuck=stuck | self._known.stuck)
+
     def snapshot(self) -> dict[str, Any]:
         """All state as plain values and arrays; `load` goes on from it bit by bit."""
         return {
+            "windows": self._windows.snapshot(),
             "appraisal": self._appraisal.snapshot(),
             "codes": self._codes.copy(),
             "confidence": self._confidence.copy(),
@@ -212,6 +211,7 @@ class Health:
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot made with the same arguments."""
+        self._windows.load(snapshot["windows"])
         self._appraisal.load(snapshot["appraisal"])
         self._codes = np.array(snapshot["codes"], dtype=np.int8)
         self._confidence = np.array(snapshot["confidence"], dtype=np.float64)
@@ -221,6 +221,7 @@ class Health:
         self._unchanged = int(snapshot["unchanged"])
         self._sides = Sides(self._last.shape[1])
         self._sides.load(snapshot["sides"])
+        self._tell()
 
 
 def _silent(codes: NDArray[np.int8]) -> NDArray[np.bool_]:

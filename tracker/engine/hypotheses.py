@@ -23,7 +23,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .answers import Answers
+from .answers import Answers, power_of
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -98,16 +98,16 @@ class Beliefs:
         power : ndarray, shape (k,)
             λ.
         """
-        size = _power(mean)
-        off = np.empty((4, *mean.shape), dtype=np.complex128)
-        variance = np.empty((4, *mean.shape))
-        off[FOLLOWS], variance[FOLLOWS] = answers.mean - mean, residual + HEALTHY_SPREAD**2 * size
-        off[UNMOVED], variance[UNMOVED] = answers.mean, NOTHING**2 * power[:, None]
-        off[WEAK] = answers.mean - WEAK_SHARE * mean
+        size = power_of(mean)
+        off, variance = np.empty((4, *mean.shape)), np.empty((4, *mean.shape))
+        off[FOLLOWS], variance[FOLLOWS] = power_of(answers.mean - mean), residual + HEALTHY_SPREAD**2 * size
+        off[UNMOVED], variance[UNMOVED] = power_of(answers.mean), NOTHING**2 * power[:, None]
+        off[WEAK] = power_of(answers.mean - WEAK_SHARE * mean)
         variance[WEAK] = WEAK_SHARE**2 * residual + WEAK_SPREAD**2 * size
-        off[FOREIGN], variance[FOREIGN] = answers.mean, power[:, None]
+        off[FOREIGN], variance[FOREIGN] = off[UNMOVED], power[:, None]
         variance += answers.variance
-        look = -(np.log(variance) + _power(off) / variance).sum(axis=1)
+        off /= variance
+        look = -(np.log(variance, out=variance) + off).sum(axis=1)
         totals = self._past + look
         self._best = totals.max(axis=0)
         # Only differences count.
@@ -128,7 +128,3 @@ class Beliefs:
         self._look = np.array(snapshot["look"], dtype=np.float64)
         self._best = np.array(snapshot["best"], dtype=np.float64)
         self.totals = np.array(snapshot["totals"], dtype=np.float64)
-
-
-def _power(values: Complex) -> Real:
-    return np.asarray(values.real**2 + values.imag**2)

@@ -21,6 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from .drift import Reading
+from .filter import Surprise
 from .matched import Matched
 
 Complex = NDArray[np.complex128]
@@ -61,20 +62,9 @@ class Innovations:
         self._common: Complex = np.zeros(receivers * size, dtype=np.complex128)
         self._common_frames = 0
 
-    def take(self, shown: Complex, innovation: Complex, white: Complex, whitener: NDArray[Any]) -> None:
-        """Take in frames worked off in one step.
-
-        Parameters
-        ----------
-        shown : ndarray of complex, shape (B, D)
-            Z C.
-        innovation, white : ndarray of complex, shape (B, D)
-            Y − Z C, and w.
-        whitener : ndarray, shape (B, B)
-            L⁻¹.
-        """
-        diagonal = whitener.diagonal().real
-        spread = 1.0 / (diagonal * diagonal)  # L_bb²
+    def take(self, outputs: Complex, surprise: Surprise) -> None:
+        """Take in frames worked off in one step, outputs (B, D); the spread of the surprise is L_bb²."""
+        innovation, white, spread = surprise.innovation, surprise.white, surprise.spread
         predicted = spread - 1.0
         inverse = 1.0 / (1.0 + self.excess * predicted)
         parts = white.view(np.float64)
@@ -84,7 +74,7 @@ class Innovations:
         self._frames += frames
         self._common += innovation.sum(axis=0)
         self._common_frames += frames
-        self._matched.take(shown, innovation)
+        self._matched.take(outputs - innovation, innovation)
         self.variance = 1.0 + self.excess * float(predicted.sum()) / frames
         self._calibrate(ratio, predicted, inverse)
 

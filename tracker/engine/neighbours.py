@@ -85,8 +85,9 @@ class Neighbours:
         least = LEAST_RESIDUAL * np.maximum(residual.mean(axis=1), LEAST_SHARE * power)
         if self._kind.size < LEAST_ELEMENTS:
             weights[:], residual[:] = 0.0, power[:, None]
-        self._weights = np.asarray(weights[:, self._kind], dtype=np.complex128)
-        self.residual = np.maximum(residual, least[:, None])[:, self._kind]
+        # `take` lays out in one way, indexing in another that a snapshot would not keep.
+        self._weights = np.take(weights.astype(np.complex128), self._kind, axis=1)
+        self.residual = np.take(np.maximum(residual, least[:, None]), self._kind, axis=1)
         self.power = power
 
     def predict(self, responses: Complex) -> Complex:

@@ -6,7 +6,7 @@ kind          action
 motion        forget faster: half of what was known counts for nothing
 channel       reacquire: nearly all that was known counts for nothing
 timing        reacquire
-basis         reacquire
+basis         fall back to elements: columns that do not hold the surface are given up; else reacquire
 unclear       reacquire
 direct-path   renew direct path: that alone is learned anew, from the frames since it changed
 elements      renew elements: those alone are learned anew
@@ -47,6 +47,8 @@ def react(estimator: Estimator, verdict: Verdict) -> str:
         estimator.roll_back()
         estimator.leave_out(estimator.ready_after)
         return "leave out frames"
+    if kind == "basis" and estimator.fall_back(verdict.frames):
+        return "fall back to elements"
     if kind == "motion":
         estimator.loosen(LOOSEN)
         return "forget faster"

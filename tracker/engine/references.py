@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from . import panel
+from .responses import product
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -40,6 +41,7 @@ class References:
     def __init__(self, elements: int, outputs: int) -> None:
         self._elements = elements
         self._patterns: list[bytes] = []  # the latest last
+        self._z: Real | None = None  # of them, while they stay the same
         self.means: Complex = np.zeros((0, outputs), dtype=np.complex128)
         self.variances: Real = np.zeros(0)
 
@@ -51,55 +53,95 @@ class References:
     @property
     def regressors(self) -> Real:
         """Z of the patterns kept, shape (k, N + 1)."""
-        z = np.ones((self.count, self._elements + 1))
-        if self.count:
-            packed = np.frombuffer(b"".join(self._patterns), dtype=np.uint8).reshape(self.count, -1)
-            z[:, 1:] = panel.unpack(packed, self._elements)
+        if self._z is None:
+            self._z = np.ones((self.count, self._elements + 1))
+            if self.count:
+                packed = np.frombuffer(b"".join(self._patterns), dtype=np.uint8).reshape(self.count, -1)
+                self._z[:, 1:] = panel.unpack(packed, self._elements)
+        return self._z
+
+    def regressor(self, pattern: bytes) -> Real:
+        """Regressor z of a packed pattern, shape (N + 1,)."""
+        if pattern in self._patterns:
+            return np.asarray(self.regressors[self._patterns.index(pattern)])
+        z = np.ones(self._elements + 1)
+        z[1:] = panel.unpack(np.frombuffer(pattern, dtype=np.uint8), self._elements)
         return z
 
-    def update(self, patterns: NDArray[np.uint8], outputs: Complex) -> None:
-        """Take in frames: patterns (B, bytes) and what was heard (B, D), in units of the noise."""
-        keys = [pattern.tobytes() for pattern in patterns]
-        # In the order in which they were sounded last.
-        for key in dict.fromkeys(reversed(list(dict.fromkeys(reversed(keys))))):
-            heard = outputs[[index for index, other in enumerate(keys) if other == key]]
-            precision, total = float(heard.shape[0]), heard.sum(axis=0)
-            if key in self._patterns:
-                at = self._patterns.index(key)
-                before = 1.0 / self.variances[at]
-                precision, total = before + precision, before * self.means[at] + total
-                self._keep([index for index in range(len(self._patterns)) if index != at])
-            self._patterns.append(key)
-            self.means = np.concatenate([self.means, (total / precision)[None, :]])
-            self.variances = np.append(self.variances, 1.0 / precision)
-            self._keep(list(range(max(len(self._patterns) - MOST, 0), len(self._patterns))))
+    def gain(self, regressors: Real, direct: float, element: float) -> tuple[Real, Real]:
+        """Say what the responses kept tell of those under other patterns.
+
+        Parameters
+        ----------
+        regressors : ndarray, shape (b, N + 1)
+        direct, element : float
+            Variances of the direct path and of the elements: the diagonal of P.
+
+        Returns
+        -------
+        gain : ndarray, shape (b, k)
+            By which what is heard under the patterns kept, less what was expected, goes into the others.
+        known : ndarray, shape (b,)
+            Variance that is taken away.
+        """
+        variances = np.full(self._elements + 1, element)
+        variances[0] = direct
+        across = (regressors * variances) @ self.regressors.T
+        gain = across @ self._precision(variances)
+        return gain, np.asarray((gain * across).sum(axis=1))
+
+    def take(self, pattern: bytes, outputs: Complex) -> None:
+        """Take in frames of a packed pattern: what was heard (k, D), in units of the noise."""
+        precision, total = float(outputs.shape[0]), outputs.sum(axis=0)
+        if pattern in self._patterns:
+            at = self._patterns.index(pattern)
+            before = 1.0 / float(self.variances[at])
+            precision, total = before + precision, before * self.means[at] + total
+        if not self._patterns or self._patterns[-1] != pattern:
+            others = [index for index, other in enumerate(self._patterns) if other != pattern]
+            self._keep(others[-(MOST - 1) :])
+            self._patterns.append(pattern)
+            self.means = np.concatenate([self.means, np.zeros((1, total.shape[0]))])
+            self.variances = np.append(self.variances, 1.0)
+        self.means[-1], self.variances[-1] = total / precision, 1.0 / precision
 
     def forget(self, a: float, b: float, decay: float, prior: float) -> None:
         """Forget as `rls.forgetting` has it; the variance of a response before any data is `prior`."""
         self.variances = a * self.variances + b * prior
         self.means *= decay
 
+    def scale(self, before: Complex, direct: NDArray[Any], surface: NDArray[Any]) -> None:
+        """Multiply what the direct path, `before` (D,), adds to the responses by a factor, and the rest by another."""
+        self.means = (self.means - before) * surface + before * direct
+
+    def doubt(self, variance: float) -> None:
+        """Add to the variance of all: what they have in common may have changed."""
+        self.variances = self.variances + variance
+
+    def clear(self) -> None:
+        """Drop all."""
+        self._keep([])
+
     def rescale(self, outputs: Real, variance: float) -> None:
         """Change the unit of the noise: multiply the responses (by factors (D,)) and the variances."""
         self.means *= outputs
         self.variances *= variance
 
-    def correct(self, coefficients: Complex, variances: Real) -> Complex:
+    def correct(self, coefficients: Complex, direct: float, element: float) -> Complex:
         """Put the responses to an estimate.
 
         Parameters
         ----------
         coefficients : ndarray of complex, shape (N + 1, D)
             C.
-        variances : ndarray, shape (N + 1,)
-            Of its rows: the diagonal of P.
+        direct, element : float
+            Variances of the direct path and of the elements: the diagonal of P.
         """
-        if not self._patterns:
-            return coefficients
+        variances = np.full(self._elements + 1, element)
+        variances[0] = direct
         z = self.regressors
-        spread = z * variances
-        weights = np.linalg.solve(spread @ z.T + np.diag(self.variances), self.means - z @ coefficients)
-        return np.asarray(coefficients + spread.T @ weights)
+        gain = (z * variances).T @ self._precision(variances)
+        return np.asarray(coefficients + product(gain, self.means - product(z, coefficients)))
 
     def snapshot(self) -> dict[str, Any]:
         """All state; `restore` goes on from it bit by bit."""
@@ -120,6 +162,13 @@ class References:
         references.variances = np.array(snapshot["variances"], dtype=np.float64)
         return references
 
+    def _precision(self, variances: Real) -> Real:
+        """Inverse of Z P Zᴴ + diag ϱ, shape (k, k)."""
+        covariance = (self.regressors * variances) @ self.regressors.T
+        covariance.ravel()[:: self.count + 1] += self.variances
+        return np.asarray(np.linalg.inv(covariance))
+
     def _keep(self, indices: list[int]) -> None:
+        self._z = None
         self._patterns = [self._patterns[index] for index in indices]
         self.means, self.variances = self.means[indices], self.variances[indices]

@@ -14,8 +14,10 @@ from .config import Config
 from .events import Cause, Pattern
 from .flips import optimize
 from .one_carrier import rate_bound
+from .panel import Limits
 from .rate import promise, rate, response
 from .report import Stand
+from .switching import Switching
 
 # Published patterns kept, to know what the controller shows when it names an id.
 REMEMBERED = 256
@@ -24,7 +26,7 @@ THOROUGH_EVERY = 1024
 # Between them glances are taken at other starts: the distance doubles after one that found nothing, up to so many
 # refreshes, and is one again after one that clearly gained, as they do while the channel moves: by this share of the
 # standard deviation of the rate at least.
-MOST_APART, CLEAR = 32, 0.5
+LEAST_APART, MOST_APART, CLEAR = 2, 16, 0.5
 # Bursts after which a controller that still shows another pattern than the latest is sent it again.
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
@@ -52,9 +54,10 @@ class Refresher:
         self._next_thorough = 0
         self._run: int | None = None
         self._not_shown = 0
+        self._switching = Switching(config.least_gain, config.switching_s)
         self._resting = False
         self._since_glance = 0
-        self._glance_every = 1
+        self._glance_every = LEAST_APART
 
     @property
     def next_id(self) -> int:
@@ -99,7 +102,9 @@ class Refresher:
         cause: Cause,
         budget: Budget,
         stand: Stand,
+        limits: Limits,
         variance: Callable[[NDArray[np.int8]], float],
+        before: float | None = None,
     ) -> tuple[Pattern | None, int]:
         """Work out a refreshed pattern.
 
@@ -112,8 +117,12 @@ class Refresher:
         budget : Budget
         stand : Stand
             The last burst that it rests on.
+        limits : Limits
+            What the panel cannot do, as far as is known by now.
         variance : callable
             Gives the variance of each complex delay coefficient of the response under a pattern, in units of the noise.
+        before : float or None
+            Rate under the pattern published last, bit/s/Hz, where it has been worked out already.
 
         Returns
         -------
@@ -127,18 +136,21 @@ class Refresher:
         missed = self._not_shown >= PATIENCE_BURSTS
         glance = not thorough and self._glance()
         routine = cause is Cause.REFRESH and not thorough and not glance and not missed
-        if routine and in_use is not None and not self._worth_a_look(channel, in_use):
+        if before is None:
+            before = rate(channel, in_use) if in_use is not None else 0.0
+        # What a change asks for is not put off to save a switch.
+        least_gain = self._switching.worth(before, stand.t_ns) if cause is Cause.REFRESH else self._config.least_gain
+        if routine and in_use is not None and not self._worth_a_look(channel, in_use, least_gain):
             return None, 0
         self._resting = False
-        found = optimize(channel, in_use, self._config.limits, budget, thorough=thorough, glance=glance)
-        before = rate(channel, in_use) if in_use is not None else 0.0
+        found = optimize(channel, in_use, limits, budget, thorough=thorough, glance=glance)
         forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
         same = in_use is not None and np.array_equal(found.states, in_use)
-        gains = not same and found.rate - before >= self._config.least_gain
+        gains = not same and found.rate - before >= least_gain
         if glance:
             # A gain far within the doubt of the estimate is found in a channel that stands still as well.
             moved = gains and found.rate - before > CLEAR * rate_spread(channel, found.states, variance(found.states))
-            self._glance_every = 1 if moved else min(2 * self._glance_every, MOST_APART)
+            self._glance_every = LEAST_APART if moved else min(2 * self._glance_every, MOST_APART)
         if not forced and not gains:
             return None, found.steps
         return self._publish(channel, found.states, before, cause, stand, found.steps), found.steps
@@ -160,6 +172,7 @@ class Refresher:
             "run": self._run,
             "not_shown": self._not_shown,
             "resting": self._resting,
+            "switching": self._switching.snapshot(),
             "since_glance": self._since_glance,
             "glance_every": self._glance_every,
         }
@@ -178,6 +191,7 @@ class Refresher:
         self._run = snapshot["run"]
         self._not_shown = int(snapshot["not_shown"])
         self._resting = bool(snapshot["resting"])
+        self._switching.load(snapshot["switching"])
         self._since_glance = int(snapshot["since_glance"])
         self._glance_every = int(snapshot["glance_every"])
 
@@ -190,12 +204,12 @@ class Refresher:
         self._since_thorough = 0
         return True
 
-    def _worth_a_look(self, channel: Channel, in_use: NDArray[np.int8]) -> bool:
+    def _worth_a_look(self, channel: Channel, in_use: NDArray[np.int8], least_gain: float) -> bool:
         """Whether flips promise enough for a search to be begun."""
         if self._resting:
             self._resting = False
             return False
-        least = WORTH_A_LOOK * self._config.least_gain
+        least = WORTH_A_LOOK * least_gain
         promised = promise(channel, in_use)
         self._resting = promised < FAR_FROM_IT * least
         return promised >= least
@@ -235,6 +249,8 @@ class Refresher:
         self._published.pop(pattern.id - REMEMBERED, None)
         self._next_id += 1
         self._not_shown = 0
+        self._switching.published(stand.t_ns)
+        self._resting = True
         return pattern
 
 

@@ -7,6 +7,7 @@ from .burst import Burst
 from .changes import Verdict
 from .drift import DriftMonitor, Suspicion
 from .events import Alarm, Mode, State
+from .faults import FAULTS, SILENT, SURE, Finding
 from .frames import Fit
 
 
@@ -112,6 +113,23 @@ def gap_alarm(lost: int, since_ns: int, stand: Stand) -> Alarm:
     )
 
 
+def elements_alarm(found: Sequence[Finding], stand: Stand) -> Alarm:
+    """Elements were found not to follow their bits; the least sure of them is the evidence."""
+    silent = any(FAULTS.index(one.fault) in SILENT for one in found)
+    return Alarm(
+        run=stand.run,
+        seq=stand.seq,
+        t_ns=stand.t_ns,
+        since_ns=stand.t_ns,
+        kind="elements",
+        receiver=None,
+        statistic=min(one.doubt for one in found),
+        threshold=SURE,
+        next_kind="",
+        action="leave elements out" if silent else "none",
+    )
+
+
 def states(
     bursts: Sequence[Burst],
     mode: Mode,
@@ -121,6 +139,7 @@ def states(
     link: Link,
     time_constant_s: float,
     drift: DriftMonitor,
+    faults: tuple[tuple[int, str, float], ...],
 ) -> list[State]:
     """One state for each burst of a block; they differ in what names the burst alone."""
     statistic, threshold = drift.highest
@@ -144,7 +163,7 @@ def states(
             phase_rad=link.phase_rad,
             time_constant_ms=time_constant_s * 1e3,
             pattern=link.pattern,
-            faults=(),
+            faults=faults,
             together=len(bursts),
             statistic=statistic,
             threshold=threshold,

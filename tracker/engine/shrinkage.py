@@ -41,9 +41,10 @@ def shrink(surface: Complex, posterior: float, prior: float) -> Complex:
     Returns
     -------
     ndarray of complex, shape (N, D)
+        Never the array given.
     """
     factors = _factors(surface, posterior / prior, prior)
-    return surface if factors is None else np.asarray(surface @ factors)
+    return surface.copy() if factors is None else np.asarray(surface @ factors)
 
 
 class Shrinkage:
@@ -67,7 +68,7 @@ class Shrinkage:
         rest = posterior / prior
         if self._factors is None or self._blocks >= BLOCKS or abs(rest - self._rest) > MOVED * self._rest:
             self._factors, self._rest, self._blocks = _factors(surface, rest, prior), rest, 0
-        return surface if self._factors is None else np.asarray(surface @ self._factors)
+        return surface.copy() if self._factors is None else np.asarray(surface @ self._factors)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""

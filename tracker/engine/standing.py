@@ -54,7 +54,7 @@ class Standing:
             Its power.
         """
         readings: list[Reading] = []
-        parts = coefficients.view(np.float64)
+        parts = np.ascontiguousarray(coefficients).view(np.float64)
         power = np.einsum("nd,nd->n", parts, parts)
         if len(self._before) == LAG:
             before, noise_before = self._before.pop(0), self._noise.pop(0)

@@ -5,7 +5,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from .answers import Answers
+from .answers import Answers, power_of
 from .hypotheses import FOREIGN, HEALTHY_SPREAD, PRIOR, Beliefs
 
 Complex = NDArray[np.complex128]
@@ -43,11 +43,11 @@ def swapped(
     if tried.size < 2:
         return []
     tried = tried[np.argsort(-totals[FOREIGN, tried], kind="stable")][:MOST_TRIED]
-    size = mean[:, tried].real ** 2 + mean[:, tried].imag ** 2
+    size = power_of(mean[:, tried])
     healthy = residual[:, tried] + HEALTHY_SPREAD**2 * size
     variance = healthy[:, None] + answers.variance[:, tried, None]
     off = answers.mean[:, tried, None] - mean[:, None, tried]
-    fits = beliefs.foreign_past[tried, None] - (np.log(variance) + (off.real**2 + off.imag**2) / variance).sum(axis=0)
+    fits = beliefs.foreign_past[tried, None] - (np.log(variance) + power_of(off) / variance).sum(axis=0)
     prior = math.log(PRIOR[FOREIGN] / (totals.shape[1] - 1)) - 2.0 * math.log(PRIOR[FOREIGN])
     pair = fits + fits.T + prior
     np.fill_diagonal(pair, -np.inf)

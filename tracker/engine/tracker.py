@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from . import panel
 from .admission import Admission
+from .aperture import Elements
 from .budget import Budget
 from .burst import Burst
 from .calibration import Calibration
@@ -25,6 +26,7 @@ from .estimator import Estimator
 from .events import Cause, Event, Mode, Pattern, Plan
 from .following import KEPT, Lock
 from .frames import Fit, Frames
+from .health import Health
 from .innovation import DIRECT, INNOVATION
 from .lifecycle import Happening, after
 from .plan import Planner, Situation
@@ -32,7 +34,7 @@ from .rate import rate
 from .reaction import HARMLESS, react
 from .refresh import Refresher, rate_spread
 from .refusal import Reason
-from .report import Counts, Link, Stand, drift_alarm, gap_alarm, lock_alarm, states
+from .report import Counts, Link, Stand, drift_alarm, elements_alarm, gap_alarm, lock_alarm, states
 from .standing import DIRECT_MOVED, SURFACE_MOVED
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
@@ -87,6 +89,9 @@ class Tracker:
         self._refresher = Refresher(config, first_id)
         self._calibration = Calibration()
         self._planner = Planner(config, config.plan) if config.plan is not None else None
+        self._health: Health | None = None
+        if config.panel is not None and isinstance(config.aperture, Elements):
+            self._health = Health(config.panel, config.forgetting, config.limits)
         self._counts = Counts()
         self._mode = Mode.ACQUIRING
         self._frames_since = 0
@@ -111,15 +116,17 @@ class Tracker:
         """Id that the next pattern will have."""
         return self._refresher.next_id
 
-    def admit(self, burst: Burst, arrival_ns: int) -> None:
+    def admit(self, burst: Burst, arrival_ns: int, *, vouched: bool = False) -> None:
         """Let a burst in, to be worked off by the next `advance`; count what was lost before it.
+
+        See `Admission.admit` for the parameters.
 
         Raises
         ------
         Refused
             The burst is not to be used; see `Admission.admit`. It is not counted here: call `refuse`.
         """
-        lost = self._admission.admit(burst, arrival_ns)
+        lost = self._admission.admit(burst, arrival_ns, vouched=vouched)
         if lost:
             self._counts.lost += lost
             self._gap = ((self._gap[0] if self._gap else 0) + lost, self._gap[1] if self._gap else burst.t_ns)
@@ -148,6 +155,8 @@ class Tracker:
         """Throw the estimate away and begin again."""
         self._mode = after(self._mode, Happening.RELEARN)
         self._estimator.relearn()
+        if self._health is not None:
+            self._health.forget()
         self._start_over()
 
     def adopt(self, states: NDArray[np.int8]) -> None:
@@ -183,15 +192,19 @@ class Tracker:
         fits = []
         for burst, part in zip(bursts, frames, strict=True):
             fits.append(self._estimator.update([part]))
+            if self._health is not None:
+                events.extend(self._judge_elements(self._health, burst, fits[-1]))
             events.extend(self._watch(burst, fits[-1]))
         fit = Fit.together(fits)
         # A pattern chosen now is in force from the burst after next at the latest: one burst ahead is about its middle.
         channel = self._estimator.channel(stand.t_ns + bursts[-1].frames * bursts[-1].dt_ns)
+        if self._health is not None:
+            channel.surface[self._health.silent] = 0.0
         self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
         link = self._link(channel, bursts[-1].pattern_id, frames)
         self._calibration.observe(link.pattern, link.measured)
         link = replace(link, promise_kept=self._calibration.kept_share)
-        pattern, steps = self._consider(channel, len(bursts), budget, stand)
+        pattern, steps = self._consider(channel, link, len(bursts), budget, stand)
         if pattern:
             spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
             promised = self._calibration.promise(pattern.id, pattern.rate, spread)
@@ -199,7 +212,8 @@ class Tracker:
         if self._planner is not None and (plan := self._plan(self._planner, channel, fit, frames, stand)):
             events.append(plan)
         noise, time_constant_s = self._estimator.reception.noise_power.tolist(), self._estimator.time_constant_s
-        events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift))
+        faults = self._health.faults if self._health is not None else ()
+        events.extend(states(bursts, self._mode, self._counts, noise, fit, link, time_constant_s, self._drift, faults))
         return Outcome(events, steps, fit.error)
 
     def snapshot(self) -> dict[str, Any]:
@@ -212,6 +226,7 @@ class Tracker:
             "refresher": self._refresher.snapshot(),
             "calibration": self._calibration.snapshot(),
             "planner": self._planner.snapshot() if self._planner is not None else None,
+            "health": self._health.snapshot() if self._health is not None else None,
             "counts": [getattr(counts, name) for name in Counts.__slots__],
             "mode": str(self._mode),
             "frames_since": self._frames_since,
@@ -231,6 +246,8 @@ class Tracker:
         self._calibration.load(snapshot["calibration"])
         if self._planner is not None:
             self._planner.load(snapshot["planner"])
+        if self._health is not None:
+            self._health.load(snapshot["health"])
         self._counts = Counts(*(int(count) for count in snapshot["counts"]))
         self._mode = Mode(snapshot["mode"])
         self._frames_since = int(snapshot["frames_since"])
@@ -246,8 +263,21 @@ class Tracker:
         self._frames_since = 0
         self._suspected, self._waited = None, 0
         self._estimator.forget_calm()
+        if self._health is not None:
+            self._health.begin(self._estimator.posterior)
         self._drift.reset(kept)
         self._refresher.begin_afresh()
+
+    def _judge_elements(self, health: Health, burst: Burst, fit: Fit) -> list[Event]:
+        """See whether elements follow their bits; return an alarm when some are newly found not to."""
+        if self._estimator.reception.lock is not Lock.LOCKED or float(fit.ratio.mean()) > WORST_FIT:
+            health.begin(None)
+            return []
+        if not health.due(burst.frames - fit.left_out, fit.elapsed_s):
+            return []
+        posterior = self._estimator.posterior
+        found = health.update(posterior) if posterior is not None else ()
+        return [elements_alarm(found, Stand(burst.run, burst.seq, burst.end_ns))] if found else []
 
     def _watch(self, burst: Burst, fit: Fit) -> list[Event]:
         """Count a burst that was taken in, and see whether it fits; return alarms."""
@@ -314,7 +344,9 @@ class Tracker:
         self._start_over(self._estimator.reception.watched if verdict.kind in DELAYS_STAY else ())
         return verdict, action
 
-    def _consider(self, channel: Channel, bursts: int, budget: Budget, stand: Stand) -> tuple[Pattern | None, int]:
+    def _consider(
+        self, channel: Channel, link: Link, bursts: int, budget: Budget, stand: Stand
+    ) -> tuple[Pattern | None, int]:
         """Publish a pattern if one is due and worth it; also say how many optimizer steps were taken."""
         if self._adopted is not None:
             adopted, self._adopted = self._adopted, None
@@ -327,7 +359,10 @@ class Tracker:
         cause = self._pending_cause or Cause.REFRESH
         if self._refresher.latest is None:
             cause = Cause.FIRST
-        pattern, steps = self._refresher.choose(channel, cause, budget, stand, self._estimator.variance)
+        before = link.predicted if link.pattern == self._refresher.latest else None
+        limits = self._health.limits if self._health is not None else self._config.limits
+        variance = self._estimator.variance
+        pattern, steps = self._refresher.choose(channel, cause, budget, stand, limits, variance, before)
         # The cause of a change stays until a pattern answers to it, or until all is well again without.
         if pattern or self._mode is Mode.TRACKING:
             self._pending_cause = None

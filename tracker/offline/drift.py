@@ -18,6 +18,7 @@ from threadpoolctl import threadpool_limits
 
 from tracker.engine.events import Event
 from tracker.engine.refusal import Refused
+from tracker.faults_file import faults_text, write_faults
 from tracker.logs import LogReader
 from tracker.settings import Settings, SettingsError, load, parse
 
@@ -59,8 +60,8 @@ class Drift:
     own_settings : bool or None
         Whether a replay was under the log's own settings.
     link : str
-    shape : (int, int) or None
-        Columns and rows of the panel, when settings tell.
+    settings : Settings or None
+        Of the link, when they are known.
     damage, notes : list of str
         Where logs are not whole; what else there is to know.
     unreadable : int
@@ -71,7 +72,7 @@ class Drift:
     source: str = "published"
     own_settings: bool | None = None
     link: str = ""
-    shape: tuple[int, int] | None = None
+    settings: Settings | None = None
     damage: list[str] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
     unreadable: int = 0
@@ -82,7 +83,7 @@ class Drift:
             "link": self.link,
             "source": self.source,
             "own_settings": self.own_settings,
-            "panel": None if self.shape is None else list(self.shape),
+            "panel": None if self.settings is None else [self.settings.panel.columns, self.settings.panel.rows],
             **self.timeline.as_dict(),
             "unreadable": self.unreadable,
             "notes": self.notes,
@@ -132,7 +133,7 @@ def _listened(paths: Sequence[Path], bars: Bars) -> tuple[Drift, int]:
         if settings is not None:
             drift.link = drift.link or settings.link.name
             if settings.link.name == drift.link:
-                drift.shape = settings.panel.columns, settings.panel.rows
+                drift.settings = settings
         advanced = bars.begin(path.name)
         states, bursts = drift.timeline.states, 0
         for record in reader:
@@ -179,7 +180,7 @@ def _replayed(paths: Sequence[Path], settings: Settings | None, folder: Path, ba
             work.run(path, bars.begin(f"{path.name}, replay"))
     used = settings or _own_settings(LogReader(paths[0]))
     if used is not None:
-        drift.link, drift.shape = used.link.name, (used.panel.columns, used.panel.rows)
+        drift.link, drift.settings = used.link.name, used
     drift.own_settings, drift.damage = work.own_settings, work.damage
     if work.refused:
         drift.notes.append(f"{work.refused} bursts or messages were refused in the replay")
@@ -193,6 +194,8 @@ def drift(
     settings_path: Path | None = None,
     svg_path: Path | None = None,
     json_path: Path | None = None,
+    faults_path: Path | None = None,
+    *,
     progress: bool = True,
 ) -> int:
     """Say on standard output what changed when, and draw it.
@@ -207,6 +210,8 @@ def drift(
         Picture to write, which must not exist; by default beside the first log, under its name or the next free one.
     json_path : Path or None
         JSON file to write the same to.
+    faults_path : Path or None
+        File to write the faults in the last state to.
     progress : bool
         Whether to show progress.
 
@@ -220,8 +225,9 @@ def drift(
     LogError, OfflineError, SettingsError
         One line for the user.
     """
-    if json_path is not None and not json_path.parent.is_dir():
-        raise OfflineError(f"{json_path}: cannot be written: there is no folder {json_path.parent}")
+    for path in (json_path, faults_path):
+        if path is not None and not path.parent.is_dir():
+            raise OfflineError(f"{path}: cannot be written: there is no folder {path.parent}")
     with _new_picture(paths[0], svg_path) as (place, file):
         with progress_bar(progress, len(paths)) as bars:
             found = follow(paths, settings_path, bars)
@@ -232,8 +238,20 @@ def drift(
             json_path.write_text(json.dumps(told, indent=1) + "\n", encoding="utf-8")
         except OSError as error:
             raise OfflineError(f"{json_path}: cannot be written: {error.strerror}") from None
+    if faults_path is not None:
+        _write_faults(faults_path, found)
     _print(told)
     return 0
+
+
+def _write_faults(path: Path, found: Drift) -> None:
+    state = found.timeline.state
+    if found.settings is None or state is None:
+        raise OfflineError(f"{path}: is not written: the logs hold no settings; give them with --settings")
+    try:
+        write_faults(path, faults_text(found.settings, state))
+    except OSError as error:
+        raise OfflineError(f"{path}: cannot be written: {error.strerror}") from None
 
 
 def _print(told: dict[str, Any]) -> None:

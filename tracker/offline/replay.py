@@ -163,7 +163,7 @@ class Replay:
         bursts = []
         for taken in block.taken:
             try:
-                tracker.admit(taken.burst, taken.arrival_ns)
+                tracker.admit(taken.burst, taken.arrival_ns, vouched=block.steps is not None)
                 bursts.append(taken.burst)
             except Refused as refused:
                 tracker.refuse(refused.reason)

@@ -77,6 +77,11 @@ class Timeline:
             self._take_pattern(event)
 
     @property
+    def state(self) -> State | None:
+        """The last one."""
+        return self._before
+
+    @property
     def happenings(self) -> list[Happening]:
         """What happened, in order of the beginning of each; long runs of a kind as one."""
         self._entries = fold_runs(self._entries)

@@ -21,7 +21,7 @@ from .refusals import Refusals
 
 # Frames of a block after which no further burst is added; and messages, so that a flood of messages that are refused
 # cannot keep the good ones waiting.
-MOST_TOGETHER = 512
+MOST_TOGETHER = 1024
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -10,12 +10,14 @@ import zmq
 
 from tracker.assembly import shape
 from tracker.decisions import Command, carry_out
+from tracker.engine.events import Pattern
 from tracker.engine.tracker import Tracker
 from tracker.messages import Verb
 from tracker.settings import Settings
 
 from .control import Control
-from .deadline import Deadline
+from .deadline import Deadline, Reserve
+from .faults import FaultsFile
 from .identity import IdFile
 from .intake import Intake
 from .journal import Journal
@@ -43,6 +45,7 @@ class Service:
     sockets : Sockets
     journal : Journal
     ids : IdFile
+    faults : FaultsFile
     log : structlog logger
     """
 
@@ -54,10 +57,11 @@ class Service:
         sockets: Sockets,
         journal: Journal,
         ids: IdFile,
+        faults: FaultsFile,
         log: Any,
     ) -> None:
         self._settings, self._tracker, self._sockets = settings, tracker, sockets
-        self._journal, self._log = journal, log
+        self._journal, self._faults, self._log = journal, faults, log
         link, required = settings.link.name, settings.journal.required
         self._refusals = Refusals(log)
         self._notices = Notices(log, required=required)
@@ -66,6 +70,7 @@ class Service:
         self._control = Control(settings.panel.elements, self._change, self.stop, self._status, text)
         self._account = Account(log)
         self._latencies = Latencies()
+        self._reserve = Reserve(settings.refresh.budget_ms)
         self._last = (0, 0)  # run and seq of the last burst worked off
         self._stopping = False
         self._collected_ns = time.monotonic_ns()
@@ -110,7 +115,7 @@ class Service:
         first, last = arrivals[0], arrivals[-1]
         started_ns = time.monotonic_ns()
         refresh = self._settings.refresh
-        deadline = Deadline(first.monotonic_ns, refresh.budget_ms, refresh.most_steps)
+        deadline = Deadline(first.monotonic_ns, refresh.budget_ms, refresh.most_steps, self._reserve)
         try:
             outcome = self._tracker.advance([arrival.burst for arrival in arrivals], deadline)
         except Exception:
@@ -125,8 +130,12 @@ class Service:
         }
         self._last = (last.burst.run, last.burst.seq)
         kept = self._outlet.block(arrivals, outcome.steps, outcome.events, self._tracker.next_id, stages_us)
-        self._latencies.add((time.monotonic_ns() - first.monotonic_ns) // 1000)
+        out_ns = time.monotonic_ns()
+        if deadline.asked_ns is not None and any(isinstance(event, Pattern) for event in outcome.events):
+            self._reserve.observe(out_ns - deadline.asked_ns)
+        self._latencies.add((out_ns - first.monotonic_ns) // 1000)
         self._account.take(outcome.events, stages_us)
+        self._faults.take(outcome.events)
         if not kept:
             self._notices.disk(self._outlet.fault)
         if self._journal.full:

@@ -15,6 +15,7 @@ from tracker.snapshots import Start, pack_start
 
 from .checkpoint import Checkpoint
 from .errors import ServiceError
+from .faults import FaultsFile
 from .identity import IdFile
 from .journal import Journal
 from .log import configure_log
@@ -60,7 +61,8 @@ def serve(settings_path: Path, log_level: str = "info") -> int:
             settings.journal.rotate_mb,
             lambda: pack_start(Start(tracker.next_id, tracker.snapshot())),
         )
-        service = Service(settings, text, tracker, sockets, journal, ids, log)
+        faults = FaultsFile(folder / f"{link}.faults.toml", settings, log)
+        service = Service(settings, text, tracker, sockets, journal, ids, faults, log)
         with _stopped_by_signals(service.stop):
             log.info(
                 "serving",

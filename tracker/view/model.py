@@ -5,6 +5,7 @@ Times named `now` are seconds of whatever steady clock the caller uses, always t
 
 import math
 from collections import Counter, deque
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -15,6 +16,8 @@ from tracker.view.trace import History
 
 REMEMBERED_PATTERNS = 256
 REMEMBERED_NOTES = 100
+# Elements named in one note.
+NAMED = 8
 
 
 def clean(text: str) -> str:
@@ -122,6 +125,7 @@ class LinkModel:
             self.note(now, "mode", str(state.mode), grave=state.mode is events.Mode.REACQUIRING)
         if before is not None and state.lost > before.lost:
             self.note(now, "lost", "bursts lost on the way in", grave=True)
+        self._note_faults(before.faults if before is not None else (), state.faults, now)
         self.state, self.stages_us = state, {clean(stage): us for stage, us in message.latency_us.items()}
         self.measured.add(now, state.rate_measured)
         self.predicted.add(now, state.rate_predicted)
@@ -195,6 +199,16 @@ class LinkModel:
             self.notes.append(Note(now, kind, text, grave))
             self.noted += 1
 
+    def _note_faults(
+        self, before: Sequence[tuple[int, str, float]], faults: Sequence[tuple[int, str, float]], now: float
+    ) -> None:
+        """Name elements that are newly faulty, and those that are no longer."""
+        known, faulty = {element for element, _, _ in before}, {element for element, _, _ in faults}
+        if found := [f"{element} {fault}" for element, fault, _ in faults if element not in known]:
+            self.note(now, "fault", f"elements do not follow: {_some(found)}", grave=True)
+        if mended := [str(element) for element, _, _ in before if element not in faulty]:
+            self.note(now, "fault", f"elements follow again: {_some(mended)}")
+
     @property
     def in_use(self) -> events.Pattern | None:
         """The pattern that the controller says it uses, None when it was published before this view began."""
@@ -230,3 +244,9 @@ class LinkModel:
     def _forget(self, now: float) -> None:
         while self._latencies and self._latencies[0][0] < now - self.latency_span_s:
             self._latencies.popleft()
+
+
+def _some(words: Sequence[str]) -> str:
+    """List the first few."""
+    more = f" and {len(words) - NAMED} more" if len(words) > NAMED else ""
+    return ", ".join(words[:NAMED]) + more

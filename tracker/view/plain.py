@@ -72,6 +72,8 @@ def line(model: LinkModel, now: float, since: float) -> str:
     parts.append(f"patterns {model.patterns}")
     if model.plan is not None:
         parts.append(f"sounding {sounding(model.plan)}")
+    if state.faults:
+        parts.append(f"faulty elements {len(state.faults)}")
     parts.append(f"lost {state.lost} refused {state.refused}")
     parts.append(f"alarms {model.alarms.total()}")
     return ", ".join(parts)
