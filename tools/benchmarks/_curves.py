@@ -76,7 +76,7 @@ def _panel(panel: Panel, left: float, upright: Axis, mark: tuple[float, str], *,
     at = upright.place(mark[0])
     yield _line(left, at, left + WIDE, at, INK, dashes="5 4")
     if first:
-        yield text(mark[1], left + 6.0, at - 6.0, halo=True)
+        yield text(mark[1], left + 6.0, at + 15.0, halo=True)
     for number, curve in enumerate(panel.curves):
         colour = COLOURS[number % len(COLOURS)]
         points = [(across.place(x), upright.place(y)) for x, y in curve.points]
