@@ -5,11 +5,11 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 from tracker.offline.axes import Axis
-from tracker.offline.svg import CAUTION, EDGE, FAINT, FILL, FONT, GROUND, INK, QUIET, TITLE, text
+from tracker.offline.svg import BAD, CAUTION, EDGE, FAINT, FILL, FONT, GROUND, INK, QUIET, TITLE, text
 
 WIDE, HIGH = 360.0, 300.0  # of a panel, px
-LEFT, TOP, GAP, BELOW = 84.0, 84.0, 28.0, 118.0
-COLOURS = (FILL, CAUTION)
+LEFT, TOP, GAP, BELOW = 84.0, 84.0, 28.0, 132.0
+COLOURS = (FILL, CAUTION, BAD)
 MARK = 4.0
 
 
@@ -76,7 +76,7 @@ def _panel(panel: Panel, left: float, upright: Axis, mark: tuple[float, str], *,
     at = upright.place(mark[0])
     yield _line(left, at, left + WIDE, at, INK, dashes="5 4")
     if first:
-        yield text(mark[1], left + 6.0, at - 6.0, halo=True)
+        yield text(mark[1], left + 6.0, at + 15.0, halo=True)
     for number, curve in enumerate(panel.curves):
         colour = COLOURS[number % len(COLOURS)]
         points = [(across.place(x), upright.place(y)) for x, y in curve.points]
@@ -113,7 +113,9 @@ def _line(x1: float, y1: float, x2: float, y2: float, colour: str, *, width: flo
 
 
 def _symbol(number: int, x: float, y: float, colour: str) -> str:
-    """Mark a point: a disc on the first curve, a square on the second, so that colour is not all that tells them."""
-    if number % 2 == 0:
+    """Mark a point, each curve in its own way, so that colour is not all that tells them apart."""
+    corners = {1: ((-1, -1), (1, -1), (1, 1), (-1, 1)), 2: ((0, -1.3), (1.2, 0.9), (-1.2, 0.9))}
+    if number % len(COLOURS) == 0:
         return f'<circle cx="{x:.1f}" cy="{y:.1f}" r="{MARK}" fill="{colour}"/>'
-    return f'<rect x="{x - MARK:.1f}" y="{y - MARK:.1f}" width="{2 * MARK}" height="{2 * MARK}" fill="{colour}"/>'
+    points = " ".join(f"{x + MARK * dx:.1f},{y + MARK * dy:.1f}" for dx, dy in corners[number % len(COLOURS)])
+    return f'<polygon points="{points}" fill="{colour}"/>'

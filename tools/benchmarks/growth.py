@@ -1,9 +1,9 @@
 """How cost grows: frames a second through the engine against elements N, columns r of the basis, and tones K.
 
-A still link with a channel of six paths, one receiver, bursts of 64 frames of orthogonal sweeps that repeat, default
-settings; bursts go through `Tracker.advance`, search and all, once the first pattern stands. Processor time is counted,
-so that other programs on the machine disturb little; the speed of its matrix multiply is measured beside. Bases with
-fewer columns than elements are random orthonormal ones, and the channel lies in their span.
+A still link with a channel of six paths, one receiver, bursts of 64 frames of orthogonal sweeps that repeat unless told
+otherwise, default settings; bursts go through `Tracker.advance`, search and all, once the first pattern stands.
+Processor time is counted, so that other programs on the machine disturb little; the speed of its matrix multiply is
+measured beside. Bases with fewer columns than elements are random orthonormal ones, and the channel lies in their span.
 
 `tools/bench --only growth --pictures FOLDER` draws the figures.
 """
@@ -49,6 +49,8 @@ class Line:
         Values taken, and those taken by a quick run.
     elements, columns, tones : int
         What the others are; as many columns as elements where there are 0.
+    sweeps : bool
+        Whether sweeps are sounded; else patterns at random.
     """
 
     name: str
@@ -58,6 +60,7 @@ class Line:
     elements: int = 1024
     columns: int = 0
     tones: int = 128
+    sweeps: bool = True
 
     def sizes(self, value: int) -> tuple[int, int, int]:
         """N, r and K at a value."""
@@ -67,14 +70,15 @@ class Line:
 
 
 LINES = (
-    Line("element by element, r = N, K = 128", "N", (64, 128, 256, 512, 1024, 2048, 4096), (64, 256, 512)),
-    Line("r = 64 columns, K = 128", "N", (128, 256, 512, 1024, 2048, 4096), (256, 1024), columns=64),
+    Line("element by element, sweeps", "N", (64, 128, 256, 512, 1024, 2048, 4096), (64, 256, 512)),
+    Line("element by element, random", "N", (64, 128, 256, 512, 1024, 2048, 4096), (64, 256), sweeps=False),
+    Line("r = 64 columns, sweeps", "N", (128, 256, 512, 1024, 2048, 4096), (256, 1024), columns=64),
     Line("N = 1024, K = 128", "r", (16, 32, 64, 128, 256, 512), (16, 64)),
     Line("N = 4096, K = 128", "r", (16, 32, 64, 128, 256, 512), (64,), elements=4096),
     Line("N = 256 element by element", "K", (32, 64, 128, 256, 512, 1024), (64, 256), elements=256),
     Line("N = 1024, r = 64 columns", "K", (32, 64, 128, 256, 512, 1024), (64, 256), columns=64),
 )
-AXES = {"N": "elements N", "r": "columns r", "K": "tones K"}
+AXES = {"N": "elements N, at K = 128", "r": "columns r", "K": "tones K"}
 
 
 def rows(quick: bool) -> Iterator[Row]:
@@ -85,13 +89,13 @@ def rows(quick: bool) -> Iterator[Row]:
         before: tuple[int, float] | None = None
         for value in line.quick if quick else line.values:
             elements, columns, tones = line.sizes(value)
-            pace = _pace(elements, columns, tones, 0.2 if quick else 1.0)
+            pace = _pace(elements, columns, tones, 0.2 if quick else 1.0, sweeps=line.sweeps)
             note = f"{pace / PACE:.2g} of {PACE:.0f} frames/s; {multiply * 1e9 / pace:.3g} multiply flops a frame"
             if before is not None:
                 power = math.log(before[1] / pace) / math.log(value / before[0])
                 note += f"; cost grew as {line.axis}^{power:.1f}"
             before = (value, pace)
-            name = f"N {elements}, r {columns}, K {tones}"
+            name = f"N {elements}, r {columns}, K {tones}" + ("" if line.sweeps else ", random patterns")
             yield Row(name, pace, "frames/s", note=note, curve=f"{line.axis}: {line.name}", x=float(value))
 
 
@@ -110,14 +114,14 @@ def picture(measured: Sequence[Row]) -> str:
     return page(title, below, "frames/s", panels, (PACE, "28 000 frames/s"))
 
 
-def _pace(elements: int, columns: int, tones: int, seconds: float) -> float:
+def _pace(elements: int, columns: int, tones: int, seconds: float, *, sweeps: bool = True) -> float:
     """Frames a second of processor time, the median over bursts."""
     rng = np.random.default_rng([5, elements, columns, tones])
     fft = 2 * tones
     aperture = _aperture(rng, elements, columns)
     config = Config(receivers=1, delay=delay_basis(fft, tones // 2, tones, min(TAPS, tones), 1), aperture=aperture)
     tracker, took = Tracker(config), []
-    made = _bursts(rng, aperture, tones, fft)
+    made = _bursts(rng, aperture, tones, fft, sweeps=sweeps)
     spent = 0.0
     # The first pattern is searched for thoroughly, and again now and then while the estimate forms.
     warm = 16 + 2 * elements // FRAMES
@@ -141,8 +145,10 @@ def _aperture(rng: np.random.Generator, elements: int, columns: int) -> Aperture
     return Columns(np.linalg.qr(waves)[0], np.ones(columns))
 
 
-def _bursts(rng: np.random.Generator, aperture: ApertureBasis, tones: int, fft: int) -> Iterator[Burst]:
-    """Sound sweep after sweep without end."""
+def _bursts(
+    rng: np.random.Generator, aperture: ApertureBasis, tones: int, fft: int, *, sweeps: bool
+) -> Iterator[Burst]:
+    """Sound sweep after sweep, or patterns at random, without end."""
     elements = aperture.elements
     delays = rng.uniform(0.0, min(TAPS, tones) - 3.0, PATHS)
     places = (np.arange(tones) - tones // 2) / fft
@@ -150,10 +156,13 @@ def _bursts(rng: np.random.Generator, aperture: ApertureBasis, tones: int, fft: 
     gains = rng.standard_normal((aperture.size + 1, 2 * PATHS)).view(np.complex128) * math.sqrt(POWER / (2 * PATHS))
     surface = aperture.surface(gains[1:] / math.sqrt(aperture.size))
     heard = (np.concatenate([gains[:1], surface]) @ shape).astype(np.complex64).view(np.float32)
-    cycle = sweep(elements, rng)
+    cycle = sweep(elements, rng) if sweeps else np.empty((0, elements), dtype=np.int8)
     number, place = 0, 0
     while True:
-        states = cycle[(place + np.arange(FRAMES)) % len(cycle)]
+        if sweeps:
+            states = cycle[(place + np.arange(FRAMES)) % len(cycle)]
+        else:
+            states = (2 * rng.integers(0, 2, (FRAMES, elements)) - 1).astype(np.int8)
         place += FRAMES
         noise = rng.standard_normal((FRAMES, 2 * tones), dtype=np.float32) * np.float32(math.sqrt(0.5))
         response = (heard[0] + states.astype(np.float32) @ heard[1:] + noise).view(np.complex64)

@@ -65,7 +65,7 @@ def rows(quick: bool) -> Iterator[Row]:
         scene = _scene(size)
         for sweeps in (True, False):
             seconds = 2.0 if quick else 20.0
-            made = _bursts(size, scene, sweeps=sweeps, quick=quick)
+            made = _bursts(size, scene, seconds, sweeps=sweeps)
             yield from _run(size, scene, made, seconds, sweeps=sweeps)
 
 
@@ -113,7 +113,7 @@ def _more(size: Size) -> str:
     return f"{basis}\n[refresh]\nbudget_ms = {BUDGET_MS}\nleast_gain = 0.0\n"
 
 
-def _bursts(size: Size, scene: Scenario, *, sweeps: bool, quick: bool) -> list[bytes]:
+def _bursts(size: Size, scene: Scenario, seconds: float, *, sweeps: bool) -> list[bytes]:
     """Encode bursts; as the scene stands still, one exact channel serves them all."""
     rng = np.random.default_rng([3, size.elements, sweeps])
     truth = Scene(scene.config, seed=1)
@@ -121,7 +121,7 @@ def _bursts(size: Size, scene: Scenario, *, sweeps: bool, quick: bool) -> list[b
     flat = np.ascontiguousarray(surface.reshape(size.elements, -1)).view(np.float32)
     spread = np.sqrt(truth.noise_power / 2.0).astype(np.float32)[:, None]
     made = []
-    for number, states in enumerate(_patterns(size, rng, sweeps=sweeps, quick=quick)):
+    for number, states in enumerate(_patterns(size, rng, seconds, sweeps=sweeps)):
         response = (states.astype(np.float32) @ flat).view(np.complex64).reshape(size.frames, *direct.shape) + direct
         noise = rng.standard_normal((*response.shape[:-1], 2 * response.shape[-1]), dtype=np.float32) * spread
         burst = Burst(
@@ -138,19 +138,20 @@ def _bursts(size: Size, scene: Scenario, *, sweeps: bool, quick: bool) -> list[b
     return made
 
 
-def _patterns(size: Size, rng: np.random.Generator, *, sweeps: bool, quick: bool) -> Iterator[NDArray[np.int8]]:
-    """Patterns (B, N) of burst after burst."""
+def _patterns(size: Size, rng: np.random.Generator, seconds: float, *, sweeps: bool) -> Iterator[NDArray[np.int8]]:
+    """Patterns (B, N) of burst after burst, of no more than a run needs."""
     sounded = np.arange(size.frames) % REFERENCE_EVERY != 0
     each = int(sounded.sum())
     states = np.ones((size.frames, size.elements), dtype=np.int8)
+    needed = round(seconds * size.bursts_per_s)
     if not sweeps:
-        for _ in range(FRESH_BURSTS[size.elements] // (4 if quick else 1)):
+        for _ in range(min(FRESH_BURSTS[size.elements], needed)):
             states[sounded] = rng.choice(np.array([-1, 1], dtype=np.int8), (each, size.elements))
             yield states
         return
     cycle = sweep(size.elements, rng)
     bursts = -(-len(cycle) // each)
-    for number in range((2 if quick else SWEEPS) * bursts):
+    for number in range(min(SWEEPS * bursts, needed)):
         first = number % bursts * each
         states[sounded] = 1
         part = cycle[first : first + each]

@@ -143,7 +143,7 @@ def _processor() -> str:
 def arguments() -> argparse.Namespace:
     """Read the command line."""
     parser = argparse.ArgumentParser(prog="tools/bench", description=__doc__)
-    parser.add_argument("--quick", action="store_true", help="fewer repeats and sizes, under a minute for all")
+    parser.add_argument("--quick", action="store_true", help="fewer repeats and sizes, a few minutes for all")
     parser.add_argument("--only", metavar="NAME", action="append", help="run this benchmark alone; may be given again")
     parser.add_argument("--json", metavar="FILE", type=Path, help="where the figures go (default: bench.json here)")
     parser.add_argument("--pictures", metavar="FOLDER", type=Path, help="where pictures go (default: none are drawn)")

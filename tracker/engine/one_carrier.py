@@ -21,7 +21,7 @@ Single = NDArray[np.float32]
 
 BLOCK, LEAST_TONES = 1 << 13, 16
 """Responses worked off at once in `rate_bound`, few enough to stay in the cache; and tones at least."""
-TONE_BY_TONE = 1 << 16
+TONE_BY_TONE = 1 << 14
 """Responses of all elements on all tones up to which `rate_bound` looks at every tone; beyond, at groups of tones."""
 NEGLIGIBLE = 1e-3
 """Share of the strongest power of a group below which a direction is bounded coarsely."""
