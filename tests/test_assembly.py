@@ -9,8 +9,8 @@ import pytest
 
 from tests.service.station import settings_text
 from tracker.assembly import configure, shape
-from tracker.engine.aperture import Elements, Tiles
 from tracker.engine.config import Config
+from tracker.engine.estimation.aperture import Elements, Tiles
 from tracker.messages import Shape
 from tracker.settings import SettingsError, parse
 

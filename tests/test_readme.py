@@ -32,14 +32,14 @@ from tracker.assembly import configure
 from tracker.basis_file import LearnedBasis, pack_basis
 from tracker.cli import COMMANDS
 from tracker.engine.burst import Burst
-from tracker.engine.changes import Verdict, judge
-from tracker.engine.estimator import Estimator
+from tracker.engine.detection.changes import Verdict, judge
+from tracker.engine.detection.evidence import Evidence
+from tracker.engine.detection.reaction import react
+from tracker.engine.estimation.estimator import Estimator
 from tracker.engine.events import Alarm, Cause, Mode, Pattern, Plan, State
-from tracker.engine.evidence import Evidence
-from tracker.engine.faults import FAULTS, Finding
-from tracker.engine.reaction import react
+from tracker.engine.health.faults import FAULTS, Finding
+from tracker.engine.publishing.report import Stand, elements_alarm, gap_alarm, lock_alarm
 from tracker.engine.refusal import Reason
-from tracker.engine.report import Stand, elements_alarm, gap_alarm, lock_alarm
 from tracker.messages import Verb, encode_alarm, encode_pattern, encode_pilots, encode_plan, encode_state
 from tracker.service.notices import Notices
 from tracker.settings import Settings, SettingsError, parse

@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from tracker.assembly import configure
-from tracker.engine.aperture import Columns
-from tracker.engine.region import Mirror, Site, region_basis
+from tracker.engine.estimation.aperture import Columns
+from tracker.engine.estimation.region import Mirror, Site, region_basis
 from tracker.settings import SettingsError, parse
 
 GOOD = """\

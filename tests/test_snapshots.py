@@ -11,8 +11,8 @@ from hypothesis import strategies as st
 
 from tests.service.station import RESTLESS, bursts, settings_text
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.events import Event, Pattern, State
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.settings import parse
 from tracker.snapshots import SnapshotError, Start, pack_start, unpack_start

@@ -5,11 +5,11 @@ from functools import lru_cache
 from pathlib import Path
 
 from tracker.basis_file import BasisError, unpack_basis
-from tracker.engine.aperture import ApertureBasis, Columns, Elements, Tiles
 from tracker.engine.config import Config, PlanConfig
-from tracker.engine.delay import delay_basis, frequencies
+from tracker.engine.estimation.aperture import ApertureBasis, Columns, Elements, Tiles
+from tracker.engine.estimation.delay import delay_basis, frequencies
+from tracker.engine.estimation.region import Mirror, RegionBasis, Site, Vector, region_basis
 from tracker.engine.panel import Limits
-from tracker.engine.region import Mirror, RegionBasis, Site, Vector, region_basis
 from tracker.messages import Shape
 from tracker.settings import Settings, SettingsError
 

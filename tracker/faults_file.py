@@ -6,7 +6,7 @@ from pathlib import Path
 from time import gmtime, strftime
 
 from tracker.engine.events import State
-from tracker.engine.faults import FAULTS, SILENT, STUCK_MINUS, fault_map, map_text
+from tracker.engine.health.faults import FAULTS, SILENT, STUCK_MINUS, fault_map, map_text
 from tracker.settings import Settings
 
 SILENT_NAMES = frozenset(FAULTS[code] for code in SILENT)

@@ -4,13 +4,13 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from tracker.engine.aperture import Elements
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.aperture import Elements
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.events import Alarm, Mode, State
 from tracker.engine.panel import pack
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 
 ELEMENTS, TONES, FRAMES = 15, 32, 16

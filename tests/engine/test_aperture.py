@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tracker.engine.aperture import ApertureBasis, Columns, Elements, Tiles
+from tracker.engine.estimation.aperture import ApertureBasis, Columns, Elements, Tiles
 from tracker.engine.panel import pack
 
 _PHASES = np.exp(2j * np.pi * np.random.default_rng(0).uniform(size=(12, 4)))

@@ -3,12 +3,12 @@
 import numpy as np
 import pytest
 
-from tracker.engine.aperture import Elements
-from tracker.engine.bank import Bank, time_constants
-from tracker.engine.dense import Dense
+from tracker.engine.estimation.aperture import Elements
+from tracker.engine.estimation.bank import Bank, time_constants
+from tracker.engine.estimation.dense import Dense
+from tracker.engine.estimation.rls import BlockRls, forgetting
+from tracker.engine.estimation.sounded import Sounded
 from tracker.engine.panel import pack
-from tracker.engine.rls import BlockRls, forgetting
-from tracker.engine.sounded import Sounded
 
 SIZE, BURST_S = 8, 0.01
 

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 import scipy.stats
 
-from tracker.engine.calibration import Calibration
+from tracker.engine.publishing.calibration import Calibration
 
 
 def _run(bias: float, scale: float, count: int, seed: int = 1) -> list[bool]:

@@ -7,9 +7,9 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from tracker.engine.changes import judge
-from tracker.engine.delay import delay_basis
-from tracker.engine.evidence import Evidence
+from tracker.engine.detection.changes import judge
+from tracker.engine.detection.evidence import Evidence
+from tracker.engine.estimation.delay import delay_basis
 
 FRAMES, ELEMENTS, RECEIVERS, TONES = 96, 48, 2, 48
 SPACING_S = 1 / 28_000

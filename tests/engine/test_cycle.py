@@ -8,8 +8,8 @@ import scipy.linalg
 from numpy.typing import NDArray
 
 from tests.engine.hadamard import completed, cycle, packed
-from tracker.engine.completion import Completion
-from tracker.engine.cycle import SweepDetector, Verdict
+from tracker.engine.orthogonal.completion import Completion
+from tracker.engine.orthogonal.cycle import SweepDetector, Verdict
 
 Real = NDArray[np.float64]
 

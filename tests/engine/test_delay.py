@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tracker.engine.delay import delay_basis, frequencies
+from tracker.engine.estimation.delay import delay_basis, frequencies
 
 CASES = [(256, 64, 128, 16, 1), (256, 28, 200, 16, 1), (256, 0, 256, 16, 1), (64, 0, 64, 8, 2), (1024, 384, 256, 32, 0)]
 

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 import scipy.stats
 
-from tracker.engine.drift import DriftMonitor, Reading, Watch, deviate
+from tracker.engine.detection.drift import DriftMonitor, Reading, Watch, deviate
 
 DEGREES = 64 * 12
 PERIOD_S = 64 / 28_000

@@ -11,15 +11,15 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from tracker.engine.aperture import Elements
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.aperture import Elements
+from tracker.engine.estimation.delay import delay_basis
+from tracker.engine.estimation.noise import MEMORY_FRAMES
+from tracker.engine.estimation.rls import BlockRls
 from tracker.engine.events import Mode
-from tracker.engine.noise import MEMORY_FRAMES
 from tracker.engine.panel import pack
-from tracker.engine.rls import BlockRls
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 
 ELEMENTS, TONES, FRAMES, FRAME_NS = 16, 24, 256, 35_714

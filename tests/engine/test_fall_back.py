@@ -6,15 +6,15 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from tracker.engine.aperture import ApertureBasis, Columns, Tiles
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
-from tracker.engine.channel import Channel
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.aperture import ApertureBasis, Columns, Tiles
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.events import Alarm, Mode, Pattern, State
 from tracker.engine.panel import pack
-from tracker.engine.rate import rate
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.rate import rate
 from tracker.engine.tracker import Outcome, Tracker
 from tracker.simulation.best import best_pattern
 from tracker.snapshots import Start, pack_start, unpack_start

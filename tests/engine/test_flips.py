@@ -12,12 +12,12 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 
-from tracker.engine.budget import Steps
-from tracker.engine.channel import Channel
-from tracker.engine.flips import Climb, optimize
-from tracker.engine.one_carrier import one_carrier_optimum, rate_bound
 from tracker.engine.panel import Limits
-from tracker.engine.rate import rate
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.flips import Climb, optimize
+from tracker.engine.search.one_carrier import one_carrier_optimum, rate_bound
+from tracker.engine.search.rate import rate
 
 FREE = Limits()
 ENDLESS = Steps(1_000_000)

@@ -7,9 +7,9 @@ import pytest
 from numpy.typing import NDArray
 
 from tracker.engine import panel
-from tracker.engine.acquisition import find_offset
-from tracker.engine.following import Following, Lock
-from tracker.engine.phases import Overlap, PhaseLoops
+from tracker.engine.oscillators.acquisition import find_offset
+from tracker.engine.oscillators.following import Following, Lock
+from tracker.engine.oscillators.phases import Overlap, PhaseLoops
 
 FRAME_S = 1 / 28_000
 FRAMES, ELEMENTS, DELAYS = 64, 32, 6

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 import scipy.linalg
 
-from tracker.engine.hadamard import hadamard, hadamard_order, hadamard_rows
+from tracker.engine.orthogonal.hadamard import hadamard, hadamard_order, hadamard_rows
 
 
 @pytest.mark.parametrize("order", [1, 2, 4, 8, 12, 20, 24, 40, 48, 44, 64, 104, 132])

@@ -9,12 +9,12 @@ import numpy as np
 import pytest
 
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.events import Alarm, Event, Pattern, State
-from tracker.engine.flips import optimize
-from tracker.engine.health import LEFT_OUT
+from tracker.engine.health.health import LEFT_OUT
 from tracker.engine.panel import Limits
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.flips import optimize
 from tracker.engine.tracker import Tracker
 from tracker.settings import parse
 from tracker.simulation.config import SceneConfig

@@ -5,13 +5,13 @@ import pytest
 from numpy.typing import NDArray
 from scipy import linalg, stats
 
-from tracker.engine.answers import Answers
-from tracker.engine.directions import directions
-from tracker.engine.fresh import Posterior, Window
-from tracker.engine.hadamard import hadamard
-from tracker.engine.hypotheses import HEALTHY_SPREAD, NOTHING, PRIOR, WEAK_SHARE, WEAK_SPREAD, Beliefs
-from tracker.engine.neighbours import Neighbours
-from tracker.engine.rls import BlockRls, forgetting
+from tracker.engine.estimation.rls import BlockRls, forgetting
+from tracker.engine.health.answers import Answers
+from tracker.engine.health.directions import directions
+from tracker.engine.health.fresh import Posterior, Window
+from tracker.engine.health.hypotheses import HEALTHY_SPREAD, NOTHING, PRIOR, WEAK_SHARE, WEAK_SPREAD, Beliefs
+from tracker.engine.health.neighbours import Neighbours
+from tracker.engine.orthogonal.hadamard import hadamard
 
 Complex = NDArray[np.complex128]
 

@@ -4,9 +4,9 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from tracker.engine.filter import Surprise
-from tracker.engine.innovation import DIRECT, INNOVATION, Innovations
-from tracker.engine.rls import BlockRls, forgetting
+from tracker.engine.detection.innovation import DIRECT, INNOVATION, Innovations
+from tracker.engine.estimation.filter import Surprise
+from tracker.engine.estimation.rls import BlockRls, forgetting
 
 SIZE, OUTPUTS = 24, 8
 BASIS = np.eye(OUTPUTS, dtype=np.complex128)

@@ -7,8 +7,8 @@ import pytest
 import scipy.stats
 from numpy.typing import NDArray
 
-from tracker.engine.delay import delay_basis
-from tracker.engine.matched import DELAY, DIRECT_GAIN, DIRECT_PHASE, GAIN, MATCHED, PHASE, Matched
+from tracker.engine.detection.matched import DELAY, DIRECT_GAIN, DIRECT_PHASE, GAIN, MATCHED, PHASE, Matched
+from tracker.engine.estimation.delay import delay_basis
 
 FRAMES, TONES = 64, 48
 BASIS = delay_basis(64, 8, TONES, 10, 1)

@@ -4,8 +4,9 @@ import numpy as np
 import scipy.stats
 from numpy.typing import NDArray
 
-from tracker.engine import noise, panel
-from tracker.engine.delay import delay_basis
+from tracker.engine import panel
+from tracker.engine.estimation import noise
+from tracker.engine.estimation.delay import delay_basis
 
 
 def _complex(rng: np.random.Generator, shape: tuple[int, ...]) -> NDArray[np.complex128]:

@@ -10,10 +10,10 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 
-from tracker.engine.channel import Channel
-from tracker.engine.delay import delay_basis
-from tracker.engine.one_carrier import one_carrier_optimum, rate_bound
-from tracker.engine.rate import rate
+from tracker.engine.estimation.delay import delay_basis
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.one_carrier import one_carrier_optimum, rate_bound
+from tracker.engine.search.rate import rate
 
 Complex = NDArray[np.complex128]
 

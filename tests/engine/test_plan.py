@@ -9,11 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.events import Event, Mode, Pattern, Plan, State
-from tracker.engine.hadamard import hadamard_order
+from tracker.engine.orthogonal.hadamard import hadamard_order
 from tracker.engine.panel import unpack
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.settings import parse
 from tracker.simulation.config import DirectConfig, SceneConfig, Terminal, ToneGrid

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from tracker.engine import panel
-from tracker.engine.products import ProductCache, exact
+from tracker.engine.estimation.products import ProductCache, exact
 
 Complex = NDArray[np.complex128]
 

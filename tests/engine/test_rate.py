@@ -5,8 +5,8 @@ import pytest
 import scipy.optimize
 from numpy.typing import NDArray
 
-from tracker.engine.channel import Channel
-from tracker.engine.rate import gradient, promise, rate, response
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.rate import gradient, promise, rate, response
 
 
 def _channel(rng: np.random.Generator, elements: int, receivers: int, tones: int, delays: int) -> Channel:

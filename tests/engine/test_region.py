@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from scipy.optimize import minimize
 
-from tracker.engine.region import Mirror, Site, region_basis
+from tracker.engine.estimation.region import Mirror, Site, region_basis
 
 GROUND = Mirror(point=(0.0, 0.0, 0.0), normal=(0.0, 0.0, 2.0), loss_db=8.0)
 YARD = Site(

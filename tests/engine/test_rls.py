@@ -8,7 +8,7 @@ import scipy.linalg
 import statsmodels.api as sm
 from numpy.typing import NDArray
 
-from tracker.engine.rls import BlockRls, forgetting
+from tracker.engine.estimation.rls import BlockRls, forgetting
 
 
 def _blocks(

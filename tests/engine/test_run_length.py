@@ -8,8 +8,8 @@ import scipy.stats
 import statsmodels.api as sm
 from statsmodels.stats.diagnostic import breaks_cusumolsresid
 
-from tracker.engine.cusum import Cusum
-from tracker.engine.run_length import by_chain, gamma_threshold, one_sided, threshold_for, two_sided
+from tracker.engine.detection.cusum import Cusum
+from tracker.engine.detection.run_length import by_chain, gamma_threshold, one_sided, threshold_for, two_sided
 
 SHIFTS = (0, 0.25, 0.5, 0.75, 1, 1.5, 2, 2.5, 3, 4, 5)
 # Lucas & Crosier, Technometrics 24 (1982), Table 1, two-sided, k = 0.5, h = 4.

@@ -9,8 +9,8 @@ from scipy.integrate import quad
 from scipy.linalg import solve_continuous_are, solve_discrete_are
 from scipy.special import erf
 
-from tracker.engine.rls import BlockRls, forgetting
-from tracker.engine.share import (
+from tracker.engine.estimation.rls import BlockRls, forgetting
+from tracker.engine.planning.share import (
     Bounds,
     Choice,
     Standing,

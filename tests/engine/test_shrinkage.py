@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tracker.engine.shrinkage import shrink
+from tracker.engine.estimation.shrinkage import shrink
 
 
 def _estimate(rng: np.random.Generator, truth: np.ndarray, posterior: float, prior: float) -> np.ndarray:

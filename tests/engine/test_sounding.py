@@ -5,12 +5,12 @@ import pytest
 from numpy.typing import NDArray
 from scipy.stats import bernoulli
 
-from tracker.engine.aperture import ApertureBasis, Columns, Elements, Tiles
-from tracker.engine.hadamard import hadamard_order
-from tracker.engine.lines import Lines
+from tracker.engine.estimation.aperture import ApertureBasis, Columns, Elements, Tiles
+from tracker.engine.orthogonal.hadamard import hadamard_order
 from tracker.engine.panel import Limits
-from tracker.engine.share import told_by
-from tracker.engine.sounding import Near, Sweep, groups_of
+from tracker.engine.planning.share import told_by
+from tracker.engine.planning.sounding import Near, Sweep, groups_of
+from tracker.engine.search.lines import Lines
 
 LIMITS = Limits(stuck={3: 1, 8: -1}, tied=[[0, 1], [5, 9, 3]])
 

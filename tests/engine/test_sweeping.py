@@ -12,14 +12,14 @@ from numpy.typing import NDArray
 from tests.engine.hadamard import cycle
 from tracker.assembly import configure
 from tracker.engine import panel
-from tracker.engine.aperture import Elements
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
-from tracker.engine.channel import Channel
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.aperture import Elements
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.events import Alarm, Event, Pattern, State
-from tracker.engine.rate import rate
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.rate import rate
 from tracker.engine.tracker import Outcome, Tracker
 from tracker.settings import parse
 from tracker.simulation.best import best_pattern

@@ -7,9 +7,9 @@ import scipy.stats
 from numpy.typing import NDArray
 
 from tests.engine.hadamard import completed, cycle, hadamard, packed
-from tracker.engine.cycle import SweepDetector
-from tracker.engine.rls import BlockRls, forgetting
-from tracker.engine.sweeps import SweepRls
+from tracker.engine.estimation.rls import BlockRls, forgetting
+from tracker.engine.orthogonal.cycle import SweepDetector
+from tracker.engine.orthogonal.sweeps import SweepRls
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]

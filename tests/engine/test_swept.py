@@ -6,14 +6,14 @@ import scipy.linalg
 from numpy.typing import NDArray
 
 from tests.engine.hadamard import cycle, packed
-from tracker.engine.aperture import Elements
-from tracker.engine.cycle import SweepDetector
-from tracker.engine.filter import Surprise
-from tracker.engine.references import References
-from tracker.engine.rls import BlockRls, forgetting
-from tracker.engine.sounded import Sounded
-from tracker.engine.sweeps import SweepRls
-from tracker.engine.swept import Swept
+from tracker.engine.estimation.aperture import Elements
+from tracker.engine.estimation.filter import Surprise
+from tracker.engine.estimation.rls import BlockRls, forgetting
+from tracker.engine.estimation.sounded import Sounded
+from tracker.engine.orthogonal.cycle import SweepDetector
+from tracker.engine.orthogonal.references import References
+from tracker.engine.orthogonal.sweeps import SweepRls
+from tracker.engine.orthogonal.swept import Swept
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tracker.engine.switching import Switching
+from tracker.engine.publishing.switching import Switching
 
 MS = 1_000_000
 

@@ -4,8 +4,8 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from tracker.engine.delay import delay_basis, frequencies
-from tracker.engine.timing import TimingLoop
+from tracker.engine.estimation.delay import delay_basis, frequencies
+from tracker.engine.oscillators.timing import TimingLoop
 
 BASIS = delay_basis(256, 64, 128, 16, 1)
 FREQUENCY_HZ = frequencies(256, 64, 128, 156.25)

@@ -6,9 +6,9 @@ import numpy as np
 import scipy.stats
 from numpy.typing import NDArray
 
-from tracker.engine.delay import delay_basis
-from tracker.engine.drift import largest
-from tracker.engine.tones import Tones
+from tracker.engine.detection.drift import largest
+from tracker.engine.detection.tones import Tones
+from tracker.engine.estimation.delay import delay_basis
 
 RECEIVERS, TONES = 2, 48
 BASIS = delay_basis(64, 8, TONES, 10, 1)

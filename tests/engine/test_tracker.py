@@ -9,16 +9,16 @@ import pytest
 from numpy.typing import NDArray
 
 from tracker.engine import panel
-from tracker.engine.aperture import Columns, Elements, Tiles
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
-from tracker.engine.channel import Channel
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.aperture import Columns, Elements, Tiles
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.events import Alarm, Cause, Event, Mode, Pattern, State
-from tracker.engine.flips import optimize
-from tracker.engine.rate import rate
 from tracker.engine.refusal import Reason, Refused
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.flips import optimize
+from tracker.engine.search.rate import rate
 from tracker.engine.tracker import Tracker
 
 ELEMENTS, TONES, FRAMES, FRAME_NS = 32, 24, 16, 35_714

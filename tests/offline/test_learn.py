@@ -16,7 +16,7 @@ from tracker import __version__
 from tracker.assembly import configure, shape
 from tracker.basis_file import LearnedBasis, unpack_basis
 from tracker.cli import entry
-from tracker.engine.aperture import Columns
+from tracker.engine.estimation.aperture import Columns
 from tracker.logs import LogReader, LogWriter
 from tracker.offline.recorded import Plan, take_stock
 from tracker.settings import SettingsError, parse

@@ -15,9 +15,9 @@ from mcap.reader import make_reader
 from tests.service.station import RESTLESS, SCENE, Controller, bursts, running, settings_text, without
 from tracker.assembly import configure
 from tracker.cli import entry
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.events import Pattern
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.messages import decode_pattern, decode_pilots, encode_pilots

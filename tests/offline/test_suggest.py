@@ -11,8 +11,8 @@ from numpy.typing import NDArray
 from scipy.special import j0
 
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.messages import decode_pilots, encode_pilots

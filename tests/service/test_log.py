@@ -10,8 +10,8 @@ from structlog.testing import CapturingLogger
 
 from tests.service.station import bursts, settings_text
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.events import Alarm, Cause, Event, Pattern
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.service.log import Account
 from tracker.settings import parse

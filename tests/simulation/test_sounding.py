@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from tracker.engine.hadamard import hadamard_order
+from tracker.engine.orthogonal.hadamard import hadamard_order
 from tracker.simulation.sounding import Sounder, SoundingConfig, one_by_one, sweep
 
 

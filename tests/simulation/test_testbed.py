@@ -8,7 +8,7 @@ import pytest
 
 from tracker.engine.events import Pattern, State
 from tracker.engine.panel import unpack
-from tracker.engine.rate import rate
+from tracker.engine.search.rate import rate
 from tracker.messages import decode_pilots, encode_pilots
 from tracker.settings import parse
 from tracker.simulation.best import best_pattern

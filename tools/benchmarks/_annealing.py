@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from tracker.engine.channel import Channel
+from tracker.engine.search.channel import Channel
 
 HOT, COLD = 0.3, 3e-4
 """First and last temperature, in mean sizes of the change that a flip makes to a random pattern (in trials, starting

@@ -9,8 +9,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.channel import Channel
-from tracker.engine.delay import delay_basis, frequencies
+from tracker.engine.estimation.delay import delay_basis, frequencies
+from tracker.engine.search.channel import Channel
 
 LIGHT = 299_792_458.0
 CARRIER_HZ = 3.7e9

@@ -14,8 +14,8 @@ from numpy.typing import NDArray
 
 from benchmarks._still_link import CHANGES, FRAME_NS, TAPS, Changed, Link, information, size_for
 from benchmarks.row import Row
-from tracker.engine.budget import Steps
 from tracker.engine.events import Alarm, Event
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 
 ELEMENTS, FRAMES = 63, 64

@@ -10,10 +10,10 @@ from numpy.typing import NDArray
 from benchmarks._still_link import FRAME_NS, Changed, Link
 from benchmarks.row import Row
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
-from tracker.engine.channel import Channel
 from tracker.engine.events import Pattern
-from tracker.engine.rate import rate
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.rate import rate
 from tracker.engine.tracker import Tracker
 from tracker.settings import parse
 from tracker.simulation.best import best_pattern

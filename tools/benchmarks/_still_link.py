@@ -7,10 +7,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.aperture import Elements
 from tracker.engine.burst import Burst
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis, frequencies
+from tracker.engine.estimation.aperture import Elements
+from tracker.engine.estimation.delay import delay_basis, frequencies
 from tracker.engine.panel import pack
 from tracker.simulation.sounding import sweep
 

@@ -15,10 +15,10 @@ from benchmarks._kinds import kinds
 from benchmarks._recovery import recovery
 from benchmarks._still_link import FRAME_NS, Link
 from benchmarks.row import Row
-from tracker.engine.drift import MEMORY, SLACKS, DriftMonitor
-from tracker.engine.estimator import Estimator
-from tracker.engine.frames import Frames
-from tracker.engine.run_length import threshold_for
+from tracker.engine.detection.drift import MEMORY, SLACKS, DriftMonitor
+from tracker.engine.detection.run_length import threshold_for
+from tracker.engine.estimation.estimator import Estimator
+from tracker.engine.estimation.frames import Frames
 
 TEN_HOURS_S = 36_000.0
 # Blocks played before anything is counted: the estimate is formed, baselines are known to within a few percent.

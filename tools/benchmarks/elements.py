@@ -17,13 +17,13 @@ import numpy as np
 
 from benchmarks.row import Row
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
-from tracker.engine.estimator import Estimator
+from tracker.engine.estimation.estimator import Estimator
+from tracker.engine.estimation.frames import Frames
 from tracker.engine.events import Pattern, State
-from tracker.engine.flips import optimize
-from tracker.engine.frames import Frames
-from tracker.engine.health import Health
+from tracker.engine.health.health import Health
 from tracker.engine.panel import Limits
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.flips import optimize
 from tracker.settings import parse
 from tracker.simulation.closed_loop import EngineInLoop
 from tracker.simulation.impairments import Fault, Impairments, Interference

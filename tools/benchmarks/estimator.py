@@ -9,7 +9,7 @@ import numpy as np
 import padasip
 
 from benchmarks.row import Row
-from tracker.engine.rls import BlockRls, forgetting
+from tracker.engine.estimation.rls import BlockRls, forgetting
 
 
 def rows(quick: bool) -> Iterator[Row]:

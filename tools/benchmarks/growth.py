@@ -18,12 +18,12 @@ import numpy as np
 
 from benchmarks._curves import Curve, Panel, page
 from benchmarks.row import Row
-from tracker.engine.aperture import ApertureBasis, Columns, Elements
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.config import Config
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.aperture import ApertureBasis, Columns, Elements
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.panel import pack
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.simulation.sounding import sweep
 

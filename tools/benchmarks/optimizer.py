@@ -15,12 +15,12 @@ from numpy.typing import NDArray
 from benchmarks._annealing import anneal
 from benchmarks._channels import channel
 from benchmarks.row import Row
-from tracker.engine.budget import Steps
-from tracker.engine.channel import Channel
-from tracker.engine.flips import Climb, optimize
-from tracker.engine.one_carrier import one_carrier_optimum, rate_bound
 from tracker.engine.panel import Limits
-from tracker.engine.rate import rate
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.flips import Climb, optimize
+from tracker.engine.search.one_carrier import one_carrier_optimum, rate_bound
+from tracker.engine.search.rate import rate
 
 UNBOUNDED = Steps(10**9)
 CHAINS = 4

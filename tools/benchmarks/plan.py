@@ -17,10 +17,10 @@ from numpy.typing import NDArray
 
 from benchmarks.row import Row
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
-from tracker.engine.channel import Channel
-from tracker.engine.flips import optimize
 from tracker.engine.panel import Limits
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.flips import optimize
 from tracker.settings import Settings, parse
 from tracker.simulation.closed_loop import EngineInLoop, turns
 from tracker.simulation.motion import Still, Waypoints

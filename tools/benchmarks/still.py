@@ -16,14 +16,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from benchmarks.row import Row
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
-from tracker.engine.channel import Channel
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.events import Pattern
-from tracker.engine.flips import optimize
 from tracker.engine.panel import Limits, unpack
-from tracker.engine.rate import rate
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.flips import optimize
+from tracker.engine.search.rate import rate
 from tracker.settings import parse
 from tracker.simulation.best import best_pattern
 from tracker.simulation.closed_loop import EngineInLoop

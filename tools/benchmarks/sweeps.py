@@ -14,12 +14,12 @@ from numpy.typing import NDArray
 from benchmarks._still_link import Link
 from benchmarks.row import Row
 from tracker.engine import panel
-from tracker.engine.budget import Steps
-from tracker.engine.cycle import SweepDetector
-from tracker.engine.lookout import MIXED
-from tracker.engine.products import ProductCache
-from tracker.engine.rls import BlockRls, forgetting
-from tracker.engine.sweeps import SweepRls
+from tracker.engine.estimation.products import ProductCache
+from tracker.engine.estimation.rls import BlockRls, forgetting
+from tracker.engine.orthogonal.cycle import SweepDetector
+from tracker.engine.orthogonal.lookout import MIXED
+from tracker.engine.orthogonal.sweeps import SweepRls
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.simulation.sounding import sweep
 

@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from .aperture import ApertureBasis
+from .estimation.aperture import ApertureBasis
 from .panel import Limits
 
 

@@ -14,28 +14,28 @@ from numpy.typing import NDArray
 
 from . import panel
 from .admission import Admission
-from .aperture import Elements
-from .budget import Budget
 from .burst import Burst
-from .calibration import Calibration
-from .changes import Verdict
-from .channel import Channel
 from .config import Config
-from .drift import DriftMonitor, Suspicion
-from .estimator import Estimator
+from .detection.changes import Verdict
+from .detection.drift import DriftMonitor, Suspicion
+from .detection.innovation import DIRECT, INNOVATION
+from .detection.reaction import HARMLESS, react
+from .detection.standing import DIRECT_MOVED, SURFACE_MOVED
+from .estimation.aperture import Elements
+from .estimation.estimator import Estimator
+from .estimation.frames import Fit, Frames
 from .events import Cause, Event, Mode, Pattern, Plan
-from .following import KEPT, Lock
-from .frames import Fit, Frames
-from .health import Health
-from .innovation import DIRECT, INNOVATION
+from .health.health import Health
 from .lifecycle import Happening, after
-from .plan import Planner, Situation
-from .rate import rate
-from .reaction import HARMLESS, react
-from .refresh import Refresher, rate_spread
+from .oscillators.following import KEPT, Lock
+from .planning.plan import Planner, Situation
+from .publishing.calibration import Calibration
+from .publishing.refresh import Refresher, rate_spread
+from .publishing.report import Counts, Link, Stand, drift_alarm, elements_alarm, gap_alarm, lock_alarm, states
 from .refusal import Reason
-from .report import Counts, Link, Stand, drift_alarm, elements_alarm, gap_alarm, lock_alarm, states
-from .standing import DIRECT_MOVED, SURFACE_MOVED
+from .search.budget import Budget
+from .search.channel import Channel
+from .search.rate import rate
 
 # While no sum is beyond this share of its threshold, nothing is suspected.
 CALM = 0.3

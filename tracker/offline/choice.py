@@ -8,9 +8,9 @@ from itertools import groupby
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.aperture import Columns
 from tracker.engine.config import Config
-from tracker.engine.estimator import Estimator
+from tracker.engine.estimation.aperture import Columns
+from tracker.engine.estimation.estimator import Estimator
 
 from .recorded import Piece
 from .subspace import Subspace, regressors

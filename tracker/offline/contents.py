@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.engine.burst import Burst
-from tracker.engine.delay import delay_basis
+from tracker.engine.estimation.delay import delay_basis
 from tracker.engine.refusal import Refused
 from tracker.logs import Record
 from tracker.messages import decode_alarm, decode_pattern, decode_pilots

@@ -3,8 +3,8 @@
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.delay import delay_basis
-from tracker.engine.noise import LEAST_OUTSIDE
+from tracker.engine.estimation.delay import delay_basis
+from tracker.engine.estimation.noise import LEAST_OUTSIDE
 
 from .levels import LEAST_TONES, floor
 

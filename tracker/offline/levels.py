@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.engine.burst import Burst
-from tracker.engine.noise import LEAST_OUTSIDE, outside
+from tracker.engine.estimation.noise import LEAST_OUTSIDE, outside
 
 Complex = NDArray[np.complex128]
 Floats = NDArray[np.float64]

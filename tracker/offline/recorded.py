@@ -6,8 +6,8 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from tracker.engine.burst import Burst
-from tracker.engine.estimator import STRETCH_NS
-from tracker.engine.frames import Frames
+from tracker.engine.estimation.estimator import STRETCH_NS
+from tracker.engine.estimation.frames import Frames
 from tracker.engine.refusal import Refused
 from tracker.logs import LogReader, Record
 from tracker.messages import Shape, decode_pilots

@@ -17,11 +17,11 @@ from threadpoolctl import threadpool_limits
 
 from tracker.assembly import BASIS, configure, learned_basis, shape
 from tracker.decisions import Command, carry_out
-from tracker.engine.budget import Steps
 from tracker.engine.config import Config
 from tracker.engine.events import Event, Pattern
+from tracker.engine.publishing.report import Counts
 from tracker.engine.refusal import Reason, Refused
-from tracker.engine.report import Counts
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.outgoing import encode

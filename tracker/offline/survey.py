@@ -8,8 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.engine.burst import Burst
-from tracker.engine.delay import delay_basis
-from tracker.engine.noise import FLOOR, LEAST_OUTSIDE, outside
+from tracker.engine.estimation.delay import delay_basis
+from tracker.engine.estimation.noise import FLOOR, LEAST_OUTSIDE, outside
 from tracker.engine.refusal import Refused
 from tracker.logs import LogReader
 from tracker.messages import Shape, decode_pilots, parse_topic

@@ -10,10 +10,10 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.config import Config
 from tracker.engine.refusal import Refused
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 
 # Stretches of the log, spread evenly, so that a channel that moves now and then is seen doing both.

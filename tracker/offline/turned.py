@@ -12,9 +12,9 @@ from numpy.typing import NDArray
 
 from tracker.engine import panel
 from tracker.engine.config import Config
-from tracker.engine.estimator import Estimator
-from tracker.engine.following import Lock
-from tracker.engine.frames import Frames
+from tracker.engine.estimation.estimator import Estimator
+from tracker.engine.estimation.frames import Frames
+from tracker.engine.oscillators.following import Lock
 
 from .recorded import Piece
 

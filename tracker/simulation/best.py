@@ -3,10 +3,10 @@
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.budget import Steps
-from tracker.engine.channel import Channel
-from tracker.engine.flips import optimize
 from tracker.engine.panel import Limits
+from tracker.engine.search.budget import Steps
+from tracker.engine.search.channel import Channel
+from tracker.engine.search.flips import optimize
 
 
 def best_pattern(channel: Channel, start: NDArray[np.int8] | None, steps: int) -> tuple[NDArray[np.int8], float]:

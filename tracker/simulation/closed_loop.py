@@ -5,9 +5,9 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from tracker.assembly import configure
-from tracker.engine.budget import Steps
 from tracker.engine.burst import Burst
 from tracker.engine.events import Event, Pattern, Plan
+from tracker.engine.search.budget import Steps
 from tracker.engine.tracker import Tracker
 from tracker.settings import Settings
 from tracker.simulation.testbed import Testbed

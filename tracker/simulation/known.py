@@ -3,7 +3,7 @@
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.channel import Channel
+from tracker.engine.search.channel import Channel
 
 # Power left outside the basis, relative to the channel's: far below what a rate shows.
 LEFT_OUT = 1e-10

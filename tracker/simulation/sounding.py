@@ -10,7 +10,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.engine.hadamard import hadamard, hadamard_order
+from tracker.engine.orthogonal.hadamard import hadamard, hadamard_order
 
 
 def sweep(elements: int, rng: np.random.Generator) -> NDArray[np.int8]:

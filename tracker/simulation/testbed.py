@@ -14,10 +14,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.engine.burst import Burst
-from tracker.engine.channel import Channel
 from tracker.engine.events import Plan
 from tracker.engine.panel import pack, unpack
-from tracker.engine.share import net_rate
+from tracker.engine.planning.share import net_rate
+from tracker.engine.search.channel import Channel
 from tracker.simulation.config import SceneConfig
 from tracker.simulation.known import known_channel
 from tracker.simulation.scene import Scene

@@ -6,9 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from tracker.engine.aperture import Columns
 from tracker.engine.config import Config
-from tracker.engine.delay import frequencies
+from tracker.engine.estimation.aperture import Columns
+from tracker.engine.estimation.delay import frequencies
 from tracker.settings import Settings
 
 LIGHT_M_S = 299_792_458.0

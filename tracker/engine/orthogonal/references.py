@@ -17,7 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
+from .. import panel
 from .responses import product
 
 Complex = NDArray[np.complex128]

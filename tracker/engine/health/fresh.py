@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .rls import forgetting
+from ..estimation.rls import forgetting
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]

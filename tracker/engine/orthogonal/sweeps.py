@@ -33,11 +33,11 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import blas
 
+from ..estimation.filter import Surprise
+from ..estimation.rls import BlockRls
 from .classes import Classes, add_diagonal, whitened
 from .cycle import CHUNK, SweepDetector
-from .filter import Surprise
 from .responses import Responses, product
-from .rls import BlockRls
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]

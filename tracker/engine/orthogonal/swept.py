@@ -11,13 +11,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..estimation.dense import Dense
+from ..estimation.filter import Surprise
+from ..estimation.rls import BlockRls
+from ..estimation.sounded import Sounded
 from .cycle import SweepDetector
-from .dense import Dense
-from .filter import Surprise
 from .references import References
 from .responses import product
-from .rls import BlockRls
-from .sounded import Sounded
 from .sweeps import SweepRls
 
 Complex = NDArray[np.complex128]

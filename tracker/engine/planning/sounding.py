@@ -21,10 +21,10 @@ from numpy.typing import NDArray
 from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 
-from .aperture import ApertureBasis
-from .hadamard import hadamard_order, hadamard_rows
-from .lines import Lines, lines_of
-from .panel import Limits
+from ..estimation.aperture import ApertureBasis
+from ..orthogonal.hadamard import hadamard_order, hadamard_rows
+from ..panel import Limits
+from ..search.lines import Lines, lines_of
 
 GOLDEN = 0.618
 """Steps of about this part of a cycle spread neighbours far apart, and few of them come near the start again."""

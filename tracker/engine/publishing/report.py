@@ -3,12 +3,12 @@
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from .burst import Burst
-from .changes import Verdict
-from .drift import DriftMonitor, Suspicion
-from .events import Alarm, Mode, State
-from .faults import FAULTS, SILENT, SURE, Finding
-from .frames import Fit
+from ..burst import Burst
+from ..detection.changes import Verdict
+from ..detection.drift import DriftMonitor, Suspicion
+from ..estimation.frames import Fit
+from ..events import Alarm, Mode, State
+from ..health.faults import FAULTS, SILENT, SURE, Finding
 
 
 @dataclass(frozen=True, slots=True)

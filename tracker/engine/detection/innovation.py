@@ -20,8 +20,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..estimation.filter import Surprise
 from .drift import Reading
-from .filter import Surprise
 from .matched import Matched
 
 Complex = NDArray[np.complex128]

@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
+from .. import panel
 from .completion import Completion, begin
 
 Real = NDArray[np.float64]

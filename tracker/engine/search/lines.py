@@ -11,8 +11,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..panel import Limits
 from .channel import Channel
-from .panel import Limits
 
 
 @dataclass(frozen=True, slots=True, eq=False)

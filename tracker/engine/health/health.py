@@ -14,12 +14,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..panel import Limits
 from . import hypotheses
 from .appraisal import Appraisal
 from .faults import FAULTS, FINE, NOT_JUDGED, SILENT, STUCK_MINUS, STUCK_PLUS, SURE, SWAPPED, UNMOVED, WEAK, Finding
 from .fresh import Posterior
 from .hypotheses import FOLLOWS
-from .panel import Limits
 from .sides import KEPT, Sides
 from .swaps import swapped
 from .windows import Shown, Windows

@@ -6,15 +6,15 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
-from .aperture import ApertureBasis
+from .. import panel
+from ..config import Config
+from ..estimation.aperture import ApertureBasis
+from ..estimation.filter import Filter
+from ..estimation.frames import Frames
+from ..estimation.shrinkage import shrink
 from .changes import Verdict, judge
-from .config import Config
 from .drift import Reading
 from .evidence import Evidence, Heard, Memory
-from .filter import Filter
-from .frames import Frames
-from .shrinkage import shrink
 from .standing import Standing
 
 Complex = NDArray[np.complex128]

@@ -18,8 +18,8 @@ interference  none: it counts as noise
 ============  =================================================================================================
 """
 
+from ..estimation.estimator import Estimator
 from .changes import Verdict
-from .estimator import Estimator
 
 # Share of the way back to the prior that P goes.
 LOOSEN, REACQUIRE = 0.5, 0.9

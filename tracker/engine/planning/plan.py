@@ -27,16 +27,16 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .channel import Channel
-from .config import Config, PlanConfig
-from .events import Mode, Plan
-from .following import MOST_OFFSET_HZ, Lock
-from .frames import Fit
-from .noise import LEAST_OUTSIDE
-from .panel import pack
-from .phases import FULL_MOTION_S
-from .rate import response
-from .report import Stand
+from ..config import Config, PlanConfig
+from ..estimation.frames import Fit
+from ..estimation.noise import LEAST_OUTSIDE
+from ..events import Mode, Plan
+from ..oscillators.following import MOST_OFFSET_HZ, Lock
+from ..oscillators.phases import FULL_MOTION_S
+from ..panel import pack
+from ..publishing.report import Stand
+from ..search.channel import Channel
+from ..search.rate import response
 from .share import (
     Bounds,
     Choice,

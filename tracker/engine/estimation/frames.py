@@ -6,8 +6,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from .burst import Burst
-from .drift import Reading
+from ..burst import Burst
+from ..detection.drift import Reading
 
 
 @dataclass(frozen=True, slots=True, eq=False)

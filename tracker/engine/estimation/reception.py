@@ -6,13 +6,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..config import Config
+from ..detection.drift import Reading
+from ..detection.tones import TONE, Tones
+from ..oscillators.following import Following, Lock
+from ..oscillators.timing import TimingLoop
 from . import noise
-from .config import Config
-from .drift import Reading
-from .following import Following, Lock
 from .frames import Frames
-from .timing import TimingLoop
-from .tones import TONE, Tones
 
 
 class Reception:

@@ -7,15 +7,15 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
-from .budget import Budget
-from .channel import Channel
-from .config import Config
-from .events import Cause, Pattern
-from .flips import optimize
-from .one_carrier import rate_bound
-from .panel import Limits
-from .rate import promise, rate, response
+from .. import panel
+from ..config import Config
+from ..events import Cause, Pattern
+from ..panel import Limits
+from ..search.budget import Budget
+from ..search.channel import Channel
+from ..search.flips import optimize
+from ..search.one_carrier import rate_bound
+from ..search.rate import promise, rate, response
 from .report import Stand
 from .switching import Switching
 

@@ -15,7 +15,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
+from .. import panel
 
 Complex = NDArray[np.complex128]
 

@@ -7,26 +7,26 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..config import Config
+from ..detection.changes import Verdict
+from ..detection.drift import Reading
+from ..detection.innovation import DIRECT, INNOVATION, Innovations
+from ..detection.matched import MATCHED
+from ..detection.past import Past
+from ..detection.standing import MOVED
+from ..health.fresh import Posterior
+from ..orthogonal.lookout import Lookout
+from ..oscillators.following import Lock
+from ..search.channel import Channel
 from .aperture import ApertureBasis, Columns, Elements
 from .bank import Bank, time_constants
-from .changes import Verdict
-from .channel import Channel
-from .config import Config
-from .drift import Reading
 from .filter import Filter
-from .following import Lock
 from .frames import Fit, Frames
-from .fresh import Posterior
-from .innovation import DIRECT, INNOVATION, Innovations
-from .lookout import Lookout
-from .matched import MATCHED
 from .noise import energy
-from .past import Past
 from .prior import prior_variances
 from .reception import Reception
 from .shrinkage import Shrinkage
 from .sounded import Sounded
-from .standing import MOVED
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
 MOST_FRAMES = 256

@@ -16,13 +16,13 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
+from ..panel import Limits
 from .allowance import Allowance
 from .ascent import ROUNDING, Ascent
 from .budget import Budget, Meter
 from .channel import Channel
 from .lines import lines_of
 from .one_carrier import one_carrier_optimum
-from .panel import Limits
 from .rate import rate
 from .realform import Real, RealForm
 from .starts import (

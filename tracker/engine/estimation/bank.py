@@ -15,15 +15,15 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ..orthogonal.cycle import SweepDetector
+from ..orthogonal.lookout import Lookout
+from ..orthogonal.sweeps import SweepRls
+from ..orthogonal.swept import Swept
 from .aperture import ApertureBasis
-from .cycle import SweepDetector
 from .dense import Dense
 from .filter import Filter, Surprise
-from .lookout import Lookout
 from .rls import BlockRls, forgetting
 from .sounded import Sounded
-from .sweeps import SweepRls
-from .swept import Swept
 
 Complex = NDArray[np.complex128]
 

@@ -9,7 +9,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from . import panel
+from .. import panel
 from .products import ProductCache
 
 Array = NDArray[np.float64]

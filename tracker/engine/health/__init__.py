@@ -1,0 +1,1 @@
+"""Element health: which elements do not follow their bits."""
