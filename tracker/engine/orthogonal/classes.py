@@ -136,7 +136,7 @@ class Classes:
         of = self.of[rows]
         members = np.bincount(of, minlength=self.count.shape[0])
         heard = np.flatnonzero(members)
-        if counts is not None or (members[heard] != self.count[heard]).any():
+        if (members[heard] != self.count[heard]).any() or not _alike(of, counts, members[heard], heard):
             self._part(rows, counts, states)
             of = self.of[rows]
             members = np.bincount(of, minlength=self.count.shape[0])
@@ -253,6 +253,14 @@ class Classes:
             self.sums.take(kept, axis=1),
         )
         self.shared = self.shared[np.ix_(kept, kept)]
+
+
+def _alike(of: Rows, counts: Rows | None, size: Rows, heard: Rows) -> bool:
+    """Whether all rows of a class were heard as often: where they were, the mean square is the square of the mean."""
+    if counts is None:
+        return True
+    total, square = (np.bincount(of, weights=weights)[heard] for weights in (counts, counts * counts))
+    return bool((square * size == total * total).all())
 
 
 def _by_count(rows: Rows, counts: Rows | None) -> list[Rows]:

@@ -202,7 +202,9 @@ class SweepRls:
         if distinct:
             self._take(rows, None, innovation)
         else:
-            heard, place, counts = np.unique(rows, return_inverse=True, return_counts=True)
+            times = np.bincount(rows, minlength=self.cycle.order)
+            heard = np.flatnonzero(times)
+            counts, place = times[heard], (np.cumsum(times > 0) - 1)[rows]
             members = (place == np.arange(heard.shape[0])[:, None]) / counts[:, None]
             self._take(heard, counts, product(members, innovation))
         return Surprise(innovation, np.ascontiguousarray(white).view(np.complex128), diagonal * diagonal)
