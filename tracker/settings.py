@@ -197,7 +197,7 @@ class Journal(Table):
     """Where everything is recorded."""
 
     folder: str = "journal"
-    rotate_mb: PositiveFloat = 1024.0
+    rotate_mb: PositiveFloat = 256.0
     required: bool = True
 
 

@@ -20,7 +20,7 @@ from tracker.offline import svg
 from tracker.offline.axes import time_marks, value_limits
 from tracker.offline.bins import MOST_BINS, Bins
 from tracker.offline.happenings import MOST_ENTRIES
-from tracker.offline.replay import Replay
+from tracker.offline.rerun import Replay
 from tracker.offline.spread import Spread
 from tracker.outgoing import encode
 from tracker.settings import load

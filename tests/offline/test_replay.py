@@ -22,7 +22,7 @@ from tracker.engine.tracker import Tracker
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.messages import decode_pattern, decode_pilots, encode_pilots
 from tracker.offline.errors import OfflineError
-from tracker.offline.replay import Replay
+from tracker.offline.rerun import Replay
 from tracker.settings import parse
 from tracker.simulation.closed_loop import EngineInLoop, turns
 from tracker.simulation.config import SceneConfig, Terminal, ToneGrid

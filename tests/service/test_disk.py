@@ -13,7 +13,7 @@ from tracker.engine.events import Cause
 from tracker.engine.tracker import Tracker
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.messages import decode_pattern
-from tracker.offline.replay import Replay
+from tracker.offline.rerun import Replay
 from tracker.service import journal as journal_module
 from tracker.service import syncing
 from tracker.service.errors import ServiceError

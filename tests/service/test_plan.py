@@ -9,7 +9,7 @@ from tests.service.station import SCENE, Controller, running
 from tracker.engine.events import Mode
 from tracker.logs import LogReader
 from tracker.messages import decode_plan
-from tracker.offline.replay import Replay
+from tracker.offline.rerun import Replay
 from tracker.simulation.best import best_pattern
 from tracker.simulation.sounding import SoundingConfig
 from tracker.simulation.testbed import Testbed, TestbedConfig

@@ -17,7 +17,7 @@ from tracker.basis_file import LearnedBasis, pack_basis
 from tracker.engine.events import Mode
 from tracker.logs import LogReader, LogWriter
 from tracker.messages import decode_pattern, decode_pilots
-from tracker.offline.replay import Replay
+from tracker.offline.rerun import Replay
 
 
 def logs(controller: Controller) -> list[Path]:

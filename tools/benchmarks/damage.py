@@ -16,7 +16,7 @@ from benchmarks._link import bodies, play, work_folder, write_settings
 from benchmarks.row import Row
 from tracker.logs import LogError, LogReader
 from tracker.offline.errors import OfflineError
-from tracker.offline.replay import Replay
+from tracker.offline.rerun import Replay
 from tracker.simulation.yard import scenario
 
 

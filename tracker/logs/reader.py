@@ -4,6 +4,7 @@ import os
 import struct
 import zlib
 from collections.abc import Iterator
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import BinaryIO
@@ -102,6 +103,18 @@ class LogReader:
                 pass  # told when the records are read
             self._attachments = found
         return self._attachments
+
+    @property
+    def first_attachments(self) -> dict[str, bytes]:
+        """The whole attachments that come before all messages, by name: found without reading on."""
+        found = {}
+        with suppress(Damaged, OSError), self._open() as file:
+            for frame in frames(file, self._size, frozenset((Opcode.ATTACHMENT,))):
+                if frame.opcode in (Opcode.CHUNK, Opcode.MESSAGE):
+                    break
+                if frame.opcode == Opcode.ATTACHMENT and (attachment := _attachment(frame)):
+                    found[attachment.name] = attachment.data
+        return found
 
     def __iter__(self) -> Iterator[Record]:
         self._position, self._damage = 0, None

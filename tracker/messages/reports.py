@@ -82,6 +82,19 @@ def decode_state(body: Body) -> StateMessage:
     return StateMessage(fields.check_link(), event, _latencies(fields))
 
 
+def decode_rates(body: Body) -> tuple[float | None, float | None, tuple[float, ...]]:
+    """Decode no more of a state than measured rate, predicted rate and innovation ratios; see `decode_state`.
+
+    Raises
+    ------
+    Refused
+    """
+    fields = read_nested("state", body)
+    fields.check_version()
+    measured, predicted = fields.optional_number("rate_measured"), fields.optional_number("rate_predicted")
+    return measured, predicted, fields.numbers("innovation", MOST_RECEIVERS)
+
+
 def encode_alarm(link: str, event: events.Alarm) -> bytes:
     """Encode an alarm."""
     return encode(

@@ -26,7 +26,7 @@ from .blocks import Said
 from .errors import OfflineError
 from .picture import picture
 from .progress import Bars, progress_bar
-from .replay import Replay
+from .rerun import Replay
 from .summary import Account, decode_said
 from .timeline import Timeline
 from .timeline_text import heading, summary, table

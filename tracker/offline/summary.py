@@ -1,7 +1,7 @@
 """What a replay has to say: how the log went, how the replay went, and whether they are the same."""
 
 from collections import Counter, deque
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field, fields
 from typing import Any
 
@@ -24,6 +24,11 @@ class Mean:
         """Take a value in, so many times."""
         self.count += times
         self.total += value * times
+
+    def join(self, other: "Mean") -> None:
+        """Take in the values of another."""
+        self.count += other.count
+        self.total += other.total
 
     @property
     def value(self) -> float | None:
@@ -57,15 +62,23 @@ class Account:
         elif isinstance(event, Alarm):
             self.alarms[event.kind] += 1
         elif isinstance(event, State):
-            self._take_state(event)
+            self.take_rates(event.rate_measured, event.rate_predicted, event.innovation)
 
-    def _take_state(self, state: State) -> None:
-        if state.rate_predicted is not None:
-            self.predicted.add(state.rate_predicted)
-        if state.rate_measured is not None:
-            self.measured.add(state.rate_measured)
-        if state.innovation:
-            self.innovation.add(sum(state.innovation) / len(state.innovation))
+    def join(self, other: "Account") -> None:
+        """Take in what another has taken."""
+        self.patterns += other.patterns
+        self.alarms += other.alarms
+        for name in ("predicted", "measured", "innovation", "error"):
+            getattr(self, name).join(getattr(other, name))
+
+    def take_rates(self, measured: float | None, predicted: float | None, innovation: Sequence[float]) -> None:
+        """Take in what a state says of the link."""
+        if predicted is not None:
+            self.predicted.add(predicted)
+        if measured is not None:
+            self.measured.add(measured)
+        if innovation:
+            self.innovation.add(sum(innovation) / len(innovation))
 
     def as_dict(self) -> dict[str, Any]:
         """Summarise as plain values."""
@@ -97,6 +110,13 @@ class Comparison:
         """Take a pattern from the replay."""
         self._replayed.append(pattern)
         self._settle()
+
+    def join(self, other: "Comparison") -> None:
+        """Go on with the patterns of another, in order."""
+        self._logged += other._logged
+        self._replayed += other._replayed
+        self.same += other.same
+        self.first_difference = self.first_difference or other.first_difference
 
     @property
     def unmatched(self) -> tuple[int, int]:
