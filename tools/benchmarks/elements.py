@@ -46,8 +46,8 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     yield from _found("stuck", 4, range(8 if quick else 200), 0.99)
     yield _rate(range(2 if quick else 40))
-    for kind in ("weak", "swapped"):
-        yield from _found(kind, 16, range(3 if quick else 60), None)
+    yield from _found("weak", 120, range(1 if quick else 20), None)
+    yield from _found("swapped", 16, range(3 if quick else 60), None)
     yield from _calm(range(1 if quick else 20))
     yield from _in_service(range(2 if quick else 40))
     yield from _cost(16, 16, 200)

@@ -41,6 +41,13 @@ GOOD = 0.99
 # they must have done so to be told apart together.
 SETTLED, TOGETHER = 3, 4
 
+# Probability from which an element in doubt is called silent rather than weak, if not half as likely as that: the one
+# shows at once, the other only in time.
+LIKELY_SILENT = 0.3
+# Sweeps for which an element must have been in doubt before it is called weak: paths that cancel at an element make it
+# weak for as long as a slow terminal takes to leave the place, and no longer.
+WEAK_SWEEPS = 100.0
+
 
 class Health:
     """Judges the elements of a panel.
@@ -79,6 +86,8 @@ class Health:
         self._appraisal = Appraisal(*self._shape, self._judged)
         self._codes = np.where(self._judged, FINE, NOT_JUDGED).astype(np.int8)
         self._confidence = np.zeros(elements)
+        self._stood = np.zeros(elements)  # sweeps for which an element has been in doubt without a break
+        self._unlooked = 0.0  # sweeps since elements were last named
         self._partner = np.full(elements, -1, dtype=np.int64)
         self._last: Complex = np.zeros((elements, 0), dtype=np.complex128)  # good response
         self._last_good = np.full(elements, -1, dtype=np.int64)  # window of it
@@ -118,10 +127,12 @@ class Health:
         shown = self._windows.take(now)
         if shown is None:
             return ()
+        self._unlooked += shown.sweeps
         self._appraisal.take(now, shown, self._partner < 0)
         before, beliefs = self._codes.copy(), self._appraisal.beliefs.probabilities
         if self._appraisal.looked:
-            self._name(beliefs)
+            self._name(beliefs, self._unlooked)
+            self._unlooked = 0.0
             self._pair_up()
         self._remember(now, shown, beliefs[FOLLOWS], before)
         if self._appraisal.looked or np.any(self._codes != before):
@@ -133,13 +144,16 @@ class Health:
         doubt = np.maximum(1.0 - beliefs[FOLLOWS], self._confidence)
         return tuple(Finding(int(n), FAULTS[self._codes[n]], float(self._confidence[n]), float(doubt[n])) for n in new)
 
-    def _name(self, beliefs: Real) -> None:
-        """Name what each element does by itself."""
+    def _name(self, beliefs: Real, sweeps: float) -> None:
+        """Name what each element does by itself, so many sweeps after it was last done."""
         before, known = self._codes, self._appraisal.known
         doubt = 1.0 - beliefs[FOLLOWS]
-        called = known & (doubt >= np.where(before > FINE, TAKEN_BACK, SURE))
-        silent = called & (beliefs[hypotheses.UNMOVED] >= np.maximum(beliefs[hypotheses.WEAK], 0.5))
-        weak = called & (beliefs[hypotheses.WEAK] >= np.maximum(beliefs[hypotheses.UNMOVED], 0.5))
+        called = known & (doubt >= np.where((before > FINE) | (self._stood > 0.0), TAKEN_BACK, SURE))
+        silent = called & (beliefs[hypotheses.UNMOVED] >= np.maximum(0.5 * beliefs[hypotheses.WEAK], LIKELY_SILENT))
+        weak = called & (beliefs[hypotheses.WEAK] >= 0.5) & ~silent
+        self._stood = np.where(silent | weak, self._stood + sweeps, np.where(known, 0.0, self._stood))
+        named = before > FINE
+        weak &= named | (self._stood > WEAK_SWEEPS)
         codes = np.where(self._judged, FINE, NOT_JUDGED).astype(np.int8)
         codes[silent] = np.where((before == STUCK_PLUS) | (before == STUCK_MINUS), before, UNMOVED)[silent]
         codes[weak] = WEAK
@@ -202,6 +216,8 @@ class Health:
             "appraisal": self._appraisal.snapshot(),
             "codes": self._codes.copy(),
             "confidence": self._confidence.copy(),
+            "stood": self._stood.copy(),
+            "unlooked": self._unlooked,
             "partner": self._partner.copy(),
             "last": self._last.copy(),
             "last_good": self._last_good.copy(),
@@ -215,6 +231,8 @@ class Health:
         self._appraisal.load(snapshot["appraisal"])
         self._codes = np.array(snapshot["codes"], dtype=np.int8)
         self._confidence = np.array(snapshot["confidence"], dtype=np.float64)
+        self._stood = np.array(snapshot["stood"], dtype=np.float64)
+        self._unlooked = float(snapshot["unlooked"])
         self._partner = np.array(snapshot["partner"], dtype=np.int64)
         self._last = np.array(snapshot["last"], dtype=np.complex128)
         self._last_good = np.array(snapshot["last_good"], dtype=np.int64)
