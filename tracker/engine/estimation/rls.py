@@ -63,6 +63,8 @@ class BlockRls:
         self._covariance = np.asfortranarray(np.diag(self._prior).astype(self._dtype))
         self.coefficients: Complex = np.zeros((self.size, outputs), dtype=np.complex128)
         self.whitener: NDArray[Any] = np.ones((0, 0))  # L⁻¹ of the last update
+        # Room for P⁻Zᴴ, kept: memory fresh from the system costs a tenth of the update.
+        self._gain = np.zeros((self.size, 0), dtype=self._dtype, order="F")
         self._pending = (1.0, 0.0)  # P is a · stored + b · prior, for the (a, b) gathered since the last update
 
     @property
@@ -126,7 +128,9 @@ class BlockRls:
         """
         z = np.ascontiguousarray(regressors, dtype=self._dtype)
         a = self._carry_out_forgetting()
-        gain = self._times_covariance(a, z)  # P⁻Zᴴ, (n, B)
+        if self._gain.shape[1] != z.shape[0]:
+            self._gain = np.zeros((self.size, z.shape[0]), dtype=self._dtype, order="F")
+        gain = self._times_covariance(a, z, self._gain)  # P⁻Zᴴ, (n, B)
         whitener = self.whitener = self._whitener(z, gain)
         gain = self._times_adjoint(gain, whitener)  # Xᴴ = P⁻Zᴴ L⁻ᴴ
         innovation = outputs - self._product(z, self.coefficients)
@@ -185,10 +189,13 @@ class BlockRls:
             self._covariance.ravel(order="K")[:: self.size + 1] += (b / a) * self._prior
         return a
 
-    def _times_covariance(self, a: float, z: NDArray[Any]) -> NDArray[Any]:
+    def _times_covariance(self, a: float, z: NDArray[Any], out: NDArray[Any] | None = None) -> NDArray[Any]:
         """Compute a P Zᴴ, (n, B) in Fortran order."""
         multiply = blas.zhemm if self._complex else blas.dsymm
-        return np.asarray(multiply(a, self._covariance, z.conj().T if self._complex else z.T, lower=1))
+        right = z.conj().T if self._complex else z.T
+        if out is None:
+            return np.asarray(multiply(a, self._covariance, right, lower=1))
+        return np.asarray(multiply(a, self._covariance, right, c=out, lower=1, overwrite_c=1))
 
     def _whitener(self, z: NDArray[Any], gain: NDArray[Any]) -> NDArray[Any]:
         """Compute L⁻¹ of S = I + Z P⁻ Zᴴ = L Lᴴ; multiplying by the inverse is faster than solving n times."""
