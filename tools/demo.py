@@ -34,10 +34,6 @@ TESTBED = (sys.executable, "-m", "tracker.simulation")
 PATIENCE_S = 15.0  # for a process to end once it is asked to
 
 
-class DemoError(Exception):
-    """The demo cannot go on; the message says why."""
-
-
 @dataclass(slots=True)
 class Part:
     """One of the two processes.

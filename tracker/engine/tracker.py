@@ -402,7 +402,8 @@ class Tracker:
         chosen = self._refresher.states(in_use)
         if chosen is None:
             return Link(in_use, None, None, *self._estimator.reception.phase)
-        sounded = Frames.together([part.showing(panel.pack(chosen)) for part in frames])
+        packed = panel.pack(chosen)
+        sounded = Frames.together([part.showing(packed) for part in frames])
         measured = None
         if sounded.time_ns.size:
             measured = float(np.log2(1.0 + self._estimator.reception.powers(sounded)).mean())

@@ -93,24 +93,20 @@ class LogReader:
     def attachments(self) -> dict[str, bytes]:
         """The whole attachments by name, wherever in the log they lie."""
         if self._attachments is None:
-            found = {}
-            try:
-                with self._open() as file:
-                    for frame in frames(file, self._size, frozenset((Opcode.ATTACHMENT,))):
-                        if frame.opcode == Opcode.ATTACHMENT and (attachment := _attachment(frame)):
-                            found[attachment.name] = attachment.data
-            except (Damaged, OSError):
-                pass  # told when the records are read
-            self._attachments = found
+            self._attachments = self._find_attachments(before=())
         return self._attachments
 
     @property
     def first_attachments(self) -> dict[str, bytes]:
         """The whole attachments that come before all messages, by name: found without reading on."""
+        return self._find_attachments(before=(Opcode.CHUNK, Opcode.MESSAGE))
+
+    def _find_attachments(self, before: tuple[Opcode, ...]) -> dict[str, bytes]:
+        """Look for attachments up to the first record of certain kinds; damage is told when the records are read."""
         found = {}
         with suppress(Damaged, OSError), self._open() as file:
             for frame in frames(file, self._size, frozenset((Opcode.ATTACHMENT,))):
-                if frame.opcode in (Opcode.CHUNK, Opcode.MESSAGE):
+                if frame.opcode in before:
                     break
                 if frame.opcode == Opcode.ATTACHMENT and (attachment := _attachment(frame)):
                     found[attachment.name] = attachment.data

@@ -211,12 +211,11 @@ class Estimator:
 
         The estimate from before comes back first: until the change was seen, it bent the surface's part as well.
         """
-        self.roll_back()
+        before = self.roll_back()
         if self._bank is None:
             return
         self._bank.renew_direct()
-        noise = self.reception.noise_power
-        before, heard = self._past.before(noise), self._past.latest(frames, noise)
+        heard = self._past.latest(frames, self.reception.noise_power)
         if before is not None and heard is not None and frames:
             patterns, outputs = heard
             before[0] += (outputs - self._bank.chosen.predict(Sounded(patterns, self._aperture))).mean(axis=0)
@@ -280,11 +279,12 @@ class Estimator:
         self._innovations = Innovations(self._config.receivers, self._config.delay)
         return True
 
-    def roll_back(self) -> None:
-        """Go back to the estimate from before the change."""
+    def roll_back(self) -> NDArray[np.complex128] | None:
+        """Go back to the estimate from before the change; return a copy of it, None when none is remembered."""
         before = self._past.before(self.reception.noise_power)
         if self._bank is not None and before is not None:
             self._bank.put(before)
+        return before
 
     def leave_out(self, most: int) -> None:
         """Leave out frames until they fit the estimate again, but no more than so many."""

@@ -13,7 +13,7 @@ from ..events import Cause, Pattern
 from ..panel import Limits
 from ..search.budget import Budget
 from ..search.channel import Channel
-from ..search.flips import optimize
+from ..search.flips import Climb, optimize
 from ..search.one_carrier import rate_bound
 from ..search.rate import promise, rate, response
 from .report import Stand
@@ -153,13 +153,14 @@ class Refresher:
             self._glance_every = LEAST_APART if moved else min(2 * self._glance_every, MOST_APART)
         if not forced and not gains:
             return None, found.steps
-        return self._publish(channel, found.states, before, cause, stand, found.steps), found.steps
+        return self._publish(channel, found, before, cause, stand), found.steps
 
     def adopt(self, channel: Channel, states: NDArray[np.int8], stand: Stand) -> Pattern:
         """Publish a pattern that the operator chose."""
         in_use = self.states(self.latest)
         before = rate(channel, in_use) if in_use is not None else 0.0
-        return self._publish(channel, states, before, Cause.OPERATOR, stand, 0)
+        chosen = Climb(states, rate(channel, states), steps=0)
+        return self._publish(channel, chosen, before, Cause.OPERATOR, stand)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -222,30 +223,21 @@ class Refresher:
         self._since_glance = 0
         return True
 
-    def _publish(
-        self,
-        channel: Channel,
-        states: NDArray[np.int8],
-        before: float,
-        cause: Cause,
-        stand: Stand,
-        steps: int,
-    ) -> Pattern:
-        predicted = rate(channel, states)
+    def _publish(self, channel: Channel, found: Climb, before: float, cause: Cause, stand: Stand) -> Pattern:
         pattern = Pattern(
             id=self._next_id,
             run=stand.run,
             seq=stand.seq,
             t_ns=stand.t_ns,
-            states=states,
-            rate=predicted,
-            rate_low=predicted,
+            states=found.states,
+            rate=found.rate,
+            rate_low=found.rate,
             rate_before=before,
-            rate_bound=max(rate_bound(channel), predicted),
+            rate_bound=max(rate_bound(channel), found.rate),
             cause=cause,
-            steps=steps,
+            steps=found.steps,
         )
-        self._published[pattern.id] = states
+        self._published[pattern.id] = found.states
         self._published.pop(pattern.id - REMEMBERED, None)
         self._next_id += 1
         self._not_shown = 0
