@@ -8,8 +8,8 @@ For a block of B frames, with P⁻ the covariance after forgetting::
     C += Xᴴ L⁻¹ (Y − Z C)
     P  = P⁻ − Xᴴ X
 
-Both ways to forget are P⁻ = a P + b P₀ with P₀ diagonal, so they are remembered as two numbers and folded into the two
-BLAS calls of the next update: forgetting costs no pass over P.
+Both ways to forget are P⁻ = a P + b P₀ with P₀ diagonal. P is kept as a number times a stored matrix, so forgetting
+changes the number and the stored diagonal: no pass over the matrix, and the downdate adds to it without scaling it.
 
 ============  =====  =====  =====  ====================================================================
 forgetting    a      b      C ×    equals
@@ -39,6 +39,8 @@ Complex = NDArray[np.complex128]
 
 # Below this factor nothing of P is left beside the prior, and dividing by it would lose digits.
 SMALLEST_FACTOR = 1e-12
+# The factor of the stored matrix is multiplied into it when it leaves 1 / LARGEST_FACTOR to LARGEST_FACTOR.
+LARGEST_FACTOR = 256.0
 # Frames in a strip of S: narrower ones would save little more, and slow the products down.
 STRIP = 32
 
@@ -65,7 +67,7 @@ class BlockRls:
         self.whitener: NDArray[Any] = np.ones((0, 0))  # L⁻¹ of the last update
         # Room for P⁻Zᴴ, kept: memory fresh from the system costs a tenth of the update.
         self._gain = np.zeros((self.size, 0), dtype=self._dtype, order="F")
-        self._pending = (1.0, 0.0)  # P is a · stored + b · prior, for the (a, b) gathered since the last update
+        self._factors = (1.0, 0.0)  # (a, b): P is a · stored + b · prior; b gathers between updates
 
     @property
     def size(self) -> int:
@@ -80,32 +82,32 @@ class BlockRls:
     @property
     def variances(self) -> NDArray[np.float64]:
         """Variance of each coefficient now, in units of the noise, shape (n,)."""
-        a, b = self._pending
+        a, b = self._factors
         return np.asarray(a * self._covariance.diagonal().real + b * self._prior)
 
     @property
     def covariance(self) -> NDArray[Any]:
         """P as a full (n, n) matrix, a copy; for checks, not for the hot path."""
-        a, b = self._pending
+        a, b = self._factors
         lower = np.tril(self._covariance)
         return np.asarray(a * (lower + np.tril(lower, -1).conj().T) + np.diag(b * self._prior))
 
     def predicted_variance(self, regressor: NDArray[Any]) -> float:
         """Variance of z C for one regressor z of shape (n,): z P zᴴ, in units of the noise."""
-        a, b = self._pending
+        a, b = self._factors
         column = self._times_covariance(a, np.ascontiguousarray(regressor, dtype=self._dtype)[None, :])[:, 0]
         return float((regressor @ column).real + b * (self._prior * np.abs(regressor) ** 2).sum())
 
     def predicted_covariance(self, regressors: NDArray[Any]) -> NDArray[Any]:
         """Covariance over frames of Z C, shape (B, B), for regressors (B, n): Z P Zᴴ, in units of the noise."""
-        a, b = self._pending
+        a, b = self._factors
         z = np.ascontiguousarray(regressors, dtype=self._dtype)
         return np.asarray(z @ self._times_covariance(a, z) + (z * (b * self._prior)) @ z.conj().T)
 
     def forget(self, a: float, b: float, decay: float = 1.0) -> None:
         """Set P to a P + b P₀, to be carried out with the next update, and C to `decay` C; see `forgetting`."""
-        before_a, before_b = self._pending
-        self._pending = (a * before_a, a * before_b + b)
+        before_a, before_b = self._factors
+        self._factors = (a * before_a, a * before_b + b)
         if decay != 1.0:
             self.coefficients *= decay
 
@@ -127,7 +129,7 @@ class BlockRls:
             L⁻¹(Y − Z C): unit variance each when the model holds.
         """
         z = np.ascontiguousarray(regressors, dtype=self._dtype)
-        a = self._carry_out_forgetting()
+        a = self._add_prior()
         if self._gain.shape[1] != z.shape[0]:
             self._gain = np.zeros((self.size, z.shape[0]), dtype=self._dtype, order="F")
         gain = self._times_covariance(a, z, self._gain)  # P⁻Zᴴ, (n, B)
@@ -137,7 +139,10 @@ class BlockRls:
         white = self._product(whitener, innovation)
         self.coefficients += self._product(gain, white)
         subtract = blas.zherk if self._complex else blas.dsyrk
-        self._covariance = subtract(-1.0, gain, beta=a, c=self._covariance, lower=1, overwrite_c=1)
+        # P⁻ − Xᴴ X = a (stored − Xᴴ X / a): with the stored matrix not scaled, a tenth of the update is saved.
+        scale = 1.0 if 1.0 / LARGEST_FACTOR < a < LARGEST_FACTOR else a
+        self._factors = (a / scale, 0.0)
+        self._covariance = subtract(-scale / a, gain, beta=scale, c=self._covariance, lower=1, overwrite_c=1)
         return innovation, white
 
     def reset(self, rows: NDArray[np.intp]) -> None:
@@ -145,18 +150,18 @@ class BlockRls:
 
         The coefficients stay where they are; what is heard next moves them at once.
         """
-        a, b = self._pending
+        a, b = self._factors
         self._covariance[rows, :] = 0.0
         self._covariance[:, rows] = 0.0
-        # Pending forgetting makes a · stored + b · prior of it, which is to be the prior.
+        # The factors make a · stored + b · prior of it, which is to be the prior.
         self._covariance[rows, rows] = (1.0 - b) / a * self._prior[rows]
 
     def rescale(self, coefficients: NDArray[np.float64], covariance: float) -> None:
         """Change the unit of the noise: multiply columns of C, and P with its prior, by given factors."""
         self.coefficients *= coefficients
         self._prior *= covariance
-        a, b = self._pending
-        self._pending = (a * covariance, b)
+        a, b = self._factors
+        self._factors = (a * covariance, b)
 
     def snapshot(self) -> dict[str, Any]:
         """All state, as copies; `restore` goes on from it bit by bit."""
@@ -164,7 +169,7 @@ class BlockRls:
             "prior": self._prior.copy(),
             "covariance": self._covariance.copy(order="F"),
             "coefficients": self.coefficients.copy(),
-            "pending": list(self._pending),
+            "factors": list(self._factors),
         }
 
     @classmethod
@@ -175,18 +180,18 @@ class BlockRls:
         rls = cls(snapshot["prior"], coefficients.shape[1], complex_regressors=np.iscomplexobj(covariance))
         rls._covariance[...] = covariance
         rls.coefficients[...] = coefficients
-        rls._pending = (float(snapshot["pending"][0]), float(snapshot["pending"][1]))
+        rls._factors = (float(snapshot["factors"][0]), float(snapshot["factors"][1]))
         return rls
 
-    def _carry_out_forgetting(self) -> float:
-        """Put the diagonal part of P⁻ = a P + b P₀ in place; the factor a returned is left to the BLAS calls."""
-        a, b = self._pending
-        self._pending = (1.0, 0.0)
+    def _add_prior(self) -> float:
+        """Put the diagonal part of P⁻ = a · stored + b P₀ into the stored matrix, and return a."""
+        a, b = self._factors
         if a < SMALLEST_FACTOR:
             self._covariance[...] = 0.0
             a = 1.0
         if b:
             self._covariance.ravel(order="K")[:: self.size + 1] += (b / a) * self._prior
+        self._factors = (a, 0.0)
         return a
 
     def _times_covariance(self, a: float, z: NDArray[Any], out: NDArray[Any] | None = None) -> NDArray[Any]:

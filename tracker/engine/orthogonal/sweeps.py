@@ -250,7 +250,7 @@ class SweepRls:
                 "prior": self.prior,
                 "covariance": covariance,
                 "coefficients": self.coefficients,
-                "pending": [1.0, 0.0],
+                "factors": [1.0, 0.0],
             }
         )
 
