@@ -48,7 +48,7 @@ class Frame:
     Parameters
     ----------
     opcode : int
-    content : bytes
+    content : bytes or memoryview
         Empty when it was stepped over.
     start, end : int
         Bytes of the file between which it lies; those of the chunk for a record inside one.
@@ -57,7 +57,7 @@ class Frame:
     """
 
     opcode: int
-    content: bytes
+    content: bytes | memoryview
     start: int
     end: int
     size: int
@@ -82,7 +82,7 @@ class Frame:
 class _Exact(ReadDataStream):
     """A stream that never returns less than was asked for, as the library's does at the end."""
 
-    def __init__(self, data: bytes) -> None:
+    def __init__(self, data: bytes | memoryview) -> None:
         super().__init__(BytesIO(data))
 
     def read(self, length: int) -> bytes:
@@ -171,7 +171,7 @@ def unpack_chunk(frame: Frame) -> Iterator[Frame]:
         end = at + HEAD.size + size
         if end > length:
             raise frame.damaged(f"the chunk is damaged at its byte {at}")
-        yield Frame(opcode, bytes(data[at + HEAD.size : end]), frame.start, frame.end, frame.size)
+        yield Frame(opcode, data[at + HEAD.size : end], frame.start, frame.end, frame.size)
         at = end
 
 

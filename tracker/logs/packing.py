@@ -67,7 +67,7 @@ def chunk_index(
     )
 
 
-def unpack_message(content: bytes) -> tuple[int, int, int, bytes]:
+def unpack_message(content: bytes | memoryview) -> tuple[int, int, int, bytes]:
     """Unpack a message: channel, log time, publish time, body.
 
     Raises
@@ -76,10 +76,10 @@ def unpack_message(content: bytes) -> tuple[int, int, int, bytes]:
         When it is too short to be one.
     """
     channel, _, log_time, publish_time = _MESSAGE_CONTENT.unpack_from(content)
-    return channel, log_time, publish_time, content[_MESSAGE_CONTENT.size :]
+    return channel, log_time, publish_time, bytes(content[_MESSAGE_CONTENT.size :])
 
 
-def unpack_plain_chunk(content: bytes) -> tuple[int, int, memoryview] | None:
+def unpack_plain_chunk(content: bytes | memoryview) -> tuple[int, int, memoryview] | None:
     """Unpack a chunk: size and CRC as it tells them, and its records; None when it is compressed.
 
     Raises

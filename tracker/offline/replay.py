@@ -60,12 +60,13 @@ def replay(
     with _written(out, settings_path, paths[0]) as writer:
         work = Replay(settings, folder, writer)
         processes = processes_for(paths) if settings is None else 1
-        with threadpool_limits(limits=1), progress_bar(progress, len(paths)) as bar:
+        with threadpool_limits(limits=1):
             if processes > 1:
-                replay_side_by_side(work, paths, processes, writer, bar)
+                replay_side_by_side(work, paths, processes, writer, progress)
             else:
-                for path in paths:
-                    work.run(path, bar.begin(path.name))
+                with progress_bar(progress, len(paths)) as bars:
+                    for path in paths:
+                        work.run(path, bars.begin(path.name))
     result = _result(work, paths, time.perf_counter() - began)
     if summary_path is not None:
         try:

@@ -4,6 +4,7 @@ So none has to wait for the one before it, and what comes out is the same as one
 """
 
 import os
+import sys
 from collections.abc import Callable, Sequence
 from concurrent.futures import Future, ProcessPoolExecutor, wait
 from contextlib import suppress
@@ -16,11 +17,13 @@ from threadpoolctl import threadpool_limits
 from tracker.logs import LogError, LogReader, LogWriter
 from tracker.snapshots import START
 
-from .progress import Bars
+from .progress import progress_bar
 from .rerun import Replay
 
 # Bytes in logs beside the largest from which a second process is worth its start, which takes about as long.
 WORTH = 30_000_000
+# A fork has all that is imported already; elsewhere system libraries do not outlive one.
+START_METHOD = "fork" if sys.platform == "linux" else "spawn"
 # Time between two looks at how far the processes are, s.
 LOOK_S = 0.2
 
@@ -56,7 +59,7 @@ def processes_for(paths: Sequence[Path]) -> int:
 
 
 def replay_side_by_side(
-    work: Replay, paths: Sequence[Path], processes: int, writer: LogWriter | None, bars: Bars
+    work: Replay, paths: Sequence[Path], processes: int, writer: LogWriter | None, progress: bool
 ) -> None:
     """Replay logs that do not need one another under their own settings.
 
@@ -68,29 +71,31 @@ def replay_side_by_side(
     processes : int
     writer : LogWriter or None
         Takes what would have been published, in the order of the logs.
-    bars : Bars
-        Shows progress.
+    progress : bool
+        Whether to show progress.
 
     Raises
     ------
     LogError, OfflineError, SettingsError
         Of the first log, in their order, that cannot be replayed.
     """
-    context = get_context("spawn")
+    context = get_context(START_METHOD)
     done: SynchronizedArray[int] = context.Array("Q", len(paths))
-    advanced = [bars.begin(path.name) for path in paths]
     sizes = [path.stat().st_size for path in paths]
     with ProcessPoolExecutor(processes, context, _begin, (done,)) as pool:
+        # The processes start here, before the thread that draws the bars: forked with it they might wait for its locks.
         parts = [pool.submit(_replay, number, path, writer is not None) for number, path in enumerate(paths)]
         try:
-            for part in parts:
-                found, blocks = _awaited(part, lambda: _show(advanced, done, sizes))
-                work.join(found)
-                _write(writer, blocks)
+            with progress_bar(progress, len(paths)) as bars:
+                advanced = [bars.begin(path.name) for path in paths]
+                for part in parts:
+                    found, blocks = _awaited(part, lambda: _show(advanced, done, sizes))
+                    work.join(found)
+                    _write(writer, blocks)
+                _show(advanced, done, sizes)
         except BaseException:
             pool.shutdown(wait=False, cancel_futures=True)
             raise
-        _show(advanced, done, sizes)
 
 
 def _begin(done: "SynchronizedArray[int]") -> None:
