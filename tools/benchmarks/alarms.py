@@ -60,9 +60,10 @@ def _count(frames: int, receivers: int, wanted: int, blocks: int) -> int:
     settled = max(SETTLED, 4 * link.elements // frames)
     for number in range(settled + blocks):
         fit = estimator.update([Frames.of(link.burst(number, link.states(frames)))])
+        readings = estimator.readings()
         if number < 100:
             continue
-        if monitor.update(fit.readings, fit.elapsed_s):
+        if monitor.update(readings, fit.elapsed_s):
             alarms += number >= settled
             monitor.clear()
     return alarms

@@ -17,7 +17,7 @@ from .admission import Admission
 from .burst import Burst
 from .config import Config
 from .detection.changes import Verdict
-from .detection.drift import DriftMonitor, Suspicion
+from .detection.drift import DriftMonitor, Reading, Suspicion
 from .detection.innovation import DIRECT, INNOVATION
 from .detection.reaction import HARMLESS, react
 from .detection.standing import DIRECT_MOVED, SURFACE_MOVED
@@ -270,7 +270,7 @@ class Tracker:
 
     def _judge_elements(self, health: Health, burst: Burst, fit: Fit) -> list[Event]:
         """See whether elements follow their bits; return an alarm when some are newly found not to."""
-        if self._estimator.reception.lock is not Lock.LOCKED or float(fit.ratio.mean()) > WORST_FIT:
+        if self._estimator.reception.lock is not Lock.LOCKED or fit.mean_ratio > WORST_FIT:
             health.begin(None)
             return []
         if not health.due(burst.frames - fit.left_out, fit.elapsed_s):
@@ -289,13 +289,13 @@ class Tracker:
         stand = Stand(burst.run, burst.seq, burst.end_ns)
         following = self._estimator.reception.following
         alarms: list[Event] = [lock_alarm(one, following[one].quality, KEPT, stand) for one in fit.lost]
-        suspicion = self._follow_drift(fit)
+        suspicion = self._follow_drift(fit, self._estimator.readings())
         answer = self._answer(suspicion, burst.frames) if suspicion else None
         if suspicion and answer:
             alarms.append(drift_alarm(suspicion, *answer, stand))
         return alarms
 
-    def _follow_drift(self, fit: Fit) -> Suspicion | None:
+    def _follow_drift(self, fit: Fit, readings: Sequence[Reading]) -> Suspicion | None:
         """Move through the lifecycle; return a change that calls for an alarm."""
         if fit.elapsed_s > SILENCE_TIME_CONSTANTS * self._config.time_constant_s and self._mode is Mode.TRACKING:
             self._mode = after(self._mode, Happening.SILENCE)
@@ -303,13 +303,12 @@ class Tracker:
         if fit.lost:
             self._mode = after(self._mode, Happening.CHANGE)
             self._start_over()
-        ratio = float(fit.ratio.mean())
-        if self._frames_since >= self._estimator.ready_after and ratio < WORST_FIT:
+        if self._frames_since >= self._estimator.ready_after and fit.mean_ratio < WORST_FIT:
             self._mode = after(self._mode, Happening.READY)
         if self._mode is not Mode.TRACKING:
             return None
         suspicions = []
-        for one in self._drift.update(fit.readings, fit.elapsed_s):
+        for one in self._drift.update(readings, fit.elapsed_s):
             if one.change.up or one.name not in MISFITS:
                 suspicions.append(one)
             else:

@@ -1,7 +1,7 @@
 """From frames to channel estimate: delay basis, noise, prior, least squares, shrinkage, in this order."""
 
+import math
 from collections.abc import Mapping, Sequence
-from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -110,10 +110,18 @@ class Estimator:
             self._end_ns = int(together.time_ns[0])
             self._bank = self._begin(together.patterns, self.reception.first(together))
         if not self.reception.following:
-            return replace(self._take(self._bank, together), readings=self._readings())
+            return self._take(self._bank, together)
         # Over a long time phases do not turn evenly: each stretch is followed by itself.
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
-        return replace(Fit.together(fits), readings=self._readings())
+        return Fit.together(fits)
+
+    def readings(self) -> list[Reading]:
+        """Give samples of the statistics under watch from the block just taken."""
+        chosen = self._learned()
+        readings = self._innovations.readings(chosen.direct)
+        readings += self._past.readings(chosen.coefficients, self.reception.noise_power)
+        readings += self.reception.readings()
+        return readings
 
     def _begin(self, patterns: NDArray[np.uint8], outputs: NDArray[np.complex128]) -> Bank:
         """Start from the first frames, (B, bytes) and (B, R Q): how strong the paths may be."""
@@ -137,7 +145,7 @@ class Estimator:
         outputs, changed = self.reception.take(taken)
         if changed is not None:
             amplitude = np.repeat(np.sqrt(changed), self.reception.directions)
-            bank.rescale(amplitude, float(np.exp(np.log(changed).mean())))
+            bank.rescale(amplitude, math.prod(changed.tolist()) ** (1.0 / changed.size))
         sounded = bank.sound(taken.patterns, self._aperture)
         frames, end_ns = outputs.shape[0], int(taken.time_ns[-1])
         elapsed_s = max(end_ns - self._end_ns, 0) / 1e9
@@ -353,11 +361,3 @@ class Estimator:
     def _fits(self, chosen: Filter, sounded: Sounded, outputs: NDArray[np.complex128]) -> bool:
         error = outputs - chosen.predict(sounded)
         return bool(np.vdot(error, error).real / error.size < FITS * self._innovations.variance)
-
-    def _readings(self) -> tuple[Reading, ...]:
-        """Give samples of what is under watch from the block just taken."""
-        chosen = self._learned()
-        readings = self._innovations.readings(chosen.direct)
-        readings += self._past.readings(chosen.coefficients, self.reception.noise_power)
-        readings += self.reception.readings()
-        return tuple(readings)

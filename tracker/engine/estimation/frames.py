@@ -7,7 +7,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..burst import Burst
-from ..detection.drift import Reading
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -80,8 +79,6 @@ class Fit:
         Receivers whose lock was lost at this block.
     left_out : int
         Frames that a receiver had to leave out, being without lock.
-    readings : tuple of Reading
-        Samples of the statistics under watch, see `Estimator.watched`.
     """
 
     ratio: NDArray[np.float64]
@@ -90,11 +87,18 @@ class Fit:
     error: float
     lost: tuple[int, ...] = ()
     left_out: int = 0
-    readings: tuple[Reading, ...] = ()
+
+    @property
+    def mean_ratio(self) -> float:
+        """`ratio`, mean over the receivers: few, so that plain numbers are the fastest."""
+        ratios: list[float] = self.ratio.tolist()
+        return sum(ratios) / len(ratios)
 
     @classmethod
     def together(cls, fits: Sequence["Fit"]) -> "Fit":
-        """Put fits of one part after the other into one, without readings: those belong to each part."""
+        """Put fits of one part after the other into one."""
+        if len(fits) == 1:
+            return fits[0]
         degrees = sum(fit.degrees for fit in fits)
         return cls(
             ratio=np.asarray(sum(fit.ratio * fit.degrees for fit in fits) / degrees),

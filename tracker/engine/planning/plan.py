@@ -195,7 +195,7 @@ class Planner:
         if not settled or situation.time_constant_s != self._time_constant_s:
             self._found = self._expected = 0.0
             self._time_constant_s = situation.time_constant_s
-        ratio = float(fit.ratio.mean())
+        ratio = fit.mean_ratio
         if not settled or ratio <= 0:
             return
         keep = math.exp(-situation.frames / MEMORY_FRAMES)
