@@ -64,9 +64,10 @@ class BlockRls:
         self._dtype = np.complex128 if complex_regressors else np.float64
         self._covariance = np.asfortranarray(np.diag(self._prior).astype(self._dtype))
         self.coefficients: Complex = np.zeros((self.size, outputs), dtype=np.complex128)
-        self.whitener: NDArray[Any] = np.ones((0, 0))  # L⁻¹ of the last update
-        # Room for P⁻Zᴴ, kept: memory fresh from the system costs a tenth of the update.
+        self.whitener: NDArray[Any] = np.ones((0, 0))  # L⁻¹ of the last update; the next one overwrites it
+        # Room for P⁻Zᴴ and S, kept: memory fresh from the system costs a tenth of the update.
         self._gain = np.zeros((self.size, 0), dtype=self._dtype, order="F")
+        self._spread = np.zeros((0, 0), dtype=self._dtype, order="F")
         self._factors = (1.0, 0.0)  # (a, b): P is a · stored + b · prior; b gathers between updates
 
     @property
@@ -132,6 +133,7 @@ class BlockRls:
         a = self._add_prior()
         if self._gain.shape[1] != z.shape[0]:
             self._gain = np.zeros((self.size, z.shape[0]), dtype=self._dtype, order="F")
+            self._spread = np.zeros((z.shape[0], z.shape[0]), dtype=self._dtype, order="F")
         gain = self._times_covariance(a, z, self._gain)  # P⁻Zᴴ, (n, B)
         whitener = self.whitener = self._whitener(z, gain)
         gain = self._times_adjoint(gain, whitener)  # Xᴴ = P⁻Zᴴ L⁻ᴴ
@@ -204,12 +206,12 @@ class BlockRls:
 
     def _whitener(self, z: NDArray[Any], gain: NDArray[Any]) -> NDArray[Any]:
         """Compute L⁻¹ of S = I + Z P⁻ Zᴴ = L Lᴴ; multiplying by the inverse is faster than solving n times."""
-        frames = z.shape[0]
-        spread = np.empty((frames, frames), dtype=self._dtype, order="F")
-        # S is symmetric and only its lower triangle is read: strips of it leave out most of the upper one.
+        frames, spread = z.shape[0], self._spread
+        # S is symmetric and only its lower triangle is read: strips of it leave out most of the upper one. Transposed
+        # they are written where they belong, without a copy.
         for start in range(0, frames, STRIP):
             strip = slice(start, start + STRIP)
-            spread[start:, strip] = z[start:] @ gain[:, strip]
+            np.matmul(gain[:, strip].T, z[start:].T, out=spread.T[strip, start:])
         spread.ravel(order="K")[:: frames + 1] += 1.0
         factor, invert = (lapack.zpotrf, lapack.ztrtri) if self._complex else (lapack.dpotrf, lapack.dtrtri)
         lower, info = factor(spread, lower=1, clean=1, overwrite_a=1)
