@@ -158,7 +158,7 @@ def slow_bench() -> Case:
         "N 256, still, 20 frames/s in bursts of 4, 0 dB, wandering 5 Hz",
         0.95,
         0.99,
-        20_000.0,
+        60_000.0,
         snr_db=0.0,
         oscillator=Oscillator(0.0, 0.0, 5.0),
         seconds=60.0,
