@@ -30,7 +30,8 @@ from .lifecycle import Happening, after
 from .oscillators.following import KEPT, Lock
 from .planning.plan import Planner, Situation
 from .publishing.calibration import Calibration
-from .publishing.refresh import Refresher, rate_spread
+from .publishing.expectation import expectation
+from .publishing.refresh import Refresher
 from .publishing.report import Counts, Link, Stand, drift_alarm, elements_alarm, gap_alarm, lock_alarm, states
 from .refusal import Reason
 from .search.budget import Budget
@@ -202,13 +203,11 @@ class Tracker:
             channel.surface[self._health.silent] = 0.0
         self._refresher.hear(bursts[-1].run, bursts[-1].pattern_id, len(bursts))
         link = self._link(channel, bursts[-1].pattern_id, frames)
-        self._calibration.observe(link.pattern, link.measured)
+        self._calibration.observe(link.pattern, link.measured, link.frames)
         link = replace(link, promise_kept=self._calibration.kept_share)
         pattern, steps = self._consider(channel, link, len(bursts), budget, stand)
         if pattern:
-            spread = rate_spread(channel, pattern.states, self._estimator.variance(pattern.states))
-            promised = self._calibration.promise(pattern.id, pattern.rate, spread)
-            events.append(replace(pattern, rate_low=promised))
+            events.append(self._promised(channel, pattern))
         if self._planner is not None and (plan := self._plan(self._planner, channel, fit, frames, stand)):
             events.append(plan)
         noise, time_constant_s = self._estimator.reception.noise_power.tolist(), self._estimator.time_constant_s
@@ -367,6 +366,16 @@ class Tracker:
             self._pending_cause = None
         return pattern, steps
 
+    def _promised(self, channel: Channel, pattern: Pattern) -> Pattern:
+        """Complete a pattern by the rates that are to be expected, and the one that is promised."""
+        expected = expectation(channel, pattern.states, self._estimator.doubt(pattern.states))
+        promised = self._calibration.promise(pattern.id, expected, acquiring=self._mode is Mode.ACQUIRING)
+        replaced, before = self._refresher.states(pattern.id - 1), 0.0
+        if replaced is not None:
+            before = expectation(channel, replaced, self._estimator.doubt(replaced)).rate
+        bound = max(pattern.rate_bound, expected.rate)
+        return replace(pattern, rate=expected.rate, rate_low=promised, rate_before=before, rate_bound=bound)
+
     def _plan(
         self, planner: Planner, channel: Channel, fit: Fit, frames: Sequence[Frames], stand: Stand
     ) -> Plan | None:
@@ -405,6 +414,6 @@ class Tracker:
         sounded = Frames.together([part.showing(packed) for part in frames])
         measured = None
         if sounded.time_ns.size:
-            measured = float(np.log2(1.0 + self._estimator.reception.powers(sounded)).mean())
+            measured = self._estimator.reception.rate(sounded)
         predicted = rate(channel, chosen) if self._estimator.reception.lock is not Lock.LOST else None
-        return Link(in_use, measured, predicted, *self._estimator.reception.phase)
+        return Link(in_use, measured, predicted, *self._estimator.reception.phase, frames=sounded.time_ns.size)

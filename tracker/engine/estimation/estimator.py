@@ -25,7 +25,7 @@ from .frames import Fit, Frames
 from .noise import energy
 from .prior import prior_variances
 from .reception import Reception
-from .shrinkage import Shrinkage
+from .shrinkage import Doubt, Shrinkage
 from .sounded import Sounded
 
 # Frames worked off in one step of the block filter; more would only make the B × B part dear.
@@ -105,7 +105,7 @@ class Estimator:
         """
         together = Frames.together(bursts)
         self._past.begin()
-        self._shrinkage.count_block()
+        self._shrinkage.count_block(together.time_ns.size / self.ready_after)
         if self._bank is None:
             self._end_ns = int(together.time_ns[0])
             self._bank = self._begin(together.patterns, self.reception.first(together))
@@ -208,6 +208,11 @@ class Estimator:
         """Variance of each delay coefficient of the response under a pattern, in units of the noise."""
         regressor = self._aperture.regressors(states.astype(np.float64)[None, :])
         return self._learned().predicted_variance(regressor[0])
+
+    def doubt(self, states: NDArray[np.int8]) -> Doubt:
+        """Say what is left open of the response under a pattern, in the channel last given."""
+        prior = float(self._learned().prior[1:].sum())
+        return self._shrinkage.doubt(self.variance(states), prior, self._config.receivers * self.reception.directions)
 
     def loosen(self, share: float) -> None:
         """Let what was known count for less: P goes the given share of the way back to the prior."""

@@ -1,5 +1,6 @@
 """Reception: from responses on the tones to outputs on the delay basis, in units of the noise, each delay in place."""
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -99,12 +100,18 @@ class Reception:
         self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
         return outputs
 
-    def powers(self, frames: Frames) -> NDArray[np.float64]:
-        """|H|² in units of the noise, unbiased, shape (R, K): the mean over frames."""
+    def rate(self, frames: Frames) -> float:
+        """Rate heard on frames of one pattern, bit/s/Hz: the mean over receivers and tones of log2(1 + |H|²).
+
+        Noise adds its power b to |H|², which is taken off, and leaves a variance u = b (b + 2 |H|²) / B in the mean of
+        B frames. The logarithm bends down, so that this would lower the rate by u / (2 (1 + |H|²)²); it is put back.
+        """
         tones = self._project(frames)[1] @ self._delay.T
-        bias = (np.abs(self._delay) ** 2).sum(axis=1)
-        power = (np.abs(tones) ** 2).mean(axis=0) / self._noise.power[:, None] - bias
-        return np.asarray(np.maximum(power, 0.0))
+        noise = (np.abs(self._delay) ** 2).sum(axis=1)
+        power = (np.abs(tones) ** 2).mean(axis=0) / self._noise.power[:, None] - noise
+        power = np.maximum(power, 0.0)
+        lowered = noise * (noise + 2.0 * power) / (2.0 * tones.shape[0] * (1.0 + power) ** 2)
+        return float((np.log(1.0 + power) + lowered).mean()) / math.log(2.0)
 
     def readings(self) -> list[Reading]:
         """Give samples of the noise heard since the last call: one a receiver, and one of single tones."""

@@ -6,6 +6,7 @@ moment is signal plus known estimation noise, and the posterior under the varian
 This is the empirical Bayes estimator of Efron & Morris (Biometrika 59, 1972) for the rows of a matrix.
 """
 
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -29,7 +30,7 @@ def shrink(surface: Complex, posterior: float, prior: float) -> Complex:
     is v̂ = (1 − p/p₀)(v + noise). Let a direction truly have variance α p₀: its mean |v̂|² is
     (1 − p/p₀)² (α p₀ + p_d), which gives α; its estimate under prior α p₀ is v̂ / (1 + (p/p₀)(1/α − 1)). A direction
     stronger than the prior would be raised by this; it is left as it is: p is a mean over all patterns, and what
-    the patterns in use show is known far better than that.
+    the patterns in use show is known far better than that. For one pattern see `Shrinkage.doubt`.
 
     Parameters
     ----------
@@ -43,8 +44,61 @@ def shrink(surface: Complex, posterior: float, prior: float) -> Complex:
     ndarray of complex, shape (N, D)
         Never the array given.
     """
-    factors = _factors(surface, posterior / prior, prior)
-    return surface.copy() if factors is None else np.asarray(surface @ factors)
+    found = _Directions.of(surface, posterior / prior, prior)
+    return surface.copy() if found is None else np.asarray(surface @ found.factors)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Doubt:
+    """What there is to say of the response under one pattern beyond its estimate.
+
+    Parameters
+    ----------
+    raised : ndarray of complex, shape (D, D)
+        By which the surface's part of the estimated response, a row, is to be multiplied for its mean.
+    covariance : ndarray of complex, shape (D, D)
+        E[conj(e) eᵀ] of the errors e that are left.
+    """
+
+    raised: Complex
+    covariance: Complex
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Directions:
+    """Directions of the delay space, by how much of the surface they hold.
+
+    Parameters
+    ----------
+    vectors : ndarray of complex, shape (D, D)
+        Orthonormal, in columns.
+    factor : ndarray, shape (D,)
+        By which the rows of the estimate are shrunk along each.
+    strength : ndarray, shape (D,)
+        Variance along each over that of the prior, no less than 1.
+    factors : ndarray of complex, shape (D, D)
+        The shrinking as a matrix.
+    """
+
+    vectors: Complex
+    factor: NDArray[np.float64]
+    strength: NDArray[np.float64]
+    factors: Complex
+
+    @classmethod
+    def of(cls, surface: Complex, rest: float, prior: float) -> "_Directions | None":
+        """Find them, given posterior over prior; None where too little has been learned."""
+        if rest > HARDLY_LEARNED:
+            return None
+        learned = 1.0 - rest
+        moment = (surface.conj().T @ surface) / surface.shape[0]
+        values, vectors = np.linalg.eigh(moment)
+        alpha = np.maximum(values / (learned * learned * prior) - rest / learned, EMPTIEST)
+        factor = np.minimum(1.0 / (1.0 + rest * (1.0 / alpha - 1.0)), 1.0)
+        # While only part of the directions over elements has been sounded, α above exaggerates what stands out by
+        # 1 / learned; this errs to the side of the prior.
+        strength = np.maximum(values / (learned * prior), 1.0)
+        return cls(vectors, factor, strength, np.asarray((vectors * factor) @ vectors.conj().T))
 
 
 class Shrinkage:
@@ -55,40 +109,63 @@ class Shrinkage:
 
     def forget(self) -> None:
         """Find the directions anew: the estimate began anew."""
-        self._factors: Complex | None = None
+        self._found: _Directions | None = None
         self._rest = 0.0  # posterior over prior when they were found
         self._blocks = 0  # since then
+        self._sweeps = 0.0  # since the estimate began
 
-    def count_block(self) -> None:
-        """Say that the estimate has taken in a block."""
+    def count_block(self, sweeps: float) -> None:
+        """Say that the estimate is to take in a block of so many sweeps, a sweep being a frame for each unknown."""
         self._blocks += 1
+        self._sweeps += sweeps
 
     def apply(self, surface: Complex, posterior: float, prior: float) -> Complex:
         """Do as `shrink` does, with directions that may be some blocks old."""
         rest = posterior / prior
-        if self._factors is None or self._blocks >= BLOCKS or abs(rest - self._rest) > MOVED * self._rest:
-            self._factors, self._rest, self._blocks = _factors(surface, rest, prior), rest, 0
-        return surface.copy() if self._factors is None else np.asarray(surface @ self._factors)
+        if self._found is None or self._blocks >= BLOCKS or abs(rest - self._rest) > MOVED * self._rest:
+            self._found, self._rest, self._blocks = _Directions.of(surface, rest, prior), rest, 0
+        return surface.copy() if self._found is None else np.asarray(surface @ self._found.factors)
+
+    def doubt(self, posterior: float, prior: float, size: int) -> Doubt:
+        """Say what is left open of the response under a pattern, after `apply`.
+
+        Along a direction of variance α p₀ the prior variance of the response under a pattern is α times what the
+        estimator took it for. Its posterior mean and variance, those of one unknown heard in noise, become r times
+        what they were, r = 1 / (1 + (p/p₀)(1/α − 1)), with p and p₀ those of this very pattern. For α ≤ 1 this has
+        been done to the estimate already. An estimate that forgets does so in its variance alone: what the first
+        sweep took back, later ones bring, however large p stays; so p counts for less with every sweep.
+
+        Parameters
+        ----------
+        posterior, prior : float
+            Variance of a delay coefficient of the response under the pattern, and before any data.
+        size : int
+            D.
+        """
+        if self._found is None:
+            unchanged = np.eye(size, dtype=np.complex128)
+            return Doubt(unchanged, posterior * unchanged)
+        found, rest = self._found, min(posterior / prior, 1.0) / max(self._sweeps, 1.0)
+        raised = 1.0 / (1.0 + rest * (1.0 / found.strength - 1.0))
+        adjoint = found.vectors.conj().T
+        return Doubt(
+            np.asarray((found.vectors * raised) @ adjoint),
+            np.asarray((found.vectors * (posterior * found.factor * raised)) @ adjoint),
+        )
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
-        factors = self._factors.copy() if self._factors is not None else None
-        return {"factors": factors, "rest": self._rest, "blocks": self._blocks}
+        found = self._found
+        return {
+            "found": [found.vectors, found.factor, found.strength, found.factors] if found is not None else None,
+            "rest": self._rest,
+            "blocks": self._blocks,
+            "sweeps": self._sweeps,
+        }
 
     def load(self, snapshot: dict[str, Any]) -> None:
         """Take over a snapshot."""
-        factors = snapshot["factors"]
-        self._factors = np.array(factors, dtype=np.complex128) if factors is not None else None
+        found = snapshot["found"]
+        self._found = _Directions(*(np.array(each) for each in found)) if found is not None else None
         self._rest, self._blocks = float(snapshot["rest"]), int(snapshot["blocks"])
-
-
-def _factors(surface: Complex, rest: float, prior: float) -> Complex | None:
-    """Matrix (D, D) by which rows are shrunk, given posterior over prior; None where too little has been learned."""
-    if rest > HARDLY_LEARNED:
-        return None
-    learned = 1.0 - rest
-    moment = (surface.conj().T @ surface) / surface.shape[0]
-    values, vectors = np.linalg.eigh(moment)
-    alpha = np.maximum(values / (learned * learned * prior) - rest / learned, EMPTIEST)
-    factor = np.minimum(1.0 / (1.0 + rest * (1.0 / alpha - 1.0)), 1.0)
-    return np.asarray((vectors * factor) @ vectors.conj().T)
+        self._sweeps = float(snapshot["sweeps"])

@@ -4,11 +4,17 @@ Each published pattern promises a rate that it meets with probability 0.95. What
 promise is right only when the model is; so the margin, in spreads, is moved after every promise: up when it was
 broken, down when it was kept, such that in the long run one in twenty is broken whatever the model gets wrong
 (adaptive conformal inference: Gibbs & Candès, NeurIPS 2021; stochastic approximation of a quantile: Robbins & Monro
-1951).
+1951). While the tracker acquires, models are wrong in other ways than later, so it has a margin of its own then.
+
+A promise is for the time that the pattern is in force, and is settled by the mean of what was measured in that time:
+when another pattern takes its place, or as soon as the measurement is so exact that more would change nothing.
 """
 
 from collections import deque
+from dataclasses import astuple, dataclass
 from typing import Any
+
+from .expectation import Expectation
 
 KEPT_SHARE = 0.95
 # One-sided 95 % point of the normal distribution: right from the start when the model is.
@@ -17,18 +23,33 @@ FIRST_MARGIN = 1.645
 STEP = 0.4
 # Bounds of the margin: a promise never exceeds the prediction by much, and one wild outlier cannot ruin it for long.
 LEAST_MARGIN, MOST_MARGIN = -3.0, 30.0
-# A spread is taken to be at least this share of the rate: below it, measuring is no more exact than predicting.
-LEAST_SPREAD = 0.005
+# A spread is taken to be at least this share of the rate: no model is more exact.
+LEAST_SPREAD = 0.003
+# A measurement whose standard deviation is at most this share of the spread settles a promise.
+EXACT = 0.25
+# Promises open at a time: patterns published before the controller shows the first of them.
+MOST_OPEN = 16
 # Promises remembered for the share that is shown.
 REMEMBERED = 200
 
 
+@dataclass(slots=True)
+class _Promise:
+    """A promise, and what was measured of it so far."""
+
+    low: float
+    enough: float  # frames that settle it
+    acquiring: bool
+    frames: int = 0
+    total: float = 0.0  # of the rates measured on them
+
+
 class Calibration:
-    """The margin between prediction and promise."""
+    """The margins between prediction and promise."""
 
     def __init__(self) -> None:
-        self.margin = FIRST_MARGIN
-        self._open: tuple[int, float] | None = None  # the pattern promised last, and its promise
+        self._margins = {True: FIRST_MARGIN, False: FIRST_MARGIN}  # by whether the tracker acquires
+        self._open: dict[int, _Promise] = {}  # by the id of the pattern, in order
         self._kept: deque[bool] = deque(maxlen=REMEMBERED)
 
     @property
@@ -36,37 +57,75 @@ class Calibration:
         """Share of the last promises that were kept; None before any was put to the test."""
         return sum(self._kept) / len(self._kept) if self._kept else None
 
-    def promise(self, pattern: int, rate: float, spread: float) -> float:
+    def promise(self, pattern: int, expected: Expectation, *, acquiring: bool) -> float:
         """Return the rate promised for a pattern, and remember it.
 
         Parameters
         ----------
         pattern : int
             Its id.
-        rate, spread : float
-            Predicted rate and its standard deviation, bit/s/Hz.
+        expected : Expectation
+            Of its rate.
+        acquiring : bool
+            Whether the tracker has yet to find the channel.
         """
-        low = min(max(rate - self.margin * max(spread, LEAST_SPREAD * rate), 0.0), rate)
-        self._open = (pattern, low)
+        rate, spread = expected.rate, max(expected.spread, LEAST_SPREAD * expected.rate)
+        low = min(max(rate - self._margins[acquiring] * spread, 0.0), rate)
+        enough = (expected.frame_spread / (EXACT * spread)) ** 2 if spread > 0.0 else 1.0
+        self._open[pattern] = _Promise(low, enough, acquiring)
+        if len(self._open) > MOST_OPEN:
+            self._settle(min(self._open))
         return low
 
-    def observe(self, pattern: int | None, rate: float | None) -> None:
-        """Take the rate measured under the pattern in use; the first one settles its promise."""
-        if rate is None or self._open is None or pattern != self._open[0]:
+    def observe(self, pattern: int | None, rate: float | None, frames: int) -> None:
+        """Take the rate measured under the pattern in use, on so many frames.
+
+        Parameters
+        ----------
+        pattern : int or None
+            Id of the pattern in use; all before it have been replaced.
+        rate : float or None
+            None when it was not sounded.
+        frames : int
+        """
+        if pattern is None:
             return
-        kept = rate >= self._open[1]
-        self._open = None
-        self._kept.append(kept)
-        moved = -STEP * (1.0 - KEPT_SHARE) if kept else STEP * KEPT_SHARE
-        self.margin = min(max(self.margin + moved, LEAST_MARGIN), MOST_MARGIN)
+        for replaced in [one for one in self._open if one < pattern]:
+            self._settle(replaced)
+        promise = self._open.get(pattern)
+        if promise is None or rate is None:
+            return
+        promise.frames += frames
+        promise.total += frames * rate
+        if promise.frames >= promise.enough:
+            self._settle(pattern)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
-        return {"margin": self.margin, "open": list(self._open) if self._open else None, "kept": list(self._kept)}
+        return {
+            "margins": [self._margins[True], self._margins[False]],
+            "open": [[pattern, *astuple(promise)] for pattern, promise in self._open.items()],
+            "kept": list(self._kept),
+        }
 
     def load(self, snapshot: dict[str, Any]) -> None:
         """Take over a snapshot."""
-        self.margin = float(snapshot["margin"])
-        promised = snapshot["open"]
-        self._open = (int(promised[0]), float(promised[1])) if promised else None
+        acquiring, tracking = snapshot["margins"]
+        self._margins = {True: float(acquiring), False: float(tracking)}
+        self._open = {}
+        for pattern, low, enough, is_acquiring, frames, total in snapshot["open"]:
+            self._open[int(pattern)] = _Promise(
+                float(low), float(enough), bool(is_acquiring), int(frames), float(total)
+            )
         self._kept = deque((bool(kept) for kept in snapshot["kept"]), maxlen=REMEMBERED)
+
+    def _settle(self, pattern: int) -> None:
+        """Close a promise; what was never measured teaches nothing."""
+        promise = self._open.pop(pattern)
+        if not promise.frames:
+            return
+        kept = promise.total >= promise.low * promise.frames
+        self._kept.append(kept)
+        moved = -STEP * (1.0 - KEPT_SHARE) if kept else STEP * KEPT_SHARE
+        margin = self._margins[promise.acquiring] + moved
+        self._margins[promise.acquiring] = min(max(margin, LEAST_MARGIN), MOST_MARGIN)

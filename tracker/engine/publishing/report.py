@@ -55,6 +55,8 @@ class Link:
         Phase of the direct and of the surface path.
     promise_kept : float or None
         Share of the last promises that were kept.
+    frames : int
+        Frames that `measured` rests on.
     """
 
     pattern: int | None
@@ -63,6 +65,7 @@ class Link:
     offset_hz: float = 0.0
     phase_rad: tuple[float, float] = (0.0, 0.0)
     promise_kept: float | None = None
+    frames: int = 0
 
 
 def drift_alarm(suspicion: Suspicion, verdict: Verdict, action: str, stand: Stand) -> Alarm:
