@@ -213,11 +213,28 @@ def _rows(case: Case, seeds: range) -> Iterator[Row]:
     )
 
 
+@dataclass(frozen=True, slots=True)
+class Begun:
+    """A run that is set up: testbed, engine, when it begins, how many bursts it is, and how many a second."""
+
+    bed: Testbed
+    engine: EngineInLoop
+    start_ns: int
+    count: int
+    pace: float
+
+
 def play(case: Case, seed: int) -> tuple[float, float]:
     """Play one run; give the rate of the pattern in force over the best, and the predicted rate over the achieved."""
+    run = begin(case, seed, seed)
+    return _run(case, run.bed, run.engine, run.start_ns, run.count)
+
+
+def begin(case: Case, seed: int, place: int) -> Begun:
+    """Set up a run, from a place in the lane 2 m further north for each number."""
     length = case.speed * case.seconds
     first_s = length * (1.0 / LEARNED_AT + 1.0 / BACK_AT) if case.basis == "learned" else 0.0
-    scene = _scene(case, seed, length)
+    scene = _scene(case, place, length)
     frames = TestbedConfig(scene, frames=case.frames, frame_ns=case.frame_ns)
     pace = 1e9 / (case.frames * case.frame_ns)
     scenario = Scenario("moving", case.name, frames, pace, case.time_constant_ms, follow_phase=True)
@@ -232,7 +249,7 @@ def play(case: Case, seed: int) -> tuple[float, float]:
             spacing_mm = 500.0 * 299_792_458.0 / scene.carrier_hz
             text = text.replace("[panel]", f"[panel]\nspacing_mm = {spacing_mm}") + REGION
         engine = EngineInLoop(parse(text), folder)
-    return _run(case, bed, engine, START_NS + round(1e9 * first_s), round(case.seconds * pace))
+    return Begun(bed, engine, START_NS + round(1e9 * first_s), round(case.seconds * pace), pace)
 
 
 def _scene(case: Case, seed: int, length: float) -> SceneConfig:

@@ -370,9 +370,8 @@ class Tracker:
         """Complete a pattern by the rates that are to be expected, and the one that is promised."""
         expected = expectation(channel, pattern.states, self._estimator.doubt(pattern.states))
         promised = self._calibration.promise(pattern.id, expected, acquiring=self._mode is Mode.ACQUIRING)
-        replaced, before = self._refresher.states(pattern.id - 1), 0.0
-        if replaced is not None:
-            before = expectation(channel, replaced, self._estimator.doubt(replaced)).rate
+        # What is to be put back of the estimate is put back for the pattern replaced as well.
+        before = pattern.rate_before * (expected.rate / pattern.rate if pattern.rate > 0.0 else 1.0)
         bound = max(pattern.rate_bound, expected.rate)
         return replace(pattern, rate=expected.rate, rate_low=promised, rate_before=before, rate_bound=bound)
 

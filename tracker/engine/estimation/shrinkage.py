@@ -133,7 +133,9 @@ class Shrinkage:
         estimator took it for. Its posterior mean and variance, those of one unknown heard in noise, become r times
         what they were, r = 1 / (1 + (p/p₀)(1/α − 1)), with p and p₀ those of this very pattern. For α ≤ 1 this has
         been done to the estimate already. An estimate that forgets does so in its variance alone: what the first
-        sweep took back, later ones bring, however large p stays; so p counts for less with every sweep.
+        sweep took back, later ones bring, however large p stays; so p counts for less with every sweep. And what has
+        not been sounded at all leaves p large, but takes nothing back: p/p₀ is taken for no more than one sweep leaves
+        of p₀.
 
         Parameters
         ----------
@@ -145,7 +147,8 @@ class Shrinkage:
         if self._found is None:
             unchanged = np.eye(size, dtype=np.complex128)
             return Doubt(unchanged, posterior * unchanged)
-        found, rest = self._found, min(posterior / prior, 1.0) / max(self._sweeps, 1.0)
+        found, sweeps = self._found, max(self._sweeps, 1.0)
+        rest = min(posterior / prior, 1.0 / (1.0 + prior)) / sweeps
         raised = 1.0 / (1.0 + rest * (1.0 / found.strength - 1.0))
         adjoint = found.vectors.conj().T
         return Doubt(

