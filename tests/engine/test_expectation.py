@@ -71,7 +71,8 @@ def test_what_one_sweep_took_back_is_put_back() -> None:
     """Against the exact conditional mean under the true variances of the delays (multivariate normal conditioning).
 
     One sweep of a Hadamard matrix sounds the elements; least squares believes all delays to have the same variance,
-    while two of eight hold all there is, four times that.
+    while two of eight hold all there is, four times that, and so takes back three tenths of it. Most of that is put
+    back, and no more: how strong the two are is an estimate that errs to the side of the prior.
     """
     rng = np.random.default_rng(5)
     elements, delays, prior = 63, 8, 1.0 / 63
@@ -93,7 +94,7 @@ def test_what_one_sweep_took_back_is_put_back() -> None:
         plain.append((states @ surface)[0].real)
         raised.append((states @ surface @ doubt.raised)[0].real)
     assert np.mean(plain) < 0.75 * np.mean(exact)
-    assert np.mean(raised) == pytest.approx(np.mean(exact), rel=0.06)
+    assert 0.85 * np.mean(exact) < np.mean(raised) < 1.02 * np.mean(exact)
 
 
 @pytest.mark.parametrize("frames", [2, 8])

@@ -88,7 +88,7 @@ class Tracker:
         self._estimator = Estimator(config)
         self._drift = DriftMonitor(config.false_alarm_s, self._estimator.watched)
         self._refresher = Refresher(config, first_id)
-        self._calibration = Calibration()
+        self._calibration = Calibration(in_columns=config.aperture.size < config.elements)
         self._planner = Planner(config, config.plan) if config.plan is not None else None
         self._health: Health | None = None
         if config.panel is not None and isinstance(config.aperture, Elements):
