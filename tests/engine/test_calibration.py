@@ -51,12 +51,12 @@ def test_the_long_run_share_is_off_by_no_more_than_published(seed: int) -> None:
 def test_what_goes_wrong_while_acquiring_leaves_later_promises_alone() -> None:
     """Margins are kept apart: promises broken while acquiring lower the next of their kind, and no other."""
     calibration = Calibration()
-    before = [calibration.promise(number, EXACTLY, acquiring=acquiring) for number, acquiring in enumerate((1, 0))]
+    before = calibration.promise(0, EXACTLY, acquiring=True), calibration.promise(1, EXACTLY, acquiring=False)
     calibration = Calibration()
     for pattern in range(10):
         calibration.promise(pattern, EXACTLY, acquiring=True)
         calibration.observe(pattern, 1.0, 8)
-    after = [calibration.promise(10 + number, EXACTLY, acquiring=acquiring) for number, acquiring in enumerate((1, 0))]
+    after = calibration.promise(10, EXACTLY, acquiring=True), calibration.promise(11, EXACTLY, acquiring=False)
     assert after[0] < before[0]
     assert after[1] == before[1]
 

@@ -42,8 +42,9 @@ class Pattern:
     states : ndarray of int8, shape (N,)
         States +1 and −1.
     rate, rate_low, rate_before, rate_bound : float
-        Predicted rate; the rate expected to be met with probability 0.95; the predicted rate of the pattern
-        replaced, under the same estimate; a rate that no pattern exceeds under the same estimate.
+        Predicted rate; the rate expected to be met with probability 0.95 on the mean over the time in force; the
+        predicted rate of the pattern replaced, under the same estimate; a rate that no pattern exceeds under the same
+        estimate.
     cause : Cause
     steps : int
         Optimizer steps taken.
@@ -101,7 +102,8 @@ class State:
     threshold : float
         Its alarm threshold.
     promise_kept : float or None
-        Share of the last promises (`Pattern.rate_low`) that the measured rate kept; None before any was tested.
+        Share of the last promises (`Pattern.rate_low`) that the mean of the measured rate kept; None before any was
+        tested.
     """
 
     run: int
