@@ -26,6 +26,7 @@ class Reception:
 
     def __init__(self, config: Config) -> None:
         self._delay, self._adjoint = config.delay, np.ascontiguousarray(config.delay.conj())
+        self._noise_kept = (np.abs(config.delay) ** 2).sum(axis=1)  # share of a tone's noise that the basis keeps
         self._frequency_hz = config.frequency_hz
         self._noise = noise.NoiseEstimate(config.receivers)
         self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
@@ -107,8 +108,8 @@ class Reception:
         B frames. The logarithm bends down, so that this would lower the rate by u / (2 (1 + |H|²)²); it is put back.
         """
         tones = self._project(frames)[1] @ self._delay.T
-        noise = (np.abs(self._delay) ** 2).sum(axis=1)
-        power = (np.abs(tones) ** 2).mean(axis=0) / self._noise.power[:, None] - noise
+        noise = self._noise_kept
+        power = (tones.real**2 + tones.imag**2).mean(axis=0) / self._noise.power[:, None] - noise
         power = np.maximum(power, 0.0)
         lowered = noise * (noise + 2.0 * power) / (2.0 * tones.shape[0] * (1.0 + power) ** 2)
         return float((np.log(1.0 + power) + lowered).mean()) / math.log(2.0)

@@ -58,13 +58,14 @@ def expectation(channel: Channel, states: NDArray[np.int8], doubt: Doubt) -> Exp
     powers = heard.real**2 + heard.imag**2
     plain, rate = np.log1p(powers).sum(axis=(1, 2)).tolist()
     blocks = doubt.covariance.reshape(receivers, size, receivers, size)
-    unsure = np.stack([((basis.conj() @ blocks[one, :, one]) * basis).sum(axis=1).real for one in range(receivers)])
+    adjoint = basis.conj()
+    unsure = np.stack([np.einsum("kq,kq->k", adjoint @ blocks[one, :, one], basis).real for one in range(receivers)])
     weight = 1.0 / (1.0 + powers[1] + unsure)
     # E|2 Re(z)|² = 2 E|z|² for z = Σ slope · e.
     slope = ((heard[1].conj() * weight) @ basis).reshape(-1)
     linear = 2.0 * float((slope.conj() @ doubt.covariance @ slope).real)
     # The variance of eᴴ G e is the trace of (G C)², G = Bᴴ diag(w) B, a block a receiver.
-    metric = np.stack([(basis.T * weight[one]) @ basis.conj() for one in range(receivers)])
+    metric = np.stack([(basis.T * weight[one]) @ adjoint for one in range(receivers)])
     product = (metric @ blocks.reshape(receivers, size, -1)).reshape(receivers * size, -1)
     squares = float((product * product.T).sum().real)
     spread = math.sqrt(max(linear + squares, 0.0) + (RAISE_DOUBT * (rate - plain)) ** 2)
