@@ -14,7 +14,7 @@ from tracker.engine.events import Alarm, Event, Pattern, State
 from tracker.engine.health.health import LEFT_OUT
 from tracker.engine.panel import Limits
 from tracker.engine.search.budget import Steps
-from tracker.engine.search.flips import optimize
+from tracker.engine.search.flips import Effort, optimize
 from tracker.engine.tracker import Tracker
 from tracker.settings import parse
 from tracker.simulation.config import SceneConfig
@@ -228,7 +228,7 @@ def test_patterns_leave_out_what_does_not_answer() -> None:
     assert published > 0
     report = last.bed.report(START_NS + 40 * last.bed.burst_ns)
     held = Limits(stuck={each.element: 1 if each.kind == "stuck+" else -1 for each in faults})
-    assert report.rate >= 0.98 * optimize(report.channel, report.states, held, Steps(1000), thorough=True).rate
+    assert report.rate >= 0.98 * optimize(report.channel, report.states, held, Steps(1000), Effort.THOROUGH).rate
 
 
 def test_an_element_that_answers_again_is_taken_back() -> None:

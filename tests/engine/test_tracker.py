@@ -17,7 +17,7 @@ from tracker.engine.events import Alarm, Cause, Event, Mode, Pattern, State
 from tracker.engine.refusal import Reason, Refused
 from tracker.engine.search.budget import Steps
 from tracker.engine.search.channel import Channel
-from tracker.engine.search.flips import optimize
+from tracker.engine.search.flips import Effort, optimize
 from tracker.engine.search.rate import rate
 from tracker.engine.tracker import Tracker
 
@@ -50,7 +50,7 @@ class Link:
 
     def best(self) -> float:
         """Rate with the channel known exactly."""
-        return optimize(self.channel, None, panel.Limits(), Steps(2000), thorough=True).rate
+        return optimize(self.channel, None, panel.Limits(), Steps(2000), Effort.THOROUGH).rate
 
     def burst(self, pattern_id: int | None = None, shown: NDArray[np.int8] | None = None) -> Burst:
         """Sound random patterns, and the one shown in every fourth frame."""

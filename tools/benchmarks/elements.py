@@ -23,7 +23,7 @@ from tracker.engine.events import Pattern, State
 from tracker.engine.health.health import Health
 from tracker.engine.panel import Limits
 from tracker.engine.search.budget import Steps
-from tracker.engine.search.flips import optimize
+from tracker.engine.search.flips import Effort, optimize
 from tracker.settings import parse
 from tracker.simulation.closed_loop import EngineInLoop
 from tracker.simulation.impairments import Fault, Impairments, Interference
@@ -138,7 +138,7 @@ def _rate(seeds: range) -> Row:
         (*_, (_, bed, _)) = play(scenario(faults), seed, 8 * 257)
         report = bed.report(8 * 257 * FRAME_NS)
         held = Limits(stuck={each.element: 1 if each.kind == "stuck+" else -1 for each in faults})
-        best = optimize(report.channel, report.states, held, Steps(BEST_STEPS), thorough=True).rate
+        best = optimize(report.channel, report.states, held, Steps(BEST_STEPS), Effort.THOROUGH).rate
         shares.append(report.rate / max(best, report.rate))
     note = f"worst of {len(shares)} seeds {min(shares):.4f}"
     share = mean(shares)

@@ -18,7 +18,7 @@ from benchmarks.row import Row
 from tracker.engine.panel import Limits
 from tracker.engine.search.budget import Steps
 from tracker.engine.search.channel import Channel
-from tracker.engine.search.flips import Climb, optimize
+from tracker.engine.search.flips import Climb, Effort, optimize
 from tracker.engine.search.one_carrier import one_carrier_optimum, rate_bound
 from tracker.engine.search.rate import rate
 
@@ -39,7 +39,7 @@ def rows(quick: bool) -> Iterator[Row]:
 
 
 def _thorough(link: Channel, steps: int | None = None) -> Climb:
-    return optimize(link, None, Limits(), UNBOUNDED if steps is None else Steps(steps), thorough=True)
+    return optimize(link, None, Limits(), UNBOUNDED if steps is None else Steps(steps), Effort.THOROUGH)
 
 
 def _against_annealing(elements: int, tones: int, receivers: int, channels: int, steps: int) -> Iterator[Row]:
@@ -108,7 +108,7 @@ def _within_deadline(channels: int) -> Iterator[Row]:
             tries = []
             for _ in range(5):
                 begun = time.perf_counter()
-                found = optimize(link, None, Limits(), _Deadline(begun + milliseconds / 1e3), thorough=True)
+                found = optimize(link, None, Limits(), _Deadline(begun + milliseconds / 1e3), Effort.THOROUGH)
                 tries.append((1e3 * (time.perf_counter() - begun) - milliseconds, 1.0 - found.rate / whole))
             # The median of five: what else runs on the machine stalls one or the other.
             late.append(median(lateness for lateness, _ in tries))
@@ -129,10 +129,10 @@ def _warm(rounds: int) -> Iterator[Row]:
         for number in range(6):
             link = channel(number, elements, tones, 1)
             best = _thorough(link).states
-            settled = optimize(link, best, Limits(), UNBOUNDED, thorough=False).states
+            settled = optimize(link, best, Limits(), UNBOUNDED, Effort.CLIMB).states
             calls.append(
                 _best_time(
-                    lambda link=link, settled=settled: optimize(link, settled, Limits(), UNBOUNDED, thorough=False),  # type: ignore[misc]
+                    lambda link=link, settled=settled: optimize(link, settled, Limits(), UNBOUNDED, Effort.CLIMB),  # type: ignore[misc]
                     rounds,
                 )
             )

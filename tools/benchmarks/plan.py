@@ -20,7 +20,7 @@ from tracker.assembly import configure
 from tracker.engine.panel import Limits
 from tracker.engine.search.budget import Steps
 from tracker.engine.search.channel import Channel
-from tracker.engine.search.flips import optimize
+from tracker.engine.search.flips import Effort, optimize
 from tracker.settings import Settings, parse
 from tracker.simulation.closed_loop import EngineInLoop, turns
 from tracker.simulation.motion import Still, Waypoints
@@ -129,7 +129,7 @@ def _held(speed: float, seed: int, seconds: float, every: int) -> float:
         noise = np.sqrt(scene.noise_at(begins_s))
         solved = np.linalg.lstsq(regressors, (heard[:, 0] / noise[0]) @ basis.conj(), rcond=None)[0]
         channel = Channel(basis, solved[:1], np.ascontiguousarray(solved[1:, None, :]))
-        states = optimize(channel, states, Limits(), Steps(STEPS), thorough=True).states
+        states = optimize(channel, states, Limits(), Steps(STEPS), Effort.THOROUGH).states
         held_s = np.linspace(begins_s + takes_s, begins_s + period_s, 9)
         rates.append(np.mean([scene.rate(float(at_s), states) for at_s in held_s]))
     return float(np.mean(rates)) * (1.0 - 1.0 / every)

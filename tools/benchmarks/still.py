@@ -22,7 +22,7 @@ from tracker.engine.events import Pattern
 from tracker.engine.panel import Limits, unpack
 from tracker.engine.search.budget import Steps
 from tracker.engine.search.channel import Channel
-from tracker.engine.search.flips import optimize
+from tracker.engine.search.flips import Effort, optimize
 from tracker.engine.search.rate import rate
 from tracker.settings import parse
 from tracker.simulation.best import best_pattern
@@ -112,4 +112,4 @@ def _told(scene: SceneConfig, known: Channel, noise: NDArray[np.float64], bursts
             found[:, receiver, delay] = (regressors * prior).T @ np.linalg.solve(gain, outputs[:, delay])
         found[:, receiver] = found[:, receiver] @ turned.T
     estimate = Channel(basis, found[0], np.ascontiguousarray(found[1:]))
-    return float(rate(known, optimize(estimate, None, Limits(), Steps(BEST_STEPS), thorough=True).states))
+    return float(rate(known, optimize(estimate, None, Limits(), Steps(BEST_STEPS), Effort.THOROUGH).states))

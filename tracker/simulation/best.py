@@ -6,7 +6,7 @@ from numpy.typing import NDArray
 from tracker.engine.panel import Limits
 from tracker.engine.search.budget import Steps
 from tracker.engine.search.channel import Channel
-from tracker.engine.search.flips import optimize
+from tracker.engine.search.flips import Effort, optimize
 
 
 def best_pattern(channel: Channel, start: NDArray[np.int8] | None, steps: int) -> tuple[NDArray[np.int8], float]:
@@ -26,5 +26,5 @@ def best_pattern(channel: Channel, start: NDArray[np.int8] | None, steps: int) -
     rate : float
         bit/s/Hz, as `Scene.rate`.
     """
-    found = optimize(channel, start, Limits(), Steps(steps), thorough=True)
+    found = optimize(channel, start, Limits(), Steps(steps), Effort.THOROUGH)
     return found.states, float(found.rate)

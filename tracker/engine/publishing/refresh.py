@@ -13,7 +13,7 @@ from ..events import Cause, Pattern
 from ..panel import Limits
 from ..search.budget import Budget
 from ..search.channel import Channel
-from ..search.flips import Climb, optimize
+from ..search.flips import Climb, Effort, optimize
 from ..search.one_carrier import rate_bound
 from ..search.rate import promise, rate, response
 from .report import Stand
@@ -132,10 +132,9 @@ class Refresher:
             Optimizer steps taken.
         """
         in_use = self.states(self.latest)
-        thorough = self._thorough()
+        effort = self._effort()
         missed = self._not_shown >= PATIENCE_BURSTS
-        glance = not thorough and self._glance()
-        routine = cause is Cause.REFRESH and not thorough and not glance and not missed
+        routine = cause is Cause.REFRESH and effort is Effort.CLIMB and not missed
         if before is None:
             before = rate(channel, in_use) if in_use is not None else 0.0
         # What a change asks for is not put off to save a switch.
@@ -143,11 +142,11 @@ class Refresher:
         if routine and in_use is not None and not self._worth_a_look(channel, in_use, least_gain):
             return None, 0
         self._resting = False
-        found = optimize(channel, in_use, limits, budget, thorough=thorough, glance=glance)
+        found = optimize(channel, in_use, limits, budget, effort)
         forced = cause in (Cause.FIRST, Cause.OPERATOR) or missed
         same = in_use is not None and np.array_equal(found.states, in_use)
         gains = not same and found.rate - before >= least_gain
-        if glance:
+        if effort is Effort.GLANCE:
             # A gain far within the doubt of the estimate is found in a channel that stands still as well.
             moved = gains and found.rate - before > CLEAR * rate_spread(channel, found.states, variance(found.states))
             self._glance_every = LEAST_APART if moved else min(2 * self._glance_every, MOST_APART)
@@ -195,6 +194,12 @@ class Refresher:
         self._switching.load(snapshot["switching"])
         self._since_glance = int(snapshot["since_glance"])
         self._glance_every = int(snapshot["glance_every"])
+
+    def _effort(self) -> Effort:
+        """Say how far the search that is due goes."""
+        if self._thorough():
+            return Effort.THOROUGH
+        return Effort.GLANCE if self._glance() else Effort.CLIMB
 
     def _thorough(self) -> bool:
         """Search thoroughly at refreshes 1, 2, 4, 8 … after a fresh start, then at regular distances."""

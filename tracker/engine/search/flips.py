@@ -6,10 +6,11 @@
    until several waves in a row bring nothing.
 4. *Finish*: climb once more from the best, pairs of lines included.
 
-A warm call leaves out all but the last: it climbs from the pattern in use alone. Every batch and every step of a
-climb is one step of the budget, which is asked before each and nowhere else (`budget`).
+With less `Effort` all but the last is left out: the climb begins at the pattern in use. Every batch and every step of
+a climb is one step of the budget, which is asked before each and nowhere else (`budget`).
 """
 
+import enum
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -64,6 +65,18 @@ WORK = 1 << 23
 """Multiplications that a batch takes, about; it bounds how long a step lasts."""
 
 
+class Effort(enum.Enum):
+    """How far a search goes."""
+
+    CLIMB = enum.auto()
+    """Climb from the pattern in use alone (if there is none, from the best of one batch of starts)."""
+    GLANCE = enum.auto()
+    """Climb from the best of one batch of starts besides, polished: while the channel moves, the summit that the
+    pattern in use sits on sinks below others."""
+    THOROUGH = enum.auto()
+    """All of it."""
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Climb:
     """What the optimizer found.
@@ -88,9 +101,7 @@ def optimize(
     in_use: NDArray[np.generic] | None,
     limits: Limits,
     budget: Budget,
-    *,
-    thorough: bool,
-    glance: bool = False,
+    effort: Effort,
 ) -> Climb:
     """Look for the pattern with the best rate.
 
@@ -105,11 +116,7 @@ def optimize(
         included, those that are stuck not; it does not apply when `in_use` is None.
     budget : Budget
         Asked before each step; when it is spent, the best pattern so far is returned.
-    thorough : bool
-        False climbs from the pattern in use alone (if there is none, from the best of one batch of starts).
-    glance : bool
-        Climb from the best of one batch of starts besides, polished: while the channel moves, the summit that the
-        pattern in use sits on sinks below others.
+    effort : Effort
 
     Returns
     -------
@@ -129,7 +136,7 @@ def optimize(
         raise ValueError("the channel holds NaN, infinity or numbers too large to square")
     search = _Search(form, allowance, Meter(budget))
     if form.lines:
-        search.run(thorough=thorough, glance=glance)
+        search.run(effort)
     pattern = lines.spread(search.states)
     return Climb(pattern, rate(channel, pattern), search.meter.steps)
 
@@ -157,21 +164,21 @@ class _Search:
     def _strength(self) -> Real:
         return delay_strength(self._rough)
 
-    def run(self, *, thorough: bool, glance: bool = False) -> None:
+    def run(self, effort: Effort) -> None:
         """Search until nothing more is found or the budget is spent."""
         form = self._form
         in_use = self.states
-        if in_use.size and (thorough or glance):
+        if in_use.size and effort is not Effort.CLIMB:
             self._offer(in_use)
         if form.width == 2 and form.tones == 1 and self._reach is None:
             self._one_carrier()
             return
-        if thorough:
+        if effort is Effort.THOROUGH:
             self._survey()
             self._waves()
         elif not in_use.size:
             self._begin(self._draw(self._batch))
-        elif glance:
+        elif effort is Effort.GLANCE:
             self._glance()
         self._climb(self.states, pairs=True)
 
