@@ -52,7 +52,7 @@ def _play(
 def test_noise_alone_is_taken_for_interference_no_more_often_than_asked(predicted: bool) -> None:
     """One alarm in 100 samples asked: 4000 samples bring no more than 40 and three deviations, but at least 8.
 
-    Groups overlap, so that all together cry wolf less often than the sum of their rates (Bonferroni).
+    Groups overlap, and some of their alarms are of the same noise.
     """
     rng = np.random.default_rng(1)
     tones = Tones(RECEIVERS, BASIS, predicted=predicted)

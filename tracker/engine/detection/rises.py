@@ -29,6 +29,8 @@ FLOOR = 1e-30
 FACTOR = 1.5
 # Samples over which the level of a place is averaged, the first of them that only make it, and what one may count.
 MEMORY, WARM_UP, BOUND = 1024, 32, 4.0
+# Groups that overlap hear the same noise, and cry wolf together: this many of them count as one (measured).
+OVERLAP = 1.6
 # Places in a group, each twice the one before.
 WIDTHS = (1, 2, 4)
 
@@ -87,7 +89,7 @@ class Rises:
     def __init__(self, false_alarm_s: float, tests: float, groups: Groups) -> None:
         self._false_alarm_s, self._all_tests, self._groups = false_alarm_s, tests, groups
         counts = [groups.places - width + 1 for width in groups.widths]
-        self._count = groups.receivers * sum(counts)
+        self._count = groups.receivers * sum(counts) / OVERLAP
         self._weights = [
             degrees / width * (1.0 - 1.0 / FACTOR)
             for width, degrees in zip(groups.widths, groups.degrees, strict=False)
