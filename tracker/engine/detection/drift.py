@@ -36,7 +36,7 @@ STEADY = 3.5
 MEMORY = 4096
 # A sample moves the baseline by no more than this many standard deviations' worth.
 BOUND = 4.0
-# Slacks of the two tests: best for changes of one and of four standard deviations a sample.
+# Slacks of the two tests: best for changes of one and of five standard deviations a sample.
 SLACKS = (0.5, 2.5)
 # Share of a threshold beyond which the baseline stands still.
 RAISED = 0.7
@@ -44,6 +44,8 @@ RAISED = 0.7
 BELIEF = 3.0
 # Samples whose mean shows whether they hang together over longer than a sample, and how many such means are averaged.
 LONG, LONG_MEMORY = 16, 4096
+# Below this a test is as rare as its slack makes it: rarer than is asked for, where few samples lie between alarms.
+LEAST_THRESHOLD = 0.01
 # Deviates are cut here: beyond, the distribution functions run out of digits and nothing is to be gained.
 MOST = 35.0
 
@@ -242,7 +244,7 @@ class Watch:
         # In the long run the level is a moving average, which knows the mean as well as twice as many samples do.
         doubt = 1.0 / self._count if self._count < MEMORY else 0.5 / MEMORY
         for cusum in self._cusums:
-            cusum.threshold = threshold_for(samples, cusum.slack, doubt)
+            cusum.threshold = max(threshold_for(samples, cusum.slack, doubt), LEAST_THRESHOLD)
         self._measure_height()
 
     def _warm_up(self, value: float, degrees: int) -> None:

@@ -89,7 +89,7 @@ class Rises:
     def __init__(self, false_alarm_s: float, tests: float, groups: Groups) -> None:
         self._false_alarm_s, self._all_tests, self._groups = false_alarm_s, tests, groups
         counts = [groups.places - width + 1 for width in groups.widths]
-        self._count = groups.receivers * sum(counts) / OVERLAP
+        self._count = groups.receivers * sum(counts) / (OVERLAP if len(counts) > 1 else 1.0)
         self._weights = [
             degrees / width * (1.0 - 1.0 / FACTOR)
             for width, degrees in zip(groups.widths, groups.degrees, strict=False)
