@@ -141,3 +141,15 @@ def test_snapshot_goes_on_bit_by_bit() -> None:
             copy.update(readings, PERIOD_S)
         assert copy.highest == monitor.highest
     assert monitor.highest[0] > 0
+
+
+def test_alarms_asked_for_more_often_than_the_slack_allows_are_no_crash() -> None:
+    """One alarm in 3 samples asked is more than a test of slack 2.5 gives: alarms come, and nothing breaks."""
+    rng = np.random.default_rng(9)
+    watch = Watch(3 * PERIOD_S)
+    alarms = 0
+    for _ in range(1000):
+        if watch.update(_ratio(rng), DEGREES, PERIOD_S):
+            alarms += 1
+            watch.clear()
+    assert 10 < alarms < 500

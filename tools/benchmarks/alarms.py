@@ -8,15 +8,13 @@ For hours, the rate of the same tests at the thresholds that the tracker sets is
 import math
 from collections.abc import Iterator
 
-import numpy as np
-from numpy.typing import NDArray
-
+from benchmarks._excursions import interval_ratio
 from benchmarks._kinds import kinds
+from benchmarks._one_hour import hour
 from benchmarks._recovery import recovery
 from benchmarks._still_link import FRAME_NS, Link
 from benchmarks.row import Row
-from tracker.engine.detection.drift import MEMORY, SLACKS, DriftMonitor
-from tracker.engine.detection.run_length import threshold_for
+from tracker.engine.detection.drift import DriftMonitor
 from tracker.engine.estimation.estimator import Estimator
 from tracker.engine.estimation.frames import Frames
 
@@ -29,7 +27,8 @@ def rows(quick: bool) -> Iterator[Row]:
     """Measure."""
     yield from _intervals(quick)
     yield from _hours(4000 if quick else 40_000)
-    yield from kinds(*((3, 3) if quick else (200, 20)))
+    yield from hour(*((3, 4000) if quick else (18, 40_000)))
+    yield from kinds(*((3, 3) if quick else (200, 40)))
     yield from recovery(1 if quick else 4)
 
 
@@ -55,7 +54,7 @@ def _count(frames: int, receivers: int, wanted: int, blocks: int) -> int:
     link = Link(1, 15, receivers, surface=0.5)
     config = link.config(wanted * frames * FRAME_NS / 1e9, time_constant_s=400 * FRAME_NS / 1e9)
     estimator = Estimator(config)
-    monitor = DriftMonitor(config.false_alarm_s, estimator.watched)
+    monitor = DriftMonitor(config.false_alarm_s, estimator.watched, estimator.groups)
     alarms = 0
     settled = max(SETTLED, 4 * link.elements // frames)
     for number in range(settled + blocks):
@@ -71,14 +70,10 @@ def _count(frames: int, receivers: int, wanted: int, blocks: int) -> int:
 
 def _hours(runs: int) -> Iterator[Row]:
     """Rate at the thresholds set for hours, ten bursts a second and bursts of 64 at 28 000 frames a second."""
+    watches = len(Estimator(Link(0, 3).config(TEN_HOURS_S)).watched)
     for rate_hz in (10.0, 28_000 / 64):
         for hours in (1 / 3600 * 300 / rate_hz, 1.0, 10.0, 100.0):
-            watches = len(Estimator(Link(0, 3).config(TEN_HOURS_S)).watched)
-            samples = hours * 3600.0 * rate_hz
-            rate = sum(
-                2 * _rate(samples * watches * len(SLACKS), slack, runs, seed) for seed, slack in enumerate(SLACKS)
-            )
-            ratio = 1.0 / (rate * watches * samples)
+            ratio = interval_ratio(hours * 3600.0 * rate_hz, watches, runs)
             name = f"{hours:.0f} h" if hours >= 1 else "300 blocks"
             yield Row(
                 f"false alarms at {rate_hz:.0f} bursts/s, {name} asked: interval over that",
@@ -88,40 +83,3 @@ def _hours(runs: int) -> Iterator[Row]:
                 0.75 <= ratio <= 1.25,
                 "importance sampling of the tests at the thresholds set, baseline uncertain as in the long run",
             )
-
-
-def _rate(run_length: float, slack: float, runs: int, seed: int) -> float:
-    """Alarms a sample of one side of one test: chance that an excursion from zero ends in one, over its length."""
-    doubt = 0.5 / MEMORY
-    threshold = threshold_for(run_length, slack, doubt)
-    rng = np.random.default_rng([3, seed])
-    off = rng.normal(0.0, math.sqrt(doubt), runs)
-    tilt = 2.0 * slack
-    hit, weight = _excursions(rng, off, slack, threshold, tilt)
-    chance = float((hit * weight).mean())
-    return chance / _mean_length(rng, slack, runs)
-
-
-def _excursions(
-    rng: np.random.Generator, off: NDArray[np.float64], slack: float, threshold: float, tilt: float
-) -> tuple[NDArray[np.bool_], NDArray[np.float64]]:
-    """Play excursions of samples whose mean is raised by `tilt`; which end above, and their likelihood ratios."""
-    total, log_weight = np.zeros_like(off), np.zeros_like(off)
-    hit, running = np.zeros(off.shape, dtype=bool), np.ones(off.shape, dtype=bool)
-    while running.any():
-        sample = rng.normal(tilt, 1.0, off.shape)
-        log_weight -= np.where(running, tilt * sample - 0.5 * tilt**2, 0.0)
-        total += np.where(running, sample + off - slack, 0.0)
-        hit |= running & (total > threshold)
-        running &= (total > 0.0) & ~hit
-    return hit, np.exp(log_weight)
-
-
-def _mean_length(rng: np.random.Generator, slack: float, runs: int) -> float:
-    """Mean length of an excursion from zero when nothing is raised."""
-    total, length, running = np.zeros(runs), np.zeros(runs), np.ones(runs, dtype=bool)
-    while running.any():
-        total += rng.normal(size=runs) - slack
-        length += running
-        running &= total > 0.0
-    return float(length.mean())

@@ -16,11 +16,11 @@ from . import panel
 from .admission import Admission
 from .burst import Burst
 from .config import Config
+from .detection.anchor import CHANNEL, CHANNEL_LONG, DIRECT, SURFACE_MOVED
 from .detection.changes import Verdict
-from .detection.drift import DriftMonitor, Reading, Suspicion
-from .detection.innovation import DIRECT, INNOVATION
+from .detection.drift import DriftMonitor, Sample, Suspicion
+from .detection.innovation import INNOVATION
 from .detection.reaction import HARMLESS, react
-from .detection.standing import DIRECT_MOVED, SURFACE_MOVED
 from .estimation.aperture import Elements
 from .estimation.estimator import Estimator
 from .estimation.frames import Fit, Frames
@@ -43,10 +43,12 @@ CALM = 0.3
 # A change seen in so few frames, or of a kind likelier than the next by less than so much (nats) where more frames may
 # tell, is looked at again with the blocks that follow, for no more than so many frames.
 FEW_FRAMES, SURE, MOST_WAIT = 16, 6.0, 64
+# A new channel pays beforehand for all that is free in it: when it leads at all it is sure sooner.
+SURE_OF = {"channel": 3.0}
 # Kinds after which the noise has the same baseline: not even what fractional delays leak into it has changed.
 DELAYS_STAY = ("phase", "mismatch", "elements")
 # Statistics that only grow with a change.
-MISFITS = (INNOVATION, DIRECT, DIRECT_MOVED, SURFACE_MOVED)
+MISFITS = (INNOVATION, DIRECT, CHANNEL, CHANNEL_LONG, SURFACE_MOVED)
 # Innovations this many times what is expected do not fit, and the tracker does not call itself ready.
 WORST_FIT = 3.0
 # A silence of this many time constants leaves nothing of the estimate to trust.
@@ -86,7 +88,7 @@ class Tracker:
         self._config = config
         self._admission = Admission(config.clock_skew_ns)
         self._estimator = Estimator(config)
-        self._drift = DriftMonitor(config.false_alarm_s, self._estimator.watched)
+        self._drift = DriftMonitor(config.false_alarm_s, self._estimator.watched, self._estimator.groups)
         self._refresher = Refresher(config, first_id)
         self._calibration = Calibration(in_columns=config.aperture.size < config.elements)
         self._planner = Planner(config, config.plan) if config.plan is not None else None
@@ -294,7 +296,7 @@ class Tracker:
             alarms.append(drift_alarm(suspicion, *answer, stand))
         return alarms
 
-    def _follow_drift(self, fit: Fit, readings: Sequence[Reading]) -> Suspicion | None:
+    def _follow_drift(self, fit: Fit, readings: Sequence[Sample]) -> Suspicion | None:
         """Move through the lifecycle; return a change that calls for an alarm."""
         if fit.elapsed_s > SILENCE_TIME_CONSTANTS * self._config.time_constant_s and self._mode is Mode.TRACKING:
             self._mode = after(self._mode, Happening.SILENCE)
@@ -329,7 +331,7 @@ class Tracker:
         self._estimator.keep()
         verdict = self._estimator.judge() or Verdict("unclear", "", 0.0)
         self._suspected = None
-        doubtful = verdict.margin < SURE and not verdict.limited
+        doubtful = verdict.margin < SURE_OF.get(verdict.kind, SURE) and not verdict.limited
         doubtful = doubtful or 0 < verdict.frames < FEW_FRAMES
         if doubtful and self._waited < MOST_WAIT:
             self._suspected = suspicion

@@ -23,6 +23,7 @@ import numpy as np
 from scipy.special import gammainc, gammaincc, ndtri
 
 from .cusum import Change, Cusum
+from .rises import Groups, Powers, Rises
 from .run_length import threshold_for
 
 # Samples of a first baseline; it holds when its two halves agree, which they do not while the estimate still forms.
@@ -35,14 +36,16 @@ STEADY = 3.5
 MEMORY = 4096
 # A sample moves the baseline by no more than this many standard deviations' worth.
 BOUND = 4.0
-# Slacks of the two tests: best for changes of one and of four standard deviations a sample.
-SLACKS = (0.5, 2.0)
+# Slacks of the two tests: best for changes of one and of five standard deviations a sample.
+SLACKS = (0.5, 2.5)
 # Share of a threshold beyond which the baseline stands still.
 RAISED = 0.7
 # Theory is believed until what is measured differs by this many standard errors.
 BELIEF = 3.0
 # Samples whose mean shows whether they hang together over longer than a sample, and how many such means are averaged.
 LONG, LONG_MEMORY = 16, 4096
+# Below this a test is as rare as its slack makes it: rarer than is asked for, where few samples lie between alarms.
+LEAST_THRESHOLD = 0.01
 # Deviates are cut here: beyond, the distribution functions run out of digits and nothing is to be gained.
 MOST = 35.0
 
@@ -241,7 +244,7 @@ class Watch:
         # In the long run the level is a moving average, which knows the mean as well as twice as many samples do.
         doubt = 1.0 / self._count if self._count < MEMORY else 0.5 / MEMORY
         for cusum in self._cusums:
-            cusum.threshold = threshold_for(samples, cusum.slack, doubt)
+            cusum.threshold = max(threshold_for(samples, cusum.slack, doubt), LEAST_THRESHOLD)
         self._measure_height()
 
     def _warm_up(self, value: float, degrees: int) -> None:
@@ -299,6 +302,9 @@ class Reading(NamedTuple):
     degrees: int = 0
 
 
+Sample = Reading | Powers
+
+
 @dataclass(frozen=True, slots=True)
 class Suspicion:
     """A statistic that left its baseline.
@@ -342,10 +348,15 @@ class DriftMonitor:
         Wanted mean time between false alarms of all together, s.
     names : sequence of str
         Of the statistics.
+    groups : mapping of str to Groups
+        Of those that are the powers of many places: what is watched of them.
     """
 
-    def __init__(self, false_alarm_s: float, names: Sequence[str]) -> None:
-        self._watches = {name: Watch(false_alarm_s, len(SLACKS) * len(names)) for name in names}
+    def __init__(self, false_alarm_s: float, names: Sequence[str], groups: Mapping[str, Groups] | None = None) -> None:
+        tests = len(SLACKS) * len(names)
+        self._rises = {name: Rises(false_alarm_s, tests, one) for name, one in (groups or {}).items()}
+        self._plain = {name: Watch(false_alarm_s, tests) for name in names if name not in self._rises}
+        self._watches: dict[str, Watch | Rises] = {**self._plain, **self._rises}
         self._blocks = 0
         self._silent_s = dict.fromkeys(names, 0.0)  # since the last reading of each
         for slack in SLACKS:
@@ -378,12 +389,12 @@ class DriftMonitor:
         """Statistic and threshold of the test that is nearest to an alarm."""
         return max(self._watches.values(), key=lambda watch: watch.height).highest
 
-    def update(self, readings: Sequence[Reading], elapsed_s: float) -> list[Suspicion]:
+    def update(self, readings: Sequence[Sample], elapsed_s: float) -> list[Suspicion]:
         """Take in what one block gave.
 
         Parameters
         ----------
-        readings : sequence of Reading
+        readings : sequence of Reading and Powers
             Of statistics named at the start; one that has none this time keeps its sums.
         elapsed_s : float
             Time since the block before, s.
@@ -392,11 +403,15 @@ class DriftMonitor:
         for name in self._silent_s:
             self._silent_s[name] += elapsed_s
         for reading in readings:
-            watch = self._watches[reading.name]
-            change = watch.update(reading.value, reading.degrees, self._silent_s[reading.name])
+            silent_s = self._silent_s[reading.name]
             self._silent_s[reading.name] = 0.0
+            if isinstance(reading, Powers):
+                change = self._rises[reading.name].update(reading, silent_s)
+            else:
+                change = self._plain[reading.name].update(reading.value, reading.degrees, silent_s)
             if change is not None:
-                suspicions.append(Suspicion(reading.name, change, change.since * watch.period_s))
+                since_s = change.since * self._watches[reading.name].period_s
+                suspicions.append(Suspicion(reading.name, change, since_s))
         self._blocks += 1
         if self._blocks & (self._blocks - 1) == 0 or self._blocks % MEMORY == 0:
             tests = sum(watch.tests for watch in self._watches.values())

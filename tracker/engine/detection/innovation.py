@@ -8,9 +8,6 @@ over noise that really occurs is measured, slowly, frame by frame::
 
 With L Lᴴ = I + Z P⁻ Zᴴ and w = L⁻¹(Y − Z C) these are s_b = L_bb² − 1 and ε_b = L_bb w_b: the same whether frames come
 one by one or in blocks.
-
-A change of the direct path is the same in all frames. The mean of Y − Z C over a block shows it where it drowns in the
-power of all innovations, and shows it even if the filter, granting the direct path much, has followed it after a frame.
 """
 
 import math
@@ -22,7 +19,6 @@ from numpy.typing import NDArray
 
 from ..estimation.filter import Surprise
 from .drift import Reading
-from .matched import Matched
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -32,11 +28,9 @@ MEMORY = 256
 BOUND = 3.0
 # α cannot be told from anything beyond this.
 MOST = 100.0
-# Frames from which a change of the direct path is judged.
-COMMON_FRAMES = 16
 FLOOR = 1e-30
 
-INNOVATION, DIRECT = "innovation", "direct path"
+INNOVATION = "innovation"
 
 
 class Innovations:
@@ -46,25 +40,22 @@ class Innovations:
     ----------
     receivers : int
         R: outputs are R × Q.
-    basis : ndarray of complex, shape (K, Q)
-        Delay basis.
+    size : int
+        Q.
     """
 
-    def __init__(self, receivers: int, basis: Complex) -> None:
-        size = basis.shape[1]
-        self._matched = Matched(basis)
+    def __init__(self, receivers: int, size: int) -> None:
+        self._outputs = receivers * size
         self._most_ratio = 1.0 + BOUND / math.sqrt(receivers * size)
         self._shown, self._known = 0.0, 0.0  # moments of the regression for α
         self._blocks = 0
         self.excess = 1.0
         self.variance = 1.0  # of an innovation, in the last block
         self._power, self._frames = 0.0, 0
-        self._common: Complex = np.zeros(receivers * size, dtype=np.complex128)
-        self._common_frames = 0
 
-    def take(self, outputs: Complex, surprise: Surprise) -> None:
-        """Take in frames worked off in one step, outputs (B, D); the spread of the surprise is L_bb²."""
-        innovation, white, spread = surprise.innovation, surprise.white, surprise.spread
+    def take(self, surprise: Surprise) -> None:
+        """Take in frames worked off in one step; the spread of the surprise is L_bb²."""
+        white, spread = surprise.white, surprise.spread
         predicted = spread - 1.0
         inverse = 1.0 / (1.0 + self.excess * predicted)
         parts = white.view(np.float64)
@@ -72,30 +63,15 @@ class Innovations:
         frames = white.shape[0]
         self._power += float(ratio.sum())
         self._frames += frames
-        self._common += innovation.sum(axis=0)
-        self._common_frames += frames
-        self._matched.take(outputs - innovation, innovation)
         self.variance = 1.0 + self.excess * float(predicted.sum()) / frames
         self._calibrate(ratio, predicted, inverse)
 
-    def readings(self, direct: Complex) -> list[Reading]:
-        """Say what the block showed, and begin the next.
-
-        Parameters
-        ----------
-        direct : ndarray of complex, shape (D,)
-            Estimate of the direct path.
-        """
-        size = self._common.shape[0]
-        readings = [Reading(INNOVATION, max(self._power / max(self._frames, 1), FLOOR), self._frames * size)]
+    def readings(self) -> list[Reading]:
+        """Say what the block showed, and begin the next."""
+        power = max(self._power / max(self._frames, 1), FLOOR)
+        reading = Reading(INNOVATION, power, self._frames * self._outputs)
         self._power, self._frames = 0.0, 0
-        if self._common_frames >= COMMON_FRAMES:
-            power = np.vdot(self._common, self._common).real / (self._common_frames * size)
-            readings.append(Reading(DIRECT, max(power, FLOOR), size))
-            readings += self._matched.readings(self._common, self._common_frames, direct)
-            self._common = np.zeros_like(self._common)
-            self._common_frames = 0
-        return readings
+        return [reading]
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -104,9 +80,6 @@ class Innovations:
             "blocks": self._blocks,
             "excess": self.excess,
             "variance": self.variance,
-            "common": self._common.copy(),
-            "common_frames": self._common_frames,
-            "matched": self._matched.snapshot(),
         }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
@@ -114,9 +87,6 @@ class Innovations:
         self._shown, self._known = (float(moment) for moment in snapshot["moments"])
         self._blocks, self.excess = int(snapshot["blocks"]), float(snapshot["excess"])
         self.variance = float(snapshot["variance"])
-        self._common = np.array(snapshot["common"], dtype=np.complex128)
-        self._common_frames = int(snapshot["common_frames"])
-        self._matched.load(snapshot["matched"])
 
     def _calibrate(self, ratio: Real, predicted: Real, inverse: Real) -> None:
         """Regress the innovations' power beyond the noise on what the covariance predicts, weighted by its spread."""

@@ -12,6 +12,7 @@ from ..estimation.aperture import ApertureBasis
 from ..estimation.filter import Filter
 from ..estimation.frames import Frames
 from ..estimation.shrinkage import shrink
+from .anchor import Anchor
 from .changes import Verdict, judge
 from .drift import Reading
 from .evidence import Evidence, Heard, Memory
@@ -35,6 +36,7 @@ class Past:
         # Where phases are followed each block stands at phases of its own.
         self._memory = Memory(blocks=1 if config.follow_phase else None)
         self._standing = Standing()
+        self._anchor = Anchor(config.delay)
         self._taken: list[Heard] = []
 
     def begin(self) -> None:
@@ -46,9 +48,14 @@ class Past:
         heard = outputs.reshape(outputs.shape[0], self._config.receivers, -1)
         self._taken.append(Heard(frames.patterns, frames.response, heard, frames.time_ns, noise))
 
+    def hold(self, regressors: NDArray[Any], innovation: Complex) -> None:
+        """Hold frames against the slow average of the estimate: regressors (B, n) and innovations (B, R Q)."""
+        self._anchor.take(regressors, innovation)
+
     def readings(self, coefficients: Complex, noise: Real) -> list[Reading]:
-        """Say how far the estimate has moved, and remember it."""
-        return self._standing.readings(coefficients, noise)
+        """Say what frames and estimate show against the slow average, and remember the estimate."""
+        self._standing.remember(coefficients, noise)
+        return self._anchor.readings(coefficients, noise)
 
     def calm(self, variance: float, current: tuple[Complex, Real] | None = None) -> None:
         """Take note that nothing is suspected: the estimate is what changes will be held against.
@@ -77,15 +84,18 @@ class Past:
         """Drop what changes are held against."""
         self._memory.forget()
         self._standing.forget()
+        self._anchor.forget()
 
     def turn_direct(self, columns: slice, turn: complex) -> None:
         """Turn the direct path along."""
         self._memory.turn_direct(columns, turn)
         self._standing.turn_direct(columns, turn)
+        self._anchor.turn_direct(columns, turn)
 
     def amplify(self, columns: slice, gain: float) -> None:
         """Make the estimate from before stronger."""
         self._memory.amplify(columns, gain)
+        self._anchor.amplify(columns, gain)
 
     def before(self, noise: Real) -> Complex | None:
         """Estimate from before the change, shape (n, R Q), in units of the noise power now, (R,)."""
@@ -156,9 +166,14 @@ class Past:
 
     def snapshot(self) -> dict[str, Any]:
         """All state, between blocks."""
-        return {"memory": self._memory.snapshot(), "standing": self._standing.snapshot()}
+        return {
+            "memory": self._memory.snapshot(),
+            "standing": self._standing.snapshot(),
+            "anchor": self._anchor.snapshot(),
+        }
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
         self._memory.load(snapshot["memory"])
         self._standing.load(snapshot["standing"])
+        self._anchor.load(snapshot["anchor"])

@@ -1,8 +1,10 @@
-"""Does one tone have more noise than it used to: a narrow interferer drowns in the noise of all tones together.
+"""What single tones hear: a narrow interferer drowns in the noise of all tones together.
 
-What a frame holds outside the delay basis is noise alone. Its power on each tone, over that of all tones, is held
-against what it has been on the same tone; the largest ratio x of R K gamma variables, averaged over n frames, becomes a
-standard normal deviate: of the chance 1 − (1 − Q(n, n x))^(R K), with Q the upper regularised gamma function.
+What a frame holds beyond its prediction is noise, as long as the prediction is good; what it holds outside the delay
+basis is noise in any case, but a fifth or more of the power of a tone is missing there. Given is its power on each tone
+over that on all; whether that of any of them, or of any group of neighbours, has risen is for `rises`. The projection
+out of the basis ties neighbouring tones together a little, so w of them have fewer than w degrees of freedom a frame:
+(tr G)² / tr G² with G their block of I − V Vᴴ (Satterthwaite, Biometrics Bull. 2, 1946).
 """
 
 from collections.abc import Mapping
@@ -10,19 +12,13 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import gammaincc
 
-from .drift import Reading, largest
+from .rises import WIDTHS, Groups, Powers
 
 Complex = NDArray[np.complex128]
-Real = NDArray[np.float64]
 
-# Frames that a sample rests on; of a longer burst as many, evenly spread: more would cost more than all other watching.
-FRAMES = 16
-# Samples over which the level of a tone is averaged, and what one sample may count at most.
-MEMORY, BOUND = 1024, 4.0
-# Once the level is known one sample in so many is enough to follow it.
-RARELY = 8
+# Frames that a sample rests on.
+FRAMES = 32
 FLOOR = 1e-30
 
 TONE = "tone"
@@ -36,46 +32,89 @@ class Tones:
     receivers : int
     delay : ndarray of complex, shape (K, Q)
         Delay basis.
+    predicted : bool
+        Whether frames come with their prediction as a rule.
     """
 
-    def __init__(self, receivers: int, delay: Complex) -> None:
-        self._transpose = np.ascontiguousarray(delay.T, dtype=np.complex64)
-        self._level: Real = np.ones((receivers, delay.shape[0]))
-        self._power: Real = np.zeros((receivers, delay.shape[0]))
-        self._frames, self._samples = 0, 0
-
-    def take(self, tones: Complex, coefficients: Complex) -> None:
-        """Take in frames on the tones, shape (B, R, K), and on the delay basis, (B, R, Q); single precision will do."""
-        step = -(-tones.shape[0] // FRAMES)
-        inside = coefficients[::step].astype(np.complex64)
-        outside = tones[::step].astype(np.complex64) - inside @ self._transpose
-        squares = np.square(outside.view(np.float32)).sum(axis=0)
-        self._power += squares[:, ::2] + squares[:, 1::2]
-        self._frames += outside.shape[0]
-
-    def readings(self) -> list[Reading]:
-        """Give a sample once enough frames are in."""
-        if self._frames < FRAMES:
-            return []
-        power = self._power * (self._power.shape[1] / (self._power.sum(axis=1)[:, None] + FLOOR))
-        ratio = power / self._level
-        chance = float(gammaincc(self._frames, self._frames * float(ratio.max())))
-        self._samples += 1
-        if self._samples < MEMORY or self._samples % RARELY == 0:
-            gain = max(1.0 / self._samples, RARELY / MEMORY if self._samples >= MEMORY else 0.0)
-            self._level += (np.minimum(power, BOUND * self._level) - self._level) * gain
-            np.maximum(self._level, FLOOR, out=self._level)
-        self._power.fill(0.0)
+    def __init__(self, receivers: int, delay: Complex, *, predicted: bool) -> None:
+        # Vᵀ as real and imaginary parts in turn: a product of real matrices is the faster.
+        self._to_tones = np.ascontiguousarray(
+            np.stack([delay.T, 1j * delay.T], axis=1).reshape(-1, delay.shape[0]), dtype=np.complex64
+        ).view(np.float32)
+        tones = delay.shape[0]
+        outside: Complex = np.eye(tones) - delay @ delay.conj().T
+        self._left = np.repeat(1.0 / np.sqrt(np.maximum(outside.diagonal().real, FLOOR)), 2).astype(np.float32)
+        degrees = WIDTHS if predicted else [_degrees(outside, width) for width in WIDTHS]
+        self.groups = Groups(receivers, tones, tuple(float(FRAMES * each) for each in degrees))
+        self._power: NDArray[np.float32] = np.zeros((receivers, tones), dtype=np.float32)
         self._frames = 0
-        return [Reading(TONE, largest(chance, ratio.size))]
+        self._ready: list[NDArray[np.float32]] = []
+
+    def take(self, tones: Complex, coefficients: Complex, *, predicted: bool = False) -> None:
+        """Take in frames; single precision will do.
+
+        Parameters
+        ----------
+        tones : ndarray of complex, shape (B, R, K)
+        coefficients : ndarray of complex, shape (B, R, Q)
+            The same on the delay basis, or its prediction.
+        predicted : bool
+            Which.
+        """
+        frames, receivers, _ = tones.shape
+        rows = coefficients.astype(np.complex64).reshape(frames * receivers, -1).view(np.float32)
+        outside = (rows @ self._to_tones).reshape(frames, receivers, -1)
+        outside -= tones.astype(np.complex64).view(np.float32)
+        if not predicted:
+            outside *= self._left  # as strong as if nothing were missing
+        squares = np.square(outside, out=outside)
+        first = (FRAMES - self._frames) % FRAMES
+        whole = (frames - first) // FRAMES if frames >= first else 0
+        if first or frames < FRAMES:
+            self._add(squares[:first] if first else squares)
+        if whole:
+            middle = squares[first : first + whole * FRAMES]
+            self._ready.append(_paired(middle.reshape(whole, FRAMES, receivers, -1).sum(axis=1)))
+            if first + whole * FRAMES < frames:
+                self._add(squares[first + whole * FRAMES :])
+
+    def _add(self, squares: NDArray[np.float32]) -> None:
+        """Add frames to a sample that is not yet full."""
+        self._power += _paired(squares.sum(axis=0))
+        self._frames += squares.shape[0]
+        if self._frames == FRAMES:
+            self._ready.append(self._power[None].copy())
+            self._power.fill(0.0)
+            self._frames = 0
+
+    def readings(self) -> list[Powers]:
+        """Give the samples that are full."""
+        if not self._ready:
+            return []
+        power = np.concatenate(self._ready) if len(self._ready) > 1 else self._ready[0]
+        self._ready = []
+        return [Powers(TONE, power / (power.mean(axis=2, keepdims=True) + FLOOR))]
 
     def snapshot(self) -> dict[str, Any]:
-        """All state."""
-        counts = [self._frames, self._samples]
-        return {"level": self._level.copy(), "power": self._power.copy(), "counts": counts}
+        """All state, between blocks."""
+        return {"power": self._power.copy(), "frames": self._frames}
 
     def load(self, snapshot: Mapping[str, Any]) -> None:
         """Take over a snapshot."""
-        self._level = np.array(snapshot["level"], dtype=np.float64)
-        self._power = np.array(snapshot["power"], dtype=np.float64)
-        self._frames, self._samples = (int(count) for count in snapshot["counts"])
+        self._power = np.array(snapshot["power"], dtype=np.float32)
+        self._frames = int(snapshot["frames"])
+        self._ready = []
+
+
+def _paired(squares: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Add squares of real and imaginary parts, the last axis in turn."""
+    return np.asarray(squares[..., ::2] + squares[..., 1::2])
+
+
+def _degrees(outside: Complex, width: int) -> float:
+    """Complex degrees of freedom of so many neighbouring tones, in the middle of all groups."""
+    found = []
+    for start in range(outside.shape[0] - width + 1):
+        group = outside[start : start + width, start : start + width]
+        found.append(float(group.trace().real) ** 2 / max(float((np.abs(group) ** 2).sum()), FLOOR))
+    return float(np.median(found)) if found else float(width)

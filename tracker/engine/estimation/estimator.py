@@ -8,12 +8,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..config import Config
+from ..detection.anchor import ANCHORED
 from ..detection.changes import Verdict
-from ..detection.drift import Reading
-from ..detection.innovation import DIRECT, INNOVATION, Innovations
-from ..detection.matched import MATCHED
+from ..detection.drift import Sample
+from ..detection.innovation import INNOVATION, Innovations
 from ..detection.past import Past
-from ..detection.standing import MOVED
+from ..detection.rises import Groups
 from ..health.fresh import Posterior
 from ..orthogonal.lookout import Lookout
 from ..oscillators.following import Lock
@@ -35,6 +35,8 @@ STRETCH_NS = 10_000_000
 # Elements up to which a basis that no longer fits is given up for them: with more, work and memory would be many times
 # what the settings ask for.
 MOST_ELEMENTS = 1024
+# Power of innovations, in units of the noise, up to which they may count as noise.
+WELL_KNOWN = 2.0
 # Frames that were left out fit again when their error is at most this many times what it was before.
 FITS = 1.5
 
@@ -51,7 +53,7 @@ class Estimator:
         self._config = config
         self._aperture: ApertureBasis = config.aperture  # in which the surface is estimated now
         self.reception = Reception(config)
-        self._innovations = Innovations(config.receivers, config.delay)
+        self._innovations = Innovations(config.receivers, config.delay.shape[1])
         self._past = Past(config)
         self._shrinkage = Shrinkage()
         self._left_out_most = 0  # frames that may yet be left out because they do not fit
@@ -62,7 +64,12 @@ class Estimator:
     @property
     def watched(self) -> tuple[str, ...]:
         """Names of the statistics under watch."""
-        return INNOVATION, DIRECT, *MATCHED, *MOVED, *self.reception.watched
+        return INNOVATION, *ANCHORED, *self.reception.watched
+
+    @property
+    def groups(self) -> dict[str, Groups]:
+        """Those that are the powers of many places, with what is watched of them."""
+        return self.reception.groups
 
     @property
     def ready_after(self) -> int:
@@ -115,13 +122,13 @@ class Estimator:
         fits = [self._take(self._bank, part) for frames in bursts for part in frames.stretches(STRETCH_NS)]
         return Fit.together(fits)
 
-    def readings(self) -> list[Reading]:
+    def readings(self) -> list[Sample]:
         """Give samples of the statistics under watch from the block just taken."""
-        chosen = self._learned()
-        readings = self._innovations.readings(chosen.direct)
-        readings += self._past.readings(chosen.coefficients, self.reception.noise_power)
-        readings += self.reception.readings()
-        return readings
+        return [
+            *self._innovations.readings(),
+            *self._past.readings(self._learned().coefficients, self.reception.noise_power),
+            *self.reception.readings(),
+        ]
 
     def _begin(self, patterns: NDArray[np.uint8], outputs: NDArray[np.complex128]) -> Bank:
         """Start from the first frames, (B, bytes) and (B, R Q): how strong the paths may be."""
@@ -156,17 +163,24 @@ class Estimator:
         if self._left_out_most and not self._fits(bank.chosen, sounded, outputs):
             self._left_out_most = max(self._left_out_most - frames, 0)
             degrees = frames * self.reception.directions
+            self.reception.listen(None)
             return Fit(np.ones(self._config.receivers), degrees, elapsed_s, 1.0, lost, frames)
         self._left_out_most = 0
         power = np.zeros(self._config.receivers)
         error = 0.0
+        innovations = []
         for start in range(0, frames, MOST_FRAMES):
             part = slice(start, start + MOST_FRAMES)
-            surprise = bank.update(sounded.part(part), outputs[part])
-            self._innovations.take(outputs[part], surprise)
+            heard = sounded.part(part)
+            surprise = bank.update(heard, outputs[part])
+            self._innovations.take(surprise)
+            self._past.hold(heard.regressors, surprise.innovation)
+            innovations.append(surprise.innovation)
             power += energy(surprise.white.reshape(surprise.white.shape[0], self._config.receivers, -1))
             error += float(np.vdot(surprise.innovation, surprise.innovation).real)
         degrees = frames * self.reception.directions
+        known = error < WELL_KNOWN * degrees * self._config.receivers
+        self.reception.listen(np.concatenate(innovations) if known else None)
         left_out = frames if self.reception.lock is Lock.LOST else 0
         return Fit(power / degrees, degrees, elapsed_s, error / (degrees * self._config.receivers), lost, left_out)
 
@@ -289,7 +303,7 @@ class Estimator:
         self._aperture = Elements(self._aperture.elements)
         self._bank = self._begin(patterns, outputs)
         self._bank.update(self._bank.sound(patterns, self._aperture), outputs)
-        self._innovations = Innovations(self._config.receivers, self._config.delay)
+        self._innovations = Innovations(self._config.receivers, self._config.delay.shape[1])
         return True
 
     def roll_back(self) -> NDArray[np.complex128] | None:

@@ -8,7 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..config import Config
-from ..detection.drift import Reading
+from ..detection.drift import Reading, Sample
+from ..detection.rises import Groups
 from ..detection.tones import TONE, Tones
 from ..oscillators.following import Following, Lock
 from ..oscillators.timing import TimingLoop
@@ -32,7 +33,9 @@ class Reception:
         self._heard = np.zeros(config.receivers)  # noise power of the block, times its degrees of freedom
         self._heard_degrees = 0
         left_over = config.delay.shape[0] - config.delay.shape[1]
-        self._tones = Tones(config.receivers, config.delay) if left_over >= noise.LEAST_OUTSIDE else None
+        self._tones: Tones | None = None
+        if left_over >= noise.LEAST_OUTSIDE:
+            self._tones = Tones(config.receivers, config.delay, predicted=not config.follow_phase)
         self.following: list[Following] = []
         if config.follow_phase:
             patience = config.aperture.size + 1
@@ -43,6 +46,11 @@ class Reception:
         """Names of the statistics under watch."""
         noises = tuple(noise_of(receiver) for receiver in range(self._heard.shape[0]))
         return (*noises, TONE) if self._tones is not None else noises
+
+    @property
+    def groups(self) -> dict[str, Groups]:
+        """Statistics that are the powers of many places, with what is watched of them."""
+        return {TONE: self._tones.groups} if self._tones is not None else {}
 
     @property
     def directions(self) -> int:
@@ -86,16 +94,32 @@ class Reception:
         tones, coefficients = self._project(frames)
         known, before = self._noise.known, self._noise.power
         self._measure(frames.patterns, tones, coefficients)
+        self._taken = tones, coefficients
         return self._in_noise_units(coefficients), before / self._noise.power if known else None
+
+    def listen(self, innovation: NDArray[np.complex128] | None) -> None:
+        """Watch the single tones of the frames taken last.
+
+        Parameters
+        ----------
+        innovation : ndarray of complex, shape (B, R Q), or None
+            What is left of them beyond their prediction, in units of the noise, where that is known and little.
+        """
+        if self._tones is None:
+            return
+        tones, coefficients = self._taken
+        if innovation is None or self.following:
+            self._tones.take(tones, coefficients)
+            return
+        left = innovation.reshape(coefficients.shape) * np.sqrt(self._noise.power)[:, None]
+        self._tones.take(tones, coefficients - left, predicted=True)
 
     def first(self, frames: Frames) -> NDArray[np.complex128]:
         """Bring the first frames of all to outputs as `take` does, without yet counting their noise."""
         tones, coefficients = self._project(frames)
-        kept, watching = self._noise.snapshot(), self._tones
-        self._tones = None
+        kept = self._noise.snapshot()
         if not self._noise.known:
             self._measure(frames.patterns, tones, coefficients)
-        self._tones = watching
         outputs = self._in_noise_units(coefficients)
         self._noise.load(kept)
         self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
@@ -114,15 +138,17 @@ class Reception:
         lowered = noise * (noise + 2.0 * power) / (2.0 * tones.shape[0] * (1.0 + power) ** 2)
         return float((np.log(1.0 + power) + lowered).mean()) / math.log(2.0)
 
-    def readings(self) -> list[Reading]:
+    def readings(self) -> list[Sample]:
         """Give samples of the noise heard since the last call: one a receiver, and one of single tones."""
         if not self._heard_degrees:
             return []
         heard = np.maximum(self._heard / self._heard_degrees, noise.FLOOR)
         degrees = self._heard_degrees
         self._heard, self._heard_degrees = np.zeros_like(self._heard), 0
-        powers = [Reading(noise_of(receiver), float(power), degrees) for receiver, power in enumerate(heard)]
-        return powers + self._tones.readings() if self._tones is not None else powers
+        powers: list[Sample] = [
+            Reading(noise_of(receiver), float(power), degrees) for receiver, power in enumerate(heard)
+        ]
+        return [*powers, *self._tones.readings()] if self._tones is not None else powers
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -161,8 +187,6 @@ class Reception:
     ) -> None:
         frames, left_over = tones.shape[0], tones.shape[2] - coefficients.shape[2]
         if left_over >= noise.LEAST_OUTSIDE:
-            if self._tones is not None:
-                self._tones.take(tones, coefficients)
             power, degrees = noise.outside(tones, coefficients), frames * left_over
         else:
             power, frames = noise.repeats(patterns, coefficients)
