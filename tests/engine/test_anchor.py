@@ -27,7 +27,7 @@ FRAMES, TONES, ELEMENTS = 64, 48, 63
 BASIS = delay_basis(64, 8, TONES, 10, 1)
 SIZE = BASIS.shape[1]
 # A sweep: columns of a Hadamard matrix (scipy), the first of ones for the direct path.
-SWEEP = scipy.linalg.hadamard(FRAMES).astype(np.float64)
+SWEEP = scipy.linalg.hadamard(FRAMES).astype(np.float32)
 NOISE = np.ones(1)
 Complex = NDArray[np.complex128]
 
@@ -111,7 +111,7 @@ def test_direct_path_times_a_factor_shows_as_what_it_is() -> None:
     estimate = _gaussian(rng, 1 + ELEMENTS, SIZE)
     found = _values(_anchored(estimate), estimate, np.tile(-0.1 * estimate[0], (FRAMES, 1)))
     assert found[DIRECT_GAIN] == pytest.approx(-0.1 * float(np.linalg.norm(estimate[0])) * math.sqrt(FRAMES))
-    assert abs(found[DIRECT_PHASE]) < 1e-9
+    assert abs(found[DIRECT_PHASE]) < 1e-4
 
 
 def test_delay_shows_with_its_sign() -> None:
@@ -161,8 +161,8 @@ def test_turned_direct_path_and_gain_are_taken_along() -> None:
     moved[0] *= turn
     _values(anchor, moved, nothing)
     found = _values(anchor, moved, nothing)
-    assert all(abs(found[name]) < 1e-9 for name in (GAIN, PHASE, DELAY, DIRECT_GAIN, DIRECT_PHASE))
-    assert found[SURFACE_MOVED] < -20
+    assert all(abs(found[name]) < 1e-4 for name in (GAIN, PHASE, DELAY, DIRECT_GAIN, DIRECT_PHASE))
+    assert found[SURFACE_MOVED] < -10
 
 
 def test_few_frames_are_gathered_and_a_snapshot_goes_on_bit_by_bit() -> None:

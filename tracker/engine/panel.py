@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 # The eight states in a byte of bits: looking them up is faster than working them out. Shape (256, 8).
 _BITS = np.unpackbits(np.arange(256, dtype=np.uint8)[:, None], axis=1, bitorder="little")
 STATES_OF_BYTE = 2.0 * _BITS.astype(np.float64) - 1.0
+_SINGLE_STATES_OF_BYTE = STATES_OF_BYTE.astype(np.float32)
 
 
 def pack(states: NDArray[np.generic]) -> NDArray[np.uint8]:
@@ -42,6 +43,11 @@ def unpack(bits: NDArray[np.uint8], elements: int) -> NDArray[np.float64]:
     """
     states = STATES_OF_BYTE.take(bits, axis=0).reshape(*bits.shape[:-1], -1)
     return states if states.shape[-1] == elements else states[..., :elements].copy()
+
+
+def unpack_single(bits: NDArray[np.uint8], elements: int) -> NDArray[np.float32]:
+    """Do as `unpack` does, in single precision."""
+    return _SINGLE_STATES_OF_BYTE.take(bits, axis=0).reshape(*bits.shape[:-1], -1)[..., :elements]
 
 
 @dataclass(frozen=True, slots=True)

@@ -49,7 +49,7 @@ class Past:
         self._taken.append(Heard(frames.patterns, frames.response, heard, frames.time_ns, noise))
 
     def hold(self, regressors: NDArray[Any], innovation: Complex) -> None:
-        """Hold frames against the slow average of the estimate: regressors (B, n) and innovations (B, R Q)."""
+        """Hold frames against the slow average of the estimate: regressors (B, n), innovations (B, R Q)."""
         self._anchor.take(regressors, innovation)
 
     def readings(self, coefficients: Complex, noise: Real) -> list[Reading]:

@@ -99,6 +99,7 @@ class Rises:
         self._usual = math.log(self._count)
         self._toll: Real = np.repeat(groups.degrees[: len(counts)], counts) * math.log(FACTOR)
         self._thresholds: Real = np.full(sum(counts), math.inf)
+        self._per_span: Real = np.zeros(sum(counts))  # one over how far each threshold lies above the usual
         for degrees in groups.degrees[: len(counts)]:
             gamma_threshold(2.0, degrees, FACTOR)  # makes the tables now: later a burst would wait for them
         self.reset()
@@ -145,23 +146,21 @@ class Rises:
         self._samples += samples
         self._elapsed_s += elapsed_s
         ratio = powers.power / self._level
-        seen = np.minimum(ratio, BOUND) if known >= WARM_UP else ratio
-        self._level *= 1.0 + (samples / min(self._samples, MEMORY)) * (seen.mean(axis=0) - 1.0)
-        np.maximum(self._level, FLOOR, out=self._level)
+        self._follow(ratio, bounded=known >= WARM_UP)
         if known < WARM_UP:
             return None
         if self._samples >= 2.0 * self._set_for:
             # In the long run the level is a moving average, which knows the mean as well as twice as many samples do.
             self._set_thresholds(min(known, 2 * MEMORY))
-        steps = self._steps(ratio)
-        sums, peak = self._sums, np.zeros_like(self._sums)
-        for step in steps:
+        sums, peak = self._sums, self._sums
+        for number, step in enumerate(self._steps(ratio)):
             sums += step
             np.maximum(sums, 0.0, out=sums)
-            np.maximum(peak, sums, out=peak)
+            if samples > 1:
+                peak = np.maximum(peak, sums) if number else sums.copy()
         self._since += samples
-        self._since[sums <= 0.0] = 0
-        heights = (peak - self._usual) / (self._thresholds - self._usual)
+        np.copyto(self._since, 0, where=sums <= 0.0)
+        heights = (peak - self._usual) * self._per_span
         place = int(heights.argmax())
         self.height = max(float(heights.ravel()[place]), 0.0)
         threshold = float(self._thresholds[place % self._thresholds.size])
@@ -170,6 +169,16 @@ class Rises:
             return None
         since = int(self._since.ravel()[place])
         return Change(True, self.highest[0], threshold, since)
+
+    def _follow(self, ratio: Real, *, bounded: bool) -> None:
+        """Let the levels follow the samples just counted, powers over the levels before."""
+        samples = ratio.shape[0]
+        share = 1.0 / max(min(self._samples, MEMORY), samples)
+        change = (np.minimum(ratio, BOUND) if bounded else ratio).sum(axis=0)
+        change *= share
+        change += 1.0 - samples * share
+        self._level *= change
+        np.maximum(self._level, FLOOR, out=self._level)
 
     def _steps(self, ratio: Real) -> Real:
         """Gains in likelihood, shape (samples, R, groups)."""
@@ -195,7 +204,10 @@ class Rises:
             gain = 1.0 - 1.0 / FACTOR
             off = 2.0 / gain * sure
             thresholds.append(sure + 0.5 * off * off / (degrees * known))
-        self._thresholds = np.repeat(thresholds, self._counts)
+        self._put_thresholds(np.repeat(thresholds, self._counts))
+
+    def _put_thresholds(self, thresholds: Real) -> None:
+        self._thresholds, self._per_span = thresholds, 1.0 / (thresholds - self._usual)
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -213,7 +225,7 @@ class Rises:
         self._sums = np.array(snapshot["sums"], dtype=np.float64)
         self._since = np.array(snapshot["since"], dtype=np.int64)
         self._level = np.array(snapshot["level"], dtype=np.float64)
-        self._thresholds = np.array(snapshot["thresholds"], dtype=np.float64)
+        self._put_thresholds(np.array(snapshot["thresholds"], dtype=np.float64))
         numbers: Sequence[float] = [float(number) for number in snapshot["numbers"]]
         self._elapsed_s, self._all_tests, self._set_for, self.height = numbers[:4]
         self.highest = (numbers[4], numbers[5])

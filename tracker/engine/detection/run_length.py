@@ -117,9 +117,9 @@ def by_chain(threshold: float, cdf: Callable[[Real], Real]) -> float:
         Distribution function of x, elementwise.
     """
     width = 2.0 * threshold / (2 * STATES - 1)
-    level = width * np.arange(STATES)
-    upper = level[None, :] + 0.5 * width - level[:, None]
-    below = cdf(upper)
+    # From one level to another: what counts is how many levels they are apart.
+    number = np.arange(STATES)
+    below = cdf(width * (np.arange(1 - STATES, STATES) + 0.5))[number - number[:, None] + STATES - 1]
     chance = np.diff(below, axis=1, prepend=0.0)
     return float(np.linalg.solve(np.eye(STATES) - chance, np.ones(STATES))[0])
 

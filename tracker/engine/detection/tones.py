@@ -93,7 +93,7 @@ class Tones:
             return []
         power = np.concatenate(self._ready) if len(self._ready) > 1 else self._ready[0]
         self._ready = []
-        return [Powers(TONE, power / (power.mean(axis=2, keepdims=True) + FLOOR))]
+        return [Powers(TONE, power * (power.shape[2] / (power.sum(axis=2, keepdims=True) + np.float32(FLOOR))))]
 
     def snapshot(self) -> dict[str, Any]:
         """All state, between blocks."""

@@ -44,6 +44,9 @@ class ApertureBasis(Protocol):
     def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> NDArray[Any]:
         """Do as `regressors` does for packed patterns (B, ceil(N/8)), see `panel.pack`."""
 
+    def single_regressors_of_bits(self, patterns: NDArray[np.uint8]) -> NDArray[Any]:
+        """Do as `regressors_of_bits` does, in single precision."""
+
     def surface(self, coefficients: Complex) -> Complex:
         """Turn coefficients (r, D) into element responses (N, D)."""
 
@@ -67,6 +70,13 @@ class Elements:
     def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> Array:
         """See `ApertureBasis`."""
         return self.regressors(panel.unpack(patterns, self.elements))
+
+    def single_regressors_of_bits(self, patterns: NDArray[np.uint8]) -> NDArray[np.float32]:
+        """See `ApertureBasis`."""
+        z = np.empty((patterns.shape[0], self.size + 1), dtype=np.float32)
+        z[:, 0] = 1.0
+        z[:, 1:] = panel.unpack_single(patterns, self.elements)
+        return z
 
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""
@@ -107,6 +117,10 @@ class Tiles:
     def regressors_of_bits(self, patterns: NDArray[np.uint8]) -> Array:
         """See `ApertureBasis`."""
         return self.regressors(panel.unpack(patterns, self.elements))
+
+    def single_regressors_of_bits(self, patterns: NDArray[np.uint8]) -> NDArray[np.float32]:
+        """See `ApertureBasis`."""
+        return self.regressors_of_bits(patterns).astype(np.float32)
 
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""
@@ -153,6 +167,10 @@ class Columns:
         z[:, 0] = 1.0
         z[:, 1:] = self._products.products(patterns)
         return z
+
+    def single_regressors_of_bits(self, patterns: NDArray[np.uint8]) -> NDArray[np.complex64]:
+        """See `ApertureBasis`."""
+        return self.regressors_of_bits(patterns).astype(np.complex64)
 
     def surface(self, coefficients: Complex) -> Complex:
         """See `ApertureBasis`."""

@@ -174,7 +174,7 @@ class Estimator:
             heard = sounded.part(part)
             surprise = bank.update(heard, outputs[part])
             self._innovations.take(surprise)
-            self._past.hold(heard.regressors, surprise.innovation)
+            self._past.hold(heard.single_regressors, surprise.innovation)
             innovations.append(surprise.innovation)
             power += energy(surprise.white.reshape(surprise.white.shape[0], self._config.receivers, -1))
             error += float(np.vdot(surprise.innovation, surprise.innovation).real)

@@ -33,6 +33,13 @@ class Sounded:
         """Regressors z, shape (B, r + 1): worked out when first asked for, for a sweep has no need of them."""
         return self._aperture.regressors_of_bits(self.patterns)
 
+    @property
+    def single_regressors(self) -> NDArray[Any]:
+        """The same in single precision, good enough for statistics."""
+        if "regressors" not in self.__dict__:
+            return self._aperture.single_regressors_of_bits(self.patterns)
+        return self.regressors.astype(np.complex64 if self._aperture.is_complex else np.float32)
+
     def part(self, frames: slice | NDArray[Any]) -> "Sounded":
         """Take some of the frames."""
         part = Sounded(self.patterns[frames], self._aperture, self.rows[frames] if self.rows is not None else None)

@@ -26,7 +26,7 @@ THOROUGH_EVERY = 1024
 # Between them glances are taken at other starts: the distance doubles after one that found nothing, up to so many
 # refreshes, and is one again after one that clearly gained, as they do while the channel moves: by this share of the
 # standard deviation of the rate at least.
-LEAST_APART, MOST_APART, CLEAR = 2, 16, 0.5
+LEAST_APART, MOST_APART, CLEAR = 2, 16, 1.0
 # Bursts after which a controller that still shows another pattern than the latest is sent it again.
 PATIENCE_BURSTS = 32
 # Share of the least gain that flips must promise for a search to be begun: what they bring is 0.7 to 1.5 times that.
