@@ -101,5 +101,5 @@ def write_lines(stream: Stream, out: TextIO, running: Callable[[], bool]) -> Non
             out.write(f"{clock} {'!' if note.grave else '·'} {stream.model.link}, {note.kind}: {note}\n")
         if now >= due:
             out.write(f"{clock} {line(stream.model, now, since)}\n")
-            due = max(due + 1.0, now)
+            due = (due if now < due + 1.0 else now) + 1.0  # after a pause of the machine one line, not two at once
         out.flush()
