@@ -154,9 +154,7 @@ def test_ten_thousand_spoilt_messages_change_nothing(nursery: Nursery, tmp_path:
     assert same(found[0][0], found[1][0])
 
 
-def test_the_last_seq_that_there_is_ends_nothing(
-    make_controller: Callable[..., Controller], nursery: Nursery
-) -> None:
+def test_the_last_seq_that_there_is_ends_nothing(make_controller: Callable[..., Controller], nursery: Nursery) -> None:
     """Stray bursts far ahead make more losses than 64 bits count: bursts are taken on, and the estimate is kept."""
     controller = make_controller(link="clock_skew_s = 600.0")
     service = nursery.start("serve", controller.path)

@@ -282,5 +282,6 @@ def _is_compound(head: Body) -> bool:
 
 
 def _broken(kind: str, error: Exception) -> Refused:
-    why = " ".join(str(error).split()) or type(error).__name__
+    nested = isinstance(error, msgpack.StackError)
+    why = "nested too deep" if nested else " ".join(str(error).split()) or type(error).__name__
     return Refused(Reason.NOT_MSGPACK, f"{kind}: not one whole MessagePack map: {why}")
