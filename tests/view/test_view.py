@@ -116,6 +116,14 @@ class Halting:
         return 0
 
 
+def test_a_second_is_not_needed_for_a_line() -> None:
+    """Who watches for less than a second, or on a machine that stands still, gets one line all the same."""
+    out = io.StringIO()
+    plain.write_lines(cast(Stream, Halting()), out, lambda: False)
+    assert out.getvalue().endswith("yard, nothing heard yet, waiting for 0 s\n")
+    assert out.getvalue().count("\n") == 1
+
+
 def test_a_pause_of_the_machine_gives_one_line(monkeypatch: pytest.MonkeyPatch) -> None:
     """Lines come about a second apart, and a late one does not bring the next one forward."""
     stream, times = Halting(), list[float]()
