@@ -29,6 +29,7 @@ spacing_khz = 156.25
 publish = "tcp://127.0.0.1:9"
 """
 QUIET = str(ROOT / "replay_logs" / "quiet-start.mcap")
+BRIEFLY = ["--plain", "--seconds", "1"]
 ARGUMENTS = {
     "serve": ["SETTINGS", "--log"],
     "replay": ["LOG", "--settings", "--out", "--json", "--quiet"],
@@ -116,10 +117,26 @@ def test_help_of_each_command_is_complete(command: str, capsys: pytest.CaptureFi
         (["drift", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
         (["inspect", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
         (["suggest", "nowhere.mcap"], "nowhere.mcap: there is no such file"),
+        (
+            ["check", "nowhere.toml", "--more"],
+            "ris-tracker check: unrecognized arguments: --more; see ris-tracker check",
+        ),
         (["watch"], "--publish"),
+        (
+            ["watch", "--publish", "here:5601", "--link", "yard"],
+            "--publish: found 'here:5601', allowed is: an endpoint",
+        ),
+        (
+            ["watch", "--publish", "tcp://127.0.0.1:65536", "--link", "yard", *BRIEFLY],
+            "65536', allowed is: an endpoint",
+        ),
+        (
+            ["watch", "--publish", "tcp://127.0.0.1:5601", "--link", "B", *BRIEFLY],
+            "--link: found 'B', allowed is: 1 to 32 char",
+        ),
         (["watch", "--publish", "tcp://127.0.0.1:5601"], "--link"),
-        (["watch", "--publish", "telephone", "--link", "yard"], "telephone"),
-        (["watch", "--publish", "tcp://127.0.0.1:5601", "--link", "The Yard"], "The Yard"),
+        (["watch", "--publish", "telephone", "--link", "yard", *BRIEFLY], "telephone"),
+        (["watch", "--publish", "tcp://127.0.0.1:5601", "--link", "The Yard", *BRIEFLY], "The Yard"),
         (["watch", "--seconds", "0"], "'0'"),
         (["watch", "--seconds", "soon"], "'soon'"),
     ],
@@ -234,13 +251,20 @@ def test_a_reader_that_goes_away_is_no_error(settings: Path) -> None:
     assert (done.returncode, done.stderr) == (0, "")
 
 
+def test_output_that_knows_no_unicode_is_no_fault(settings: Path) -> None:
+    """Where the terminal's encoding has no × or −, they are spelt, and the command is done."""
+    done = run("check", str(settings), PYTHONIOENCODING="ascii")
+    assert (done.returncode, done.stderr) == (0, "")
+    assert "20 columns \\xd7 16 rows" in done.stdout
+
+
 def test_help_and_mistakes_answer_without_the_heavy_parts() -> None:
     """Arguments are read before NumPy, sockets or screens are loaded."""
     program = (
         "import sys; from tracker.cli import entry\n"
         "try: entry(['--version'])\n"
         "except SystemExit: pass\n"
-        "print([name for name in ('numpy', 'scipy', 'zmq', 'mcap') if name in sys.modules])"
+        "print([name for name in ('numpy', 'scipy', 'zmq', 'mcap', 'pydantic') if name in sys.modules])"
     )
     done = subprocess.run(
         [sys.executable, "-c", program],

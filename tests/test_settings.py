@@ -96,6 +96,17 @@ def test_every_key_that_is_given_counts() -> None:
     assert settings.panel.stuck == {"plus": [0, 7], "minus": [319]}
 
 
+def test_the_mark_that_some_editors_put_first_is_no_mistake() -> None:
+    """A file that begins with U+FEFF reads as without it."""
+    assert parse("\ufeff" + LEAST) == parse(LEAST)
+
+
+def test_every_port_that_there_is_can_be_named() -> None:
+    """Ports 0 to 65535 are taken, on names and on addresses of either kind."""
+    for end in ("tcp://127.0.0.1:65535", "tcp://mast.example:1", "tcp://[::1]:60000", "ipc:///run/pilots"):
+        assert parse(LEAST + f'[sockets]\npilots = "{end}"\n').sockets.pilots == end
+
+
 def test_settings_cannot_be_changed_afterwards() -> None:
     """What was validated stays so."""
     settings = parse(LEAST)
@@ -152,6 +163,17 @@ MISTAKES: list[tuple[str, str, str]] = [
         '[sockets]\npilots = "localhost"\n[tones]',
         "sockets.pilots: found 'localhost', allowed is: an endpoint",
     ),
+    (
+        "[tones]",
+        '[sockets]\npilots = "tcp://127.0.0.1"\n[tones]',
+        "sockets.pilots: found 'tcp://127.0.0.1', allowed is: an endpoint such as tcp://127.0.0.1:5600, its port",
+    ),
+    (
+        "[tones]",
+        '[sockets]\npublish = "tcp://127.0.0.1:65536"\n[tones]',
+        "sockets.publish: found 'tcp://127.0.0.1:65536', allowed is: an endpoint",
+    ),
+    ("[tones]", "[sockets]\nqueue_mb = 2e5\n[tones]", "sockets.queue_mb: found 200000.0, allowed is: less than or"),
     ("[tones]", '[sockets]\npilots = "tcp://127.0.0.1:5602"\n[tones]', "sockets: pilots, publish and control must be"),
     ("[tones]", "[refresh]\nmost_changes = 0\n[tones]", "refresh.most_changes: found 0, allowed is: greater than or"),
     ("[tones]", "[refresh]\nleast_gain = -1.0\n[tones]", "refresh.least_gain: found -1.0, allowed is: greater than"),

@@ -6,6 +6,7 @@ Each command imports its part only when it is called, so that `--help` and mista
 # ruff: noqa: PLC0415 - late imports are meant, see above
 
 import argparse
+import io
 import os
 import sys
 import tempfile
@@ -15,7 +16,6 @@ from pathlib import Path
 from typing import NoReturn
 
 from tracker import __version__
-from tracker.settings import SettingsError, load
 
 CAUTION = """\
 caution:
@@ -125,8 +125,10 @@ examples:
     watch.add_argument(
         "settings", metavar="SETTINGS", type=Path, nargs="?", help="settings of the service: endpoint, link and panel"
     )
-    watch.add_argument("--publish", metavar="ENDPOINT", help="where the service publishes, as tcp://HOST:PORT")
-    watch.add_argument("--link", metavar="NAME", help="name of the link")
+    watch.add_argument(
+        "--publish", metavar="ENDPOINT", type=_endpoint, help="where the service publishes, as tcp://HOST:PORT"
+    )
+    watch.add_argument("--link", metavar="NAME", type=_link, help="name of the link")
     watch.add_argument("--plain", action="store_true", help="one line a second instead of a screen, for logs")
     watch.add_argument("--seconds", metavar="S", type=_positive, help="end after this many seconds")
 
@@ -233,6 +235,22 @@ def _existing(text: str) -> Path:
     return path
 
 
+def _endpoint(text: str) -> str:
+    return _allowed(text, endpoint=True)
+
+
+def _link(text: str) -> str:
+    return _allowed(text, endpoint=False)
+
+
+def _allowed(text: str, *, endpoint: bool) -> str:
+    from tracker.settings import not_allowed
+
+    if said := not_allowed(text, endpoint=endpoint):
+        raise argparse.ArgumentTypeError(said)
+    return text
+
+
 def _positive(text: str) -> float:
     try:
         value = float(text)
@@ -266,6 +284,7 @@ def _replay(asked: argparse.Namespace) -> int:
 def _check(asked: argparse.Namespace) -> int:
     from tracker.assembly import configure
     from tracker.service.sockets import receive_queue
+    from tracker.settings import load
     from tracker.view.summary import summary
 
     settings = load(asked.settings)
@@ -275,6 +294,7 @@ def _check(asked: argparse.Namespace) -> int:
 
 
 def _watch(asked: argparse.Namespace) -> int:
+    from tracker.settings import SettingsError, load
     from tracker.view.watch import watch
 
     settings = load(asked.settings) if asked.settings is not None else None
@@ -338,6 +358,7 @@ def _is_mistake(error: Exception) -> bool:
     from tracker.logs.errors import LogError
     from tracker.offline.errors import OfflineError
     from tracker.service.errors import ServiceError
+    from tracker.settings import SettingsError
 
     return isinstance(error, (SettingsError, LogError, OfflineError, ServiceError))
 
@@ -355,7 +376,12 @@ def entry(arguments: Sequence[str] | None = None) -> int:
     int
         Exit status. Mistakes in the arguments themselves leave by SystemExit(2), help and version by SystemExit(0).
     """
-    asked = _parser().parse_args(arguments)
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):  # what a terminal or a file of another encoding cannot show is spelt
+            stream.reconfigure(errors="backslashreplace")
+    asked, unknown = _parser().parse_known_args(arguments)
+    if unknown:
+        _Parser(prog=f"ris-tracker {asked.command}").error(f"unrecognized arguments: {' '.join(unknown)}")
     try:
         status = COMMANDS[asked.command](asked)
         sys.stdout.flush()

@@ -1,6 +1,7 @@
 """The settings file: one TOML file a link, validated once, with errors that a person can act on."""
 
 import difflib
+import re
 import tomllib
 from pathlib import Path
 from typing import Annotated, Any, Literal, get_args
@@ -15,10 +16,11 @@ class SettingsError(Exception):
 Positive = Annotated[int, Field(ge=1)]
 PositiveFloat = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 _LINK = r"^[a-z0-9-]{1,32}$"
-_ENDPOINT = r"^(tcp|ipc|inproc)://\S+$"
+_PORT = r"(\*|\d{1,4}|[1-5]\d{4}|6[0-4]\d{3}|65[0-4]\d\d|655[0-2]\d|6553[0-5])"
+_ENDPOINT = rf"^(tcp://\S+:{_PORT}|(ipc|inproc)://\S+)$"
 _PATTERNS = {
     _LINK: "1 to 32 characters from a-z, 0-9 and -",
-    _ENDPOINT: "an endpoint such as tcp://127.0.0.1:5600 or ipc:///run/pilots",
+    _ENDPOINT: "an endpoint such as tcp://127.0.0.1:5600, its port at most 65535, or ipc:///run/pilots",
 }
 Endpoint = Annotated[str, Field(pattern=_ENDPOINT)]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
@@ -182,7 +184,7 @@ class Sockets(Table):
     pilots: Endpoint = "tcp://127.0.0.1:5600"
     publish: Endpoint = "tcp://127.0.0.1:5601"
     control: Endpoint = "tcp://127.0.0.1:5602"
-    queue_mb: PositiveFloat = 512.0
+    queue_mb: Annotated[float, Field(gt=0, le=1e5, allow_inf_nan=False)] = 512.0
 
     @model_validator(mode="after")
     def _apart(self) -> "Sockets":
@@ -237,6 +239,12 @@ class Settings(Table):
         return self
 
 
+def not_allowed(text: str, *, endpoint: bool = False) -> str | None:
+    """Say in one line why a text cannot name a link, or an endpoint; None when it can."""
+    pattern = _ENDPOINT if endpoint else _LINK
+    return None if re.fullmatch(pattern, text) else f"found {text!r}, allowed is: {_PATTERNS[pattern]}"
+
+
 def load(path: Path) -> Settings:
     """Read a settings file.
 
@@ -271,7 +279,7 @@ def parse(text: str, name: str = "settings.toml") -> Settings:
         One line: the file, the key, what was found, what is allowed.
     """
     try:
-        raw = tomllib.loads(text)
+        raw = tomllib.loads(text.removeprefix("\ufeff"))  # some editors begin every file with that mark
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{name}: not valid TOML: {error}") from None
     try:

@@ -7,7 +7,8 @@ from typing import Any
 import msgpack
 import numpy as np
 
-ARRAY = 1
+# Kinds of value that MessagePack has not of itself.
+ARRAY, INTEGER = 1, 2
 VERSION = 1
 # Name under which a start lies in a log.
 START = "start.msgpack"
@@ -36,7 +37,7 @@ class Start:
 def pack_start(start: Start) -> bytes:
     """Pack a start."""
     body = {"v": VERSION, "first_id": start.first_id, "snapshot": start.snapshot}
-    return bytes(msgpack.packb(body, default=_pack_array))
+    return bytes(msgpack.packb(body, default=_pack_other))
 
 
 def unpack_start(data: bytes) -> Start:
@@ -47,7 +48,7 @@ def unpack_start(data: bytes) -> Start:
     SnapshotError
     """
     try:
-        body = msgpack.unpackb(data, ext_hook=_unpack_array, strict_map_key=False)
+        body = msgpack.unpackb(data, ext_hook=_unpack_other, strict_map_key=False)
         if body["v"] != VERSION:
             raise SnapshotError(f"the snapshot is of version {body['v']}, this program reads {VERSION}")
         return Start(int(body["first_id"]), body["snapshot"])
@@ -57,7 +58,9 @@ def unpack_start(data: bytes) -> Start:
         raise SnapshotError(f"the snapshot cannot be read ({type(error).__name__})") from None
 
 
-def _pack_array(value: Any) -> msgpack.ExtType:
+def _pack_other(value: Any) -> msgpack.ExtType:
+    if isinstance(value, int):  # a count, or the `seq` after the last that there is: beyond 64 bits
+        return msgpack.ExtType(INTEGER, str(value).encode("ascii"))
     if not isinstance(value, np.ndarray):
         raise TypeError(f"a snapshot holds plain values and arrays, not {type(value).__name__}")
     order = "F" if value.flags.f_contiguous and not value.flags.c_contiguous else "C"
@@ -65,7 +68,9 @@ def _pack_array(value: Any) -> msgpack.ExtType:
     return msgpack.ExtType(ARRAY, head + value.tobytes(order="A"))
 
 
-def _unpack_array(code: int, data: bytes) -> Any:
+def _unpack_other(code: int, data: bytes) -> Any:
+    if code == INTEGER:
+        return int(data)
     if code != ARRAY:
         raise SnapshotError(f"the snapshot holds an unknown kind of value ({code})")
     unpacker = msgpack.Unpacker(max_buffer_size=0)

@@ -204,6 +204,19 @@ def rewritten(one: Pass, path: Path, attachments: dict[str, bytes], bursts: int)
     return path
 
 
+def test_a_damaged_log_serves_as_far_as_it_goes_and_says_so(
+    noisy: Pass, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Of a cut log what is whole is learned from, and the last line says where it was cut."""
+    log, out = tmp_path / "cut.mcap", tmp_path / "basis.npz"
+    log.write_bytes(noisy.log.read_bytes()[:-200_000])
+    assert entry(["learn", str(log), "--out", str(out), "--size", "1", "--quiet"]) == 0
+    told = capsys.readouterr().out
+    assert told.startswith("1 column for 64 elements")
+    assert told.splitlines()[-1].startswith(f"damage: {log}: byte ")
+    assert out.exists()
+
+
 @pytest.mark.parametrize(
     ("change", "bursts", "words"),
     [

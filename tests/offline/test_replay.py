@@ -419,7 +419,7 @@ def mistakes(journal: Path, folder: Path) -> dict[str, tuple[list[str | Path], s
         "empty": ([empty], "empty.mcap: the file is empty"),
         "other sizes": (
             [journal, "--settings", other],
-            "16 elements, 1 receivers, 16 tones, but the settings say 20, 1",
+            "elements = 16, receivers = 1, tones = 16, but the settings say 20, 1",
         ),
         "other link": ([journal, "--settings", link], "holds no bursts of link 'field', but of yard"),
         "settings in the log": ([wrong], "wrong.mcap: settings.toml: link.name"),

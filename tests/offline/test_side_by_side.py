@@ -74,6 +74,33 @@ def test_logs_that_need_one_another_are_taken_in_turn(files: list[Path], tmp_pat
     assert side_by_side.processes_for([files[0], bare]) == 1
 
 
+@pytest.mark.parametrize("beside", [False, True])
+def test_logs_of_two_links_are_not_mixed(
+    files: list[Path],
+    tmp_path: Path,
+    beside: bool,
+    monkeypatch: pytest.MonkeyPatch,
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    """Journals of two links give no figures of both: one line names the log of the other, however they are replayed."""
+    if beside:
+        monkeypatch.setattr(os, "sched_getaffinity", lambda process: {0, 1})
+        monkeypatch.setattr(side_by_side, "WORTH", 0)
+    controller = Controller(tmp_path, "quay")
+    with running(controller) as this:
+        for burst in bursts(3):
+            controller.step(burst)
+    controller.close()
+    assert this.journal.path is not None
+    logs = [files[0], this.journal.path]
+    assert side_by_side.processes_for(logs) == 1 + beside
+    for arguments in (["replay", *map(str, logs)], ["replay", *map(str, reversed(logs))]):
+        assert entry([*arguments, "--quiet"]) == 2
+        said = capsys.readouterr().err
+        assert said.startswith(f"ris-tracker replay: {arguments[2]}: is of link ")
+        assert said.count("\n") == 1
+
+
 @pytest.mark.usefixtures("cores")
 def test_a_log_that_cannot_be_replayed_is_told_in_one_line(
     files: list[Path], tmp_path: Path, capfd: pytest.CaptureFixture[str]

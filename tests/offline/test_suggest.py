@@ -343,10 +343,13 @@ def test_the_link_with_the_most_bursts_is_taken(tmp_path: Path) -> None:
 
 
 def test_a_damaged_log_serves_as_far_as_it_goes(tmp_path: Path) -> None:
-    """A cut log gives settings from what is whole."""
+    """A cut log gives settings from what is whole, and they say so; of a whole log they say nothing."""
     path = Yard(bursts=60).record(tmp_path / "a.mcap")
+    words = "# The log is not whole, and only what can be read of it counts: byte "
+    assert words not in draft(path)
     path.write_bytes(path.read_bytes()[:-200_000])
     assert suggested(path).panel.elements == 15
+    assert words in draft(path)
 
 
 def test_the_settings_are_printed(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

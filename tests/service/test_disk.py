@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from structlog.testing import CapturingLogger
 
 from tests.service.station import PATIENCE_S, RESTLESS, Controller, bursts, running
 from tracker.engine.events import Cause
@@ -149,14 +150,16 @@ def test_an_id_that_cannot_be_kept_withholds_its_pattern(
 
 
 def test_commands_that_cannot_be_recorded_are_carried_out(controller: Controller) -> None:
-    """An operator who wants the pattern left alone is not told to mend the disk first."""
-    disk = Disk()
-    with running(controller, disk.create) as this:
+    """An operator who wants the pattern left alone is not told to mend the disk first; the log names the folder."""
+    disk, log = Disk(), CapturingLogger()
+    with running(controller, disk.create, log) as this:
         controller.step(bursts(1)[0])
         disk.works = False
         assert controller.ask("hold").values["mode"] == "held"
         controller.listen(lambda heard: bool(heard.alarm))
     assert this.fault is None
+    (told,) = [call.kwargs for call in log.calls if call.kwargs.get("kind") == "disk"]
+    assert told["detail"] == f"{controller.journal}: No space left on device"
 
 
 def test_a_journal_that_cannot_begin_says_why(tmp_path: Path) -> None:

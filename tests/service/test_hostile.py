@@ -4,6 +4,7 @@ import random
 import time
 from collections import Counter
 from collections.abc import Callable, Iterator
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -151,6 +152,27 @@ def test_ten_thousand_spoilt_messages_change_nothing(nursery: Nursery, tmp_path:
     assert found[0][1] == found[1][1]
     assert len(found[0][1]) > 10
     assert same(found[0][0], found[1][0])
+
+
+def test_the_last_seq_that_there_is_ends_nothing(make_controller: Callable[..., Controller], nursery: Nursery) -> None:
+    """Stray bursts far ahead make more losses than 64 bits count: bursts are taken on, and the estimate is kept."""
+    controller = make_controller(link="clock_skew_s = 600.0")
+    service = nursery.start("serve", controller.path)
+    controller.meet()
+    played = bursts(6)
+    last = 2**64 - 1
+    for number, burst in enumerate(played):
+        seq = last if number % 2 else 0
+        state = controller.step(replace(burst, run=number // 2, seq=seq))
+    assert state.bursts == len(played)
+    assert state.lost == last, "the largest number that the format has"
+    assert controller.ask("status").values["lost"] == last
+    assert controller.ask("stop").ok
+    assert nursery.wait(service) == 0
+    _, start = msgpack.unpackb((controller.journal / "yard.checkpoint").read_bytes())
+    snapshot = unpack_start(start).snapshot
+    assert snapshot is not None
+    assert 3 * (last - 1) in snapshot["counts"]
 
 
 def test_a_listener_that_does_not_read_stalls_nobody(

@@ -6,7 +6,6 @@ import logging
 import time
 from collections.abc import Callable
 from dataclasses import replace
-from datetime import datetime
 from typing import Any
 
 import msgpack
@@ -88,20 +87,21 @@ def test_refusals_are_told_once_a_second_at_most(controller: Controller) -> None
         wrapper_class=structlog.make_filtering_bound_logger(logging.INFO),
         processors=[structlog.processors.TimeStamper(fmt="iso", utc=True), structlog.processors.JSONRenderer()],
     )
+    began = time.monotonic()
     with running(controller, log=log):
         for turn in range(6):
             for _ in range(100):
                 controller.send_body(b"junk")
-            until = time.monotonic() + 0.25
-            while time.monotonic() < until:
-                controller.ask("status")
-            assert controller.ask("status").values["refused"] == {"not-a-map": 100 * (turn + 1)}
+            until, refused = time.monotonic() + 0.25, dict[str, int]()
+            while time.monotonic() < until or refused != {"not-a-map": 100 * (turn + 1)}:
+                refused = controller.ask("status").values["refused"]
+                assert time.monotonic() < until + PATIENCE_S, refused
+    took_s = time.monotonic() - began
     told = [line for line in map(json.loads, lines.getvalue().splitlines()) if line["event"] == "refused"]
-    at = [datetime.fromisoformat(line["timestamp"]).timestamp() for line in told]
     assert sum(line["by_reason"]["not-a-map"] for line in told) == 600
     assert len(told) >= 2
-    # The last line comes when the service ends; the time of a line is read a moment after the decision to write it.
-    assert all(gap > 0.95 for gap in np.diff(at[:-1]))
+    # One at the beginning, one in each second that has passed since, and one when the service ends.
+    assert len(told) <= int(took_s) + 2
 
 
 def test_lost_bursts_raise_a_gap_alarm(controller: Controller) -> None:

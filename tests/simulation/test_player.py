@@ -38,6 +38,7 @@ def wires() -> Iterator[SimpleNamespace]:
         pilots = f"ipc://{folder}/pilots"
         listening, publishing = context.socket(zmq.SUB), context.socket(zmq.PUB)
         listening.setsockopt(zmq.RCVTIMEO, PATIENCE_MS)
+        listening.setsockopt(zmq.RECONNECT_IVL, 10)  # the process binds later; then it is heard at once
         listening.subscribe(b"")
         listening.connect(pilots)
         publishing.bind("tcp://127.0.0.1:*")
@@ -114,10 +115,10 @@ def test_plans_are_obeyed_and_truth_says_what_is_left_for_payload(wires: SimpleN
 
 def test_play_ends_by_itself_after_the_bursts_asked_for(wires: SimpleNamespace) -> None:
     """Numbers run from 0 without a gap, times ascend at the pace, and the process says what it did."""
-    process = play(wires, "slow-carrier", "--bursts", "40", "--bursts-per-s", "40", "--no-truth", "--link", "yard")
+    process = play(wires, "slow-carrier", "--bursts", "80", "--bursts-per-s", "40", "--no-truth", "--link", "yard")
     try:
         bursts: list[Burst] = []
-        while not bursts or bursts[-1].seq < 39:
+        while not bursts or bursts[-1].seq < 79:
             topic, body = wires.listening.recv_multipart()
             assert topic == b"pilots/yard"
             bursts.append(decode_pilots(body, "yard", None))
@@ -125,9 +126,9 @@ def test_play_ends_by_itself_after_the_bursts_asked_for(wires: SimpleNamespace) 
     finally:
         process.kill()
     assert process.returncode == 0
-    assert "40 bursts sent" in said
+    assert "80 bursts sent" in said
     numbers = [burst.seq for burst in bursts]
-    assert numbers == list(range(numbers[0], 40))
+    assert numbers == list(range(numbers[0], 80))
     gaps = np.diff([burst.t_ns for burst in bursts])
     assert np.all(gaps >= 25_000_000)
 

@@ -4,6 +4,7 @@ from pathlib import Path
 
 import pytest
 
+from tracker.engine.burst import Burst
 from tracker.engine.events import Pattern
 from tracker.logs import LogReader
 from tracker.messages import decode_pattern, decode_pilots
@@ -52,6 +53,23 @@ def test_same_scene_and_seed_write_the_same_file(tmp_path: Path) -> None:
     write(tmp_path / "a.mcap", 12)
     write(tmp_path / "b.mcap", 12)
     assert (tmp_path / "a.mcap").read_bytes() == (tmp_path / "b.mcap").read_bytes()
+
+
+def test_recording_can_be_interrupted(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Ctrl-C: one line and status 130 (128 + SIGINT, as shells count); the log is whole as far as it goes."""
+    out, sounded = tmp_path / "quiet.mcap", Testbed.next_burst
+
+    def interrupted(testbed: Testbed, now_ns: int) -> Burst:
+        if out.exists() and any(True for _ in LogReader(out)):
+            raise KeyboardInterrupt
+        return sounded(testbed, now_ns)
+
+    monkeypatch.setattr(Testbed, "next_burst", interrupted)
+    assert main(["record", "quiet", str(out), "--seconds", "1", "--open-loop", "--frames", "16"]) == 130
+    assert capsys.readouterr().err.count("\n") == 1
+    assert any(record.topic == "pilots/yard" for record in LogReader(out))
 
 
 def test_record_command_writes_a_log_and_never_over_one(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

@@ -7,6 +7,7 @@ import threading
 import time
 from collections.abc import Iterator
 from dataclasses import replace
+from typing import cast
 
 import msgpack
 import numpy as np
@@ -101,6 +102,41 @@ def shown(
     scene = Scene(model, "tcp://127.0.0.1:5601", shape, since=90.0, now=now)
     console.print(screen(scene, width, height), height=height)
     return console.export_text()
+
+
+class Halting:
+    """A stream in which nothing comes, on a machine that stands still for seven seconds now and then."""
+
+    def __init__(self) -> None:
+        self.model, self.now, self.calls = LinkModel("yard"), 0.0, 0
+
+    def receive(self, seconds: float) -> int:
+        self.calls += 1
+        self.now += 7.3 if self.calls % 20 == 0 else max(seconds, 0.05)
+        return 0
+
+
+def test_a_second_is_not_needed_for_a_line() -> None:
+    """Who watches for less than a second, or on a machine that stands still, gets one line all the same."""
+    out = io.StringIO()
+    plain.write_lines(cast(Stream, Halting()), out, lambda: False)
+    assert out.getvalue().endswith("yard, nothing heard yet, waiting for 0 s\n")
+    assert out.getvalue().count("\n") == 1
+
+
+def test_a_pause_of_the_machine_gives_one_line(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Lines come about a second apart, and a late one does not bring the next one forward."""
+    stream, times = Halting(), list[float]()
+
+    class Timed(io.StringIO):
+        def write(self, text: str) -> int:
+            times.append(stream.now)
+            return super().write(text)
+
+    monkeypatch.setattr(time, "monotonic", lambda: stream.now)
+    plain.write_lines(cast(Stream, stream), Timed(), lambda: stream.now < 60.0)
+    assert 20 < len(times) < 60
+    assert min(b - a for a, b in itertools.pairwise(times)) > 0.9
 
 
 def test_what_sounding_takes_is_shown_beside_the_rate() -> None:

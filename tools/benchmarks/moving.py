@@ -21,7 +21,7 @@ import numpy as np
 from benchmarks.row import Row
 from tracker.basis_file import pack_basis
 from tracker.engine.events import Pattern, State
-from tracker.offline.learn import work_out
+from tracker.offline.learn import take_all, work_out
 from tracker.offline.progress import Bars
 from tracker.settings import parse
 from tracker.simulation.best import best_pattern
@@ -272,7 +272,8 @@ def _learn(bed: Testbed, text: str, pace: float, seconds: float, folder: Path) -
     log = folder / "pass.mcap"
     settings = parse(text)
     record(turns(bed, START_NS, pace, int(seconds * pace), EngineInLoop(settings)), log, "yard", text)
-    basis = work_out([log], settings, text, None, Bars(None))
+    bars = Bars(None)
+    basis = work_out(take_all([log], settings, bars), settings, text, None, bars)
     (folder / "basis.npz").write_bytes(pack_basis(basis))
 
 

@@ -7,7 +7,7 @@ from typing import Any
 import msgpack
 
 from tracker.engine.refusal import Reason
-from tracker.messages.fields import VERSION, Body, read_nested
+from tracker.messages.fields import VERSION, Body, pack, read_nested
 
 
 class Verb(StrEnum):
@@ -67,8 +67,7 @@ def encode_reply(error: str | None = None, **values: Any) -> bytes:
     result = {**values, "v": VERSION, "ok": error is None}
     if error is not None:
         result["error"] = error
-    body: bytes = msgpack.packb(result)
-    return body
+    return pack(result)
 
 
 def decode_reply(body: Body) -> Reply:

@@ -174,8 +174,19 @@ class Fields:
 def encode(link: str, event: Any, **values: Any) -> bytes:
     """Encode a message about an event that has `run`, `seq` and `t_ns`."""
     head = {"v": VERSION, "link": link, "run": int(event.run), "seq": int(event.seq), "t_ns": int(event.t_ns)}
-    body: bytes = msgpack.packb(head | values)
+    return pack(head | values)
+
+
+def pack(values: Mapping[str, Any]) -> bytes:
+    """Pack a map; a count that has grown beyond what the format holds is sent as the largest that it does."""
+    body: bytes = msgpack.packb(values, default=_largest)
     return body
+
+
+def _largest(value: Any) -> int:
+    if type(value) is not int:
+        raise TypeError(f"a message holds plain values, not {type(value).__name__}")
+    return UINT64
 
 
 def read_flat(kind: str, body: Body, known: frozenset[str]) -> Fields:
@@ -271,5 +282,6 @@ def _is_compound(head: Body) -> bool:
 
 
 def _broken(kind: str, error: Exception) -> Refused:
-    why = " ".join(str(error).split()) or type(error).__name__
+    nested = isinstance(error, msgpack.StackError)
+    why = "nested too deep" if nested else " ".join(str(error).split()) or type(error).__name__
     return Refused(Reason.NOT_MSGPACK, f"{kind}: not one whole MessagePack map: {why}")

@@ -86,12 +86,12 @@ def decode_pilots(body: Body, link: str, shape: Shape | None) -> Burst:
         raise fields.refuse(Reason.OUT_OF_RANGE, f"`dt_ns` = {dt_ns} puts the last frame beyond the year 2262")
     patterns = fields.packed("patterns", frames, elements)
     response = fields.binary("response")
-    wanted = f"{frames} frames of {receivers} receivers and {tones} tones"
+    wanted = f"frames = {frames}, receivers = {receivers} and tones = {tones}"
     fields.check_size("response", response, frames * receivers * tones * 8, wanted)
     if shape is not None and (elements, receivers, tones) != (shape.elements, shape.receivers, shape.tones):
         raise fields.refuse(
             Reason.SETTINGS,
-            f"{elements} elements, {receivers} receivers, {tones} tones, but the settings say {shape.elements}, "
+            f"elements = {elements}, receivers = {receivers}, tones = {tones}, but the settings say {shape.elements}, "
             f"{shape.receivers}, {shape.tones}; correct the controller or the settings",
         )
     floats = np.frombuffer(response, "<f4").reshape(frames, receivers * tones * 2)

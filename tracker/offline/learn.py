@@ -82,16 +82,24 @@ def learn(paths: Sequence[Path], settings_path: Path | None, out: Path, size: in
         )
     with threadpool_limits(limits=1), progress_bar(progress, len(paths)) as bars:
         folder = (settings_path or paths[0]).parent
-        basis = work_out(paths, settings, text, size, bars, folder, attached)
+        logs = take_all(paths, settings, bars)
+        basis = work_out(logs, settings, text, size, bars, folder, attached)
     _write(out, pack_basis(basis))
     picture = out.with_suffix(".svg")
     _write(picture, draw(basis).encode())
     sys.stdout.write(render(basis, out, picture))
+    sys.stdout.writelines(f"damage: {log.path}: {log.damage}\n" for log in logs if log.damage)
     return 0
 
 
+def take_all(paths: Sequence[Path], settings: Settings, bars: Bars) -> list[Recorded]:
+    """Take stock of each log; see `take_stock`."""
+    link, sizes = settings.link.name, shape(settings)
+    return [take_stock(path, link, sizes, bars.begin(f"{path.name}, contents")) for path in paths]
+
+
 def work_out(
-    paths: Sequence[Path],
+    logs: Sequence[Recorded],
     settings: Settings,
     text: str,
     size: int | None,
@@ -103,7 +111,7 @@ def work_out(
 
     Parameters
     ----------
-    paths : sequence of Path
+    logs : sequence of Recorded
     settings : Settings
         The logs are followed in the aperture basis that they name, or element by element where its file is not there.
     text : str
@@ -117,7 +125,6 @@ def work_out(
     """
     config, followed = _config(settings, folder, attached)
     link, sizes = settings.link.name, shape(settings)
-    logs = [take_stock(path, link, sizes, bars.begin(f"{path.name}, contents")) for path in paths]
     width = size if size is not None else min(WIDTH, settings.panel.elements // 2)
     plan = Plan(logs, _most_frames(config, width, logs))
 
@@ -126,7 +133,7 @@ def work_out(
 
     stretches = plan.bursts * logs[0].stretches
     turning = turn(pieces("following"), config, max(1, stretches // ESTIMATES))
-    _enough(turning, config, paths)
+    _enough(turning, config, logs)
     blocks = Blocks.of(turning.frames / max(stretches, 1), width)
     space = _columns(turning, blocks, config, width, bars)
     held_out = {stretch.number for stretch in turning.stretches if blocks.held_out(stretch.number) is not None}
@@ -139,8 +146,9 @@ def render(basis: LearnedBasis, out: Path, picture: Path) -> str:
     """Say what was learned, for a person."""
     elements, kept = basis.columns.shape
     seconds = (basis.span_ns[1] - basis.span_ns[0]) / 1e9
+    columns = "1 column" if kept == 1 else f"{kept} columns"
     lines = [
-        f"{kept} columns for {elements} elements, learned from {basis.frames:,} frames within {seconds:,.2f} s",
+        f"{columns} for {elements} elements, learned from {basis.frames:,} frames within {seconds:,.2f} s",
         "",
         f"{'columns':>10}  error of predicting held-out frames (1 is noise alone)",
         *(f"{size:>10}  {error:.4f}" for size, error in zip(basis.sizes, basis.errors, strict=True)),
@@ -193,9 +201,9 @@ def _most_frames(config: Config, width: int, logs: Sequence[Recorded]) -> int:
     return int(min(MOST_FLOPS / flops, MOST_BYTES / bytes_a_frame))
 
 
-def _enough(turning: Turning, config: Config, paths: Sequence[Path]) -> None:
+def _enough(turning: Turning, config: Config, logs: Sequence[Recorded]) -> None:
     """Refuse what nothing can be learned from."""
-    names = ", ".join(str(path) for path in paths)
+    names = ", ".join(str(log.path) for log in logs)
     followed = sum(stretch.outputs.shape[0] for stretch in turning.stretches)
     least = int(LEAST_SWEEPS * (config.elements + 1))
     with_warming = least + config.aperture.size + 1

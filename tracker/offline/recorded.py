@@ -32,6 +32,8 @@ class Recorded:
         Frames in the first.
     stretches : int
         Pieces that it is cut into.
+    damage : str or None
+        Where it is not whole.
     """
 
     path: Path
@@ -39,6 +41,7 @@ class Recorded:
     bursts: int
     frames: int
     stretches: int
+    damage: str | None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -85,7 +88,7 @@ def take_stock(path: Path, link: str, shape: Shape, advanced: Callable[[int, int
     if first is None:
         raise OfflineError(f"{path}: its bursts do not fit the settings: {refused}")
     stretches = sum(1 for _ in Frames.of(first).stretches(STRETCH_NS))
-    return Recorded(path, _sha256(path), bursts, first.frames, stretches)
+    return Recorded(path, _sha256(path), bursts, first.frames, stretches, reader.damage)
 
 
 @dataclass(frozen=True, slots=True)

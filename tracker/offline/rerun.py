@@ -58,6 +58,7 @@ class Replay:
         self.span_s = 0.0
         self.damage: list[str] = []
         self.own_settings = True
+        self.link = ""
 
     def run(self, path: Path, advanced: Callable[[int, int], None] = lambda done, size: None) -> None:
         """Replay one log.
@@ -110,8 +111,9 @@ class Replay:
                     break  # the log is of another panel: to read on to its end would change nothing
         found.check()
 
-    def join(self, other: "Replay") -> None:
-        """Add what another replay found in the logs that follow."""
+    def join(self, other: "Replay", path: Path) -> None:
+        """Add what another replay found in the log that follows."""
+        self._one_link(path, other.link)
         self._taken += other._taken
         self.logged.join(other.logged)
         self.replayed.join(other.replayed)
@@ -151,6 +153,7 @@ class Replay:
         if self._given is not None:
             given = learned_basis(self._given, self._folder)
             same, basis = same and given == basis, given
+        self._one_link(path, settings.link.name)
         self.own_settings &= same
         if same and START in attached:
             self._tracker = self._started(path, attached[START], configure(settings, self._folder, basis))
@@ -158,6 +161,14 @@ class Replay:
             self._tracker = Tracker(configure(settings, self._folder, basis))
         self._in_force = settings, basis
         return settings, self._tracker, same and START in attached
+
+    def _one_link(self, path: Path, link: str) -> None:
+        """Refuse logs of several links: figures of both together would be those of neither."""
+        self.link = self.link or link
+        if link != self.link:
+            raise OfflineError(
+                f"{path}: is of link {link!r}, the logs before it of {self.link!r}; give one link's logs"
+            )
 
     @staticmethod
     def _started(path: Path, data: bytes, config: Config) -> Tracker:

@@ -88,9 +88,9 @@ def replay_side_by_side(
         try:
             with progress_bar(progress, len(paths)) as bars:
                 advanced = [bars.begin(path.name) for path in paths]
-                for part in parts:
+                for part, path in zip(parts, paths, strict=True):
                     found, blocks = _awaited(part, lambda: _show(advanced, done, sizes))
-                    work.join(found)
+                    work.join(found, path)
                     _write(writer, blocks)
                 _show(advanced, done, sizes)
         except BaseException:

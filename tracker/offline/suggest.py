@@ -65,6 +65,8 @@ def _text(path: Path, known: Survey, trial: Trial | None) -> str:
         f"# Settings to start from, derived from {path.name} by `ris-tracker suggest`.",
         f"# What a log cannot tell is marked {CORRECT[:-1]}; `ris-tracker check` says what the rest amounts to.",
     ]
+    if known.damage:
+        lines += _why(f"The log is not whole, and only what can be read of it counts: {known.damage}.")
     for table in (_link, _panel, _tones, _delay):
         lines += ["", f"[{table.__name__[1:]}]", *table(known)]
     lines += ["", "[estimator]", *_estimator(known, trial)]

@@ -87,6 +87,8 @@ class Survey:
         Bursts to try time constants on; empty when there are too few, or too much work in them.
     warm : int
         Bursts of each to begin with.
+    damage : str or None
+        Where the log is not whole.
     """
 
     link: str
@@ -102,6 +104,7 @@ class Survey:
     clock_s: float
     stretches: list[list[Burst]]
     warm: int
+    damage: str | None
 
 
 def survey(path: Path, begin: Callable[[str], Callable[[int, int], None]]) -> Survey:
@@ -120,7 +123,7 @@ def survey(path: Path, begin: Callable[[str], Callable[[int, int], None]]) -> Su
     OfflineError
         When it holds no bursts.
     """
-    contents = _contents(path, begin(f"{path.name}, contents"))
+    contents, damage = _contents(path, begin(f"{path.name}, contents"))
     size, first_ns, last_ns = contents.size, contents.first_ns, contents.last_ns
     if size is None or first_ns is None or last_ns is None or contents.measured is None:
         raise OfflineError(f"{path}: holds no bursts that can be read; `ris-tracker inspect` says what it holds")
@@ -150,11 +153,12 @@ def survey(path: Path, begin: Callable[[str], Callable[[int, int], None]]) -> Su
         clock_s=float(np.max(np.abs(contents.arrival_s))),
         stretches=samples.stretches,
         warm=samples.plan.warm if samples.plan else 0,
+        damage=damage,
     )
 
 
-def _contents(path: Path, advanced: Callable[[int, int], None]) -> Contents:
-    """Take stock of the link with the most bursts."""
+def _contents(path: Path, advanced: Callable[[int, int], None]) -> tuple[Contents, str | None]:
+    """Take stock of the link with the most bursts, and tell where the log is not whole."""
     reader = LogReader(path)
     links: dict[str, Contents] = {}
     for record in reader:
@@ -165,7 +169,7 @@ def _contents(path: Path, advanced: Callable[[int, int], None]) -> Contents:
         if kind == "pilots":
             links.setdefault(link, Contents(link)).take(kind, record)
         advanced(reader.tell(), reader.size)
-    return max(links.values(), key=lambda contents: contents.bursts, default=Contents("none"))
+    return max(links.values(), key=lambda contents: contents.bursts, default=Contents("none")), reader.damage
 
 
 def _settings(path: Path, link: str) -> Settings | None:

@@ -120,7 +120,7 @@ class Intake:
             return None  # another link whose name begins like ours
         try:
             if len(parts) != 2:
-                raise Refused(Reason.NOT_MSGPACK, f"{len(parts)} parts, a message has two: topic and body")
+                raise Refused(Reason.NOT_MSGPACK, f"a message has two parts, topic and body, and this one {len(parts)}")
             burst = decode_pilots(parts[1], self._link, self._shape)
             self._tracker.admit(burst, wall_ns)
         except Refused as refused:

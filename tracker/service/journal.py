@@ -100,6 +100,11 @@ class Journal:
         return True
 
     @property
+    def folder(self) -> Path:
+        """Where the files lie."""
+        return self._folder
+
+    @property
     def full(self) -> bool:
         """Whether the next file is due."""
         return self._writer is not None and self._writer.bytes_written >= self._rotate_bytes

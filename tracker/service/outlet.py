@@ -139,5 +139,5 @@ class Outlet:
     def _record(self, entries: list[Entry]) -> bool:
         kept = self._journal.write(entries)
         if not kept:
-            self.fault = self._journal.fault
+            self.fault = f"{self._journal.folder}: {self._journal.fault}"
         return kept

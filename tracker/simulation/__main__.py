@@ -86,7 +86,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
         "list": _list,
     }
     with threadpool_limits(limits=1):
-        return commands[args.command](args)
+        try:
+            return commands[args.command](args)
+        except KeyboardInterrupt:
+            return _mistake("interrupted", status=130)
 
 
 def _play(args: argparse.Namespace) -> int:

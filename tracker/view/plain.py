@@ -80,7 +80,7 @@ def line(model: LinkModel, now: float, since: float) -> str:
 
 
 def write_lines(stream: Stream, out: TextIO, running: Callable[[], bool]) -> None:
-    """Write a line a second, and one for each event as it comes, for as long as `running` says so.
+    """Write a line a second, one at least, and one for each event as it comes, for as long as `running` says so.
 
     Parameters
     ----------
@@ -90,7 +90,8 @@ def write_lines(stream: Stream, out: TextIO, running: Callable[[], bool]) -> Non
         Asked several times a second.
     """
     since = time.monotonic()
-    due, told = since + 1.0, stream.model.noted
+    first, told = since + 1.0, stream.model.noted
+    due = first
     while running():
         stream.receive(min(0.2, max(0.0, due - time.monotonic())))
         now = time.monotonic()
@@ -101,5 +102,7 @@ def write_lines(stream: Stream, out: TextIO, running: Callable[[], bool]) -> Non
             out.write(f"{clock} {'!' if note.grave else '·'} {stream.model.link}, {note.kind}: {note}\n")
         if now >= due:
             out.write(f"{clock} {line(stream.model, now, since)}\n")
-            due = max(due + 1.0, now)
+            due = (due if now < due + 1.0 else now) + 1.0  # after a pause of the machine one line, not two at once
         out.flush()
+    if due == first:
+        out.write(f"{time.strftime('%H:%M:%S')} {line(stream.model, time.monotonic(), since)}\n")

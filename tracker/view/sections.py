@@ -272,7 +272,7 @@ def digest(scene: Scene) -> RenderableType:
     if state is None:
         return Text()
     latency = model.latency_ms(scene.now)
-    first = f"innovation {figure(model.innovation.last)} (1 is well), drift {figure(model.drift.last)} (alarm at 1)"
+    first = f"innovation {figure(model.innovation.last)} (1 expected), drift {figure(model.drift.last)} (alarm at 1)"
     second = f"lost {state.lost:,}, refused {state.refused:,}, patterns {model.patterns:,}"
     if latency is not None:
         second += f", latency {latency[0]:.1f} ms, p99 {latency[1]:.1f}"
