@@ -119,7 +119,8 @@ def by_chain(threshold: float, cdf: Callable[[Real], Real]) -> float:
     width = 2.0 * threshold / (2 * STATES - 1)
     # From one level to another: what counts is how many levels they are apart.
     number = np.arange(STATES)
-    below = cdf(width * (np.arange(1 - STATES, STATES) + 0.5))[number - number[:, None] + STATES - 1]
+    steps: Real = np.asarray(width * (np.arange(1 - STATES, STATES) + 0.5))
+    below = cdf(steps)[number - number[:, None] + STATES - 1]
     chance = np.diff(below, axis=1, prepend=0.0)
     return float(np.linalg.solve(np.eye(STATES) - chance, np.ones(STATES))[0])
 
