@@ -19,6 +19,9 @@ often happens has a shape, and shows in that direction alone (matched filters, f
 Powers of unknown scale become normal by their cube root (Wilson & Hilferty, Proc. Nat. Acad. Sci. 17, 1931). A new
 channel is new in both paths: "channel" is the sum of the surface's and the direct path's deviates (Stouffer's method).
 
+Columns that were learned or worked out hear patterns with very different strength: Zᴴ Z is far from B I, a few frames
+make up most of L, and its power has no known distribution. There a new channel is left to the innovations.
+
 What drowns in the noise of one sample adds up: a weak new channel shows in the sum of L over several, and in how far
 the estimate of the surface has moved from its average.
 
@@ -116,6 +119,7 @@ class Anchor:
         self._added_frames = 0
 
     def _begin(self) -> None:
+        self._even = True  # whether all patterns are heard with the same strength
         self._shown: Single | None = None  # Zᴴ E
         self._sounded: NDArray[Any] = np.zeros(0, dtype=np.float32)  # Σ z
         self._frames = 0
@@ -135,6 +139,7 @@ class Anchor:
         """Take in frames: regressors (B, n) in single precision, and innovations (B, R Q)."""
         if self._average is None:
             return
+        self._even = not np.iscomplexobj(regressors)
         left = innovation.astype(np.complex64)
         shown = regressors.conj().T @ left if np.iscomplexobj(regressors) else _real(regressors.T, left)
         sounded = np.ones(regressors.shape[0], dtype=np.float32) @ regressors
@@ -170,7 +175,8 @@ class Anchor:
         direct = shown[0] + (self._sounded @ apart if np.iscomplexobj(self._sounded) else _real(self._sounded, apart))
         shown += np.float32(self._frames) * apart
         readings = self._against(shown, direct, 1.0 / math.sqrt(self._frames))
-        readings += self._over_longer(shown, direct)
+        if self._even:
+            readings += self._over_longer(shown, direct)
         now = coefficients.astype(np.complex64)
         np.subtract(now, average, out=apart)
         readings.append(Reading(SURFACE_MOVED, math.log(_length(apart[1:]))))
@@ -213,14 +219,15 @@ class Anchor:
         power, surface, freedom = _powers(left, direct, self._frames)
         readings = [
             Reading(DIRECT, power, outputs),
-            Reading(CHANNEL, _normal(surface, freedom) + _normal(power, outputs)),
             Reading(GAIN, along.real),
             Reading(PHASE, along.imag),
             Reading(DELAY, delay),
             Reading(DIRECT_GAIN, along_direct.real),
             Reading(DIRECT_PHASE, along_direct.imag),
         ]
-        if left.shape[0] > FEWEST:
+        if self._even:
+            readings.append(Reading(CHANNEL, _normal(surface, freedom) + _normal(power, outputs)))
+        if self._even and left.shape[0] > FEWEST:
             along_rows = np.einsum("nd,nd->n", self._rows, left.view(np.float32)[1:])
             along_rows *= np.float32(unit)
             readings.append(Reading(ELEMENT, self._lost.most(along_rows)))
