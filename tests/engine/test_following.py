@@ -176,6 +176,21 @@ def test_a_step_of_gain_is_taken_with_the_burst_that_shows_it() -> None:
     assert all(gain == 1.0 for number, gain in enumerate(gains) if number != 20)
 
 
+def test_a_burst_whose_phase_slips_is_no_step_of_gain() -> None:
+    """Frames turned to and fro by 1.35 rad show the model at cos 1.35 = 0.22 of its amplitude, but at all its power."""
+    link, following = Link(9), Following(ELEMENTS + 1)
+    stand, gains = np.array(link.direct), []
+    for number in range(22):
+        patterns, heard, surface, time_ns = link.burst(0.0, 0.0)
+        if number == 20:
+            heard *= np.exp(1.35j * (-1.0) ** np.arange(FRAMES))[:, None]
+        following.begin(time_ns)
+        turned = following.turn(patterns, heard, stand, surface, time_ns, 1.0)
+        stand = turned.direct
+        gains.append(turned.gain)
+    assert gains == [1.0] * 22
+
+
 def test_loops_are_a_kalman_filter_when_phases_are_small() -> None:
     """The variance that the loops claim for the phase is what repeated runs show (within 25 %, 300 runs)."""
     rng = np.random.default_rng(10)

@@ -13,6 +13,7 @@ covariance real. The direct path then still turns by the difference of the two: 
 from burst to burst, and its turning within a burst, known from the estimate, is taken off the frames.
 """
 
+import math
 from dataclasses import dataclass
 from enum import StrEnum
 from typing import Any
@@ -40,6 +41,9 @@ LOST_AFTER = 3
 # A gain step is one that both paths show alike, this far from 1 and this many standard deviations, after so many bursts
 # in which the model's amplitude was right.
 LEAST_STEP, STEP_DEVIATIONS, STEADY_BURSTS = 0.1, 5.0, 8
+# Share of the power heard beyond the noise that a step must explain: frames of slipped phase show the model as little
+# as weak ones do, but they are not weak.
+EXPLAINED = 0.8
 
 
 class Lock(StrEnum):
@@ -146,7 +150,7 @@ class Following:
         self.loops.measure(overlap, time_s, weight)
         lost = self._judge(overlap, time_s)
         phase_d, phase_s = self.loops.phases(time_s)
-        gain = self._gain_step(overlap, phase_d, phase_s, weight)
+        gain = self._gain_step(overlap, outputs, phase_d, phase_s, weight)
         direct, surface = gain * direct, gain * surface
         if self._timing is not None and self.lock is Lock.LOCKED:
             model = np.exp(1j * phase_d)[:, None] * direct + np.exp(1j * phase_s)[:, None] * surface
@@ -238,7 +242,7 @@ class Following:
                 self.lock = Lock.SEARCHING
         return False
 
-    def _gain_step(self, overlap: Overlap, phase_d: Real, phase_s: Real, weight: float) -> float:
+    def _gain_step(self, overlap: Overlap, outputs: Complex, phase_d: Real, phase_s: Real, weight: float) -> float:
         """Return the step of gain that the burst shows, 1 for none."""
         if self.lock is not Lock.LOCKED:
             self._steady = 0
@@ -262,6 +266,10 @@ class Following:
         apart = (amplitude[0] - amplitude[1]) ** 2 / (covariance[0, 0] + covariance[1, 1] - 2 * covariance[0, 1])
         deviations = abs(self.quality - 1.0) * np.sqrt(2.0 * weight * float(matrix.sum()))
         if deviations < STEP_DEVIATIONS or apart > STEP_DEVIATIONS**2:
+            return 1.0
+        # The noise has power 1 an output, give or take three standard deviations of their sum.
+        beyond = float(np.vdot(outputs, outputs).real) - outputs.size - 3.0 * math.sqrt(outputs.size)
+        if self.quality**2 * float(matrix.sum()) < EXPLAINED * beyond:
             return 1.0
         return self.quality
 
