@@ -25,6 +25,7 @@ from .frames import Fit, Frames
 from .noise import energy
 from .prior import prior_variances
 from .reception import Reception
+from .rls import GRANTED
 from .shrinkage import Doubt, Shrinkage
 from .sounded import Sounded
 
@@ -229,9 +230,9 @@ class Estimator:
         return self._shrinkage.doubt(self.variance(states), prior, self._config.receivers * self.reception.directions)
 
     def loosen(self, share: float) -> None:
-        """Let what was known count for less: P goes the given share of the way back to the prior."""
+        """Let what was known count for less: P goes the given share of the way to what coefficients vary by."""
         if self._bank is not None:
-            self._bank.forget(1.0 - share, share)
+            self._bank.forget(1.0 - share, share / GRANTED)
 
     def renew_direct(self, frames: int) -> None:
         """Learn the direct path anew, and that alone, from the last so many frames: those since it changed.
