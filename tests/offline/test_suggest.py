@@ -227,8 +227,10 @@ def test_coherence_time_inverts_the_gauss_markov_law() -> None:
 
 @pytest.mark.parametrize("tau_s", [0.05, 0.4])
 def test_the_time_constant_is_that_of_the_channel(tmp_path: Path, tau_s: float) -> None:
-    """For coefficients with autocorrelation e^(−s/τ), the model behind `resetting`, τ comes out or, as errors hardly differ
-    there and the shorter is taken, down to a third of it."""
+    """For coefficients with autocorrelation e^(−s/τ), the model behind `resetting`, τ comes out, or down to a third of it.
+
+    Errors hardly differ there, and the shorter is taken.
+    """
     path = Yard(bursts=200, tau_s=tau_s, noise=0.1).record(tmp_path / "a.mcap")
     assert 0.3 * tau_s < suggested(path).estimator.time_constant_ms / 1e3 < 1.5 * tau_s
 
