@@ -227,7 +227,7 @@ def test_coherence_time_inverts_the_gauss_markov_law() -> None:
 
 @pytest.mark.parametrize("tau_s", [0.05, 0.4])
 def test_the_time_constant_is_that_of_the_channel(tmp_path: Path, tau_s: float) -> None:
-    """For coefficients with autocorrelation e^(−s/τ), the model behind `resetting`, τ comes out, or down to a third of it.
+    """Coefficients with autocorrelation e^(−s/τ), the model behind `resetting`, give τ, or down to a third of it.
 
     Errors hardly differ there, and the shorter is taken.
     """
