@@ -6,7 +6,7 @@ import pytest
 from tracker.engine.estimation.aperture import Elements
 from tracker.engine.estimation.bank import Bank, time_constants
 from tracker.engine.estimation.dense import Dense
-from tracker.engine.estimation.rls import GRANTED, BlockRls, forgetting
+from tracker.engine.estimation.rls import BlockRls, forgetting
 from tracker.engine.estimation.sounded import Sounded
 from tracker.engine.panel import pack
 
@@ -69,7 +69,7 @@ def test_a_bank_of_one_is_the_filter_itself() -> None:
         sounded, y = _sounded(rng, 4), rng.normal(size=(4, 1)).astype(np.complex128)
         bank.forget_for(BURST_S)
         bank.update(sounded, y)
-        alone.forget(*forgetting("resetting", BURST_S, 0.4, GRANTED))
+        alone.forget(*forgetting("resetting", BURST_S, 0.4))
         alone.update(sounded.regressors, y)
     assert np.array_equal(bank.chosen.coefficients, alone.coefficients)
 

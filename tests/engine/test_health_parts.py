@@ -5,7 +5,7 @@ import pytest
 from numpy.typing import NDArray
 from scipy import linalg, stats
 
-from tracker.engine.estimation.rls import GRANTED, BlockRls, forgetting
+from tracker.engine.estimation.rls import BlockRls, forgetting
 from tracker.engine.health.answers import Answers
 from tracker.engine.health.directions import directions
 from tracker.engine.health.fresh import Posterior, Window
@@ -37,7 +37,7 @@ def test_a_window_shows_what_its_own_frames_show(kind: str) -> None:
     frames = [sweep @ gaussian(rng, n, 3) + gaussian(rng, n, 3) for _ in range(2)]
     rls.update(sweep, frames[0])
     window = Window(kind, posterior(rls, time_constant_s))
-    rls.forget(*forgetting(kind, elapsed_s, time_constant_s, GRANTED))
+    rls.forget(*forgetting(kind, elapsed_s, time_constant_s))
     rls.update(sweep, frames[1])
     window.add(posterior(rls, time_constant_s), n, elapsed_s)
     view = window.view(posterior(rls, time_constant_s))

@@ -24,7 +24,6 @@ from .detection.reaction import HARMLESS, react
 from .estimation.aperture import Elements
 from .estimation.estimator import Estimator
 from .estimation.frames import Fit, Frames
-from .estimation.rls import GRANTED
 from .events import Cause, Event, Mode, Pattern, Plan
 from .health.health import Health
 from .lifecycle import Happening, after
@@ -388,7 +387,7 @@ class Tracker:
             lock=self._estimator.reception.lock,
             in_use=self._refresher.states(self._refresher.latest),
             channel=channel,
-            prior=prior / GRANTED,
+            prior=prior,
             variance=variance,
             time_constant_s=self._estimator.time_constant_s,
             fit=fit,

@@ -22,7 +22,7 @@ from ..orthogonal.swept import Swept
 from .aperture import ApertureBasis
 from .dense import Dense
 from .filter import Filter, Surprise
-from .rls import GRANTED, BlockRls, forgetting
+from .rls import BlockRls, forgetting
 from .sounded import Sounded
 
 Complex = NDArray[np.complex128]
@@ -126,7 +126,7 @@ class Bank:
     def forget_for(self, elapsed_s: float) -> None:
         """Let each filter forget over an elapsed time."""
         for one, constant_s in zip(self._filters, self._constants_s, strict=True):
-            one.forget(*forgetting(self._kind, elapsed_s, constant_s, GRANTED))
+            one.forget(*forgetting(self._kind, elapsed_s, constant_s))
 
     def forget(self, a: float, b: float) -> None:
         """Let all filters forget alike; see `Filter.forget`."""

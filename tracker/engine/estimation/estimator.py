@@ -25,7 +25,6 @@ from .frames import Fit, Frames
 from .noise import energy
 from .prior import prior_variances
 from .reception import Reception
-from .rls import GRANTED
 from .shrinkage import Doubt, Shrinkage
 from .sounded import Sounded
 
@@ -230,9 +229,9 @@ class Estimator:
         return self._shrinkage.doubt(self.variance(states), prior, self._config.receivers * self.reception.directions)
 
     def loosen(self, share: float) -> None:
-        """Let what was known count for less: P goes the given share of the way to what coefficients vary by."""
+        """Let what was known count for less: P goes the given share of the way back to the prior."""
         if self._bank is not None:
-            self._bank.forget(1.0 - share, share / GRANTED)
+            self._bank.forget(1.0 - share, share)
 
     def renew_direct(self, frames: int) -> None:
         """Learn the direct path anew, and that alone, from the last so many frames: those since it changed.

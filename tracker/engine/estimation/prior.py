@@ -10,8 +10,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .rls import GRANTED
-
 # Where the patterns hardly differ, nothing of the surface shows; it is then granted this share of all that is heard.
 UNSEEN_SHARE = 0.2
 # Mean variance of the regressors below which the patterns hardly differ.
@@ -50,7 +48,7 @@ def prior_variances(
     variances = np.concatenate(([0.0], surface / size * weights))
     # Terminals and blockages change the direct path by its whole strength, and one column more costs little.
     variances[0] = 2.0 * direct + surface
-    return GRANTED * variances
+    return variances
 
 
 def _energy_mean(power: NDArray[np.float64]) -> float:

@@ -20,8 +20,6 @@ resetting     λ      1 − λ  √λ     a Kalman filter whose coefficients are
                                    Salgado, Goodwin & Middleton 1988)
 ============  =====  =====  =====  ====================================================================
 
-Where P₀ is g times what coefficients have, λ is taken to the power 1 / g, see `GRANTED`.
-
 Letting C decay with its covariance keeps the estimate a posterior mean; without it the estimate holds more energy than
 is known to be there, and the optimizer promises rates that are not met.
 
@@ -43,10 +41,6 @@ Complex = NDArray[np.complex128]
 SMALLEST_FACTOR = 1e-12
 # The factor of the stored matrix is multiplied into it when it leaves 1 / LARGEST_FACTOR to LARGEST_FACTOR.
 LARGEST_FACTOR = 256.0
-# Times over that coefficients are granted the variance that they show, and the time in which they lose their memory.
-# Change is followed as fast as if both were taken as they are, 2 P₀ / τ. But in between a coefficient is hardly drawn
-# back to zero, which channels do not do either: they drift, and few directions of them hold most of the energy.
-GRANTED = 2.0
 # Frames in a strip of S: narrower ones would save little more, and slow the products down.
 STRIP = 32
 
@@ -236,7 +230,7 @@ class BlockRls:
         return np.asarray(left @ right.view(np.float64)).view(np.complex128)
 
 
-def forgetting(kind: str, elapsed_s: float, time_constant_s: float, granted: float = 1.0) -> tuple[float, float, float]:
+def forgetting(kind: str, elapsed_s: float, time_constant_s: float) -> tuple[float, float, float]:
     """Forgetting over an elapsed time, as the arguments of `BlockRls.forget`: a, b and decay.
 
     Parameters
@@ -245,8 +239,6 @@ def forgetting(kind: str, elapsed_s: float, time_constant_s: float, granted: flo
         ``exponential`` or ``resetting``.
     elapsed_s, time_constant_s : float
         Δt and τ; λ = exp(−2 Δt / τ): an amplitude loses its memory over τ, a power over τ / 2.
-    granted : float
-        g, where P₀ is g times what coefficients have: ``resetting`` goes back to that over g τ.
 
     Raises
     ------
@@ -258,6 +250,5 @@ def forgetting(kind: str, elapsed_s: float, time_constant_s: float, granted: flo
         # A silence may be of any length; beyond this bound the old data count for nothing and P would overflow.
         return 1.0 / max(decay, 1e-6), 0.0, 1.0
     if kind == "resetting":
-        kept = decay ** (1.0 / granted)
-        return kept, 1.0 - kept, math.sqrt(kept)
+        return decay, 1.0 - decay, math.sqrt(decay)
     raise ValueError(f"unknown forgetting {kind!r}")

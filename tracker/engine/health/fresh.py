@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ..estimation.rls import GRANTED, forgetting
+from ..estimation.rls import forgetting
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -116,7 +116,7 @@ class Window:
         elapsed_s : float
             Time forgotten with it, s.
         """
-        a, b, decay = forgetting(self._kind, elapsed_s, self._time_constant_s, GRANTED)
+        a, b, decay = forgetting(self._kind, elapsed_s, self._time_constant_s)
         before = (a * scale_of(self._unit, now.noise)) * self._variance + b * now.prior[1:]
         self._unit = now.noise.copy()
         self._variance = now.variances[1:].copy()
