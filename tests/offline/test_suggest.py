@@ -227,12 +227,9 @@ def test_coherence_time_inverts_the_gauss_markov_law() -> None:
 
 @pytest.mark.parametrize("tau_s", [0.05, 0.4])
 def test_the_time_constant_is_that_of_the_channel(tmp_path: Path, tau_s: float) -> None:
-    """Coefficients with autocorrelation e^(−s/τ), the model behind `resetting`, give τ, or down to a third of it.
-
-    Errors hardly differ there, and the shorter is taken.
-    """
+    """For coefficients with autocorrelation e^(−s/τ), the model behind `resetting`, about τ comes out, rather less."""
     path = Yard(bursts=200, tau_s=tau_s, noise=0.1).record(tmp_path / "a.mcap")
-    assert 0.3 * tau_s < suggested(path).estimator.time_constant_ms / 1e3 < 1.5 * tau_s
+    assert 0.4 * tau_s < suggested(path).estimator.time_constant_ms / 1e3 < 1.5 * tau_s
 
 
 def test_a_log_too_short_to_try_on_shows_its_pace_by_the_reference(tmp_path: Path) -> None:
@@ -303,7 +300,7 @@ def test_a_log_without_repeats_shows_its_pace_when_tried(tmp_path: Path) -> None
     """No pattern need recur for time constants to be tried."""
     text = draft(Yard(elements=63, reference_every=0, tau_s=0.1, bursts=100).record(tmp_path / "a.mcap"))
     assert "estimator" not in marked(text)
-    assert 30.0 < parse(text).estimator.time_constant_ms < 150.0
+    assert 40.0 < parse(text).estimator.time_constant_ms < 150.0
 
 
 def test_a_short_log_without_repeats_does_not_show_its_pace(tmp_path: Path) -> None:
