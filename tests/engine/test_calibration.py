@@ -61,6 +61,32 @@ def test_what_goes_wrong_while_acquiring_leaves_later_promises_alone() -> None:
     assert after[1] == before[1]
 
 
+def test_a_model_that_is_wrong_altogether_is_found_out_soon() -> None:
+    """When all rates are suddenly 15 spreads less than predicted, at most six of the next 30 promises are broken.
+
+    A margin that moves by 0.38 spreads a promise alone would break them all.
+    """
+    calibration, kept = Calibration(), []
+    for pattern in range(130):
+        less = 15.0 if pattern >= 100 else (pattern % 2 - 0.5)
+        low = calibration.promise(pattern, EXACTLY, acquiring=False)
+        calibration.observe(pattern, RATE - less * SPREAD, 8)
+        kept.append(RATE - less * SPREAD >= low)
+    assert not kept[100]
+    assert sum(kept[100:]) >= 24
+
+
+def test_one_outlier_is_no_reason_to_promise_little() -> None:
+    """After a single rate of nothing, promises are lower by less than ten spreads, and by less than one 50 later."""
+    calibration = Calibration()
+    lows = []
+    for pattern in range(100):
+        lows.append(calibration.promise(pattern, EXACTLY, acquiring=False))
+        calibration.observe(pattern, 0.0 if pattern == 20 else RATE, 8)
+    assert RATE - lows[21] < 10.0 * SPREAD
+    assert lows[20] - lows[70] < SPREAD
+
+
 def test_a_promise_is_for_all_the_time_that_its_pattern_is_in_force() -> None:
     """Measured rates count by their frames, until another pattern takes the place; nil and other patterns do not."""
     calibration = Calibration()
@@ -91,10 +117,10 @@ def test_a_measurement_that_is_exact_enough_settles_a_promise() -> None:
 def test_promises_of_patterns_shown_late_are_settled() -> None:
     """A pattern a burst, each in force two bursts after it was promised: every one is put to the test."""
     calibration = Calibration()
-    lows = {}
+    lows: dict[int, float] = {}
     for burst in range(40):
         if burst >= 2:
-            calibration.observe(burst - 2, 1.0 if burst % 2 else RATE, 8)
+            calibration.observe(burst - 2, lows[burst - 2] - 0.01 if burst % 2 else RATE, 8)
         lows[burst] = calibration.promise(burst, EXACTLY, acquiring=False)
     assert calibration.kept_share == pytest.approx(0.5)
     assert lows[39] < lows[0]
