@@ -24,7 +24,7 @@ KEPT_SHARE = 0.95
 # Margins to begin with. The normal distribution has its 95 % point at 1.645. Where every element is estimated by itself
 # the estimate errs to the safe side; where a basis of fewer columns stands for the elements, patterns are found that
 # make the most of what it holds and the surface does not. Both as measured by the benchmark `promise`.
-FIRST_MARGIN, FIRST_MARGIN_IN_COLUMNS = 1.2, 2.0
+FIRST_MARGIN, FIRST_MARGIN_IN_COLUMNS = 1.1, 2.0
 # Step of the margin, in spreads, for a broken promise; a kept one moves it back by a nineteenth of that.
 STEP = 0.4
 # Bounds of the margin: a promise never exceeds the prediction by much, and one wild outlier cannot ruin it for long.
