@@ -128,6 +128,9 @@ class Anchor:
         """Make the matched filters: of the whole, of a delay, and of each row."""
         self._whole = average.copy()
         self._delayed = (average.reshape(-1, self._size) @ self._slope).reshape(average.shape)
+        self._measure_filters()
+
+    def _measure_filters(self) -> None:
         self._lengths = _length(self._whole), _length(self._delayed), _length(self._whole[:1])
         self._set_rows()
 
@@ -141,7 +144,7 @@ class Anchor:
             return
         self._even = not np.iscomplexobj(regressors)
         left = innovation.astype(np.complex64)
-        shown = regressors.conj().T @ left if np.iscomplexobj(regressors) else _real(regressors.T, left)
+        shown = _product(regressors.T if self._even else regressors.conj().T, left)
         sounded = np.ones(regressors.shape[0], dtype=np.float32) @ regressors
         if self._shown is None:
             self._shown, self._sounded = shown, sounded
@@ -172,7 +175,7 @@ class Anchor:
         if self._samples % EVERY == 0:
             self._set_filters(average)
         self._samples += 1
-        direct = shown[0] + (self._sounded @ apart if np.iscomplexobj(self._sounded) else _real(self._sounded, apart))
+        direct = shown[0] + _product(self._sounded, apart)
         shown += np.float32(self._frames) * apart
         readings = self._against(shown, direct, 1.0 / math.sqrt(self._frames))
         if self._even:
@@ -249,8 +252,7 @@ class Anchor:
         if self._average is not None:
             for one in self._turning():
                 one[:, columns] *= gain
-            self._lengths = _length(self._whole), _length(self._delayed), _length(self._whole[:1])
-            self._set_rows()
+            self._measure_filters()
 
     def snapshot(self) -> dict[str, Any]:
         """All state."""
@@ -299,8 +301,10 @@ def _length(values: Single) -> float:
     return math.sqrt(float(np.vdot(values, values).real)) + FLOOR
 
 
-def _real(left: NDArray[np.float32], right: Single) -> Single:
-    """Multiply a real matrix with a complex one at real cost."""
+def _product(left: NDArray[Any], right: Single) -> Single:
+    """Multiply a matrix that may be real with a complex one, at real cost when it is."""
+    if np.iscomplexobj(left):
+        return np.asarray(left @ right)
     return np.asarray((left @ np.ascontiguousarray(right).view(np.float32)).view(np.complex64))
 
 
